@@ -1,0 +1,264 @@
+"""From the arithmetic's arrays to the words of an answer: figures, rows, ratios and notes."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field
+from math import ceil
+from typing import NamedTuple
+
+import numpy as np
+
+from service.errors import NotDefined
+from service.risk.allocation import Contributions
+from service.risk.frame import Frame
+from service.risk.measures import RiskMeasure
+from service.risk.uncertainty import FULL_TAIL, Estimates
+from service.schemas.results import (
+    AllocationResult,
+    AllocationRow,
+    Figure,
+    GroupFigure,
+    GroupRow,
+    Interval,
+    MeasureResult,
+    Note,
+    NoteCode,
+    SmoothingWindow,
+    StandAloneFigure,
+    SubPortfolioLoss,
+    Tail,
+    TailScenario,
+)
+
+WORST_LISTED = 10
+USUAL_LEVEL = 0.99  # of the tail detail where no measure has a level
+
+
+@dataclass(slots=True)
+class Notes:
+    """Collects the notes of an answer; the same note is made once for each measure.
+
+    Attributes
+    ----------
+    scenarios : int
+        Number of scenarios of the request.
+    pointed : bool
+        Whether the request is a JSON document that can be pointed into.
+    """
+
+    scenarios: int
+    pointed: bool
+    _made: dict[tuple[str, int | None], Note] = field(default_factory=dict)
+
+    def add(self, code: NoteCode, detail: str, number: int | None = None) -> None:
+        """Make a note, of measure `number` if given."""
+        pointer = f"/measures/{number}" if self.pointed and number is not None else None
+        self._made.setdefault((code, number), Note(code, detail, pointer))
+
+    def of_estimates(self, number: int, measure: RiskMeasure, estimates: Estimates) -> None:
+        """Make the notes that the remarks on `estimates` call for."""
+        for code in sorted(estimates.remarks):
+            known: NoteCode = code  # type: ignore[assignment]  # the remarks are codes of notes
+            self.add(known, self._detail(code, measure, estimates), number)
+
+    def listed(self) -> list[Note]:
+        """Return the notes made, in the order of the measures."""
+        return list(self._made.values())
+
+    def _detail(self, code: str, measure: RiskMeasure, estimates: Estimates) -> str:
+        tail = estimates.tail_scenarios
+        known = tail[np.isfinite(tail)]
+        fewest = float(known.min()) if known.size else 0.0
+        of_tail = "tail scenarios carry" if measure.of_tail else "scenarios carry the error of"
+        counts = f"{fewest:.3g} {of_tail} {measure.name}"
+        if measure.of_tail and fewest > 0.0:
+            counts += f"; {ceil(FULL_TAIL * self.scenarios / fewest)} scenarios in all would do"
+        return {
+            "thin_tail": f"the error rests on few scenarios: {counts}",
+            "no_error": f"too few scenarios to say how sure a figure is: {counts}",
+            "few_scenarios": f"a few scenarios carry the error, so intervals may be too narrow: {counts}",
+            "smoothed_quantile": f"contributions to {measure.name} are smoothed over the scenarios in `window`",
+            "does_not_add_up": "with_without contributions do not add up to the total; `residual` is the rest",
+            "sampled_shapley": "Shapley values are averaged over drawn orders of entry; the error includes the drawing",
+        }[code]
+
+
+def figure_list(estimates: Estimates, coverage: float) -> list[Figure]:
+    """Return figures of the answer from estimates of shape (c,).
+
+    Raises
+    ------
+    NotDefined
+        For a figure that is not finite.
+    """
+    if not np.isfinite(estimates.values).all():
+        detail = "a figure is too large for a binary64 number"
+        raise NotDefined(detail)
+    values = (estimates.values + 0.0).tolist()
+    if np.isnan(estimates.standard_errors).all() and np.isnan(estimates.tail_scenarios).all():
+        return [Figure(value, None, None, None) for value in values]
+    method = estimates.method
+    rows = zip(
+        values,
+        (estimates.standard_errors + 0.0).tolist(),
+        (estimates.lower + 0.0).tolist(),
+        (estimates.upper + 0.0).tolist(),
+        estimates.tail_scenarios.tolist(),
+        strict=True,
+    )
+    return [
+        Figure(
+            value,
+            None if error != error else error,  # noqa: PLR0124  # NaN is the one number that differs from itself
+            None if error != error else Interval(lower, upper, coverage, method),  # noqa: PLR0124
+            None if tail != tail else tail,  # noqa: PLR0124
+        )
+        for value, error, lower, upper, tail in rows
+    ]
+
+
+class Shared(NamedTuple):
+    """What the rows of all allocations of a request need."""
+
+    frame: Frame
+    expected: list[float]
+    profits: list[float | None]
+    capital: float | None
+
+
+def shared(frame: Frame, capital: float | None) -> Shared:
+    """Return expected losses and profits of the d sub-portfolios and then of the groups."""
+    profits = [one.expected_profit for one in frame.table.sub_portfolios]
+    sums: list[float | None] = []
+    for group in frame.groups:
+        members = [profits[member] for member in group.members]
+        known = [profit for profit in members if profit is not None]
+        sums.append(sum(known) if len(known) == len(members) else None)
+    return Shared(frame, (frame.expected + 0.0).tolist(), profits + sums, capital)
+
+
+def measure_result(
+    name: str, number: int, total: Figure, alone: Sequence[Figure] | None, frame: Frame, notes: Notes
+) -> MeasureResult:
+    """Return one measure of the whole book and of each part alone."""
+    if alone is None:
+        return MeasureResult(name, total, [], [], None, None)
+    count = len(frame.table)
+    whole = sum(figure.value for figure in alone[:count])
+    benefit = _ratio(whole - total.value, whole, "the sum of the stand-alone figures", number, notes)
+    return MeasureResult(
+        name,
+        total,
+        [StandAloneFigure(one.id, figure) for one, figure in zip(frame.table.sub_portfolios, alone, strict=False)],
+        [
+            GroupFigure(group.attribute, group.name, figure)
+            for group, figure in zip(frame.groups, alone[count:], strict=True)
+        ],
+        benefit,
+        whole - total.value,
+    )
+
+
+def allocation_result(
+    head: tuple[str, str],
+    number: int,
+    total: Figure,
+    split: Contributions,
+    parts: Sequence[Figure],
+    alone: Sequence[Figure] | None,
+    of: Shared,
+    notes: Notes,
+) -> AllocationResult:
+    """Return one measure split by one rule.
+
+    Parameters
+    ----------
+    head : tuple of (str, str)
+        Names of measure and rule.
+    number : int
+        Of the measure.
+    total : Figure
+    split : Contributions
+    parts : sequence of Figure
+        The contributions of d sub-portfolios and then of the groups.
+    alone : sequence of Figure or None
+        Their stand-alone figures.
+    of : Shared
+    notes : Notes
+    """
+    frame = of.frame
+    count = len(frame.table)
+    whole = total.value if split.additive else sum(part.value for part in parts[:count])
+    shares = [_ratio(part.value, whole, "the total to be shared", number, notes) for part in parts]
+    rows = []
+    for j, (part, share) in enumerate(zip(parts, shares, strict=True)):
+        allocated = None if of.capital is None or share is None else share * of.capital
+        base = part.value if of.capital is None else allocated
+        single = None if alone is None else alone[j]
+        rows.append(
+            {
+                "contribution": part,
+                "share": share,
+                "stand_alone": single,
+                "diversification_benefit": None
+                if single is None
+                else _ratio(single.value - part.value, single.value, "a stand-alone figure", number, notes),
+                "expected_loss": of.expected[j],
+                "expected_profit": of.profits[j],
+                "return_on_capital": _return(of.profits[j], base, number, notes),
+                "allocated_capital": allocated,
+            }
+        )
+    window = None if split.window is None else SmoothingWindow(*split.window)
+    return AllocationResult(
+        *head,
+        total,
+        [AllocationRow(one.id, **row) for one, row in zip(frame.table.sub_portfolios, rows, strict=False)],  # type: ignore[arg-type]  # as the rows above
+        [GroupRow(group.attribute, group.name, **row) for group, row in zip(frame.groups, rows[count:], strict=True)],  # type: ignore[arg-type]  # likewise
+        of.capital,
+        _total_return(of, total.value if of.capital is None else of.capital, number, notes),
+        window,
+        None if split.additive else total.value - whole,
+    )
+
+
+def _ratio(numerator: float, denominator: float, of: str, number: int, notes: Notes) -> float | None:
+    """Return a ratio, or None with a note where its denominator is not positive."""
+    if denominator > 0.0:
+        return numerator / denominator + 0.0
+    notes.add("ratio_not_defined", f"a ratio is null: {of} is {denominator:.6g}, not positive", number)
+    return None
+
+
+def _return(profit: float | None, base: float | None, number: int, notes: Notes) -> float | None:
+    if profit is None or base is None:
+        return None
+    return _ratio(profit, base, "the capital of a part", number, notes)
+
+
+def _total_return(of: Shared, base: float, number: int, notes: Notes) -> float | None:
+    """Return the sum of expected profits over the capital; None, with a note, where some are not given."""
+    profits = of.profits[: len(of.frame.table)]
+    known = [profit for profit in profits if profit is not None]
+    if not known:
+        return None
+    if len(known) < len(profits):
+        notes.add("no_expected_profit", f"{len(profits) - len(known)} sub-portfolios have no expected profit")
+        return None
+    return _ratio(sum(known), base, "the capital", number, notes)
+
+
+def tail(frame: Frame, measures: Sequence[RiskMeasure]) -> Tail:
+    """Return the worst scenarios of the total."""
+    table, totals = frame.table, frame.totals
+    level = next((level for one in measures if (level := one.parameters.get("level")) is not None), USUAL_LEVEL)
+    worst = np.argsort(-totals, kind="stable")[:WORST_LISTED]
+    listed = []
+    for number in worst.tolist():
+        losses = [
+            SubPortfolioLoss(one.id, value)
+            for one, value in zip(table.sub_portfolios, table.losses[number].tolist(), strict=True)
+        ]
+        probability = 1.0 / table.scenarios if table.probabilities is None else float(table.probabilities[number])
+        label = None if table.scenario_ids is None else table.scenario_ids[number]
+        listed.append(TailScenario(number, label, probability, float(totals[number]), losses))
+    return Tail(level, listed, [])

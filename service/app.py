@@ -1,0 +1,52 @@
+"""The application: settings in, doors wired to the desk, problems and metrics."""
+
+from collections.abc import AsyncIterator
+from contextlib import asynccontextmanager
+from os import environ
+
+from fastapi import FastAPI
+from starlette.middleware import Middleware
+
+from service import __version__, openapi, problems
+from service.desk import Desk
+from service.metrics import Metrics
+from service.middleware import Envelope
+from service.routes import calculations, operations
+from service.settings import Settings
+
+
+def create_app(settings: Settings) -> FastAPI:
+    """Return the application of one process.
+
+    Its API page and document are doors of ours: the bodies of calculations are read in a thread and not by
+    the framework, which therefore cannot describe them.
+    """
+    metrics = Metrics()
+    desk = Desk(settings)
+    metrics.watch(computing=lambda: desk.computing, waiting=lambda: desk.waiting)
+    document = openapi.committed()
+
+    @asynccontextmanager
+    async def life(_app: FastAPI) -> AsyncIterator[None]:
+        yield
+        desk.close()
+
+    app = FastAPI(
+        title="tailrace",
+        version=__version__,
+        lifespan=life,
+        openapi_url=None,
+        redirect_slashes=False,
+        middleware=[Middleware(Envelope, metrics=metrics, refuse=problems.refuse)],
+    )
+    problems.install(app)
+    app.router.routes += calculations.routes(settings=settings, desk=desk, metrics=metrics)
+    app.router.routes += operations.routes(
+        settings=settings, desk=desk, metrics=metrics, statuses=problems.STATUSES, document=document
+    )
+    return app
+
+
+def from_environment() -> FastAPI:
+    """Return the application as the environment sets it: what each process of the server makes."""
+    return create_app(Settings.from_environment(environ))

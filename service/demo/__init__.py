@@ -1,0 +1,25 @@
+"""The demonstration: Ternholm Mutual, a harbour town's insurer, all of it invented."""
+
+from importlib.resources import files
+
+FOLDER = files("service.demo")
+REQUEST = "ternholm.json"
+TABLE = "ternholm.csv"
+
+
+NEXT_STEPS = """
+The same over HTTP: start the service and open its page.
+
+  tailrace serve
+  http://127.0.0.1:8000/
+"""
+
+
+def request() -> bytes:
+    """Return the allocation request of the demonstration, whose table stands in the part `table`."""
+    return FOLDER.joinpath(REQUEST).read_bytes()
+
+
+def table() -> bytes:
+    """Return its loss table as CSV, in thousands of euros."""
+    return FOLDER.joinpath(TABLE).read_bytes()

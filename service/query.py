@@ -1,0 +1,163 @@
+"""Query parameters as a request: the same words as in JSON, for bodies that are a table and for URLs."""
+
+import re
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+from service.errors import Fault, InvalidValue
+
+NUMBER = re.compile(r"-?(0|[1-9]\d*)(\.\d+)?([eE][-+]?\d+)?")
+
+Pairs = Sequence[tuple[str, str]]
+
+
+def _number(name: str, value: str) -> float | int:
+    if not NUMBER.fullmatch(value):
+        raise _fault(name, f"{name} is {value[:40]!r}, not a number such as 0.995", "wrong_type")
+    return int(value) if re.fullmatch(r"-?\d{1,15}", value) else float(value)
+
+
+def _boolean(name: str, value: str) -> bool:
+    if value not in ("true", "false"):
+        raise _fault(name, f"{name} is {value[:40]!r}, not true or false", "wrong_type")
+    return value == "true"
+
+
+def _text(name: str, value: str) -> str:  # noqa: ARG001  # the converters are alike
+    return value
+
+
+def _fault(name: str, detail: str, code: str) -> InvalidValue:
+    return InvalidValue(detail, faults=[Fault(detail=detail, code=code, parameter=name)])
+
+
+@dataclass(frozen=True, slots=True)
+class Parameter:
+    """Where a query parameter stands in the request document.
+
+    Attributes
+    ----------
+    field : str
+        Name of the member.
+    convert : callable
+        From its text.
+    repeats : bool
+        Whether it may stand several times and makes a list.
+    """
+
+    field: str
+    convert: Callable[[str, str], Any] = _text
+    repeats: bool = False
+
+
+MEASURE_NUMBERS = (
+    "lower_level",
+    "upper_level",
+    "multiple",
+    "shift",
+    "exponent",
+    "aversion",
+    "return_period",
+    "scenarios_per_period",
+)
+REQUEST: Mapping[str, Parameter] = {
+    "group_by": Parameter("group_by", repeats=True),
+    "interval_coverage": Parameter("interval_coverage", _number),
+    "include_stand_alone": Parameter("include_stand_alone", _boolean),
+    "tail_detail": Parameter("tail_detail", _boolean),
+    "reference": Parameter("reference"),
+}
+ALLOCATIONS: Mapping[str, Parameter] = {
+    "rule": Parameter("rules", repeats=True),
+    "capital": Parameter("capital", _number),
+    "smoothing": Parameter("smoothing"),
+}
+LOSSES: Mapping[str, Parameter] = {
+    "sign": Parameter("sign"),
+    "scenarios_are": Parameter("scenarios_are"),
+    "scenario_id_column": Parameter("scenario_id_column"),
+    "probability_column": Parameter("probability_column"),
+    "ignore_columns": Parameter("ignore_columns", repeats=True),
+    "currency": Parameter("currency"),
+    "valuation_date": Parameter("valuation_date"),
+    "horizon": Parameter("horizon"),
+}
+MEASURE = ("measure", "level", "above", *MEASURE_NUMBERS)
+WITHOUT_MEANING = (
+    "refresh",
+    "bom",
+)  # a spreadsheet forces a new pull with the first; the second is of the form
+
+
+def allowed(calculation: str) -> tuple[str, ...]:
+    """Return the names of the parameters of a calculation on a table."""
+    special = ALLOCATIONS if calculation == "allocations" else {}
+    return (*MEASURE, *REQUEST, *special, *LOSSES, *WITHOUT_MEANING)
+
+
+def table_request(pairs: Pairs, calculation: str) -> dict[str, Any]:
+    """Return the request document of a table body whose options are query parameters.
+
+    Raises
+    ------
+    InvalidValue
+        For an unknown or repeated parameter, or one that is no number.
+    """
+    refuse_unknown(pairs, allowed(calculation))
+    document = _members(pairs, REQUEST)
+    if calculation == "allocations":
+        document |= _members(pairs, ALLOCATIONS)
+    document["losses"] = {"kind": "scenarios", "part": "table", **_members(pairs, LOSSES)}
+    document["measures"] = measures(pairs)
+    return document
+
+
+def measures(pairs: Pairs) -> list[dict[str, Any]]:
+    """Return the measures that `measure`, `level` and the other parameters of measures name.
+
+    `measure` and `level` may repeat: their product, measure by measure. The others stand once and apply
+    to every measure.
+    """
+    kinds = [value for name, value in pairs if name == "measure"]
+    if not kinds:
+        detail = "name a measure, e.g. measure=expected_shortfall&level=0.99"
+        raise _fault("measure", detail, "missing")
+    levels = [{"level": _number(name, value)} for name, value in pairs if name == "level"] or [{}]
+    others = _members(pairs, {name: Parameter(name, _number) for name in MEASURE_NUMBERS})
+    others |= _members(pairs, {"above": Parameter("above")})
+    return [{"kind": kind, **level, **others} for kind in kinds for level in levels]
+
+
+def refuse_unknown(pairs: Pairs, names: Sequence[str]) -> None:
+    """Refuse parameters that are not among `names`."""
+    unknown = next((name for name, _ in pairs if name not in names), None)
+    if unknown is not None:
+        known = ", ".join(names) if names else "none"
+        raise _fault(unknown[:80], f"unknown query parameter {unknown[:80]!r}; known here: {known}", "unknown_field")
+
+
+def _members(pairs: Pairs, parameters: Mapping[str, Parameter]) -> dict[str, Any]:
+    members: dict[str, Any] = {}
+    for name, value in pairs:
+        parameter = parameters.get(name)
+        if parameter is None:
+            continue
+        if parameter.repeats:
+            members.setdefault(parameter.field, []).append(parameter.convert(name, value))
+        elif parameter.field in members:
+            raise _fault(name, f"{name} stands here twice", "repeated")
+        else:
+            members[parameter.field] = parameter.convert(name, value)
+    return members
+
+
+def parameter_at(pointer: str) -> str:
+    """Return the query parameter that made what stands at `pointer` in the document."""
+    steps = pointer.strip("/").split("/")
+    if steps[0] == "measures":
+        named = steps[2] if len(steps) > 2 else "measure"  # noqa: PLR2004  # /measures/0/level
+        return "measure" if named in ("kind", "measure") else named
+    if steps[0] == "losses":
+        return steps[1] if len(steps) > 1 else "measure"
+    return "rule" if steps[0] == "rules" else steps[0]

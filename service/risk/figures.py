@@ -1,0 +1,112 @@
+"""Figures of a measure with their errors: of the total, of each column alone, of any loss."""
+
+from dataclasses import replace
+
+import numpy as np
+
+from service.risk.frame import Frame
+from service.risk.measures import RiskMeasure, full_influence, full_values
+from service.risk.quantiles import Array, Ordered
+from service.risk.uncertainty import (
+    Estimates,
+    Influence,
+    judged_by_carriers,
+    judged_by_tail,
+    leaning_estimates,
+    spread,
+    usual_lean,
+)
+
+
+def estimates(measure: RiskMeasure, ordered: Ordered, coverage: float) -> Estimates:
+    """Return the figures of c ordered distributions with their errors.
+
+    Parameters
+    ----------
+    measure : RiskMeasure
+    ordered : Ordered
+        c distributions.
+    coverage : float
+        Nominal coverage of the intervals.
+    """
+    values = full_values(measure, ordered)
+    if not ordered.sampled:
+        return Estimates.exact(values)
+    influence = full_influence(measure, ordered)
+    tail = measure.tail_of(ordered)
+    if measure.above == "zero":
+        interval, own = measure.interval(ordered, coverage), measure.errors(ordered)
+        if interval is not None and own is not None and tail is not None:
+            return without_gaps(Estimates(values, own, interval.lower, interval.upper, tail, "order_statistics"))
+    of = spread(influence, scenarios=ordered.scenarios, p=ordered.probabilities)
+    counts = of.effective if tail is None else tail
+    lean = measure.lean(ordered, values, of)
+    if lean is None:
+        lean, method = usual_lean(of), "skewness_adjusted"
+    else:
+        method = "log_mean_excess"
+    return judged(
+        measure,
+        leaning_estimates(values, of, lean, coverage=coverage, tail_scenarios=counts, method=method),
+    )
+
+
+def judged(measure: RiskMeasure, figures: Estimates) -> Estimates:
+    """Take away errors that rest on too little, and remark on those that rest on little."""
+    if measure.of_tail:
+        return without_gaps(judged_by_tail(figures))
+    return without_gaps(judged_by_carriers(figures, measure.carrier_factor))
+
+
+def without_gaps(figures: Estimates) -> Estimates:
+    """Remark on figures whose error could not be estimated, and give them none of its parts."""
+    missing = ~(np.isfinite(figures.standard_errors) & np.isfinite(figures.lower) & np.isfinite(figures.upper))
+    if not missing.any():
+        return figures
+    errors, lower, upper = (
+        np.where(missing, np.nan, part) for part in (figures.standard_errors, figures.lower, figures.upper)
+    )
+    return replace(figures, standard_errors=errors, lower=lower, upper=upper).remarked("no_error")
+
+
+def total(frame: Frame, measure: RiskMeasure, coverage: float) -> Estimates:
+    """Return the figure of the total, shape (1,)."""
+    return estimates(measure, frame.ranking(measure).ordered, coverage)
+
+
+def stand_alone(frame: Frame, measure: RiskMeasure, coverage: float) -> Estimates:
+    """Return the figure of each sub-portfolio and each group alone, shape (d + G,)."""
+    parts = frame.effort.map(lambda ordered: estimates(measure, ordered, coverage), frame.alone(measure))
+    return Estimates.joined(parts)
+
+
+def expected_loss(frame: Frame, coverage: float) -> Estimates:
+    """Return the mean of the total with its error, shape (1,)."""
+    p = frame.table.probabilities
+    mean = float(frame.totals.mean() if p is None else frame.totals @ p)
+    values = np.array([mean])
+    if not frame.table.sampled:
+        return Estimates.exact(values)
+    influence = Influence(frame.totals[None, :], np.zeros(1))
+    of = spread(influence, scenarios=frame.scenarios, p=None if p is None else p[None, :])
+    unknown = np.full(1, np.nan)
+    return leaning_estimates(values, of, usual_lean(of), coverage=coverage, tail_scenarios=unknown)
+
+
+def lean_of_total(frame: Frame, measure: RiskMeasure) -> tuple[float, Influence]:
+    """Return how far the interval of the total leans, and its influence values in the order of the ranking."""
+    ordered = frame.ranking(measure).ordered
+    influence = full_influence(measure, ordered)
+    of = spread(influence, scenarios=ordered.scenarios, p=ordered.probabilities)
+    lean = measure.lean(ordered, full_values(measure, ordered), of)
+    return float((usual_lean(of) if lean is None else lean)[0]), influence
+
+
+def figure_of(frame: Frame, measure: RiskMeasure, loss: Array) -> tuple[float, Array]:
+    """Return the figure of any loss (n,) and its influence values in scenario order, shape (n,)."""
+    ordered, order = frame.one(loss, measure)
+    value = float(full_values(measure, ordered)[0])
+    influence = full_influence(measure, ordered)
+    values = np.full(loss.size, influence.rest[0])
+    values[order] = influence.values[0]
+    return value, values

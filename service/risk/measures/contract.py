@@ -1,0 +1,206 @@
+"""What a risk measure is: weights on the positions of an ordered distribution, and an influence value for each.
+
+One idea carries the arithmetic: a measure of a distribution is a weight per scenario, the figure is
+weights @ losses, and because the weights of the total do not change when a sub-portfolio is looked at
+alone, its Euler contribution is the same weights @ its losses.
+"""
+
+import re
+from dataclasses import dataclass as plain
+from typing import Annotated, ClassVar, Literal
+
+import numpy as np
+from pydantic import AfterValidator, ConfigDict, Field
+from pydantic.dataclasses import dataclass
+from pydantic_core import PydanticCustomError
+
+from service.risk.quantiles import Array, Ordered, QuantileInterval, Ties, decimal
+from service.risk.uncertainty import Influence, Spread
+
+STRICT = ConfigDict(
+    strict=True, extra="forbid", allow_inf_nan=False, use_attribute_docstrings=True, use_enum_values=True
+)
+
+LABEL = "Name of this measure in the answer; by default the kind and its parameters. Unique in a request."
+ABOVE = "`zero`: the figure itself; `mean`: its excess over the expected loss."
+
+Smoothing = Literal["auto", "none"]
+
+MAX_TEXT = 200
+UNSAFE = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029]")
+
+
+def text(value: str) -> str:
+    """Return `value` if it may be echoed: no cell made of it can be taken for a formula."""
+    if not value or not (value[0].isalnum() or value[0] == "_"):
+        code, detail = "unsafe_text", "a name begins with a letter, a digit or an underscore"
+    elif len(value) > MAX_TEXT:
+        code, detail = "unsafe_text", f"a name has at most {MAX_TEXT} characters"
+    elif UNSAFE.search(value):
+        code, detail = "unsafe_text", "a name holds no control characters"
+    else:
+        return value
+    raise PydanticCustomError(code, detail)
+
+
+Text = Annotated[
+    str,
+    AfterValidator(text),
+    Field(json_schema_extra={"minLength": 1, "maxLength": MAX_TEXT, "pattern": r"^[\p{L}\p{N}_][^\x00-\x1f]*$"}),
+]
+
+
+def confidence(value: float) -> float:
+    """Return `value` if it is a confidence level, and say so in words if it looks like a percentage."""
+    if 0.0 < value < 1.0 and 0 < decimal(value) < 1:
+        return value
+    if 1.0 <= value < 100.0:  # noqa: PLR2004  # the range in which a percentage would stand
+        hint = f"{value / 100.0:.15g}, not {value:.15g}"
+        raise PydanticCustomError("level", "a level is a number between 0 and 1: {hint}", {"hint": hint})
+    raise PydanticCustomError("level", "a level is a number above 0 and below 1, such as 0.995")
+
+
+Level = Annotated[
+    float,
+    AfterValidator(confidence),
+    Field(json_schema_extra={"exclusiveMinimum": 0.0, "exclusiveMaximum": 1.0}),
+]
+
+
+@plain(frozen=True, slots=True)
+class ContributionWeights:
+    """Scenario weights of the total for its Euler contributions.
+
+    Attributes
+    ----------
+    values : ndarray of shape (m,)
+        One per position, equal totals sharing theirs in proportion to probability.
+    window : tuple of (float, float, int) or None
+        Lowest and highest total, and number of scenarios, over which a quantile's were smoothed.
+    """
+
+    values: Array
+    window: tuple[float, float, int] | None = None
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class RiskMeasure:
+    """The contract, and what all measures share.
+
+    A member brings `weights` and `influence` for c ordered distributions at once (values of shape
+    (c, m), worst first) and `contribution_influence` for its Euler contributions. Figures are
+    translation-equivariant; all losses are in the currency of the request and so is every figure
+    but for the parameters that say otherwise.
+    """
+
+    upper_index_needed: ClassVar[float] = 0.0
+    """The figure exists if the upper tail index is above this (0: always)."""
+    of_tail: ClassVar[bool] = False
+    """Whether it looks at the scenarios beyond a quantile alone."""
+
+    @property
+    def carrier_factor(self) -> float:
+        """What the effective number of carriers is multiplied by before an error is trusted."""
+        return 1.0
+
+    above: ClassVar[Literal["zero", "mean"]] = "zero"
+    """`zero`: the figure itself; `mean`: its excess over the expected loss (see `LocatedMeasure`)."""
+
+    label: Annotated[Text | None, Field(description=LABEL)] = None
+
+    @property
+    def parameters(self) -> dict[str, float]:
+        """The numbers that define this measure, by name, in the order of the fields."""
+        raise NotImplementedError
+
+    @property
+    def name(self) -> str:
+        """The label, or the kind and its parameters."""
+        if self.label is not None:
+            return self.label
+        kind: str = self.kind  # type: ignore[attr-defined]  # every member has its tag
+        words = [kind, *(f"{number:.15g}" for number in self.parameters.values())]
+        return " ".join(words) + (" above mean" if self.above == "mean" else "")
+
+    def depth(self, scenarios: int, *, contributions: bool) -> float:  # noqa: ARG002  # members use them
+        """Return the share of worst scenarios that figure and error (and contributions) look at."""
+        return 1.0
+
+    def weights(self, ordered: Ordered) -> Array:
+        """Return position weights, shape (1, m) or (c, m), whose sum over values is the figure."""
+        raise NotImplementedError
+
+    def values(self, ordered: Ordered) -> Array:
+        """Return the figures, shape (c,), without regard to `above`."""
+        weights = self.weights(ordered)
+        return np.einsum("ij,ij->i", np.broadcast_to(weights, ordered.values.shape), ordered.values)
+
+    def influence(self, ordered: Ordered, values: Array) -> Influence:
+        """Return influence values of the figures `values` (c,), without regard to `above`."""
+        raise NotImplementedError
+
+    def tail_of(self, ordered: Ordered) -> Array | None:  # noqa: ARG002  # measures of a tail use it
+        """Return the effective number of scenarios in the tail, shape (c,); None for no measure of a tail."""
+        return None
+
+    def lean(self, ordered: Ordered, values: Array, of: Spread) -> Array | None:  # noqa: ARG002  # members use them
+        """Return how far intervals of the figures lean, shape (c,); None for as far as their skewness asks."""
+        return None
+
+    def interval(self, ordered: Ordered, coverage: float) -> QuantileInterval | None:  # noqa: ARG002  # quantiles use them
+        """Return the intervals of a measure that has its own kind, for c distributions; None for the usual ones."""
+        return None
+
+    def errors(self, ordered: Ordered) -> Array | None:  # noqa: ARG002  # quantiles use it
+        """Return standard errors that do not come from the influence values, shape (c,); None for the usual ones."""
+        return None
+
+    def contribution_weights(self, ordered: Ordered, ties: Ties, smoothing: Smoothing) -> ContributionWeights:  # noqa: ARG002
+        """Return the scenario weights of the single distribution in `ordered` for its contributions."""
+        return ContributionWeights(ties.shared(self.weights(ordered)[0]))
+
+    def contribution_influence(
+        self, ordered: Ordered, ties: Ties, rows: Array, weights: ContributionWeights
+    ) -> Influence:
+        """Return influence values of the Euler contributions of c columns.
+
+        Parameters
+        ----------
+        ordered : Ordered
+            The total, a single distribution with m kept positions.
+        ties : Ties
+            Of the total.
+        rows : ndarray of shape (m, c)
+            The columns' losses in the order of the total.
+        weights : ContributionWeights
+            As returned by `contribution_weights`.
+        """
+        raise NotImplementedError
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class LocatedMeasure(RiskMeasure):
+    """A measure that moves with the losses, so that its excess over the expected loss is a choice."""
+
+    above: Annotated[Literal["zero", "mean"], Field(description=ABOVE)] = "zero"  # type: ignore[misc]  # a field here
+
+
+def full_values(measure: RiskMeasure, ordered: Ordered) -> Array:
+    """Return the figures with regard to `above`, shape (c,)."""
+    values = measure.values(ordered)
+    return values - means(ordered) if measure.above == "mean" else values
+
+
+def full_influence(measure: RiskMeasure, ordered: Ordered) -> Influence:
+    """Return influence values of the figures with regard to `above`."""
+    influence = measure.influence(ordered, measure.values(ordered))
+    if measure.above == "mean":
+        return Influence(influence.values - ordered.values, influence.rest)
+    return influence
+
+
+def means(ordered: Ordered) -> Array:
+    """Return the expected losses of complete distributions, shape (c,)."""
+    if ordered.probabilities is None:
+        return np.asarray(ordered.values.mean(axis=-1))
+    return np.einsum("ij,ij->i", ordered.values, ordered.probabilities)

@@ -1,0 +1,1 @@
+"""The HTTP doors: read, calculate, represent, and nothing else."""

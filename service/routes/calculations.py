@@ -1,0 +1,194 @@
+"""The doors of the calculations: read, calculate, represent."""
+
+import asyncio
+import re
+from collections.abc import AsyncIterator
+from contextlib import asynccontextmanager
+from dataclasses import dataclass
+from time import perf_counter
+
+from starlette.requests import Request
+from starlette.responses import Response
+from starlette.routing import Route
+
+from service import calculate, intake
+from service.desk import Desk
+from service.errors import Fault, InvalidValue
+from service.executors import Work
+from service.intake import Intake
+from service.metrics import Metrics
+from service.payloads import TABLE_READERS
+from service.representations import formats
+from service.representations.formats import FORMATS, Form
+from service.routes.bodies import check_coding, check_digest, read_body
+from service.routes.doors import Handler, door
+from service.settings import Settings
+
+CALCULATIONS = ("measures", "allocations")
+"""Names of the calculations; each is the last word of its path."""
+
+SHORT_BODY = 128 * 1024
+"""Bytes of a body that takes less time (about 2 ms) to read and compute than a thread is worth."""
+SHORT_WORK = 6
+"""Most measures times rules of such a body."""
+WAIT = re.compile(r'(?:^|[,;\s])wait\s*=\s*"?(\d{1,9})"?\s*(?:$|[,;])', re.IGNORECASE)  # RFC 7240, 4.3
+BODY_TYPES = ", ".join(("application/json", "multipart/form-data", *TABLE_READERS))
+
+
+def routes(*, settings: Settings, desk: Desk, metrics: Metrics) -> list[Route]:
+    """Return the doors of each calculation: one that goes by Accept, and one per suffix."""
+    made = []
+    for name in CALCULATIONS:
+        for suffix in (None, *FORMATS):
+            path = f"/v1/{name}" if suffix is None else f"/v1/{name}.{suffix}"
+            made.append(_door(path, Calculation(name, suffix, settings, desk, metrics).handle))
+    return made
+
+
+def _door(path: str, handler: Handler) -> Route:
+    return door(path, {"POST": handler, "QUERY": handler}, accept_post=BODY_TYPES, accept_query=BODY_TYPES)
+
+
+@dataclass(frozen=True, slots=True)
+class Calculation:
+    """One path that computes, and what it needs for that."""
+
+    name: str
+    suffix: str | None
+    settings: Settings
+    desk: Desk
+    metrics: Metrics
+
+    async def handle(self, request: Request) -> Response:
+        """Answer one request; what cannot be answered is refused before it is read."""
+        accept = ", ".join(request.headers.getlist("accept"))
+        form = formats.choose(self.suffix, accept, tuple(FORMATS.values()))
+        check_coding(request)
+        self.desk.check()
+        seconds = _preferred_seconds(request)
+        clock = _Clock()
+        body = await read_body(request, self.settings.max_body_bytes)
+        clock.mark("read")
+        task = _Task(self, request, body, form, clock)
+        data = await self._compute(task, seconds)
+        self.metrics.computed(task.scenarios)
+        headers = {"content-type": form.content_type, "vary": "Accept", "server-timing": clock.told()}
+        if seconds is not None:
+            headers["preference-applied"] = f"wait={seconds:.0f}"
+        return Response(data, headers=headers)
+
+    async def _compute(self, task: "_Task", seconds: float | None) -> bytes:
+        """Compute at once what is short; else in a thread, and only while the caller is there."""
+        if len(task.body) <= SHORT_BODY:
+            task.decode()
+            if task.is_short() and self.desk.has_place:
+                return await self.desk.run(task.run, seconds=seconds, gone=asyncio.Event(), short=True)
+        async with _watched(task.request) as gone:
+            return await self.desk.run(task.run, seconds=seconds, gone=gone)
+
+
+class _Clock:
+    """Where the time of one request went."""
+
+    __slots__ = ("_last", "_spent")
+
+    def __init__(self) -> None:
+        self._last = perf_counter()
+        self._spent: list[str] = []
+
+    def mark(self, name: str) -> None:
+        """Put the time since the last mark down to `name`."""
+        now = perf_counter()
+        self._spent.append(f"{name};dur={(now - self._last) * 1e3:.3f}")
+        self._last = now
+
+    def told(self) -> str:
+        """Return the Server-Timing header, in milliseconds."""
+        return ", ".join(self._spent)
+
+
+class _Task:
+    """The work of one request: the part that may run in a thread."""
+
+    __slots__ = ("_calculation", "_clock", "_form", "_taken", "body", "request", "scenarios")
+
+    def __init__(
+        self, calculation: Calculation, request: Request, body: bytes, form: Form, clock: _Clock
+    ) -> None:
+        self._calculation = calculation
+        self._clock = clock
+        self._form = form
+        self._taken: Intake | None = None
+        self.body = body
+        self.request = request
+        self.scenarios = 0
+
+    def decode(self) -> Intake:
+        """Read the body as a request."""
+        headers = self.request.headers
+        check_digest(", ".join(headers.getlist("content-digest")), self.body)
+        self._taken = intake.read(
+            self._calculation.name,
+            self.body,
+            content_type=headers.get("content-type", ""),
+            parameters=self._parameters(),
+            settings=self._calculation.settings,
+        )
+        self._clock.mark("decode")
+        return self._taken
+
+    def is_short(self) -> bool:
+        """Return whether a decoded request is computed in less time than a thread is worth."""
+        if self._taken is None:
+            return False
+        request = self._taken.request
+        rules = getattr(request, "rules", ("none",))
+        return len(request.measures) * len(rules) <= SHORT_WORK and "shapley" not in rules
+
+    def run(self, work: Work) -> bytes:
+        """Return the answer's bytes."""
+        self._clock.mark("wait")
+        mark = _wants_mark(self._parameters())
+        answer = calculate.answer(self._taken or self.decode(), work, self._calculation.settings)
+        self.scenarios = answer.scenarios
+        self._clock.mark("compute")
+        data = formats.write(answer, self._form, mark=mark)
+        self._clock.mark("write")
+        return data
+
+    def _parameters(self) -> list[tuple[str, str]]:
+        return self.request.query_params.multi_items() if self.request.scope["query_string"] else []
+
+
+@asynccontextmanager
+async def _watched(request: Request) -> AsyncIterator[asyncio.Event]:
+    """Give an event that is set when the caller leaves."""
+    gone = asyncio.Event()
+
+    async def watch() -> None:
+        while (await request.receive())["type"] != "http.disconnect":
+            pass
+        gone.set()
+
+    watching = asyncio.create_task(watch())
+    try:
+        yield gone
+    finally:
+        watching.cancel()
+
+
+def _preferred_seconds(request: Request) -> float | None:
+    """Return the seconds of ``Prefer: wait=…``; a preference that cannot be read is none (RFC 7240, 2)."""
+    found = WAIT.search(", ".join(request.headers.getlist("prefer")))
+    return float(found[1]) if found else None
+
+
+def _wants_mark(parameters: list[tuple[str, str]]) -> bool:
+    """Return whether a CSV answer begins with the byte order mark."""
+    values = [value for name, value in parameters if name == "bom"]
+    if values in ([], ["0"]):
+        return False
+    if values == ["1"]:
+        return True
+    detail = "bom is 0 or 1, once"
+    raise InvalidValue(detail, faults=[Fault(detail=detail, code="not_allowed", parameter="bom")])

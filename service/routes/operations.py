@@ -1,0 +1,133 @@
+"""The doors beside the calculations: health, limits, metrics, and the pages that people read."""
+
+import json
+from collections.abc import Mapping, Sequence
+from dataclasses import fields
+from functools import partial
+from typing import Any
+
+from starlette.requests import Request
+from starlette.responses import FileResponse, Response
+from starlette.routing import Route
+
+from service import __version__
+from service.desk import Desk
+from service.errors import NotFound
+from service.metrics import Metrics
+from service.pages import docs, html
+from service.pages.front import front_page
+from service.pages.problems import problem_index, problem_page, problem_record
+from service.representations.formats import best
+from service.routes.doors import Handler, door
+from service.settings import Settings, variable
+from service.validation import CODES
+
+HTML = "text/html; charset=utf-8"
+JSON = "application/json"
+A_DAY = "public, max-age=86400"
+
+
+def routes(
+    *, settings: Settings, desk: Desk, metrics: Metrics, statuses: Mapping[str, int], document: bytes
+) -> list[Route]:
+    """Return the doors of one app.
+
+    Parameters
+    ----------
+    settings : Settings
+    desk : Desk
+    metrics : Metrics
+    statuses : mapping of str to int
+        Code of each problem to its status.
+    document : bytes
+        The OpenAPI document.
+    """
+    about_links = '</openapi.json>; rel="service-desc", </docs>; rel="service-doc"'
+    front = _said(front_page(__version__), HTML, policy=html.POLICY, link=about_links)
+    start = _said(docs.START, "text/javascript; charset=utf-8")
+    limits = _said(json.dumps(limits_of(settings)), JSON)
+    return [
+        door("/", {"GET": front}),
+        door("/healthz", {"GET": _said('{"status":"alive"}', JSON, cache_control="no-store")}),
+        door("/readyz", {"GET": partial(_ready, desk)}),
+        door("/metrics", {"GET": partial(_metrics, metrics)}),
+        door("/v1/limits", {"GET": limits}),
+        door("/problems", {"GET": partial(_problems, statuses)}),
+        door("/problems/{code}", {"GET": partial(_problem, statuses)}),
+        door("/openapi.json", {"GET": _said(document, JSON)}),
+        door("/docs", {"GET": _said(docs.PAGE, HTML, policy=docs.POLICY)}),
+        door("/docs/start.js", {"GET": start}),
+        *(door(f"/docs/{name}", {"GET": partial(_asset, name)}) for name in docs.ASSETS),
+    ]
+
+
+def limits_of(settings: Settings) -> list[dict[str, Any]]:
+    """Return what `GET /v1/limits` answers: one row per setting that limits a caller."""
+    return [
+        {
+            "name": spec.name,
+            "value": getattr(settings, spec.name),
+            "unit": spec.metadata["unit"],
+            "setting": variable(spec.name),
+        }
+        for spec in fields(settings)
+        if spec.name.startswith("max_")
+    ]
+
+
+def _said(content: str | bytes, media_type: str, *, policy: str | None = None, **headers: str) -> Handler:
+    """Return a handler that always answers the same."""
+    sent = {name.replace("_", "-"): value for name, value in headers.items()}
+    if policy is not None:
+        sent["content-security-policy"] = policy
+
+    async def handle(_request: Request) -> Response:
+        return Response(content, headers=sent, media_type=media_type)
+
+    return handle
+
+
+async def _ready(desk: Desk, _request: Request) -> Response:
+    desk.check()
+    return Response('{"status":"ready"}', headers={"cache-control": "no-store"}, media_type=JSON)
+
+
+async def _metrics(metrics: Metrics, _request: Request) -> Response:
+    return Response(
+        metrics.exposition(), headers={"cache-control": "no-store", "content-type": metrics.content_type}
+    )
+
+
+async def _problems(statuses: Mapping[str, int], request: Request) -> Response:
+    if _wants_json(request):
+        return _record([problem_record(code, status) for code, status in statuses.items()])
+    return _page(problem_index(statuses, CODES))
+
+
+async def _problem(statuses: Mapping[str, int], request: Request) -> Response:
+    code = request.path_params["code"]
+    status = statuses.get(code)
+    if status is None:
+        raise NotFound("There is no problem of this name; GET /problems lists all.")
+    return (
+        _record(problem_record(code, status)) if _wants_json(request) else _page(problem_page(code, status))
+    )
+
+
+async def _asset(name: str, _request: Request) -> Response:
+    return FileResponse(docs.asset(name), headers={"cache-control": A_DAY}, media_type=docs.ASSETS[name])
+
+
+def _wants_json(request: Request) -> bool:
+    """Return whether JSON suits the caller better than a page; one who takes neither gets the page."""
+    accept = ", ".join(request.headers.getlist("accept"))
+    return best(accept, ("text/html", JSON)) == JSON
+
+
+def _page(content: str) -> Response:
+    headers = {"content-security-policy": html.POLICY, "vary": "Accept"}
+    return Response(content, headers=headers, media_type=HTML)
+
+
+def _record(content: dict[str, object] | Sequence[dict[str, object]]) -> Response:
+    return Response(json.dumps(content), headers={"vary": "Accept"}, media_type=JSON)

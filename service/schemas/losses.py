@@ -1,0 +1,146 @@
+"""The `losses` union: where the losses come from."""
+
+import datetime as dt
+import re
+from typing import Annotated, Any, Literal, Self
+
+from pydantic import AfterValidator, Field, WithJsonSchema, model_validator
+from pydantic.dataclasses import dataclass
+from pydantic_core import PydanticCustomError
+
+from service.risk.measures import Text
+from service.risk.measures.contract import STRICT
+
+DATE = re.compile(r"\d{4}-\d{2}-\d{2}")
+
+Number = Annotated[float, Field(json_schema_extra={"format": "double"})]
+Count = Annotated[int, Field(ge=1, json_schema_extra={"format": "int64"})]
+
+
+def _date(value: str) -> str:
+    if DATE.fullmatch(value):
+        try:
+            dt.date.fromisoformat(value)
+        except ValueError:
+            pass
+        else:
+            return value
+    raise PydanticCustomError("date", "a date is written YYYY-MM-DD")
+
+
+Date = Annotated[str, AfterValidator(_date), Field(json_schema_extra={"format": "date"})]
+
+
+def _attribute(name: str) -> str:
+    if "/" in name:
+        raise PydanticCustomError("attribute", "the name of an attribute holds no '/'")
+    return name
+
+
+AttributeName = Annotated[Text, AfterValidator(_attribute)]
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class SubPortfolioColumn:
+    """One sub-portfolio: a column of the loss table."""
+
+    id: Text
+    """Its name, unique in the request."""
+    attributes: dict[AttributeName, Text] = Field(default_factory=dict)
+    """What it belongs to, e.g. {"entity": "north", "line": "hull"}; the answer can be grouped by these."""
+    expected_profit: Number | None = None
+    """Expected profit as a gain (positive is a profit), in currency; never derived from the losses."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class PackedTable:
+    """The loss table as base64 of little-endian floating-point values in C order."""
+
+    data: Annotated[str, Field(json_schema_extra={"contentEncoding": "base64"})]
+    """The values, row after row."""
+    dtype: Literal["float64", "float32"]
+    """Type of each value."""
+    rows: Count
+    """Rows of the table as packed (scenarios, unless `layout` is `by_sub_portfolio`)."""
+    columns: Count
+    """Columns of the table as packed (sub-portfolios, unless `layout` is `by_sub_portfolio`)."""
+
+
+Rows = Annotated[
+    Any,
+    WithJsonSchema(
+        {
+            "type": "array",
+            "minItems": 1,
+            "items": {"type": "array", "minItems": 1, "items": {"type": "number", "format": "double"}},
+        }
+    ),
+]
+"""The table itself is decoded apart from the rest of the request and never passes through the model."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class ScenarioLosses:
+    """A table of loss scenarios that the caller sends: exactly one of `values`, `packed` and `part`."""
+
+    kind: Literal["scenarios"]
+    """Tag of this source."""
+    sub_portfolios: Annotated[list[SubPortfolioColumn] | None, Field(min_length=1)] = None
+    """One per column, in order. Needed for `values` and `packed`; for a table with a header they may add attributes."""
+    values: Rows = None
+    """The losses as rows, in currency: a row per scenario (or per sub-portfolio, see `layout`)."""
+    packed: PackedTable | None = None
+    """The losses as packed binary values, in currency."""
+    part: Literal["table"] | None = None
+    """The losses stand in the part `table` of a multipart request, as CSV, Arrow IPC stream or Parquet."""
+    layout: Literal["by_scenario", "by_sub_portfolio"] = "by_scenario"
+    """Whether a row of `values` or `packed` is a scenario or a sub-portfolio."""
+    sign: Literal["loss", "profit"] = "loss"
+    """Whether a positive value is a loss or a profit; profits are negated on entry."""
+    probabilities: list[Annotated[Number, Field(ge=0.0)]] | None = None
+    """Probability of each scenario, without unit, summing to 1; equal if absent."""
+    scenarios_are: Literal["sample", "population"] = "sample"
+    """`sample`: draws, so figures have errors; `population`: the whole distribution, so they have none."""
+    scenario_ids: list[Text] | None = None
+    """Label of each scenario, unique."""
+    scenario_id_column: Text | None = None
+    """Column of a table with a header that holds the labels of the scenarios."""
+    probability_column: Text | None = None
+    """Column of a table with a header that holds the probabilities."""
+    ignore_columns: list[Text] | None = None
+    """Columns of a table with a header that are left out."""
+    currency: Text | None = None
+    """Currency of all amounts; a label, nothing is converted."""
+    valuation_date: Date | None = None
+    """Valuation date, YYYY-MM-DD; a label."""
+    horizon: Text | None = None
+    """Horizon of the losses, e.g. `1 year`; a label."""
+
+    @model_validator(mode="after")
+    def _one_table(self) -> Self:
+        given = [name for name in ("values", "packed", "part") if getattr(self, name) is not None]
+        if len(given) != 1:
+            words = " and ".join(given) if given else "none"
+            raise PydanticCustomError(
+                "table",
+                "exactly one of values, packed and part holds the table, not {given}",
+                {"given": words},
+            )
+        if self.part is None:
+            _no_header(self)
+        elif self.layout != "by_scenario":
+            raise PydanticCustomError("table", "a table with a header is always laid out by_scenario")
+        return self
+
+
+def _no_header(losses: ScenarioLosses) -> None:
+    """Refuse what only a table with a header can have."""
+    if losses.sub_portfolios is None:
+        raise PydanticCustomError("missing", "sub_portfolios must name the columns of the table")
+    for name in ("scenario_id_column", "probability_column", "ignore_columns"):
+        if getattr(losses, name) is not None:
+            raise PydanticCustomError("table", "{name} is for tables with a header (part: table)", {"name": name})
+
+
+Losses = ScenarioLosses
+"""Any source of losses, told apart by `kind`."""

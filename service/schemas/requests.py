@@ -1,0 +1,77 @@
+"""One request model per calculation."""
+
+from collections.abc import Sequence
+from typing import Annotated, Literal, Self
+
+from pydantic import AfterValidator, Field, model_validator
+from pydantic.dataclasses import dataclass
+from pydantic_core import PydanticCustomError
+
+from service.risk.measures import Measure, Smoothing, Text
+from service.risk.measures.contract import STRICT
+from service.schemas.losses import Losses, Number
+
+MOST_MEASURES = 32
+
+Rule = Literal["euler", "proportional_stand_alone", "covariance", "with_without", "shapley"]
+
+
+def _usual_rules() -> list[Rule]:
+    return ["euler"]
+
+
+def _distinct(values: Sequence[object]) -> Sequence[object]:
+    repeated = next((value for number, value in enumerate(values) if value in values[:number]), None)
+    if repeated is not None:
+        raise PydanticCustomError("repeated", "{value} stands here twice", {"value": str(repeated)})
+    return values
+
+
+def _distinct_names(measures: Sequence[Measure]) -> Sequence[Measure]:
+    _distinct([measure.name for measure in measures])
+    return measures
+
+
+Measures = Annotated[list[Measure], Field(min_length=1, max_length=MOST_MEASURES), AfterValidator(_distinct_names)]
+Coverage = Annotated[Number, Field(gt=0.0, lt=1.0)]
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class MeasuresRequest:
+    """What is asked of `POST /v1/measures`."""
+
+    losses: Losses
+    """Where the losses come from."""
+    measures: Measures
+    """The risk measures to compute, 1 to 32, with distinct names."""
+    group_by: Annotated[list[Text], AfterValidator(_distinct)] = Field(default_factory=list)
+    """Attributes to group by; `entity/line` crosses two."""
+    interval_coverage: Coverage = 0.95
+    """Nominal coverage of the intervals, without unit."""
+    include_stand_alone: bool = True
+    """Whether to compute each sub-portfolio (and group) alone."""
+    tail_detail: bool = False
+    """Whether to list the ten worst scenarios."""
+    reference: Text | None = None
+    """Label of this request; comes back unchanged."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class AllocationsRequest(MeasuresRequest):
+    """What is asked of `POST /v1/allocations`."""
+
+    rules: Annotated[list[Rule], Field(min_length=1), AfterValidator(_distinct)] = Field(
+        default_factory=_usual_rules, description="Allocation rules, each applied to each measure."
+    )
+    capital: Annotated[Number, Field(gt=0.0)] | None = None
+    """Amount to spread in the ratio of the contributions, in currency."""
+    capital_measure: Measure | None = None
+    """Measure whose figure is spread in the ratio of the contributions."""
+    smoothing: Smoothing = "auto"
+    """`auto`: contributions to a quantile are smoothed over neighbouring scenarios; `none`: they are not."""
+
+    @model_validator(mode="after")
+    def _one_capital(self) -> Self:
+        if self.capital is not None and self.capital_measure is not None:
+            raise PydanticCustomError("capital", "give capital or capital_measure, not both")
+        return self

@@ -1,0 +1,370 @@
+"""One result model per calculation.
+
+Plain dataclasses: they are written once, by us, so nothing is validated at run time; their types make the
+OpenAPI document and a test holds every answer against it.
+"""
+
+from dataclasses import dataclass
+from typing import Annotated, Literal
+
+from pydantic import Field
+
+from service.representations.table import Column, Table
+
+Money = Annotated[float, Field(json_schema_extra={"format": "double"})]
+Whole = Annotated[int, Field(json_schema_extra={"format": "int64"})]
+
+NoteCode = Literal[
+    "population",
+    "no_error",
+    "thin_tail",
+    "few_scenarios",
+    "ratio_not_defined",
+    "smoothed_quantile",
+    "does_not_add_up",
+    "sampled_shapley",
+    "no_expected_profit",
+]
+
+
+@dataclass(frozen=True, slots=True)
+class Note:
+    """Something the caller may want to know about a figure."""
+
+    code: Annotated[
+        NoteCode,
+        Field(
+            description="`population`: the scenarios are the whole distribution, so no figure has an error. "
+            "`no_error`: too few scenarios carry the figure for an error to be given. "
+            "`thin_tail`: the error is given but rests on few tail scenarios. "
+            "`few_scenarios`: a few scenarios carry most of the error of a figure; its interval may be too narrow. "
+            "`ratio_not_defined`: a ratio is null since its denominator is not positive. "
+            "`smoothed_quantile`: contributions to a quantile were smoothed over the window given. "
+            "`does_not_add_up`: the contributions of this rule do not add up to the total; see `residual`. "
+            "`sampled_shapley`: a sample of orders of entry stands for all of them; the error includes it. "
+            "`no_expected_profit`: some sub-portfolios have no expected profit, so the total has no return on capital."
+        ),
+    ]
+    detail: Annotated[str, Field(description="The same in a sentence.")]
+    pointer: Annotated[str | None, Field(description="RFC 6901 pointer to the part of the request it is about.")]
+
+
+@dataclass(frozen=True, slots=True)
+class Interval:
+    """Confidence interval of a figure, for the error of sampling only."""
+
+    lower: Annotated[Money, Field(description="Lower end, in currency.")]
+    upper: Annotated[Money, Field(description="Upper end, in currency.")]
+    coverage: Annotated[Money, Field(description="Nominal coverage, without unit.")]
+    method: Annotated[str, Field(description="How the interval was made.")]
+
+
+@dataclass(frozen=True, slots=True)
+class Figure:
+    """A figure and how sure it is. The error is that of sampling only, never of the model."""
+
+    value: Annotated[Money, Field(description="The figure, in currency.")]
+    standard_error: Annotated[
+        Money | None, Field(description="Standard error, in currency; null where it cannot be estimated.")
+    ]
+    interval: Annotated[Interval | None, Field(description="Confidence interval; null where it cannot be estimated.")]
+    tail_scenarios: Annotated[
+        Money | None,
+        Field(
+            description="Effective number of scenarios that carry the figure: those beyond the quantile, or for "
+            "measures of the whole distribution those that carry its error variance."
+        ),
+    ]
+
+
+@dataclass(frozen=True, slots=True)
+class StandAloneFigure:
+    """The measure of one sub-portfolio alone."""
+
+    id: Annotated[str, Field(description="The sub-portfolio.")]
+    figure: Annotated[Figure, Field(description="The measure of its loss alone.")]
+
+
+@dataclass(frozen=True, slots=True)
+class GroupFigure:
+    """The measure of the summed loss of one group alone."""
+
+    attribute: Annotated[str, Field(description="Attribute or crossing, e.g. `entity/line`.")]
+    group: Annotated[str | None, Field(description="Its value, e.g. `north/hull`; null for those without it.")]
+    figure: Annotated[Figure, Field(description="The measure of the group's summed loss.")]
+
+
+@dataclass(frozen=True, slots=True)
+class MeasureResult:
+    """One measure of the whole book, and of each part alone."""
+
+    measure: Annotated[str, Field(description="Name of the measure.")]
+    total: Annotated[Figure, Field(description="The measure of the total loss.")]
+    stand_alone: Annotated[
+        list[StandAloneFigure], Field(description="Each sub-portfolio alone; empty if not asked for.")
+    ]
+    groups: Annotated[list[GroupFigure], Field(description="Each group alone; empty if not asked for.")]
+    diversification_benefit: Annotated[
+        Money | None, Field(description="1 - total / sum of the stand-alone figures, without unit.")
+    ]
+    diversification_amount: Annotated[
+        Money | None, Field(description="Sum of the stand-alone figures less the total, in currency.")
+    ]
+
+
+@dataclass(frozen=True, slots=True)
+class AllocationRow:
+    """What one sub-portfolio contributes."""
+
+    id: Annotated[str, Field(description="The sub-portfolio.")]
+    contribution: Annotated[Figure, Field(description="Its part of the total.")]
+    share: Annotated[Money | None, Field(description="Contribution over total, without unit.")]
+    stand_alone: Annotated[Figure | None, Field(description="The measure of its loss alone; null if not asked for.")]
+    diversification_benefit: Annotated[
+        Money | None, Field(description="1 - contribution / stand-alone figure, without unit.")
+    ]
+    expected_loss: Annotated[Money, Field(description="Its mean loss, in currency.")]
+    expected_profit: Annotated[Money | None, Field(description="As given in the request, in currency.")]
+    return_on_capital: Annotated[
+        Money | None,
+        Field(
+            description="Expected profit over allocated capital (over the contribution where no capital is given), "
+            "without unit."
+        ),
+    ]
+    allocated_capital: Annotated[Money | None, Field(description="Share times the capital to spread, in currency.")]
+
+
+@dataclass(frozen=True, slots=True)
+class GroupRow:
+    """What one group contributes: the sum of its members, or as one where the rule says so."""
+
+    attribute: Annotated[str, Field(description="Attribute or crossing, e.g. `entity/line`.")]
+    group: Annotated[str | None, Field(description="Its value, e.g. `north/hull`; null for those without it.")]
+    contribution: Annotated[Figure, Field(description="Its part of the total.")]
+    share: Annotated[Money | None, Field(description="Contribution over total, without unit.")]
+    stand_alone: Annotated[Figure | None, Field(description="The measure of its summed loss; null if not asked for.")]
+    diversification_benefit: Annotated[
+        Money | None, Field(description="1 - contribution / stand-alone figure, without unit.")
+    ]
+    expected_loss: Annotated[Money, Field(description="Its mean loss, in currency.")]
+    expected_profit: Annotated[
+        Money | None, Field(description="Sum of its members', in currency; null if one has none.")
+    ]
+    return_on_capital: Annotated[
+        Money | None,
+        Field(
+            description="Expected profit over allocated capital (over the contribution where no capital is given), "
+            "without unit."
+        ),
+    ]
+    allocated_capital: Annotated[Money | None, Field(description="Share times the capital to spread, in currency.")]
+
+
+@dataclass(frozen=True, slots=True)
+class SmoothingWindow:
+    """The scenarios over which contributions to a quantile were smoothed."""
+
+    lower: Annotated[Money, Field(description="Smallest total in the window, in currency.")]
+    upper: Annotated[Money, Field(description="Largest total in the window, in currency.")]
+    scenarios: Annotated[Whole, Field(description="Scenarios in the window.")]
+
+
+@dataclass(frozen=True, slots=True)
+class AllocationResult:
+    """One measure, split among the sub-portfolios by one rule."""
+
+    measure: Annotated[str, Field(description="Name of the measure.")]
+    rule: Annotated[str, Field(description="Allocation rule.")]
+    total: Annotated[Figure, Field(description="The measure of the total loss.")]
+    sub_portfolios: Annotated[list[AllocationRow], Field(description="One row per sub-portfolio, in order.")]
+    groups: Annotated[list[GroupRow], Field(description="One row per group.")]
+    capital: Annotated[Money | None, Field(description="The capital spread, in currency; null if none is given.")]
+    return_on_capital: Annotated[
+        Money | None,
+        Field(description="Sum of expected profits over the capital (over the total where no capital is given)."),
+    ]
+    window: Annotated[
+        SmoothingWindow | None,
+        Field(description="For smoothed contributions to a quantile: the scenarios used."),
+    ]
+    residual: Annotated[
+        Money | None,
+        Field(description="Total less the sum of contributions, in currency, for a rule that does not add up."),
+    ]
+
+
+@dataclass(frozen=True, slots=True)
+class SubPortfolioLoss:
+    """The loss of one sub-portfolio in one scenario."""
+
+    id: Annotated[str, Field(description="The sub-portfolio.")]
+    value: Annotated[Money, Field(description="Its loss, in currency.")]
+
+
+@dataclass(frozen=True, slots=True)
+class TailScenario:
+    """One of the worst scenarios."""
+
+    number: Annotated[Whole, Field(description="Its number, counted from 0.")]
+    scenario_id: Annotated[str | None, Field(description="Its label, if one was given.")]
+    probability: Annotated[Money, Field(description="Its probability, without unit.")]
+    total: Annotated[Money, Field(description="Its total loss, in currency.")]
+    losses: Annotated[list[SubPortfolioLoss], Field(description="Its loss by sub-portfolio, in order.")]
+
+
+@dataclass(frozen=True, slots=True)
+class TailFactor:
+    """A factor's mean in the tail of the total."""
+
+    id: Annotated[str, Field(description="The factor.")]
+    mean: Annotated[Money, Field(description="Its mean given the tail, in its own unit.")]
+    normal_score: Annotated[Money, Field(description="Its mean normal score given the tail, without unit.")]
+
+
+@dataclass(frozen=True, slots=True)
+class Tail:
+    """The worst scenarios of the total."""
+
+    level: Annotated[Money, Field(description="Confidence level beyond which factors are averaged.")]
+    scenarios: Annotated[list[TailScenario], Field(description="The ten worst, worst first.")]
+    factors: Annotated[list[TailFactor], Field(description="For factor and history sources; else empty.")]
+
+
+@dataclass(frozen=True, slots=True)
+class Labels:
+    """Labels of the request, unchanged."""
+
+    currency: Annotated[str | None, Field(description="Currency of all amounts.")] = None
+    valuation_date: Annotated[str | None, Field(description="Valuation date, YYYY-MM-DD.")] = None
+    horizon: Annotated[str | None, Field(description="Horizon of the losses.")] = None
+    reference: Annotated[str | None, Field(description="Label of the request.")] = None
+
+
+@dataclass(frozen=True, slots=True)
+class Provenance:
+    """What an auditor needs to repeat the figures."""
+
+    service_version: Annotated[str, Field(description="Version of tailrace.")]
+    request_digest: Annotated[str, Field(description="`sha-256:` and hex over the canonical request.")]
+    losses_digest: Annotated[
+        str,
+        Field(
+            description="`sha-256:` and hex over the ids, losses and probabilities, however they were sent: the same "
+            "numbers have the same digest."
+        ),
+    ]
+    method: Annotated[str, Field(description="How the figures came about.")]
+    seed: Annotated[Whole | None, Field(description="Seed of the simulation; null where nothing was simulated.")]
+    scenarios: Annotated[Whole, Field(description="Scenarios behind the figures.")]
+
+
+@dataclass(frozen=True, slots=True)
+class MeasuresAnswer:
+    """Answer of `POST /v1/measures`."""
+
+    measures: Annotated[list[MeasureResult], Field(description="One result per measure, in the order asked.")]
+    expected_loss: Annotated[Figure, Field(description="Mean of the total loss.")]
+    scenarios: Annotated[Whole, Field(description="Number of scenarios.")]
+    tail: Annotated[Tail | None, Field(description="The worst scenarios; null if not asked for.")]
+    labels: Annotated[Labels, Field(description="Labels of the request, unchanged.")]
+    notes: Annotated[list[Note], Field(description="What the caller may want to know.")]
+    provenance: Annotated[Provenance, Field(description="What an auditor needs to repeat the figures.")]
+
+    def table(self) -> Table:
+        """Return one row per figure: the total, each sub-portfolio alone, each group alone."""
+        rows: list[tuple[object, ...]] = []
+        for result in self.measures:
+            parts: list[tuple[str, str | None, str | None, Figure]] = [("total", None, None, result.total)]
+            parts += [("sub_portfolio", None, one.id, one.figure) for one in result.stand_alone]
+            parts += [("group", one.attribute, one.group, one.figure) for one in result.groups]
+            rows += [
+                (
+                    result.measure,
+                    scope,
+                    attribute,
+                    name,
+                    *_spread(figure),
+                    figure.tail_scenarios,
+                    self.labels.currency,
+                )
+                for scope, attribute, name, figure in parts
+            ]
+        return Table(MEASURES_COLUMNS, rows)
+
+
+@dataclass(frozen=True, slots=True)
+class AllocationsAnswer:
+    """Answer of `POST /v1/allocations`."""
+
+    allocations: Annotated[
+        list[AllocationResult], Field(description="Measures in the order asked and, within each, rules.")
+    ]
+    expected_loss: Annotated[Figure, Field(description="Mean of the total loss.")]
+    scenarios: Annotated[Whole, Field(description="Number of scenarios.")]
+    tail: Annotated[Tail | None, Field(description="The worst scenarios; null if not asked for.")]
+    labels: Annotated[Labels, Field(description="Labels of the request, unchanged.")]
+    notes: Annotated[list[Note], Field(description="What the caller may want to know.")]
+    provenance: Annotated[Provenance, Field(description="What an auditor needs to repeat the figures.")]
+
+    def table(self) -> Table:
+        """Return one row for the total, each sub-portfolio and each group of every allocation."""
+        rows: list[tuple[object, ...]] = []
+        for result in self.allocations:
+            head = (result.measure, result.rule)
+            total = (*_spread(result.total), None, None, None, self.expected_loss.value, None)
+            tail = (result.return_on_capital, result.capital, self.labels.currency)
+            rows.append((*head, "total", None, None, *total, *tail))
+            rows += [(*head, "sub_portfolio", None, one.id, *self._row(one)) for one in result.sub_portfolios]
+            rows += [(*head, "group", one.attribute, one.group, *self._row(one)) for one in result.groups]
+        return Table(ALLOCATIONS_COLUMNS, rows)
+
+    def _row(self, row: AllocationRow | GroupRow) -> tuple[object, ...]:
+        return (
+            *_spread(row.contribution),
+            row.share,
+            None if row.stand_alone is None else row.stand_alone.value,
+            row.diversification_benefit,
+            row.expected_loss,
+            row.expected_profit,
+            row.return_on_capital,
+            row.allocated_capital,
+            self.labels.currency,
+        )
+
+
+def _spread(figure: Figure) -> tuple[float, float | None, float | None, float | None]:
+    """Return value, standard error and both ends of the interval."""
+    ends = (None, None) if figure.interval is None else (figure.interval.lower, figure.interval.upper)
+    return (figure.value, figure.standard_error, *ends)
+
+
+def _text(*names: str) -> tuple[Column, ...]:
+    return tuple(Column(name=name, unit=None, kind="text") for name in names)
+
+
+def _money(*names: str) -> tuple[Column, ...]:
+    return tuple(Column(name=name, unit="currency", kind="number") for name in names)
+
+
+def _ratio(*names: str) -> tuple[Column, ...]:
+    return tuple(Column(name=name, unit=None, kind="number") for name in names)
+
+
+MEASURES_COLUMNS = (
+    *_text("measure", "scope", "attribute", "id"),
+    *_money("value", "standard_error", "lower", "upper"),
+    *_ratio("tail_scenarios"),
+    *_text("currency"),
+)
+ALLOCATIONS_COLUMNS = (
+    *_text("measure", "rule", "scope", "attribute", "id"),
+    *_money("contribution", "standard_error", "lower", "upper"),
+    *_ratio("share"),
+    *_money("stand_alone"),
+    *_ratio("diversification_benefit"),
+    *_money("expected_loss", "expected_profit"),
+    *_ratio("return_on_capital"),
+    *_money("allocated_capital"),
+    *_text("currency"),
+)

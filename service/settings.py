@@ -1,0 +1,72 @@
+"""The settings of one server: each has a safe default and an environment variable ``TAILRACE_…``."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, fields
+from os import cpu_count
+from typing import Any
+
+PREFIX = "TAILRACE_"
+MEBIBYTE = 1 << 20
+LISTENING = ("host", "port", "workers")
+"""Where and as what the server runs: variables of `tailrace serve` alone, no settings of the app."""
+
+
+def _setting(default: float, meaning: str, *, unit: str, least: float = 1) -> Any:
+    """Return a dataclass field that carries what `GET /v1/limits` and the documentation say of it."""
+    return field(default=default, metadata={"meaning": meaning, "unit": unit, "least": least})
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Settings:
+    """What an operator may set; made once at the door and passed in."""
+
+    max_body_bytes: int = _setting(256 * MEBIBYTE, "size of one request body", unit="bytes", least=1024)
+    max_cells: int = _setting(50_000_000, "scenarios times sub-portfolios of one loss table", unit="cells")
+    max_sub_portfolios: int = _setting(10_000, "sub-portfolios of one request", unit="sub-portfolios")
+    max_groups: int = _setting(1_000, "groups of one request", unit="groups")
+    max_seconds: float = _setting(60.0, "computing time of one request", unit="seconds", least=0.001)
+    max_concurrent: int = _setting(cpu_count() or 1, "requests that compute at the same time", unit="requests")
+    max_waiting: int = _setting(64, "requests that wait for a place to compute", unit="requests", least=0)
+    threads: int = _setting(cpu_count() or 1, "computing threads of one request", unit="threads")
+    stop_seconds: int = _setting(25, "time to finish running requests when told to stop", unit="seconds")
+
+    @classmethod
+    def from_environment(cls, environment: Mapping[str, str]) -> "Settings":
+        """Read every setting from ``TAILRACE_<NAME>``.
+
+        Parameters
+        ----------
+        environment : mapping of str to str
+            Usually ``os.environ``; variables without the prefix are ignored.
+
+        Raises
+        ------
+        ValueError
+            For an unknown ``TAILRACE_`` variable or a value that is not an allowed number.
+        """
+        known = {variable(spec.name): spec for spec in fields(cls)}
+        apart = {variable(name) for name in LISTENING}
+        given = {name: text for name, text in environment.items() if name.startswith(PREFIX) and name not in apart}
+        unknown = sorted(given.keys() - known.keys())
+        if unknown:
+            msg = f"unknown setting {unknown[0]}; the settings are {', '.join(known)}"
+            raise ValueError(msg)
+        values: dict[str, Any] = {}
+        for name, text in given.items():
+            spec = known[name]
+            kind = float if spec.type is float else int
+            try:
+                value = kind(text)
+            except ValueError:
+                msg = f"{name} is {text!r}, not a number of {spec.metadata['unit']}"
+                raise ValueError(msg) from None
+            if not spec.metadata["least"] <= value < float("inf"):
+                msg = f"{name} is {text}, but at least {spec.metadata['least']:g} is needed"
+                raise ValueError(msg)
+            values[spec.name] = value
+        return cls(**values)
+
+
+def variable(name: str) -> str:
+    """Return the environment variable that sets the setting `name`."""
+    return PREFIX + name.upper()

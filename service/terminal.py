@@ -1,0 +1,181 @@
+"""Answers and errors for a person at a terminal; only here and on the report page are numbers rounded."""
+
+import sys
+import textwrap
+import time
+from collections.abc import Callable, Iterator
+from typing import TextIO
+
+from service.errors import Fault, TailraceError
+from service.representations.table import Column, Table, text_table
+from service.schemas.results import (
+    AllocationResult,
+    AllocationRow,
+    AllocationsAnswer,
+    Figure,
+    GroupRow,
+    MeasureResult,
+    MeasuresAnswer,
+)
+
+WIDTH = 100
+BAR = 30  # characters of a full progress bar
+BAR_SECONDS = 0.1  # between two drawings of it
+CAUTION = (
+    "These figures are estimates from the scenarios given; their errors are those of sampling, not of the model. "
+    "They are no statement of required or available capital: local rules and the responsible actuary or risk "
+    "officer decide."
+)
+
+Answer = MeasuresAnswer | AllocationsAnswer
+
+
+def readable(answer: Answer) -> str:
+    """Return an answer as text: a table per result, then notes, cautions and where it came from."""
+    results = answer.allocations if isinstance(answer, AllocationsAnswer) else answer.measures
+    blocks = [*_heading(answer)]
+    blocks += [_allocation(one) if isinstance(one, AllocationResult) else _measure(one) for one in results]
+    blocks += [_wrapped(f"Note: {note.detail}.") for note in answer.notes]
+    blocks.append(_wrapped(CAUTION))
+    blocks.append(f"{answer.provenance.method}\nrequest {answer.provenance.request_digest}\n")
+    return "\n".join(blocks)
+
+
+def _heading(answer: Answer) -> Iterator[str]:
+    labels = answer.labels
+    words = [labels.reference, labels.valuation_date, labels.horizon and f"horizon {labels.horizon}"]
+    known = [word for word in words if word]
+    if known:
+        yield ", ".join(known)
+    unit = f" in {labels.currency}" if labels.currency else ""
+    yield f"{answer.scenarios:,} scenarios, amounts{unit}, expected loss {_short(answer.expected_loss.value)}"
+    interval = answer.expected_loss.interval
+    if interval is not None:
+        yield f"lower and upper: {100.0 * interval.coverage:g} % intervals of the error of sampling\n"
+
+
+def _allocation(result: AllocationResult) -> str:
+    """Return one allocation: sub-portfolios, groups, and the total at the foot."""
+    rows: list[tuple[object, ...]] = []
+    parts: list[AllocationRow | GroupRow] = [*result.sub_portfolios, *result.groups]
+    for one in parts:
+        name = f"{one.attribute}: {one.group or '(none)'}" if isinstance(one, GroupRow) else one.id
+        alone = None if one.stand_alone is None else one.stand_alone.value
+        benefit, allocated = one.diversification_benefit, one.allocated_capital
+        part = one.contribution
+        rows.append(
+            (
+                name,
+                part.value,
+                *_ends(part),
+                _percent(one.share),
+                alone,
+                _percent(benefit),
+                allocated,
+                _percent(one.return_on_capital),
+            )
+        )
+    total = result.total
+    rows.append(
+        (
+            "total",
+            total.value,
+            *_ends(total),
+            None,
+            None,
+            None,
+            result.capital,
+            _percent(result.return_on_capital),
+        )
+    )
+    names = ("lower", "upper", "share", "alone", "diversified", "allocated", "return")
+    columns = (_text("sub-portfolio"), _number("contribution"), *(_ratio_or_number(name) for name in names))
+    rule = result.rule.replace("_", " ")
+    residual = "" if result.residual is None else f"not shared out: {_short(result.residual)}\n"
+    return f"{result.measure}, {rule}\n{text_table(Table(columns, rows))}{residual}"
+
+
+def _measure(result: MeasureResult) -> str:
+    parts: list[tuple[str, Figure]] = [(one.id, one.figure) for one in result.stand_alone]
+    parts += [(f"{one.attribute}: {one.group or '(none)'}", one.figure) for one in result.groups]
+    parts.append(("total", result.total))
+    rows = [(name, figure.value, figure.standard_error, *_ends(figure)) for name, figure in parts]
+    columns = (_text("alone"), *(_number(name) for name in ("figure", "standard error", "lower", "upper")))
+    saved = (
+        ""
+        if result.diversification_benefit is None
+        else f"diversification {_percent(result.diversification_benefit)}\n"
+    )
+    return f"{result.measure}\n{text_table(Table(columns, rows))}{saved}"
+
+
+def _ends(figure: Figure) -> tuple[float | None, float | None]:
+    return (None, None) if figure.interval is None else (figure.interval.lower, figure.interval.upper)
+
+
+def _percent(ratio: float | None) -> str | None:
+    return None if ratio is None else f"{100.0 * ratio:.1f} %"
+
+
+def _short(value: float) -> str:
+    return f"{value:,.0f}" if abs(value) >= 1e4 else f"{value:,.6g}"  # noqa: PLR2004  # whole units say enough
+
+
+def _text(name: str) -> Column:
+    return Column(name=name, kind="text")
+
+
+def _number(name: str) -> Column:
+    return Column(name=name, kind="number")
+
+
+def _ratio_or_number(name: str) -> Column:
+    return Column(name=name, kind="percent" if name in ("share", "diversified", "return") else "number")
+
+
+def _wrapped(words: str) -> str:
+    return textwrap.fill(words, WIDTH) + "\n"
+
+
+def complaint(error: TailraceError) -> str:
+    """Return an error in a person's words, one line for each fault."""
+    lines = [error.detail]
+    lines += [f"  {place}: {fault.detail}" for fault in error.faults if (place := _place(fault))]
+    return "\n".join(lines)
+
+
+def _place(fault: Fault) -> str:
+    if fault.pointer is not None:
+        return f"at {fault.pointer or 'the top'}"
+    if fault.parameter or fault.header:
+        return f"at {fault.parameter or fault.header}"
+    words = [f"row {fault.row}" if fault.row else "", f"column {fault.column}" if fault.column else ""]
+    return " ".join(filter(None, words))
+
+
+class ProgressBar:
+    """A progress bar on a terminal; silent elsewhere."""
+
+    def __init__(self, stream: TextIO = sys.stderr, clock: Callable[[], float] = time.monotonic) -> None:
+        self._stream, self._clock = stream, clock
+        self._shown = stream.isatty()
+        self._start = self._last = clock()
+        self._drawn = False
+
+    def __call__(self, fraction: float = 0.0, /) -> None:
+        """Draw the bar at `fraction`, not too often, and not for what is over at once."""
+        now = self._clock()
+        if not self._shown or now - self._last < BAR_SECONDS or fraction <= 0.0:
+            return
+        self._last = now
+        done = round(BAR * min(fraction, 1.0))
+        left = (now - self._start) * (1.0 / fraction - 1.0)
+        self._stream.write(f"\r[{'#' * done}{'.' * (BAR - done)}] {fraction:4.0%}, {left:.0f} s left ")
+        self._stream.flush()
+        self._drawn = True
+
+    def end(self) -> None:
+        """Wipe the bar."""
+        if self._drawn:
+            self._stream.write("\r" + " " * (BAR + 25) + "\r")
+            self._stream.flush()
