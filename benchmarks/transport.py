@@ -2,13 +2,13 @@
 
 import io
 from contextlib import ExitStack, closing
-from functools import partial
+from statistics import median
 from urllib.parse import urlencode
 
 import orjson
 import pyarrow as pa
 
-from benchmarks.books import LEVELS, MEASURES, Array, arithmetic, names, normals, table_of
+from benchmarks.books import LEVELS, Array, arithmetic, names, normals, table_of
 from benchmarks.client import Connection, calling, per_second, request_of
 from benchmarks.rows import Outcome, Pace, Row, at_least, at_most
 from benchmarks.servers import rivals, tailrace
@@ -16,9 +16,10 @@ from benchmarks.timing import one_by_one, ratios, taking_turns
 
 LARGE = (100_000, 20)
 SMALL = (1000, 10)
-CONNECTIONS = 4  # to a server of one or two processes
+CONNECTIONS = 8  # enough that neither of two processes is ever without a request
 JSON = "application/json"
 ARROW = "application/vnd.apache.arrow.stream"
+KINDS = ("value_at_risk", "expected_shortfall")
 DEFAULT_PATH = "/allocations"  # of the framework's own route
 ONE = "expected_shortfall 0.99"
 SIX = "VaR and ES at 3 levels"
@@ -38,10 +39,136 @@ def json_request(losses: Array, path: str, measures: list[dict[str, object]], **
     return request_of("POST", path, orjson.dumps(body, option=orjson.OPT_SERIALIZE_NUMPY), JSON)
 
 
-def arrow_request(losses: Array, options: dict[str, object]) -> bytes:
-    """Return an allocations request whose body is an Arrow IPC stream."""
+def arrow_request(losses: Array, path: str, options: dict[str, object]) -> bytes:
+    """Return a request whose body is an Arrow IPC stream and whose options are query parameters."""
     table = pa.table(dict(zip(names(losses.shape[1]), losses.T, strict=True)))
     body = io.BytesIO()
     with pa.ipc.new_stream(body, table.schema) as stream:
         stream.write_table(table)
-    return request_of("POST", "/v1/allocations?" + urlencode(options, doseq=True), body.getvalue(), ARROW)
+    return request_of("POST", f"{path}?{urlencode(options, doseq=True)}", body.getvalue(), ARROW)
+
+
+def _levels() -> list[dict[str, object]]:
+    return [{"kind": kind, "level": level} for kind in KINDS for level in LEVELS]
+
+
+def default_over_json(pace: Pace) -> Outcome:
+    """Time the framework's default route over tailrace's, both with the same JSON and the same arithmetic."""
+    losses = normals(*LARGE)
+    with ExitStack() as stack:
+        ours = stack.enter_context(closing(Connection(stack.enter_context(tailrace()))))
+        other = stack.enter_context(closing(Connection(stack.enter_context(rivals()))))
+        default = calling(other, json_request(losses, DEFAULT_PATH, _levels()))
+        json = calling(ours, json_request(losses, "/v1/allocations", _levels()))
+        same = [orjson.loads(answer())["allocations"] for answer in (default, json)]
+        assert same[0] == same[1]
+        return Outcome.of(one_by_one(default, json, pace.repeats))
+
+
+def arrow_over_core(pace: Pace) -> Outcome:
+    """Time an Arrow request over the sum of a request that only drops the same bytes and of the full core."""
+    losses = normals(*LARGE)
+    table = table_of(losses)
+    options = {"measure": KINDS, "level": LEVELS}
+    with ExitStack() as stack:
+        ours = stack.enter_context(closing(Connection(stack.enter_context(tailrace()))))
+        other = stack.enter_context(closing(Connection(stack.enter_context(rivals()))))
+        seconds = taking_turns(
+            {
+                "arrow": calling(ours, arrow_request(losses, "/v1/allocations", options)),
+                "drop": calling(other, arrow_request(losses, "/drop", {})),
+                "core": lambda: arithmetic(table, stand_alone=True),
+            },
+            pace.repeats,
+        )
+    least = [drop + core for drop, core in zip(seconds["drop"], seconds["core"], strict=True)]
+    return Outcome.of(ratios(seconds["arrow"], least))
+
+
+def arrow_over_ping(pace: Pace) -> Outcome:
+    """Count Arrow requests a second over pings a second, on one connection."""
+    losses = normals(*SMALL)
+    one: dict[str, object] = {"measure": "expected_shortfall", "level": 0.99}
+    alone, six = "with stand-alone figures", f"{SIX}, with stand-alone figures"
+    asked = {
+        ONE: {**one, "include_stand_alone": "false"},
+        f"{ONE}, {alone}": one,
+        six: {"measure": KINDS, "level": LEVELS},
+    }
+    requests = {what: arrow_request(losses, "/v1/allocations", options) for what, options in asked.items()}
+    ping = request_of("GET", "/ping")
+    found: dict[str, list[float]] = {what: [] for what in asked}
+    with tailrace() as ours, rivals() as other:
+        for _ in range(pace.repeats):
+            pings = per_second(other, ping, seconds=pace.seconds)
+            for what, request in requests.items():
+                found[what].append(per_second(ours, request, seconds=pace.seconds) / pings)
+    details = [f"{median(shares):.3g} with {what}" for what, shares in found.items()]
+    return Outcome.of(found[ONE], [*details, f"{pings:.0f} pings a second"])
+
+
+def json_over_default(pace: Pace) -> Outcome:
+    """Count JSON requests a second over those of the framework's default route, on one connection."""
+    losses = normals(*SMALL)
+    measures: list[dict[str, object]] = [{"kind": "expected_shortfall", "level": 0.99}]
+    ours_asked, other_asked = (
+        json_request(losses, path, measures, include_stand_alone=False)
+        for path in ("/v1/allocations", DEFAULT_PATH)
+    )
+    found = []
+    with tailrace() as ours, rivals() as other:
+        for _ in range(pace.repeats):
+            default = per_second(other, other_asked, seconds=pace.seconds)
+            found.append(per_second(ours, ours_asked, seconds=pace.seconds) / default)
+    return Outcome.of(found)
+
+
+def two_over_one(pace: Pace) -> Outcome:
+    """Count JSON requests a second that two processes answer over those that one answers."""
+    measures: list[dict[str, object]] = [{"kind": "expected_shortfall", "level": 0.99}]
+    asked = json_request(normals(*SMALL), "/v1/allocations", measures, include_stand_alone=False)
+    found = []
+    with tailrace(workers=2) as two, tailrace() as one:
+        for _ in range(pace.repeats):
+            alone = per_second(one, asked, seconds=pace.seconds, connections=CONNECTIONS)
+            found.append(per_second(two, asked, seconds=pace.seconds, connections=CONNECTIONS) / alone)
+    return Outcome.of(found)
+
+
+ROWS = (
+    Row(
+        "P12",
+        f"default FastAPI route / JSON route, whole request, {SIX} with stand-alone figures, 100k × 20",
+        at_least(5),
+        at_least(3),
+        default_over_json,
+    ),
+    Row(
+        "P13",
+        f"Arrow route / (receive and drop + full core), {SIX} with stand-alone figures, 100k × 20",
+        at_most(1.3),
+        at_most(2),
+        arrow_over_core,
+    ),
+    Row(
+        "P16",
+        f"requests/s of an Arrow 1000 × 10 request ({ONE}, Euler, with errors) / of a FastAPI ping, 1 connection",
+        at_least(0.5),
+        at_least(0.3),
+        arrow_over_ping,
+    ),
+    Row(
+        "P17",
+        f"requests/s of a JSON 1000 × 10 request ({ONE}, Euler, with errors) / on the default route, 1 connection",
+        at_least(4.5),
+        at_least(3),
+        json_over_default,
+    ),
+    Row(
+        "P17",
+        f"requests/s of the same, 2 workers / 1 worker, {CONNECTIONS} connections",
+        at_least(1.7),
+        at_least(1.4),
+        two_over_one,
+    ),
+)

@@ -40,9 +40,7 @@ def pyarrow() -> Any:
     try:
         import pyarrow as pa
     except ImportError:
-        detail = (
-            "this server does not read Arrow or Parquet: its operator installs the extra `arrow` for that"
-        )
+        detail = "this server does not read Arrow or Parquet: its operator installs the extra `arrow` for that"
         raise UnsupportedMediaType.of(
             Fault(detail=detail, code=UnsupportedMediaType.code, header="Content-Type")
         ) from None
@@ -90,9 +88,7 @@ def require_types(schema: Any, selection: Selection) -> None:
     for index in selection.texts:
         kind = schema.field(index).type
         if not (types.is_floating(kind) or types.is_integer(kind) or _is_text(kind)):
-            detail = (
-                f"column {selection.names[index]!r} is {_type_name(kind)}: cast it to a plain text column"
-            )
+            detail = f"column {selection.names[index]!r} is {_type_name(kind)}: cast it to a plain text column"
             raise invalid_cell(detail, column=selection.names[index])
 
 

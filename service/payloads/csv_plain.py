@@ -79,15 +79,14 @@ def plain_sheet(data: bytes, start: int, selection: Selection, *, max_cells: int
     return Sheet(
         values=flat.reshape(rows, columns),
         names=selection.number_names,
-        texts={
-            selection.names[index]: tuple(cells) for cells, index in zip(texts, selection.texts, strict=True)
-        },
+        texts={selection.names[index]: tuple(cells) for cells, index in zip(texts, selection.texts, strict=True)},
     )
 
 
 def _block(lines: bytes, leading: int, columns: int) -> _Block:
     """Read whole lines; a ``ValueError`` or ``TypeError`` if they are not plain numbers."""
-    lines = lines.replace(b"\r\n", b"\n").removesuffix(b"\r")
+    if b"\r" in lines:
+        lines = lines.replace(b"\r\n", b"\n").removesuffix(b"\r")
     if b'"' in lines or b"\r" in lines:
         raise ValueError("quotes or lone returns")
     heads: list[tuple[bytes, ...]] = []
@@ -96,7 +95,7 @@ def _block(lines: bytes, leading: int, columns: int) -> _Block:
         lines = b"\n".join(tails)
     if len(heads) != leading or b"[" in lines or b"]" in lines:
         raise ValueError("too few cells, or brackets")
-    rows = number_rows(b"[[" + lines.replace(b"\n", b"],[") + b"]]")
+    rows = number_rows(b"".join((b"[[", lines.replace(b"\n", b"],["), b"]]")))
     if rows.lengths.count(columns) != len(rows.lengths):
         raise ValueError("ragged rows")
     return _Block(heads, rows.flat)

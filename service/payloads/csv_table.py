@@ -25,7 +25,6 @@ BLOCK_CELLS = 1 << 14
 """Cells that the csv module holds as text at a time."""
 
 _SEPARATORS = {";": "semicolons", "\t": "tabs", "|": "bars"}
-_BYTE_ORDER_MARK = b"\xef\xbb\xbf"
 _PLACE = Fault(detail="", code="", part=PART)
 
 
@@ -72,16 +71,16 @@ def table_from_csv(
 def _require_text(data: bytes) -> None:
     if data.startswith((b"\xff\xfe", b"\xfe\xff")) or b"\x00" in data:
         raise _malformed("the table holds NUL bytes or is UTF-16: CSV is sent in UTF-8")
-    if not data.removeprefix(_BYTE_ORDER_MARK).strip(b"\r\n"):
-        raise _malformed("the table is empty: its first line must name the columns")
 
 
 def _header(data: bytes) -> tuple[list[str], int | None]:
     """Return the headers and the offset of the line below, if it can be told by counting line feeds."""
     with _reading():
         reader = _reader(data)
-        names = next(reader)
+        names = next(reader, None)
         lines = reader.line_num
+    if names is None:
+        raise _malformed("the table is empty: its first line must name the columns")
     _require_names(names)
     start = 0
     for _ in range(lines):
@@ -97,9 +96,7 @@ def _require_names(names: list[str]) -> None:
     if len(names) == 1:
         for mark, plural in _SEPARATORS.items():
             if mark in names[0]:
-                raise _malformed(
-                    f"the columns are separated by {plural}: CSV is sent with commas, and decimal points"
-                )
+                raise _malformed(f"the columns are separated by {plural}: CSV is sent with commas, and decimal points")
     if not names:
         raise invalid_cell("the first line must name the columns, but it is blank")
     if all(_is_number(name) for name in names):
@@ -112,9 +109,7 @@ def _sheet(data: bytes, selection: Selection, *, max_cells: int) -> Sheet:
     texts: dict[str, list[str]] = {selection.names[index]: [] for index in selection.texts}
     done = 0
     for rows in _row_blocks(data, columns=len(selection.names)):
-        require_cells(
-            (done + len(rows)) * len(selection.numbers), max_cells=max_cells, fault=_PLACE, at_least=True
-        )
+        require_cells((done + len(rows)) * len(selection.numbers), max_cells=max_cells, fault=_PLACE, at_least=True)
         blocks.append(_numbers(rows, selection, first=done + 1))
         for index in selection.texts:
             texts[selection.names[index]] += [row[index] for row in rows]
@@ -200,9 +195,7 @@ def _why_no_number(cell: str) -> str:
     if not cell.strip():
         return "the cell is empty"
     if "," in cell and cell.replace(",", "").strip().lstrip("+-").replace(".", "").isdecimal():
-        return (
-            f"{excerpt(cell)} is not a number: the decimal mark is a point, and thousands are not separated"
-        )
+        return f"{excerpt(cell)} is not a number: the decimal mark is a point, and thousands are not separated"
     try:
         float(cell)
     except ValueError:

@@ -20,6 +20,9 @@ from service.payloads.json_faults import Place, explain
 PIECE = 1 << 16
 """Bytes parsed at a time."""
 
+TAIL = 64
+"""Bytes at the end of a piece in which its last bracket or digit is looked for."""
+
 COUNT_BLOCK = 1 << 18
 """Bytes compared at a time while a byte is counted."""
 
@@ -140,12 +143,18 @@ def _read_piece(view: memoryview, place: Place) -> tuple[NumberRows, Place]:
     """
     comma = _COMMA.search(view, place.offset + PIECE)
     stop = comma.start() if comma else len(view)
-    piece = bytes(view[place.offset : stop])
-    inside = comma is not None and not piece.rstrip(JSON_SPACE).endswith(b"]")
+    piece = view[place.offset : stop]
+    inside = comma is not None and not _ends_with_bracket(piece)
     opening = b"" if place.offset == 0 else b"[[" if place.column else b"["
     closing = b"" if comma is None else b"]]" if inside else b"]"
-    rows = number_rows(opening + piece + closing)
+    rows = number_rows(b"".join((opening, piece, closing)))
     return rows, _after(place, rows.lengths, offset=stop + 1, inside=inside)
+
+
+def _ends_with_bracket(piece: memoryview) -> bool:
+    """Say whether the last byte but for white space closes an array; mostly few bytes are looked at."""
+    tail = bytes(piece[-TAIL:]).rstrip(JSON_SPACE) or bytes(piece).rstrip(JSON_SPACE)
+    return tail.endswith(b"]")
 
 
 def _after(place: Place, lengths: list[int], *, offset: int, inside: bool) -> Place:

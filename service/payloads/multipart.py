@@ -81,9 +81,7 @@ def split_multipart(body: bytes, content_type: str) -> Parts:
     request, table = parts
     for part, name in zip(parts, PARTS, strict=True):
         if part.headers.get(b"content-transfer-encoding", b"").strip().lower() not in _UNCODED:
-            raise _error(
-                UnsupportedMediaType, f"the part {name} has a transfer encoding: send it as it is", name
-            )
+            raise _error(UnsupportedMediaType, f"the part {name} has a transfer encoding: send it as it is", name)
     return Parts(
         request=_request(body, request),
         table=memoryview(body)[table.start : table.stop],

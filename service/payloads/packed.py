@@ -66,9 +66,7 @@ def unpack(
     with np.errstate(invalid="ignore"):  # a signalling NaN of float32 is found below
         values: NDArray[np.float64] = packed.astype(np.float64, copy=False).reshape(rows, columns)
     if (cell := settle(values)) is not None:
-        detail = (
-            f"row {cell[0]}, column {cell[1]} (counted from 0) is {values[cell]}: every number must be finite"
-        )
+        detail = f"row {cell[0]}, column {cell[1]} (counted from 0) is {values[cell]}: every number must be finite"
         raise InvalidValue.at(POINTER, detail)
     return values
 

@@ -15,7 +15,7 @@ from service.risk.frame import Frame
 from service.risk.measures import RiskMeasure, Smoothing
 from service.risk.quantiles import Array
 from service.risk.shapley import shapley_values
-from service.risk.uncertainty import Estimates, Influence, lean_of_parts, leaning_estimates, spread
+from service.risk.uncertainty import Estimates, Influence, Sampling, lean_of_parts, leaning_estimates, spread
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -48,7 +48,7 @@ class Case:
         *,
         total: Influence,
         lean: float,
-        p: Array | None,
+        sampling: Sampling,
         extra: Array | None = None,
     ) -> Estimates:
         """Return contributions with their errors.
@@ -62,12 +62,12 @@ class Case:
             Of the measure of the total, in the same order.
         lean : float
             Of the total's interval.
-        p : ndarray of shape (1, m) or None
-            Probabilities in that order.
+        sampling : Sampling
+            Of the scenarios in that order.
         extra : ndarray of shape (c,), optional
             Variances that come on top, such as that of drawn orders.
         """
-        of = spread(influence, scenarios=self.frame.scenarios, p=p, beside=total)
+        of = spread(influence, sampling, beside=total)
         if extra is not None:
             of = replace(of, errors=np.sqrt(of.errors**2 + extra))
         tail = self.measure.tail_of(self.frame.ranking(self.measure).ordered)
@@ -79,14 +79,13 @@ class Case:
         """Return contributions with their errors from influence values (c, n), those of the total (n,)."""
         if not self.frame.table.sampled:
             return Estimates.exact(values)
-        p = self.frame.table.probabilities
         lean, _ = lean_of_total(self.frame, self.measure)
         parts = self.estimates(
             values,
             _free(influence),
             total=_free(total[None, :]),
             lean=lean,
-            p=None if p is None else p[None, :],
+            sampling=self.frame.sampling,
             extra=extra,
         )
         return judged(self.measure, parts)
@@ -136,7 +135,7 @@ def euler(case: Case) -> Contributions:
         influence = measure.contribution_influence(ordered, ties, rows, weights)
         if measure.above == "mean":
             influence = Influence(influence.values - rows.T, influence.rest)
-        return case.estimates(values, influence, total=total, lean=lean, p=ordered.probabilities)
+        return case.estimates(values, influence, total=total, lean=lean, sampling=Sampling.of(ordered))
 
     figures = Estimates.joined(frame.effort.map(part, frame.rows(ranking)))
     figures = judged(measure, figures) if ordered.sampled else figures

@@ -97,6 +97,10 @@ class CoverStep:
         """Return the tails of the amount that leaves this step given those of the one that enters."""
         raise NotImplementedError
 
+    def preimage(self, amounts: Array) -> Array:
+        """Return the largest amounts that this step maps to at most `amounts`, shape (n,); infinite where all or none."""
+        raise NotImplementedError
+
     def misfit(self, reach: tuple[float, float]) -> str | None:  # noqa: ARG002  # members that bound use it
         """Return why this step has nothing to do for amounts within `reach`; None where it fits."""
         return None
@@ -156,6 +160,12 @@ class LayerCover(_LayerTerms):
     def mapped(self, amounts: Array, *, out: Array | None = None) -> Array:
         return self.paid(amounts, out=out)
 
+    def preimage(self, amounts: Array) -> Array:
+        reached = np.where(amounts < 0.0, -np.inf, self.attachment + amounts / self.share)
+        if self.limit is None:
+            return reached
+        return np.where(amounts >= self.share * self.limit, np.inf, reached)
+
     def tails(self, tails: Tails) -> Tails:
         bounded = tails.bounded_below()
         return bounded.times(self.share) if self.limit is None else bounded.bounded_above()
@@ -178,6 +188,14 @@ class CedeLayerCover(_LayerTerms):
         if self.share == 1.0 and self.limit is None:
             return np.minimum(amounts, self.attachment, out=out)
         return np.subtract(amounts, self.paid(amounts), out=out)
+
+    def preimage(self, amounts: Array) -> Array:
+        excess = amounts - self.attachment
+        limit, kept = math.inf if self.limit is None else self.limit, 1.0 - self.share
+        with np.errstate(divide="ignore", invalid="ignore"):
+            within = excess / kept if kept > 0.0 else np.full_like(excess, np.inf)
+        above = np.where(within < limit, within, excess + self.share * limit)
+        return np.where(excess < 0.0, amounts, self.attachment + above)
 
     def tails(self, tails: Tails) -> Tails:
         if self.limit is not None:
@@ -207,6 +225,9 @@ class QuotaShareCover(CoverStep):
     def mapped(self, amounts: Array, *, out: Array | None = None) -> Array:
         return np.multiply(amounts, self.retained, out=out)
 
+    def preimage(self, amounts: Array) -> Array:
+        return np.asarray(amounts / self.retained)
+
     def tails(self, tails: Tails) -> Tails:
         return tails.times(self.retained)
 
@@ -222,6 +243,9 @@ class CapCover(CoverStep):
 
     def mapped(self, amounts: Array, *, out: Array | None = None) -> Array:
         return np.minimum(amounts, self.amount, out=out)
+
+    def preimage(self, amounts: Array) -> Array:
+        return np.where(amounts >= self.amount, np.inf, amounts)
 
     def tails(self, tails: Tails) -> Tails:
         return tails.bounded_above()
@@ -243,6 +267,9 @@ class FloorCover(CoverStep):
 
     def mapped(self, amounts: Array, *, out: Array | None = None) -> Array:
         return np.maximum(amounts, self.amount, out=out)
+
+    def preimage(self, amounts: Array) -> Array:
+        return np.where(amounts < self.amount, -np.inf, amounts)
 
     def tails(self, tails: Tails) -> Tails:
         return tails.bounded_below()
@@ -281,6 +308,13 @@ def covered(steps: Sequence[CoverStep], amounts: Array, *, out: Array | None = N
         np.copyto(out, amounts)
         return out
     return result
+
+
+def preimage(steps: Sequence[CoverStep], amounts: Array) -> Array:
+    """Return the largest amounts (n,) that all steps map to at most `amounts`: for the law of what leaves them."""
+    for step in reversed(steps):
+        amounts = step.preimage(amounts)
+    return amounts
 
 
 def tails_after(steps: Sequence[CoverStep], tails: Tails) -> Tails:
@@ -393,5 +427,6 @@ __all__ = [
     "check_cover",
     "covered",
     "harmonic",
+    "preimage",
     "tails_after",
 ]

@@ -10,6 +10,7 @@ from service.risk.quantiles import Array, Ordered
 from service.risk.uncertainty import (
     Estimates,
     Influence,
+    Sampling,
     judged_by_carriers,
     judged_by_tail,
     leaning_estimates,
@@ -38,7 +39,7 @@ def estimates(measure: RiskMeasure, ordered: Ordered, coverage: float) -> Estima
         interval, own = measure.interval(ordered, coverage), measure.errors(ordered)
         if interval is not None and own is not None and tail is not None:
             return without_gaps(Estimates(values, own, interval.lower, interval.upper, tail, "order_statistics"))
-    of = spread(influence, scenarios=ordered.scenarios, p=ordered.probabilities)
+    of = spread(influence, Sampling.of(ordered))
     counts = of.effective if tail is None else tail
     lean = measure.lean(ordered, values, of)
     if lean is None:
@@ -88,7 +89,7 @@ def expected_loss(frame: Frame, coverage: float) -> Estimates:
     if not frame.table.sampled:
         return Estimates.exact(values)
     influence = Influence(frame.totals[None, :], np.zeros(1))
-    of = spread(influence, scenarios=frame.scenarios, p=None if p is None else p[None, :])
+    of = spread(influence, frame.sampling)
     unknown = np.full(1, np.nan)
     return leaning_estimates(values, of, usual_lean(of), coverage=coverage, tail_scenarios=unknown)
 
@@ -97,7 +98,7 @@ def lean_of_total(frame: Frame, measure: RiskMeasure) -> tuple[float, Influence]
     """Return how far the interval of the total leans, and its influence values in the order of the ranking."""
     ordered = frame.ranking(measure).ordered
     influence = full_influence(measure, ordered)
-    of = spread(influence, scenarios=ordered.scenarios, p=ordered.probabilities)
+    of = spread(influence, Sampling.of(ordered))
     lean = measure.lean(ordered, full_values(measure, ordered), of)
     return float((usual_lean(of) if lean is None else lean)[0]), influence
 

@@ -11,6 +11,7 @@ from service.risk.loss_table import Group, LossTable, check_magnitude, group_los
 from service.risk.measures import RiskMeasure
 from service.risk.quantiles import Array, Indices, Ordered
 from service.risk.ranking import MOST_PARTIAL, Ranking, ranked, worst
+from service.risk.uncertainty import Sampling
 
 CHUNK_BYTES = 1 << 25  # of sorted columns held at a time
 KEPT_BYTES = 1 << 28  # of the tail's rows held between measures
@@ -77,19 +78,13 @@ class Frame:
                 tails = np.concatenate([tails, beside.tails])
         if table.probabilities is None:
             expected = expected / table.scenarios
-        ranking = ranked(
-            folded.totals,
-            table.losses,
-            probabilities=table.probabilities,
-            sampled=table.sampled,
-            depth=max(partial) if partial else 1.0,
-        )
+        ranking = ranked(folded.totals, table, depth=max(partial) if partial else 1.0)
         return cls(table, groups, effort, (table.losses, sums), folded.totals, expected, tails, ranking)
 
     @staticmethod
     def _depth(table: LossTable, measure: RiskMeasure, *, contributions: bool) -> float:
         """Return how deep `measure` looks; 1 where everything has to be ordered."""
-        if table.probabilities is not None:
+        if not table.plain:
             return 1.0
         depth = measure.depth(table.scenarios, contributions=contributions)
         return depth if depth < MOST_PARTIAL else 1.0
@@ -99,6 +94,14 @@ class Frame:
         """Number n of scenarios."""
         return self.table.scenarios
 
+    @property
+    def sampling(self) -> Sampling:
+        """How the scenarios, in their own order, were drawn."""
+        p, clusters = self.table.probabilities, self.table.clusters
+        return Sampling(
+            self.scenarios, None if p is None else p[None, :], None if clusters is None else clusters[None, :]
+        )
+
     def ranking(self, measure: RiskMeasure) -> Ranking:
         """Return the scenarios in the order of their total, as deep as `measure` looks."""
         depth = self._depth(self.table, measure, contributions=True)
@@ -107,9 +110,7 @@ class Frame:
         if self._whole is None:
             self._whole = self._ranking
             if not self._ranking.ordered.complete:
-                self._whole = ranked(
-                    self.totals, self.table.losses, probabilities=None, sampled=self.table.sampled, depth=1.0
-                )
+                self._whole = ranked(self.totals, self.table, depth=1.0)
         return self._whole
 
     def rows(self, ranking: Ranking) -> Iterator[Array]:
@@ -160,22 +161,27 @@ class Frame:
                 self.effort.checkpoint()
                 yield self._sorted(table[:, start : start + width].T)
 
-    def _ordered(self, values: Array, probabilities: Array | None) -> Ordered:
-        return Ordered.of(values, scenarios=self.scenarios, probabilities=probabilities, sampled=self.table.sampled)
+    def _ordered(self, values: Array, orders: Indices | None) -> Ordered:
+        """Return ordered distributions (c, m) whose positions hold the scenarios `orders` (c, m)."""
+        p, clusters = self.table.probabilities, self.table.clusters
+        return Ordered.of(
+            values,
+            scenarios=self.scenarios,
+            probabilities=None if p is None or orders is None else p[orders],
+            sampled=self.table.sampled,
+            clusters=None if clusters is None or orders is None else clusters[orders],
+        )
 
     def _sorted(self, columns: Array) -> Ordered:
         """Return `columns` (c, n) as complete ordered distributions."""
-        p = self.table.probabilities
-        if p is None:
+        if self.table.plain:
             values = np.negative(columns, order="C")
             self.effort.map(lambda row: row.sort(), list(values))
             return self._ordered(np.negative(values, out=values), None)
-        orders = self.effort.map(lambda row: np.argsort(-row, kind="stable"), list(columns))
-        values = np.stack([column[order] for column, order in zip(columns, orders, strict=True)])
-        return self._ordered(values, np.stack([p[order] for order in orders]))
+        orders = np.stack(self.effort.map(lambda row: np.argsort(-row, kind="stable"), list(columns)))
+        return self._ordered(np.take_along_axis(columns, orders, axis=1), orders)
 
     def one(self, values: Array, measure: RiskMeasure) -> tuple[Ordered, Indices]:
         """Return any loss (n,) as a single ordered distribution and the scenario number of each position."""
         order = worst(values, self._depth(self.table, measure, contributions=False))
-        p = self.table.probabilities
-        return self._ordered(values[order][None, :], None if p is None else p[order][None, :]), order
+        return self._ordered(values[order][None, :], order[None, :]), order

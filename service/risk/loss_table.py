@@ -63,6 +63,8 @@ class LossTable:
         Whether the scenarios are draws; if not they are the whole distribution.
     sub_portfolios : tuple of SubPortfolio
     scenario_ids : tuple of str or None
+    clusters : ndarray of int of shape (n,) or None
+        Cluster of each scenario where they are dependent within clusters; None where all are independent.
     """
 
     losses: Array
@@ -70,6 +72,12 @@ class LossTable:
     sampled: bool
     sub_portfolios: tuple[SubPortfolio, ...]
     scenario_ids: tuple[str, ...] | None = None
+    clusters: Indices | None = None
+
+    @property
+    def plain(self) -> bool:
+        """Whether the scenarios are equally probable and independent, so that a tail of them can stand for all."""
+        return self.probabilities is None and self.clusters is None
 
     @property
     def scenarios(self) -> int:

@@ -62,6 +62,9 @@ class Ordered:
         else 1.
     sampled : bool
         Whether the scenarios are draws; if not they are the whole distribution and nothing has an error.
+    clusters : ndarray of int of shape (1, m) or (c, m), or None
+        Number of the cluster of each position where scenarios are dependent within clusters; None where all
+        are independent.
     """
 
     values: Array
@@ -70,14 +73,23 @@ class Ordered:
     upper: Array
     unit: float
     sampled: bool
+    clusters: Indices | None = None
 
     @classmethod
-    def of(cls, values: Array, *, scenarios: int, probabilities: Array | None, sampled: bool) -> "Ordered":
+    def of(
+        cls,
+        values: Array,
+        *,
+        scenarios: int,
+        probabilities: Array | None,
+        sampled: bool,
+        clusters: Indices | None = None,
+    ) -> "Ordered":
         """Make the masses that belong to `values` (c, m), already descending."""
         if probabilities is None:
             upper = np.arange(1.0, values.shape[-1] + 1.0)[None, :]
-            return cls(values, scenarios, None, upper, float(scenarios), sampled)
-        return cls(values, scenarios, probabilities, compensated_cumsum(probabilities), 1.0, sampled)
+            return cls(values, scenarios, None, upper, float(scenarios), sampled, clusters)
+        return cls(values, scenarios, probabilities, compensated_cumsum(probabilities), 1.0, sampled, clusters)
 
     @property
     def complete(self) -> bool:
@@ -134,6 +146,9 @@ class Ordered:
 
     def effective_tail(self, share: Fraction) -> Array:
         """Return the effective number of scenarios in the worst `share`: (sum p)^2 / sum p^2, shape (c,)."""
+        if self.clusters is not None:
+            parts = cluster_sums(np.broadcast_to(self.tail_weights(share), self.values.shape), self.clusters)
+            return 1.0 / np.sum(parts * parts, axis=-1)
         if self.probabilities is None:
             return np.full(self.values.shape[0], self.mass(share))
         part = self.tail_weights(share)
@@ -192,14 +207,13 @@ def order_statistic_ranks(scenarios: int, level: float, coverage: float) -> tupl
 def quantile_interval(ordered: Ordered, share: Fraction, coverage: float) -> QuantileInterval:
     """Return the interval of the quantile with `share` of the mass above it.
 
-    Equal probabilities: exact binomial order statistics. Unequal probabilities: the estimated
-    distribution function is inverted at level -+ z times its standard error at the quantile
-    (Woodruff, J. American Statistical Association 47, 1952, 635-646), with the variance of an
-    importance sample, sum p^2 (1{L <= q} - level)^2.
+    Independent and equally probable: exact binomial order statistics. Else the estimated distribution
+    function is inverted at level -+ z times its standard error at the quantile (Woodruff, J. American
+    Statistical Association 47, 1952, 635-646); see `distribution_error`.
     """
     missing = np.full(ordered.values.shape[0], np.nan)
     level = float(1 - share)
-    if ordered.probabilities is None:
+    if ordered.probabilities is None and ordered.clusters is None:
         low, high, actual = order_statistic_ranks(ordered.scenarios, level, coverage)
         deepest = ordered.scenarios - low
         if high > ordered.scenarios or low < 1:
@@ -210,7 +224,7 @@ def quantile_interval(ordered: Ordered, share: Fraction, coverage: float) -> Qua
     lower, upper = missing.copy(), missing.copy()
     last = ordered.values.shape[-1] - 1
     for j in np.flatnonzero((level + spread < 1.0) & (level - spread > 0.0)):
-        above = ordered.upper[j]
+        above = ordered.upper[j % ordered.upper.shape[0]] / ordered.unit
         upper[j] = ordered.values[j, min(int(np.count_nonzero(above <= 1.0 - level - spread[j])), last)]
         lower[j] = ordered.values[j, min(int(np.count_nonzero(above <= 1.0 - level + spread[j])), last)]
     return QuantileInterval(lower, upper, coverage)
@@ -226,13 +240,27 @@ def quantile_error(ordered: Ordered, share: Fraction) -> Array:
 
 
 def distribution_error(ordered: Ordered, share: Fraction) -> Array:
-    """Return the standard error of the estimated P(L <= q) at the quantile q, shape (c,)."""
+    """Return the standard error of the estimated P(L <= q) at the quantile q, shape (c,).
+
+    That of an importance sample, sum p^2 (1{L <= q} - level)^2, with sums over clusters instead of
+    scenarios where these are dependent.
+    """
     level = float(1 - share)
-    if ordered.probabilities is None:
+    if ordered.probabilities is None and ordered.clusters is None:
         return np.full(ordered.values.shape[0], np.sqrt(level * (1.0 - level) / ordered.scenarios))
     q = ordered.at(ordered.position(share))
     inside = (ordered.values <= q[:, None]) - level
-    return np.sqrt(np.sum((ordered.probabilities * inside) ** 2, axis=-1))
+    terms = np.asarray(ordered.p * inside)
+    if ordered.clusters is not None:
+        terms = cluster_sums(terms, ordered.clusters)
+    return np.sqrt(np.sum(terms * terms, axis=-1))
+
+
+def cluster_sums(terms: Array, clusters: Indices) -> Array:
+    """Return sums of `terms` (c, m) over each cluster, shape (c, number of clusters)."""
+    count = int(clusters.max()) + 1
+    rows = np.broadcast_to(clusters, terms.shape)
+    return np.stack([np.bincount(row, term, count) for row, term in zip(rows, terms, strict=True)])
 
 
 @dataclass(frozen=True, slots=True)

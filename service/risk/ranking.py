@@ -4,6 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from service.risk.loss_table import LossTable
 from service.risk.quantiles import Array, Indices, Ordered, Ties
 
 MOST_PARTIAL = 0.5  # share of scenarios from which on all are ordered
@@ -33,7 +34,7 @@ class Ranking:
         """Return the ranking of at least the worst `depth` of all scenarios, no atom cut in two."""
         least = int(np.ceil(depth * self.ordered.scenarios)) + 1
         kept = self.order.size
-        if self.ordered.probabilities is not None or least >= kept:
+        if self.ordered.probabilities is not None or self.ordered.clusters is not None or least >= kept:
             return self
         ends = np.append(self.ties.starts[1:], kept)
         size = int(ends[self.ties.atom[least - 1]])
@@ -71,17 +72,17 @@ def tie_tolerance(columns: int, largest: float) -> float:
     return columns * 2.0**-52 * largest if columns > 1 else 0.0
 
 
-def ranked(totals: Array, losses: Array, *, probabilities: Array | None, sampled: bool, depth: float) -> Ranking:
-    """Return the ranking of `totals` (n,), the row sums of `losses` (n, d).
+def ranked(totals: Array, table: LossTable, *, depth: float) -> Ranking:
+    """Return the ranking of `totals` (n,), the row sums of `table`.
 
     Parameters
     ----------
     depth : float
-        Share of the worst scenarios needed; all are kept with unequal probabilities, and always enough that
+        Share of the worst scenarios needed; all are kept unless the table is plain, and always enough that
         no atom is cut.
     """
-    columns = losses.shape[1]
-    order = worst(totals, 1.0 if probabilities is not None else depth)
+    losses, columns = table.losses, len(table)
+    order = worst(totals, depth if table.plain else 1.0)
     tolerance = 0.0
     while columns > 1:
         rows = losses if order.size == totals.size else losses.take(order, axis=0)
@@ -93,7 +94,8 @@ def ranked(totals: Array, losses: Array, *, probabilities: Array | None, sampled
     ordered = Ordered.of(
         totals[order][None, :],
         scenarios=totals.size,
-        probabilities=None if probabilities is None else probabilities[order][None, :],
-        sampled=sampled,
+        probabilities=None if table.probabilities is None else table.probabilities[order][None, :],
+        sampled=table.sampled,
+        clusters=None if table.clusters is None else table.clusters[order][None, :],
     )
     return Ranking(ordered, order, Ties.of(ordered, tolerance=tolerance), tolerance)

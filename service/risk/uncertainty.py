@@ -10,10 +10,9 @@ from dataclasses import dataclass, replace
 from typing import Self
 
 import numpy as np
-from numpy.typing import NDArray
 from scipy import special
 
-Array = NDArray[np.float64]
+from service.risk.quantiles import Array, Indices, Ordered, cluster_sums
 
 LEAST_TAIL = 10.0  # effective tail scenarios below which no error is given
 FULL_TAIL = 100.0  # effective tail scenarios below which an error is given with a note
@@ -114,46 +113,72 @@ class Spread:
     correlation: Array | None = None
 
 
-def spread(influence: Influence, *, scenarios: int, p: Array | None, beside: Influence | None = None) -> Spread:
+@dataclass(frozen=True, slots=True)
+class Sampling:
+    """How the scenarios behind influence values were drawn.
+
+    Attributes
+    ----------
+    scenarios : int
+        Number n of draws.
+    p : ndarray of shape (c, m), (1, m) or None
+        Probabilities of the kept scenarios; None for 1/n each.
+    clusters : ndarray of int of shape (c, m), (1, m) or None
+        Cluster of each, where they are dependent within clusters; all scenarios are kept then.
+    """
+
+    scenarios: int
+    p: Array | None = None
+    clusters: Indices | None = None
+
+    @classmethod
+    def of(cls, ordered: Ordered) -> Self:
+        """Return how the scenarios of `ordered` were drawn."""
+        return cls(ordered.scenarios, ordered.probabilities, ordered.clusters)
+
+
+def spread(influence: Influence, sampling: Sampling, *, beside: Influence | None = None) -> Spread:
     """Return the spread of the influence values of c figures.
 
     Parameters
     ----------
     influence : Influence
         Of c figures over m kept scenarios.
-    scenarios : int
-        Number n of draws.
-    p : ndarray of shape (c, m), (1, m) or None
-        Probabilities; None for 1/n each.
+    sampling : Sampling
+        Of these scenarios.
     beside : Influence, optional
         Of one more figure over the same scenarios, to correlate with.
     """
-    v, rest, left_out = _standardised(influence, scenarios, p)
+    v, rest, left_out = _standardised(influence, sampling)
     errors = np.sqrt(np.einsum("ij,ij->i", v, v) + left_out * rest * rest)
     scale = np.where(errors > 0.0, errors, 1.0)
     v /= scale[:, None]
     rest = rest / scale
     correlation = None
     if beside is not None:
-        other, other_rest, _ = _standardised(beside, scenarios, p)
+        other, other_rest, _ = _standardised(beside, sampling)
         other_error = np.sqrt(np.einsum("ij,ij->i", other, other) + left_out * other_rest * other_rest)[0]
         together = v @ other[0] + left_out * rest * other_rest
         correlation = together / other_error if other_error > 0.0 else np.zeros_like(errors)
     squares = np.square(v)
     skewness = np.einsum("ij,ij->i", squares, v) + left_out * rest**3
     fourth = np.einsum("ij,ij->i", squares, squares) + left_out * rest**4
-    effective = np.divide(1.0, fourth, out=np.full(errors.shape, float(scenarios)), where=fourth > 0.0)
+    effective = np.divide(1.0, fourth, out=np.full(errors.shape, float(sampling.scenarios)), where=fourth > 0.0)
     return Spread(errors, skewness, effective, correlation)
 
 
-def _standardised(influence: Influence, scenarios: int, p: Array | None) -> tuple[Array, Array, int]:
+def _standardised(influence: Influence, sampling: Sampling) -> tuple[Array, Array, int]:
     """Return centred influence values times probability, the same of what was left out, and how much that is."""
-    values, rest = influence.values, influence.rest
+    values, rest, scenarios = influence.values, influence.rest, sampling.scenarios
     left_out = scenarios - values.shape[-1]
-    if p is None:
+    if sampling.p is None:
         centre = (values.sum(axis=-1) + left_out * rest) / scenarios
-        return (values - centre[:, None]) / scenarios, (rest - centre) / scenarios, left_out
-    return p * (values - np.sum(p * values, axis=-1, keepdims=True)), np.zeros_like(rest), 0
+        v, rest = (values - centre[:, None]) / scenarios, (rest - centre) / scenarios
+    else:
+        v, rest = sampling.p * (values - np.sum(sampling.p * values, axis=-1, keepdims=True)), np.zeros_like(rest)
+    if sampling.clusters is not None:
+        v = cluster_sums(v, sampling.clusters)
+    return v, rest, left_out
 
 
 def leaning_estimates(  # each is a property of the figures

@@ -243,9 +243,7 @@ def test_a_stream_of_dictionaries_is_refused_even_if_ignored():
         table_from_arrow(body, ignore=["d"], max_cells=MANY)
 
 
-@pytest.mark.parametrize(
-    "options", [{"compression": "none"}, {"compression": "gzip"}, {"data_page_version": "2.0"}]
-)
+@pytest.mark.parametrize("options", [{"compression": "none"}, {"compression": "gzip"}, {"data_page_version": "2.0"}])
 @pytest.mark.parametrize("dictionary", [True, False])
 def test_encodings_of_parquet(options, dictionary):
     column = np.random.default_rng(1).integers(0, 9, 5000) / 4

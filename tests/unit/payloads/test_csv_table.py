@@ -104,9 +104,7 @@ def test_both_ways_of_reading_give_the_nearest_floats(rows, piece, end, with_ids
         assert sheet.texts == ({"id": tuple(ident for ident, _ in rows)} if with_ids else {})
 
 
-@pytest.mark.parametrize(
-    "text", ["id,a\n1\n2\n", "id,a\n1\n2,3\n", "id,a\n1,2,3\n", "id,a\n\n1,2\n", "id,a\nx,y\n"]
-)
+@pytest.mark.parametrize("text", ["id,a\n1\n2\n", "id,a\n1\n2,3\n", "id,a\n1,2,3\n", "id,a\n\n1,2\n", "id,a\nx,y\n"])
 def test_wrong_tables_with_ids(text):
     fault_of(text, text_columns=["id"])
 
@@ -145,6 +143,7 @@ def test_ids_that_are_not_utf8():
         ("a,\n1,2\n", None, "2", "column 2 has no name"),
         ("a,a\n1,2\n", None, "a", "two columns are named 'a'"),
         ("\na,b\n1,2\n", None, None, "but it is blank"),
+        ("\ufeff\r\n", None, None, "but it is blank"),
         ("a,b\n1,2\n3,4\r5\n", 3, None, "there is 1 cell"),
     ],
 )
@@ -160,7 +159,7 @@ def test_values_that_are_not_allowed(text, row, column, words, block):
     ("text", "words"),
     [
         ("", "empty"),
-        ("\ufeff\n", "empty"),
+        ("\ufeff", "empty"),
         ("a;b\n1,5;2\n", "separated by semicolons"),
         ("a\tb\n1\t2\n", "separated by tabs"),
         ("1;2\n3;4\n", "separated by semicolons"),

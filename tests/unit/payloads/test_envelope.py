@@ -108,9 +108,7 @@ def test_a_large_packed_table_is_not_copied():
     body = json.dumps({"losses": {"packed": {"data": text, "rows": 2000}}}).encode()
     envelope = split(body)
     assert envelope.packed.obj is body
-    assert np.array_equal(
-        unpack(envelope.packed, dtype="float64", rows=2000, columns=30, max_cells=table.size), table
-    )
+    assert np.array_equal(unpack(envelope.packed, dtype="float64", rows=2000, columns=30, max_cells=table.size), table)
 
 
 @pytest.mark.parametrize(
@@ -160,9 +158,7 @@ def test_a_large_packed_table_is_not_copied():
     ],
 )
 def test_what_is_not_a_json_object(body, words):
-    if (
-        body == b'{"losses":{"values":[[1]]]}}'
-    ):  # the guess leaves the superfluous bracket to the table's decoder
+    if body == b'{"losses":{"values":[[1]]]}}':  # the guess leaves the superfluous bracket to the table's decoder
         with pytest.raises(Malformed):
             rows_from_json(split_envelope(body).table, max_cells=9)
         return
@@ -225,9 +221,7 @@ def test_damaged_bodies_are_read_as_a_plain_parser_reads_them(document, data):
     body = bytearray(json.dumps(document).encode())
     if data is not None:
         place = data.draw(st.integers(0, len(body) - 1))
-        junk = data.draw(
-            st.sampled_from([b"", b'"', b"\\", b"[", b"]", b"{", b"}", b",", b":", b"\xff", b"]}", b"1"])
-        )
+        junk = data.draw(st.sampled_from([b"", b'"', b"\\", b"[", b"]", b"{", b"}", b",", b":", b"\xff", b"]}", b"1"]))
         body[place : place + data.draw(st.integers(0, 2))] = junk
     try:
         expected = json.loads(body, object_pairs_hook=distinct)

@@ -59,6 +59,12 @@ def test_tables_of_many_pieces(shape):
     assert np.array_equal(rows_from_json(memoryview(text), max_cells=table.size), table)
 
 
+@pytest.mark.parametrize("space", [60, 70, 200])
+def test_white_space_before_a_cut(space):
+    text = b"[[1" + b" " * space + b",2]" + b"\n" * space + b",[3,4]]"
+    assert in_small_pieces(text).tolist() == [[1, 2], [3, 4]]
+
+
 def test_negative_zero_is_zero():
     found = rows_from_json(b"[[-0.0,-0],[-0e5,1]]", max_cells=4)
     assert not np.signbit(found).any()
@@ -227,9 +233,7 @@ def test_what_looks_like_json_is_read_as_a_plain_reading_does(text, piece):
 def test_damaged_tables_are_read_as_a_plain_reading_does(rows, data, piece):
     text = bytearray(json.dumps(rows).encode())
     place = data.draw(st.integers(0, len(text) - 1))
-    text[place : place + data.draw(st.integers(0, 2))] = data.draw(
-        st.sampled_from([b"", b",", b"[", b"]", b"9", b"a"])
-    )
+    text[place : place + data.draw(st.integers(0, 2))] = data.draw(st.sampled_from([b"", b",", b"[", b"]", b"9", b"a"]))
     expected = strictly(bytes(text))
     try:
         found = in_small_pieces(bytes(text), piece=piece)

@@ -97,9 +97,7 @@ REQUEST = part(b"request", b"{}")
 def test_other_parts(body, words):
     with pytest.raises(CallerError) as caught:
         split_multipart(body, HEADER)
-    if not body.startswith(
-        b"--xyz--"
-    ):  # a body that ends before it begins is no multipart body to the parser
+    if not body.startswith(b"--xyz--"):  # a body that ends before it begins is no multipart body to the parser
         assert isinstance(caught.value, InvalidValue)
         assert words in caught.value.detail
 

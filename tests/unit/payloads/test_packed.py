@@ -69,9 +69,7 @@ def test_a_signalling_nan(dtype, bits):
 
 
 def test_the_size_says_both_numbers():
-    with pytest.raises(
-        InvalidValue, match="holds 16 bytes, but 2 rows × 3 columns of float64 take 48 bytes"
-    ) as caught:
+    with pytest.raises(InvalidValue, match="holds 16 bytes, but 2 rows × 3 columns of float64 take 48 bytes") as caught:
         packed(np.ones((1, 2)), rows=2, columns=3, max_cells=6)
     assert caught.value.faults[0].pointer == "/data"
 
