@@ -1,9 +1,9 @@
 """Routes that tailrace is measured against: the framework's own way to the same answer, a ping, a drain."""
 
-from dataclasses import replace
 from typing import Any
 
 import numpy as np
+import orjson
 from fastapi import FastAPI, Request
 from pydantic import BaseModel
 
@@ -54,6 +54,6 @@ def allocations(asked: Asked) -> AllocationsAnswer:
     values = np.asarray(asked.losses.values)
     document = asked.model_dump(exclude={"losses": {"values"}})
     document["losses"]["values"] = []
-    request = REQUESTS["allocations"].validate_python(document)
+    request = REQUESTS["allocations"].validate_json(orjson.dumps(document))
     taken = Intake("allocations", request, values)
     return calculate.answer(taken, Work(SETTINGS.threads), SETTINGS)

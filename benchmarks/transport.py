@@ -112,8 +112,7 @@ def json_over_default(pace: Pace) -> Outcome:
     losses = normals(*SMALL)
     measures: list[dict[str, object]] = [{"kind": "expected_shortfall", "level": 0.99}]
     ours_asked, other_asked = (
-        json_request(losses, path, measures, include_stand_alone=False)
-        for path in ("/v1/allocations", DEFAULT_PATH)
+        json_request(losses, path, measures, include_stand_alone=False) for path in ("/v1/allocations", DEFAULT_PATH)
     )
     found = []
     with tailrace() as ours, rivals() as other:

@@ -109,7 +109,7 @@ def figure_list(estimates: Estimates, coverage: float) -> list[Figure]:
         Figure(
             value,
             None if error != error else error,  # noqa: PLR0124  # NaN is the one number that differs from itself
-            None if error != error else Interval(lower, upper, coverage, method),  # noqa: PLR0124
+            None if lower != lower else Interval(lower, upper, coverage, method),  # noqa: PLR0124
             None if tail != tail else tail,  # noqa: PLR0124
         )
         for value, error, lower, upper, tail in rows

@@ -1,13 +1,14 @@
 """From a request to its answer, one function per calculation; HTTP and terminal share it."""
 
-from collections.abc import Mapping, Sequence
-from dataclasses import asdict
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
+from dataclasses import asdict, replace
 from functools import cached_property
 from typing import Any
 
 from service import __version__, answers
 from service.answers import Notes, figure_list
-from service.errors import Fault, Limit, LimitExceeded, pointing
+from service.errors import CallerError, Fault, Limit, LimitExceeded, pointing
 from service.executors import Work
 from service.intake import Intake
 from service.provenance import PREFIX, losses_digest, request_digest
@@ -49,10 +50,30 @@ def answer(intake: Intake, work: Work, settings: Settings) -> Answer:
     measures: list[RiskMeasure] = list(request.measures)
     if isinstance(request, AllocationsRequest) and request.capital_measure is not None:
         measures.append(request.capital_measure)
-    frame = Frame.of(table, groups, measures, work, stand_alone=request.include_stand_alone)
+    with placed(intake):
+        frame = Frame.of(table, groups, measures, work, stand_alone=request.include_stand_alone)
     if isinstance(request, AllocationsRequest):
         return _Allocations(intake, request, frame).answer()
     return _Measures(intake, request, frame).answer()
+
+
+@contextmanager
+def placed(intake: Intake) -> Iterator[None]:
+    """Say of a fault found at a scenario where the caller put that scenario."""
+    try:
+        yield
+    except CallerError as error:
+        error.faults = tuple(_placed(fault, intake) for fault in error.faults)
+        raise
+
+
+def _placed(fault: Fault, intake: Intake) -> Fault:
+    if fault.pointer is None:
+        return fault
+    if intake.part is not None:
+        return replace(fault, pointer=None, part=intake.part, row=int(fault.pointer.strip("/")) + 1)
+    rows = intake.request.losses.values is not None and intake.request.losses.layout == "by_scenario"
+    return fault.beneath("/losses/values") if rows else replace(fault, pointer="/losses")
 
 
 def _groups(request: MeasuresRequest, table: LossTable, settings: Settings) -> tuple[Group, ...]:

@@ -179,9 +179,9 @@ def _serve(options: argparse.Namespace) -> int:
         return _complain(str(error), BAD_USAGE)
     host = environment.get(variable("host"), "127.0.0.1")
     try:
-        host, port = _free(environment.get(variable("host"), "127.0.0.1"), port)
+        host, port = _free(host, port)
     except OSError as error:
-        return _complain(f"cannot listen on port {port}: {error.strerror or error}", FAILED)
+        return _complain(f"cannot listen on {host} port {port}: {error.strerror or error}", FAILED)
     os.environ.update(given)  # for the processes that the server starts
     shown = f"[{host}]" if ":" in host else host
     print(f"tailrace {__version__} serves on http://{shown}:{port}", file=sys.stderr, flush=True)

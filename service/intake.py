@@ -93,7 +93,7 @@ def read(
 
 
 def _json_body(calculation: str, body: bytes, settings: Settings) -> Intake:
-    envelope = payloads.split_envelope(body)
+    envelope = payloads.split_envelope(body, max_bytes=settings.max_envelope_bytes)
     request = _validated(calculation, envelope.document, envelope.text)
     losses = request.losses
     if losses.part is not None:
@@ -136,7 +136,7 @@ def read_parts(
     CallerError
         Whatever is wrong with it.
     """
-    envelope = payloads.split_envelope(request)
+    envelope = payloads.split_envelope(request, max_bytes=settings.max_envelope_bytes)
     model = _validated(calculation, envelope.document, envelope.text)
     if model.losses.part is None:
         detail = 'a request of two parts says "part": "table" where its losses are, and holds no other table'

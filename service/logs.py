@@ -38,9 +38,7 @@ CONFIGURATION: dict[str, Any] = {
     "version": 1,
     "disable_existing_loggers": False,
     "formatters": {"line": {"()": JsonLine}},
-    "handlers": {
-        "stdout": {"class": "logging.StreamHandler", "stream": "ext://sys.stdout", "formatter": "line"}
-    },
+    "handlers": {"stdout": {"class": "logging.StreamHandler", "stream": "ext://sys.stdout", "formatter": "line"}},
     "loggers": {
         "tailrace": {"handlers": ["stdout"], "level": "INFO", "propagate": False},
         "uvicorn": {"handlers": ["stdout"], "level": "INFO", "propagate": False},

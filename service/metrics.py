@@ -34,9 +34,9 @@ class Metrics:
 
     def watch(self, *, computing: Callable[[], float], waiting: Callable[[], float]) -> None:
         """Read these two counts whenever the metrics are asked for."""
-        Gauge(
-            "tailrace_calculations_in_flight", "Calculations that compute now.", registry=self.registry
-        ).set_function(computing)
+        Gauge("tailrace_calculations_in_flight", "Calculations that compute now.", registry=self.registry).set_function(
+            computing
+        )
         Gauge(
             "tailrace_calculations_waiting", "Calculations that wait for a place.", registry=self.registry
         ).set_function(waiting)

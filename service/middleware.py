@@ -3,13 +3,14 @@
 Plain ASGI, one pass over the headers, no task of its own: this runs for every request.
 """
 
+import asyncio
 import re
 from collections.abc import Awaitable, Callable, MutableMapping
 from secrets import token_hex
 from time import perf_counter
 from typing import Any
 
-from service.errors import Cancelled
+from service.errors import Busy, Cancelled
 from service.logs import REQUESTS, failure
 from service.metrics import Metrics
 
@@ -51,6 +52,10 @@ class Envelope:
             await self.app(scope, visit.receive, visit.send)
         except Cancelled:
             visit.status = visit.status or CLIENT_CLOSED
+        except asyncio.CancelledError:  # the server stops and waits no longer: this task ends here anyway
+            if not visit.status:
+                stopping = Busy("This process stops; send the same request again.", retry_after=1)
+                await self._refuse(scope, stopping)(scope, receive, visit.send)
         except Exception as error:  # noqa: BLE001  # whatever it is, the caller gets an answer
             visit.failure = failure(error)
             if not visit.status:

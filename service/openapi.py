@@ -200,8 +200,7 @@ def _table_parameters(name: str, schemas: Json) -> list[Json]:
         ),
         _parameter(
             "level",
-            "Confidence levels in (0, 1), without unit; may repeat: every measure is computed at every "
-            "level.",
+            "Confidence levels in (0, 1), without unit; may repeat: every measure is computed at every level.",
             {"type": "array", "items": _unbounded(_measure_field("level", schemas))},
         ),
     ]
@@ -287,8 +286,7 @@ def _examples(folder: Path) -> Json:
 
 def _shown(pairs: Json, part: str) -> Json:
     examples = {
-        name: {"summary": name.replace("_", " ").capitalize(), "value": pair[part]}
-        for name, pair in pairs.items()
+        name: {"summary": name.replace("_", " ").capitalize(), "value": pair[part]} for name, pair in pairs.items()
     }
     return {"examples": examples} if examples else {}
 
@@ -313,17 +311,13 @@ def _service_paths() -> Json:
     """Return the paths beside the calculations."""
     code = _parameter("code", "Code of the problem.", {"enum": list(problems.STATUSES)}, "path")
     code = {**code, "required": True, "schema": {"type": "string", **code["schema"]}}
-    record, state, limit = (
-        _json({"$ref": COMPONENTS + name}) for name in ("ProblemRecord", "State", "LimitRecord")
-    )
+    record, state, limit = (_json({"$ref": COMPONENTS + name}) for name in ("ProblemRecord", "State", "LimitRecord"))
     page = {"text/html": {"schema": {"type": "string"}}}
     text = {"text/plain": {"schema": {"type": "string"}}}
     operations = {
         "/v1/limits": _read("getLimits", "Limits of this server", _listed(limit)),
         "/problems": _read("listProblems", "All problems", {**_listed(record), **page}),
-        "/problems/{code}": _read(
-            "getProblem", "What a problem means and what to do", {**record, **page}, 404
-        ),
+        "/problems/{code}": _read("getProblem", "What a problem means and what to do", {**record, **page}, 404),
         "/healthz": _read("getHealth", "Whether the process lives", state),
         "/readyz": _read("getReadiness", "Whether it can take work", state, 503),
         "/metrics": _read("getMetrics", "Metrics of this process, for Prometheus", text),
@@ -374,16 +368,13 @@ def _described(kind: str | list[str], description: str, **more: Any) -> Json:
 MODES: Mapping[str, Any] = {"request": "validation", "answer": "serialization"}
 FORMATS_OF_NUMBERS = {"number": "double", "integer": "int64"}
 WORDS_WITHOUT_MEANING = [
-    _parameter(
-        "bom", "1: a CSV answer begins with the byte order mark.", {"type": "string", "enum": ["0", "1"]}
-    ),
+    _parameter("bom", "1: a CSV answer begins with the byte order mark.", {"type": "string", "enum": ["0", "1"]}),
     _parameter("refresh", "Ignored; a client may vary it to force a new request.", {"type": "string"}),
 ]
 HEADERS = [
     _parameter(
         "X-Request-ID",
-        "Name of this request in logs and answers: at most 128 letters, digits and `._=+/-`; another is "
-        "replaced.",
+        "Name of this request in logs and answers: at most 128 letters, digits and `._=+/-`; another is replaced.",
         {"type": "string", "pattern": f"^{SAFE_ID.pattern.decode()}$"},
         "header",
     ),
@@ -421,21 +412,15 @@ PROBLEM_SCHEMAS: Json = {
         parameter=_described("string", "Name of the query parameter."),
         header=_described("string", "Name of the request header."),
         part=_described("string", "`body`, or the name of the part that holds the table."),
-        row=_described(
-            "integer", "Row of the table, counted from 1 without the header line.", format="int64"
-        ),
+        row=_described("integer", "Row of the table, counted from 1 without the header line.", format="int64"),
         column=_described("string", "Header of the table's column, or its number counted from 1."),
     ),
     "PassedLimit": _object(
         "The limit that was passed.",
         "name allowed asked setting",
         name=_described("string", "Name of the limit."),
-        allowed=_described(
-            "number", "What is allowed, in the unit that `GET /v1/limits` tells.", format="double"
-        ),
-        asked=_described(
-            ["number", "null"], "What was asked, in the same unit; null if unknown.", format="double"
-        ),
+        allowed=_described("number", "What is allowed, in the unit that `GET /v1/limits` tells.", format="double"),
+        asked=_described(["number", "null"], "What was asked, in the same unit; null if unknown.", format="double"),
         setting=_described("string", "Environment variable that sets it."),
     ),
     "LimitRecord": _object(

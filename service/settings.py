@@ -21,6 +21,9 @@ class Settings:
     """What an operator may set; made once at the door and passed in."""
 
     max_body_bytes: int = _setting(256 * MEBIBYTE, "size of one request body", unit="bytes", least=1024)
+    max_envelope_bytes: int = _setting(
+        32 * MEBIBYTE, "size of a JSON request without its table", unit="bytes", least=1024
+    )
     max_cells: int = _setting(50_000_000, "scenarios times sub-portfolios of one loss table", unit="cells")
     max_sub_portfolios: int = _setting(10_000, "sub-portfolios of one request", unit="sub-portfolios")
     max_groups: int = _setting(1_000, "groups of one request", unit="groups")

@@ -36,7 +36,5 @@ def asset(name: str) -> Path:
     """Return the file `name` of the package that ships Swagger UI, without importing it."""
     found = find_spec("fastapi_offline")
     if found is None or found.origin is None:
-        raise FileNotFoundError(
-            "the package fastapi-offline, which has the files of the API page, is not installed"
-        )
+        raise FileNotFoundError("the package fastapi-offline, which has the files of the API page, is not installed")
     return Path(found.origin).parent / "static" / name

@@ -39,9 +39,7 @@ def problem_index(statuses: Mapping[str, int], fault_codes: Mapping[str, str]) -
         f"<dd>{escape(PROBLEM_PAGES[code].title)}</dd>\n"
         for code, status in statuses.items()
     )
-    codes = "".join(
-        f"<dt><code>{code}</code></dt><dd>{escape(words)}</dd>\n" for code, words in fault_codes.items()
-    )
+    codes = "".join(f"<dt><code>{code}</code></dt><dd>{escape(words)}</dd>\n" for code, words in fault_codes.items())
     return page(
         "Problems",
         "<p>Every error is <code>application/problem+json</code>. Its <code>type</code> is one of these "
@@ -64,8 +62,7 @@ PROBLEM_PAGES = {
         "The body is not the one that was signed",
         "The Content-Digest header gives a digest of another body: something between you and the service "
         "changed or lost bytes, or the digest was made of something else.",
-        "Send the request again. If it fails again, compare the digest with one made of the very bytes "
-        "that are sent.",
+        "Send the request again. If it fails again, compare the digest with one made of the very bytes that are sent.",
     ),
     "invalid_value": ProblemPage(
         "A value is not allowed",
@@ -83,8 +80,7 @@ PROBLEM_PAGES = {
         "A limit of this server was passed",
         "The request counts more of something than this server is set to take. The member limit says which "
         "limit, what it allows and what was asked.",
-        "Send less, or ask the operator to raise the setting that limit names. GET /v1/limits lists all "
-        "limits.",
+        "Send less, or ask the operator to raise the setting that limit names. GET /v1/limits lists all limits.",
     ),
     "too_large": ProblemPage(
         "The body is too large",
@@ -106,8 +102,7 @@ PROBLEM_PAGES = {
     ),
     "method_not_allowed": ProblemPage(
         "This path does not take this method",
-        "The path exists, but not with the method of the request. The header Allow lists the methods that "
-        "it takes.",
+        "The path exists, but not with the method of the request. The header Allow lists the methods that it takes.",
         "Calculations take POST; everything else takes GET.",
     ),
     "not_acceptable": ProblemPage(
@@ -117,8 +112,7 @@ PROBLEM_PAGES = {
     ),
     "unsupported_media_type": ProblemPage(
         "The body has a type that is not read here",
-        "The Content-Type of the request is not one that this path reads, or its Content-Encoding is not "
-        "identity.",
+        "The Content-Type of the request is not one that this path reads, or its Content-Encoding is not identity.",
         "Send one of the types listed at /docs, uncompressed, with its Content-Type.",
     ),
     "losses_changed": ProblemPage(
@@ -129,13 +123,11 @@ PROBLEM_PAGES = {
     "busy": ProblemPage(
         "The service is busy",
         "All places to compute and to wait are taken. The request itself is in order and was not begun.",
-        "Send the same request again after the seconds that Retry-After names. Repeating a calculation is "
-        "always safe.",
+        "Send the same request again after the seconds that Retry-After names. Repeating a calculation is always safe.",
     ),
     "cancelled": ProblemPage(
         "The caller left",
-        "The connection was closed before the answer was there, so the work was stopped. This stands in "
-        "logs only.",
+        "The connection was closed before the answer was there, so the work was stopped. This stands in logs only.",
         "Nothing, or keep the connection open until the answer has come.",
     ),
     "internal": ProblemPage(

@@ -17,9 +17,10 @@ from typing import Any, NoReturn
 import msgspec
 import numpy as np
 
-from service.errors import CallerError, Malformed
+from service.errors import CallerError, Fault, Limit, Malformed, TooLarge
 from service.payloads.cells import excerpt
 
+USUAL_MAX_BYTES = 1 << 25
 HEAD = 1 << 20
 """Bytes in which the guess looks for the name of a huge value."""
 
@@ -64,13 +65,15 @@ class _Span:
     stop: int
 
 
-def split_envelope(body: bytes | bytearray) -> Envelope:
+def split_envelope(body: bytes | bytearray, *, max_bytes: int = USUAL_MAX_BYTES) -> Envelope:
     """Part the JSON body of a request from its loss table.
 
     Parameters
     ----------
     body : bytes or bytearray
         The whole body, in UTF-8 without a byte order mark.
+    max_bytes : int
+        Of the body without its huge values; parsing takes up to twenty times as much memory.
 
     Returns
     -------
@@ -82,10 +85,17 @@ def split_envelope(body: bytes | bytearray) -> Envelope:
     Malformed
         If the body, but for the inside of its huge values, is not a JSON object, repeats a member name, nests
         too deeply, or holds NaN, infinity or half of a surrogate pair.
+    TooLarge
+        If there is too much of it besides the huge values.
     """
     _require_object(body)
     spans = _spans_of(body)
     text = _without(body, spans)
+    if len(text) > max_bytes:
+        name = "max_envelope_bytes"
+        detail = f"the request without its table has {len(text)} bytes; {max_bytes} are allowed here"
+        limit = Limit(name=name, allowed=max_bytes, asked=len(text), setting="TAILRACE_MAX_ENVELOPE_BYTES")
+        raise TooLarge(detail, limit=limit, faults=[Fault(detail=detail, code=TooLarge.code, pointer="")])
     document = _parse(text, body, spans)
     view = memoryview(body)
     tables = [view[span.start : span.stop] for span in spans if body[span.start] == ord("[")]

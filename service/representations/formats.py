@@ -15,9 +15,7 @@ from service.representations.table import Column, Table
 
 BYTE_ORDER_MARK = b"\xef\xbb\xbf"
 LINE_END = "\r\n"
-NEGATIVE_ZERO = re.compile(
-    rb'(?<=[a-z_]":)-0\.0(?=[,}])'
-)  # the value of a key: in a text the quote is escaped
+NEGATIVE_ZERO = re.compile(rb'(?<=[a-z_]":)-0\.0(?=[,}])')  # the value of a key: in a text the quote is escaped
 WEIGHT = re.compile(r"q=(0(?:\.\d{0,3})?|1(?:\.0{0,3})?)", re.IGNORECASE)
 MEDIA_RANGE = re.compile(r"[\w!#$&^.+*-]+/[\w!#$&^.+*-]+")
 
@@ -72,9 +70,7 @@ def choose(suffix: str | None, accept: str | None, offered: Sequence[Form]) -> F
         for form in offered:
             if form.suffix == suffix:
                 return form
-        raise NotFound(
-            f"There is no form .{suffix}; there are {_listed('.' + form.suffix for form in offered)}."
-        )
+        raise NotFound(f"There is no form .{suffix}; there are {_listed('.' + form.suffix for form in offered)}.")
     media_type = best(accept, [form.media_type for form in offered])
     if media_type is None:
         detail = f"The answer can be had as {_listed(form.media_type for form in offered)}."
@@ -130,7 +126,9 @@ def _json(answer: Any) -> bytes:
         lost = [key for key in _required_numbers(answer.__class__) if key in data]
         if lost:
             raise ArithmeticError(f"{lost[0].decode()} where a number is due")
-    return NEGATIVE_ZERO.sub(b"0.0", data) if b":-0.0" in data else data
+    if b'":-0.0,' in data or b'":-0.0}' in data:
+        data = NEGATIVE_ZERO.sub(b"0.0", data)
+    return data
 
 
 @cache

@@ -60,13 +60,13 @@ def judged(measure: RiskMeasure, figures: Estimates) -> Estimates:
 
 
 def without_gaps(figures: Estimates) -> Estimates:
-    """Remark on figures whose error could not be estimated, and give them none of its parts."""
-    missing = ~(np.isfinite(figures.standard_errors) & np.isfinite(figures.lower) & np.isfinite(figures.upper))
-    if not missing.any():
+    """Give figures no error, or no interval, that could not be estimated, and remark on it."""
+    unknown = ~np.isfinite(figures.standard_errors)
+    open_ended = unknown | ~(np.isfinite(figures.lower) & np.isfinite(figures.upper))
+    if not open_ended.any():
         return figures
-    errors, lower, upper = (
-        np.where(missing, np.nan, part) for part in (figures.standard_errors, figures.lower, figures.upper)
-    )
+    errors = np.where(unknown, np.nan, figures.standard_errors)
+    lower, upper = (np.where(open_ended, np.nan, end) for end in (figures.lower, figures.upper))
     return replace(figures, standard_errors=errors, lower=lower, upper=upper).remarked("no_error")
 
 
@@ -91,7 +91,7 @@ def expected_loss(frame: Frame, coverage: float) -> Estimates:
     influence = Influence(frame.totals[None, :], np.zeros(1))
     of = spread(influence, frame.sampling)
     unknown = np.full(1, np.nan)
-    return leaning_estimates(values, of, usual_lean(of), coverage=coverage, tail_scenarios=unknown)
+    return without_gaps(leaning_estimates(values, of, usual_lean(of), coverage=coverage, tail_scenarios=unknown))
 
 
 def lean_of_total(frame: Frame, measure: RiskMeasure) -> tuple[float, Influence]:

@@ -112,9 +112,7 @@ class _Task:
 
     __slots__ = ("_calculation", "_clock", "_form", "_taken", "body", "request", "scenarios")
 
-    def __init__(
-        self, calculation: Calculation, request: Request, body: bytes, form: Form, clock: _Clock
-    ) -> None:
+    def __init__(self, calculation: Calculation, request: Request, body: bytes, form: Form, clock: _Clock) -> None:
         self._calculation = calculation
         self._clock = clock
         self._form = form

@@ -93,9 +93,7 @@ async def _ready(desk: Desk, _request: Request) -> Response:
 
 
 async def _metrics(metrics: Metrics, _request: Request) -> Response:
-    return Response(
-        metrics.exposition(), headers={"cache-control": "no-store", "content-type": metrics.content_type}
-    )
+    return Response(metrics.exposition(), headers={"cache-control": "no-store", "content-type": metrics.content_type})
 
 
 async def _problems(statuses: Mapping[str, int], request: Request) -> Response:
@@ -109,9 +107,7 @@ async def _problem(statuses: Mapping[str, int], request: Request) -> Response:
     status = statuses.get(code)
     if status is None:
         raise NotFound("There is no problem of this name; GET /problems lists all.")
-    return (
-        _record(problem_record(code, status)) if _wants_json(request) else _page(problem_page(code, status))
-    )
+    return _record(problem_record(code, status)) if _wants_json(request) else _page(problem_page(code, status))
 
 
 async def _asset(name: str, _request: Request) -> Response:

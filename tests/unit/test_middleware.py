@@ -56,9 +56,9 @@ def visit(app, *, method="GET", headers=(), query=b"", metrics=None):
     async def send(message):
         sent.append(message)
 
-    def refuse(scope, _error):
-        scope[PROBLEM] = "internal"
-        return answering(500)
+    def refuse(scope, error):
+        scope[PROBLEM] = getattr(error, "code", "internal")
+        return answering(503 if scope[PROBLEM] == "busy" else 500)
 
     asyncio.run(Envelope(app, metrics=metrics or Metrics(), refuse=refuse)(scope, receive, send))
     return sent
@@ -111,7 +111,9 @@ def test_made_ids_differ():
     assert header(visit(answering()), b"x-request-id") != header(visit(answering()), b"x-request-id")
 
 
-@pytest.mark.parametrize("given", ["nonsense", TRACE.upper(), TRACE.replace("4bf9", "xxxx"), f"00-{'0' * 32}-{'1' * 16}-01"])
+@pytest.mark.parametrize(
+    "given", ["nonsense", TRACE.upper(), TRACE.replace("4bf9", "xxxx"), f"00-{'0' * 32}-{'1' * 16}-01"]
+)
 def test_an_unreadable_trace_is_none(log, given):
     visit(answering(), headers=[("traceparent", given)])
     assert log[0]["trace_id"] is None
@@ -162,6 +164,14 @@ def test_nobody_is_answered_who_has_left(log):
     assert log[0]["status"] == 499
 
 
+def test_who_still_waits_when_the_server_stops_is_told(log):
+    async def app(*_):
+        raise asyncio.CancelledError
+
+    assert visit(app)[0]["status"] == 503
+    assert log[0]["problem"] == "busy"
+
+
 def test_other_scopes_pass():
     seen = []
 
@@ -188,10 +198,9 @@ def test_other_records_are_lines_too():
     line = json.loads(JsonLine().format(record))
     assert line["message"] == "half ? of it"
     assert line["logger"] == "uvicorn.error"
-    try:
-        raise KeyError("words")
-    except KeyError as error:
-        record.exc_info = (KeyError, error, error.__traceback__)
+    with pytest.raises(KeyError) as caught:
+        {}["words"]
+    record.exc_info = caught._excinfo
     line = json.loads(JsonLine().format(record))
     assert line["error"] == "KeyError"
     assert "words" not in json.dumps(line)

@@ -54,7 +54,7 @@ def confidence(value: float) -> float:
     """Return `value` if it is a confidence level, and say so in words if it looks like a percentage."""
     if 0.0 < value < 1.0 and 0 < decimal(value) < 1:
         return value
-    if 1.0 <= value < 100.0:  # noqa: PLR2004  # the range in which a percentage would stand
+    if 1.0 < value < 100.0:  # noqa: PLR2004  # the range in which a percentage would stand
         hint = f"{value / 100.0:.15g}, not {value:.15g}"
         raise PydanticCustomError("level", "a level is a number between 0 and 1: {hint}", {"hint": hint})
     raise PydanticCustomError("level", "a level is a number above 0 and below 1, such as 0.995")

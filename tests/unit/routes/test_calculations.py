@@ -321,8 +321,8 @@ def test_busy_when_all_places_are_taken(monkeypatch):
 
 def raw_request(client, body, length=None):
     connection = socket.create_connection((client.base_url.host, client.base_url.port), timeout=10)
-    head = f"POST /v1/measures HTTP/1.1\r\nhost: a\r\ncontent-type: application/json\r\ncontent-length: {length or len(body)}"
-    connection.sendall(head.encode() + b"\r\n\r\n" + body)
+    fields = f"host: a\r\ncontent-type: application/json\r\ncontent-length: {length or len(body)}"
+    connection.sendall(f"POST /v1/measures HTTP/1.1\r\n{fields}\r\n\r\n".encode() + body)
     return connection
 
 
@@ -347,14 +347,13 @@ def test_waiting_ends_when_the_caller_leaves(monkeypatch):
         return answer(*arguments)
 
     monkeypatch.setattr(calculate, "answer", wait)
-    with running(max_concurrent=1, max_waiting=2) as client:
-        with raw_request(client, LARGE) as first:
-            until(lambda: metric(client, "tailrace_calculations_in_flight") == 1)
-            with raw_request(client, LARGE):
-                until(lambda: metric(client, "tailrace_calculations_waiting") == 1)
-            until(lambda: metric(client, "tailrace_calculations_waiting") == 0)
-            finish.set()
-            assert first.recv(64).startswith(b"HTTP/1.1 200 ")
+    with running(max_concurrent=1, max_waiting=2) as client, raw_request(client, LARGE) as first:
+        until(lambda: metric(client, "tailrace_calculations_in_flight") == 1)
+        with raw_request(client, LARGE):
+            until(lambda: metric(client, "tailrace_calculations_waiting") == 1)
+        until(lambda: metric(client, "tailrace_calculations_waiting") == 0)
+        finish.set()
+        assert first.recv(64).startswith(b"HTTP/1.1 200 ")
 
 
 def test_a_caller_who_leaves_while_sending_is_dropped(client):

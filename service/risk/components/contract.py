@@ -1,0 +1,216 @@
+"""What a component is: a map from the factors, and from draws of its own, to the loss of a sub-portfolio.
+
+A component is first checked and then prepared against a set of factors; what `prepared` returns holds
+all that does not change from block to block and writes the losses of a block of scenarios.
+"""
+
+import math
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass as plain
+from difflib import get_close_matches
+from functools import cached_property
+from typing import Protocol
+
+import numpy as np
+from numpy.random import Generator
+from numpy.typing import NDArray
+from pydantic.dataclasses import dataclass
+
+from service.errors import Fault, InvalidValue
+from service.risk.copulas import CopulaFamily, GaussianCopula, IndependentCopula
+from service.risk.covers import Tails
+from service.risk.measures.contract import STRICT, Text
+from service.risk.marginals import MarginalLaw
+
+Array = NDArray[np.float64]
+Indices = NDArray[np.intp]
+
+
+@plain(frozen=True)
+class FactorSet:
+    """The factors that components refer to.
+
+    Attributes
+    ----------
+    ids : tuple of str
+        Unique, in the order of the factors' columns.
+    marginals : tuple of MarginalLaw or None
+        One each; None for observed changes, which have no law.
+    dependence : CopulaFamily or None
+        Their copula; None for observed changes.
+    """
+
+    ids: tuple[str, ...]
+    marginals: tuple[MarginalLaw, ...] | None = None
+    dependence: CopulaFamily | None = None
+
+    @cached_property
+    def positions(self) -> dict[str, int]:
+        """Number of the column by id."""
+        return {name: number for number, name in enumerate(self.ids)}
+
+    def columns(self, names: Iterable[str]) -> Indices:
+        """Return the columns of the factors named."""
+        return np.array([self.positions[name] for name in names], dtype=np.intp)
+
+    def marginal(self, name: str) -> MarginalLaw:
+        """Return the law of a factor."""
+        if self.marginals is None:
+            raise LookupError(name)
+        return self.marginals[self.positions[name]]
+
+    def tails(self, name: str) -> Tails:
+        """Return the tails of a factor."""
+        return tails_of(self.marginal(name))
+
+    def correlation(self, columns: Indices) -> Array | None:
+        """Return the correlation (k, k) of the normal scores; None if more than a correlation ties them."""
+        if isinstance(self.dependence, IndependentCopula):
+            return np.eye(columns.size)
+        if isinstance(self.dependence, GaussianCopula):
+            return self.dependence.correlation.among(len(self.ids), columns)
+        return None
+
+
+def tails_of(marginal: MarginalLaw) -> Tails:
+    """Return the tails of a marginal law."""
+    return Tails(
+        upper_index=marginal.upper_tail_index,
+        lower_index=marginal.lower_tail_index,
+        upper_exponential=marginal.exponential_moment,
+        lower_exponential=marginal.lower_exponential_moment,
+    )
+
+
+class Block(Protocol):
+    """A block of n scenarios as one component sees it; factors are named by their columns in the `FactorSet`."""
+
+    @property
+    def scenarios(self) -> int:
+        """Number n of scenarios."""
+        ...
+
+    def values(self, columns: Indices) -> Array:
+        """Return the values of factors, shape (k, n), in their units; not to be written to."""
+        ...
+
+    def normal_scores(self, columns: Indices) -> Array:
+        """Return the normal scores of factors, shape (k, n), without unit; not to be written to."""
+        ...
+
+    def uniform(self, column: int) -> Array:
+        """Return the uniform of a factor, shape (n,), in [0, 1]."""
+        ...
+
+    @property
+    def generator(self) -> Generator:
+        """The stream of this component in this block; the same object each time."""
+        ...
+
+
+class PreparedComponent(Protocol):
+    """A component bound to its factors."""
+
+    def losses(self, block: Block, out: Array) -> None:
+        """Write the losses of the block into `out` (n,), C order, in currency."""
+        ...
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class Component:
+    """The contract, and what components without factors or draws of their own share."""
+
+    @property
+    def used(self) -> tuple[str, ...]:
+        """Ids of the factors whose values it needs, each once."""
+        return ()
+
+    @property
+    def used_scores(self) -> tuple[str, ...]:
+        """Ids of the factors whose normal scores or uniforms it needs, each once."""
+        return ()
+
+    @property
+    def own_draws(self) -> bool:
+        """Whether it draws from a stream of its own."""
+        return False
+
+    @property
+    def draws_per_scenario(self) -> float:
+        """Expected number of draws of its own in a scenario."""
+        return 0.0
+
+    def check(self, factors: FactorSet) -> None:
+        """Refuse what does not fit the factors.
+
+        Raises
+        ------
+        InvalidValue
+            With pointers relative to the component.
+        """
+
+    def prepared(self, factors: FactorSet) -> PreparedComponent:
+        """Return the component bound to factors that passed `check`."""
+        raise NotImplementedError
+
+    def tails(self, factors: FactorSet) -> Tails:  # noqa: ARG002  # members use them
+        """Return which moments of the loss exist; factors have marginals here."""
+        return Tails()
+
+    @property
+    def independent(self) -> bool:
+        """Whether its loss is independent of the factors and of all other components."""
+        return False
+
+    def mean(self, factors: FactorSet) -> float | None:  # noqa: ARG002  # members use them
+        """Return the expected loss in currency where it has a closed form, else None."""
+        return None
+
+
+def unknown_factors(named: Sequence[tuple[str, str]], factors: FactorSet) -> list[Fault]:
+    """Return a fault for each (pointer, id) that names no factor."""
+    faults = []
+    for pointer, name in named:
+        if name not in factors.positions:
+            close = get_close_matches(name, factors.ids, n=1)
+            hint = f"; did you mean '{close[0]}'?" if close else ""
+            faults.append(Fault(detail=f"there is no factor '{name}'{hint}", code="unknown_factor", pointer=pointer))
+    return faults
+
+
+def refuse(faults: Sequence[Fault]) -> None:
+    """Raise the faults, if any."""
+    if faults:
+        detail = faults[0].detail if len(faults) == 1 else f"{len(faults)} values are not allowed."
+        raise InvalidValue(detail, faults=faults)
+
+
+def once(names: Iterable[str]) -> tuple[str, ...]:
+    """Return each name once, in order of first appearance."""
+    return tuple(dict.fromkeys(names))
+
+
+def finite_sum(terms: Iterable[float | None]) -> float | None:
+    """Return the sum; None if a term is missing or not finite."""
+    total = 0.0
+    for term in terms:
+        if term is None or not math.isfinite(term):
+            return None
+        total += term
+    return total
+
+
+__all__ = [
+    "Array",
+    "Block",
+    "Component",
+    "FactorSet",
+    "Indices",
+    "PreparedComponent",
+    "Text",
+    "finite_sum",
+    "once",
+    "refuse",
+    "tails_of",
+    "unknown_factors",
+]

@@ -1,0 +1,49 @@
+"""What a form of a correlation matrix is: something that is checked and then gives a root of the matrix."""
+
+from dataclasses import dataclass as plain
+
+from pydantic import ConfigDict
+from pydantic.dataclasses import dataclass
+
+from service.risk.correlation.roots import Root
+
+STRICT = ConfigDict(
+    strict=True, extra="forbid", allow_inf_nan=False, use_attribute_docstrings=True, use_enum_values=True
+)
+
+SLACK = 1e-9  # entries, diagonal and row norms may be off by this much, as sums of rounded decimals are
+
+
+@plain(frozen=True, slots=True)
+class Mixing:
+    """The law whose rank correlations are meant, where the correlations are given as such.
+
+    Attributes
+    ----------
+    df : float or None
+        Degrees of freedom of a Student t copula; None for a Gaussian one.
+    """
+
+    df: float | None = None
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class CorrelationForm:
+    """The contract of all forms; faults point into the form, e.g. ``/values/2/1``."""
+
+    def check(self, factors: int) -> None:
+        """Raise InvalidValue if this is no form of a matrix of so many factors, as far as that is seen at once.
+
+        Whether the matrix is positive semi-definite shows when its root is taken.
+        """
+        raise NotImplementedError
+
+    def root(self, factors: int, mixing: Mixing) -> Root:
+        """Return what makes correlated normals of independent ones.
+
+        Raises
+        ------
+        InvalidValue
+            As `check`, and if the matrix is not positive semi-definite and is not to be repaired.
+        """
+        raise NotImplementedError
