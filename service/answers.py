@@ -10,16 +10,20 @@ import numpy as np
 from service.errors import NotDefined
 from service.risk.allocation import Contributions
 from service.risk.frame import Frame
+from service.risk.increments import Base, Increment
 from service.risk.measures import RiskMeasure
 from service.risk.uncertainty import FULL_TAIL, Estimates
+from service.schemas.requests import IncrementsRequest
 from service.schemas.results import (
     AllocationResult,
     AllocationRow,
+    CandidateFigures,
     Figure,
     GroupFigure,
     GroupRow,
     Interval,
     MeasureResult,
+    Moved,
     Note,
     NoteCode,
     SmoothingWindow,
@@ -245,6 +249,44 @@ def _total_return(of: Shared, base: float, number: int, notes: Notes) -> float |
         notes.add("no_expected_profit", f"{len(profits) - len(known)} sub-portfolios have no expected profit")
         return None
     return _ratio(sum(known), base, "the capital", number, notes)
+
+
+def candidate_figures(
+    request: IncrementsRequest,
+    profit: float | None,
+    number: int,
+    base: Base,
+    of: Increment,
+    ids: Sequence[str],
+    notes: Notes,
+) -> CandidateFigures:
+    """Return what one candidate changes in measure `number`."""
+    coverage = request.interval_coverage
+    total_with, increment, contribution, alone = (
+        figure_list(part, coverage)[0] for part in (of.total_with, of.increment, of.contribution, of.stand_alone)
+    )
+    needed = None if request.hurdle_rate is None else request.hurdle_rate * increment.value
+    cost, most = request.cost_of_capital, request.capital_limit
+    return CandidateFigures(
+        measure=base.measure.name,
+        total_with=total_with,
+        increment=increment,
+        contribution=contribution,
+        stand_alone=alone,
+        diversification_benefit=_ratio(
+            alone.value - increment.value, alone.value, "a stand-alone figure", number, notes
+        ),
+        return_on_capital=_return(profit, increment.value, number, notes),
+        required_profit=None if cost is None else cost * increment.value + 0.0,
+        meets_hurdle=None if needed is None or profit is None else profit >= needed,
+        within_limit=None if most is None else total_with.value <= most,
+        moved=[
+            Moved(name, before, after)
+            for name, before, after in zip(
+                ids, (base.contributions + 0.0).tolist(), (of.moved + 0.0).tolist(), strict=True
+            )
+        ],
+    )
 
 
 def tail(frame: Frame, measures: Sequence[RiskMeasure]) -> Tail:

@@ -37,6 +37,7 @@ def create_app(settings: Settings) -> FastAPI:
         lifespan=life,
         openapi_url=None,
         redirect_slashes=False,
+        telemetry={"metrics": False, "logs": False},  # both are the middleware's; traces are the framework's
         middleware=[Middleware(Envelope, metrics=metrics, refuse=problems.refuse)],
     )
     problems.install(app)

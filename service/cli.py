@@ -68,7 +68,7 @@ def _add_compute(commands: "argparse._SubParsersAction[argparse.ArgumentParser]"
     compute.add_argument("request", metavar="REQUEST.json", help="file with the request; - reads standard input")
     compute.add_argument(
         "--to",
-        choices=("measures", "allocations"),
+        choices=("measures", "allocations", "increments"),
         default="allocations",
         help="calculation (default allocations)",
     )
@@ -113,7 +113,7 @@ def _compute(options: argparse.Namespace) -> int:
 
 def _answered(read: "Callable[[Settings], Intake]", form: str) -> int:
     """Compute in this process and print the answer; return the exit code."""
-    from service import calculate
+    from service import calculate, problems
     from service.errors import TailraceError
     from service.executors import Work
     from service.representations import formats
@@ -125,7 +125,7 @@ def _answered(read: "Callable[[Settings], Intake]", form: str) -> int:
         return _complain(str(error), BAD_USAGE)
     bar = ProgressBar()
     try:
-        answer = calculate.answer(read(settings), Work(settings.threads, bar), settings)
+        answer = calculate.answer(read(settings), Work(settings.threads, bar), settings, problems.describe)
     except TailraceError as error:
         bar.end()
         return _complain(complaint(error), BAD_USAGE)

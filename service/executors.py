@@ -36,7 +36,7 @@ class Work:
         """Return ``function(piece)`` for each piece, in the order of the pieces, worked on by `threads` threads.
 
         At most twice as many pieces as threads are under way, so that pieces made one by one do not pile up.
-        The checkpoint is asked before each result. Functions must not map themselves: the threads are shared.
+        The checkpoint is asked after each result. Functions must not map themselves: the threads are shared.
 
         Parameters
         ----------
@@ -46,10 +46,13 @@ class Work:
         """
         waiting = iter(pieces)
         first = list(islice(waiting, 2))
-        if self.threads == 1 or len(first) < 2:  # noqa: PLR2004  # a single piece needs no other thread
-            return [function(piece) for piece in chain(first, waiting)]
-        threads = pool(self.threads)
         results: list[Result] = []
+        if self.threads == 1 or len(first) < 2:  # noqa: PLR2004  # a single piece needs no other thread
+            for piece in chain(first, waiting):
+                results.append(function(piece))
+                self.checkpoint()
+            return results
+        threads = pool(self.threads)
         ahead = chain(first, islice(waiting, 2 * self.threads - 2))
         under_way = deque(threads.submit(function, piece) for piece in ahead)
         try:

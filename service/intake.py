@@ -13,7 +13,7 @@ from service import payloads, query
 from service.errors import Fault, InvalidValue, UnsupportedMediaType, pointing
 from service.payloads import Sheet
 from service.schemas.losses import ScenarioLosses
-from service.schemas.requests import AllocationsRequest, MeasuresRequest
+from service.schemas.requests import AllocationsRequest, IncrementsRequest, MeasuresRequest
 from service.settings import Settings
 from service.validation import refusal
 
@@ -22,13 +22,15 @@ MULTIPART = "multipart/form-data"
 BODY_PART = "body"
 TABLE_PART = "table"
 
-Request = MeasuresRequest | AllocationsRequest
+Request = MeasuresRequest | AllocationsRequest | IncrementsRequest
 
-REQUESTS: Mapping[str, TypeAdapter[Any]] = {
-    "measures": TypeAdapter(MeasuresRequest),
-    "allocations": TypeAdapter(AllocationsRequest),
+MODELS: Mapping[str, type[Request]] = {
+    "measures": MeasuresRequest,
+    "allocations": AllocationsRequest,
+    "increments": IncrementsRequest,
 }
 """The request model of each calculation, by the last word of its path."""
+ADAPTERS: Mapping[str, TypeAdapter[Any]] = {name: TypeAdapter(model) for name, model in MODELS.items()}
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,7 +40,7 @@ class Intake:
     Attributes
     ----------
     calculation : str
-        `measures` or `allocations`.
+        `measures`, `allocations` or `increments`.
     request : MeasuresRequest or AllocationsRequest
     table : ndarray of shape (rows, columns) or Sheet
         The numbers as they were sent: bare, or with a header.
@@ -65,7 +67,7 @@ def read(
     Parameters
     ----------
     calculation : str
-        `measures` or `allocations`.
+        `measures`, `allocations` or `increments`.
     body : bytes
     content_type : str
         The header's value, with its parameters.
@@ -147,6 +149,9 @@ def read_parts(
 def _table_body(
     calculation: str, body: bytes, media_type: str, parameters: Sequence[tuple[str, str]], settings: Settings
 ) -> Intake:
+    if calculation not in query.CALCULATIONS:
+        detail = f"{calculation} are asked in JSON; the table may stand in the second part of a multipart body"
+        raise UnsupportedMediaType(detail, faults=[Fault(detail=detail, code="media_type", header="Content-Type")])
     document = query.table_request(parameters, calculation)
     try:
         request = _validated(calculation, document, orjson.dumps(document))
@@ -173,12 +178,10 @@ def _validated(calculation: str, document: dict[str, Any], text: bytes) -> Reque
     """Return the model of a document; `null` in an optional field means absent."""
     if b"null" in text:
         text = orjson.dumps(_without_nulls(document))
-    adapter = REQUESTS[calculation]
     try:
-        request: Request = adapter.validate_json(text)
+        request: Request = ADAPTERS[calculation].validate_json(text)
     except ValidationError as error:
-        model = AllocationsRequest if calculation == "allocations" else MeasuresRequest
-        raise refusal(error, document, model) from None
+        raise refusal(error, document, MODELS[calculation]) from None
     return request
 
 

@@ -63,6 +63,13 @@ def body(error: TailraceError, instance: str) -> dict[str, Any]:
     return problem
 
 
+def describe(error: TailraceError) -> dict[str, Any]:
+    """Return the problem of what is refused inside an answer, whose bytes are the same for every request."""
+    problem = body(error, "")
+    del problem["instance"]
+    return problem
+
+
 def status_of(error: TailraceError) -> int:
     """Return the status of the first class above `error` that has a row."""
     return next(PROBLEMS[kind] for kind in type(error).__mro__ if kind in PROBLEMS)

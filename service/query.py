@@ -83,6 +83,7 @@ LOSSES: Mapping[str, Parameter] = {
     "valuation_date": Parameter("valuation_date"),
     "horizon": Parameter("horizon"),
 }
+CALCULATIONS = ("measures", "allocations")
 MEASURE = ("measure", "level", "above", *MEASURE_NUMBERS)
 WITHOUT_MEANING = (
     "refresh",

@@ -28,8 +28,8 @@ class Settings:
     max_sub_portfolios: int = _setting(10_000, "sub-portfolios of one request", unit="sub-portfolios")
     max_groups: int = _setting(1_000, "groups of one request", unit="groups")
     max_seconds: float = _setting(60.0, "computing time of one request", unit="seconds", least=0.001)
-    max_concurrent: int = _setting(cpu_count() or 1, "requests that compute at the same time", unit="requests")
-    max_waiting: int = _setting(64, "requests that wait for a place to compute", unit="requests", least=0)
+    max_concurrent: int = _setting(cpu_count() or 1, "requests that one process computes at once", unit="requests")
+    max_waiting: int = _setting(64, "requests that wait for a place in one process", unit="requests", least=0)
     threads: int = _setting(cpu_count() or 1, "computing threads of one request", unit="threads")
     stop_seconds: int = _setting(25, "time to finish running requests when told to stop", unit="seconds")
 

@@ -14,11 +14,13 @@ from service.schemas.results import (
     AllocationsAnswer,
     Figure,
     GroupRow,
+    IncrementsAnswer,
     MeasureResult,
     MeasuresAnswer,
 )
 
 WIDTH = 100
+AT_RIGHT = ("share", "diversified", "return", "hurdle", "limit")  # columns of texts that stand like numbers
 BAR = 30  # characters of a full progress bar
 BAR_SECONDS = 0.1  # between two drawings of it
 CAUTION = (
@@ -27,14 +29,18 @@ CAUTION = (
     "officer decide."
 )
 
-Answer = MeasuresAnswer | AllocationsAnswer
+Answer = MeasuresAnswer | AllocationsAnswer | IncrementsAnswer
 
 
 def readable(answer: Answer) -> str:
     """Return an answer as text: a table per result, then notes, cautions and where it came from."""
-    results = answer.allocations if isinstance(answer, AllocationsAnswer) else answer.measures
     blocks = [*_heading(answer)]
-    blocks += [_allocation(one) if isinstance(one, AllocationResult) else _measure(one) for one in results]
+    if isinstance(answer, AllocationsAnswer):
+        blocks += [_allocation(one) for one in answer.allocations]
+    elif isinstance(answer, MeasuresAnswer):
+        blocks += [_measure(one) for one in answer.measures]
+    else:
+        blocks += _increments(answer)
     blocks += [_wrapped(f"Note: {note.detail}.") for note in answer.notes]
     blocks.append(_wrapped(CAUTION))
     blocks.append(f"{answer.provenance.method}\nrequest {answer.provenance.request_digest}\n")
@@ -48,7 +54,11 @@ def _heading(answer: Answer) -> Iterator[str]:
     if known:
         yield ", ".join(known)
     unit = f" in {labels.currency}" if labels.currency else ""
-    yield f"{answer.scenarios:,} scenarios, amounts{unit}, expected loss {_short(answer.expected_loss.value)}"
+    heading = f"{answer.provenance.scenarios:,} scenarios, amounts{unit}"
+    if isinstance(answer, IncrementsAnswer):
+        yield heading + "\n"
+        return
+    yield f"{heading}, expected loss {_short(answer.expected_loss.value)}"
     interval = answer.expected_loss.interval
     if interval is not None:
         yield f"lower and upper: {100.0 * interval.coverage:g} % intervals of the error of sampling\n"
@@ -109,6 +119,38 @@ def _measure(result: MeasureResult) -> str:
     return f"{result.measure}\n{text_table(Table(columns, rows))}{saved}"
 
 
+def _increments(answer: IncrementsAnswer) -> Iterator[str]:
+    """Yield a table per measure, and the reasons of the candidates that were refused."""
+    names = ("increment", "lower", "upper", "alone", "diversified", "return", "required profit", "hurdle", "limit")
+    columns = (_text("candidate"), *(_ratio_or_number(name) for name in names))
+    for number, base in enumerate(answer.base):
+        rows = []
+        for one in answer.candidates:
+            if one.figures:
+                of = one.figures[number]
+                verdicts = (_verdict(of.meets_hurdle), _verdict(of.within_limit))
+                ratios = (_percent(of.diversification_benefit), _percent(of.return_on_capital))
+                figure = of.increment
+                row = (
+                    one.id,
+                    figure.value,
+                    *_ends(figure),
+                    of.stand_alone.value,
+                    *ratios,
+                    of.required_profit,
+                    *verdicts,
+                )
+                rows.append(row)
+        yield f"{base.measure} now {_short(base.total.value)}\n{text_table(Table(columns, rows))}"
+    for one in answer.candidates:
+        if one.problem is not None:
+            yield f"{one.id or 'a candidate without a name'} refused: {one.problem['detail']}\n"
+
+
+def _verdict(passed: bool | None) -> str | None:  # noqa: FBT001  # a verdict is what it is
+    return None if passed is None else "yes" if passed else "no"
+
+
 def _ends(figure: Figure) -> tuple[float | None, float | None]:
     return (None, None) if figure.interval is None else (figure.interval.lower, figure.interval.upper)
 
@@ -130,7 +172,7 @@ def _number(name: str) -> Column:
 
 
 def _ratio_or_number(name: str) -> Column:
-    return Column(name=name, kind="percent" if name in ("share", "diversified", "return") else "number")
+    return Column(name=name, kind="percent" if name in AT_RIGHT else "number")
 
 
 def _wrapped(words: str) -> str:

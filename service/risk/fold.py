@@ -25,7 +25,7 @@ class Fold:
     Attributes
     ----------
     totals : ndarray of shape (n,)
-        Row sums.
+        Row sums; each the same bits wherever its row stands.
     sums : ndarray of shape (d,)
         Column sums (of probability times loss where probabilities were given).
     products : ndarray of shape (d,) or None
@@ -80,13 +80,12 @@ def fold(
     workers = min(effort.threads, len(edges))
 
     def work(worker: int) -> _Survivors | None:
-        ones = np.ones(count)
         sieve = None if thresholds is None else _Sieve(thresholds, rows)
         for number in range(worker, len(edges), workers):
             effort.checkpoint(number / len(edges))
             part = slice(edges[number], edges[number] + rows)
             block = losses[part]
-            total = np.matmul(block, ones, out=totals[part])
+            total = np.add.reduce(block, axis=1, out=totals[part])
             if probabilities is None:
                 np.add.reduce(block, axis=0, out=sums[number])
             else:

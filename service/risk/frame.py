@@ -102,10 +102,16 @@ class Frame:
             self.scenarios, None if p is None else p[None, :], None if clusters is None else clusters[None, :]
         )
 
+    def depth(self, measure: RiskMeasure) -> float:
+        """Return the share of worst scenarios that `measure`, its error and its contributions look at."""
+        return self._depth(self.table, measure, contributions=True)
+
     def ranking(self, measure: RiskMeasure) -> Ranking:
         """Return the scenarios in the order of their total, as deep as `measure` looks."""
-        depth = self._depth(self.table, measure, contributions=True)
+        depth = self.depth(measure)
         if depth < 1.0:
+            if self._ranking.order.size <= depth * self.scenarios:
+                self._ranking, self._rows = ranked(self.totals, self.table, depth=depth), []
             return self._ranking.cut(depth)
         if self._whole is None:
             self._whole = self._ranking

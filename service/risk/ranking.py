@@ -63,13 +63,14 @@ def worst(values: Array, depth: float) -> Indices:
     return _worst_first(values, np.partition(values, values.size - count)[values.size - count])
 
 
-def tie_tolerance(columns: int, largest: float) -> float:
-    """Return the difference below which two totals are one atom.
+def tie_tolerance(rows: Array) -> float:
+    """Return the difference below which the sums of two `rows` (m, d) are one atom.
 
     Sums of d floats that differ by their rounding alone differ by at most d 2^-52 times the largest sum of
     absolute losses; a single column has no rounding.
     """
-    return columns * 2.0**-52 * largest if columns > 1 else 0.0
+    columns = rows.shape[1]
+    return columns * 2.0**-52 * float(np.max(np.add.reduce(np.abs(rows), axis=1))) if columns > 1 else 0.0
 
 
 def ranked(totals: Array, table: LossTable, *, depth: float) -> Ranking:
@@ -77,23 +78,61 @@ def ranked(totals: Array, table: LossTable, *, depth: float) -> Ranking:
 
     Parameters
     ----------
+    totals : ndarray of shape (n,)
+    table : LossTable
     depth : float
         Share of the worst scenarios needed; all are kept unless the table is plain, and always enough that
         no atom is cut.
     """
-    losses, columns = table.losses, len(table)
     order = worst(totals, depth if table.plain else 1.0)
-    tolerance = 0.0
-    while columns > 1:
-        rows = losses if order.size == totals.size else losses.take(order, axis=0)
-        tolerance = tie_tolerance(columns, float(np.max(np.add.reduce(np.abs(rows), axis=1))))
+    while True:
+        rows = table.losses if order.size == totals.size else table.losses.take(order, axis=0)
+        tolerance = tie_tolerance(rows)
         edge = totals[order[-1]] - tolerance
         if order.size == totals.size or np.count_nonzero(totals >= edge) == order.size:
-            break
+            return ranking_of(totals[order], order, table, tolerance)
         order = _worst_first(totals, edge)
+
+
+def ranked_with(totals: Array, table: LossTable, loss: Array, *, depth: float) -> tuple[Ranking, Array]:
+    """Return the ranking of a table enlarged by one column, and its rows in that order.
+
+    The totals are those that a request with the enlarged table would have, to the last bit.
+
+    Parameters
+    ----------
+    totals : ndarray of shape (n,)
+        Row sums of `table`.
+    table : LossTable
+    loss : ndarray of shape (n,)
+        The further column.
+    depth : float
+        As in `ranked`.
+
+    Returns
+    -------
+    Ranking
+    ndarray of shape (m, d + 1)
+    """
+    together = totals + loss
+    order = worst(together, depth if table.plain else 1.0)
+    while True:
+        rows = np.column_stack([table.losses.take(order, axis=0), loss[order]])
+        tolerance = tie_tolerance(rows)
+        edge = together[order[-1]] - tolerance
+        if order.size == together.size or np.count_nonzero(together >= edge) == order.size:
+            break
+        order = _worst_first(together, edge)
+    exact = np.add.reduce(rows, axis=1)
+    again = np.argsort(-exact, kind="stable")
+    return ranking_of(exact[again], order[again], table, tolerance), rows[again]
+
+
+def ranking_of(values: Array, order: Indices, table: LossTable, tolerance: float) -> Ranking:
+    """Return the ranking of scenarios that are in order already."""
     ordered = Ordered.of(
-        totals[order][None, :],
-        scenarios=totals.size,
+        values[None, :],
+        scenarios=table.scenarios,
         probabilities=None if table.probabilities is None else table.probabilities[order][None, :],
         sampled=table.sampled,
         clusters=None if table.clusters is None else table.clusters[order][None, :],

@@ -11,7 +11,7 @@ from starlette.requests import Request
 from starlette.responses import Response
 from starlette.routing import Route
 
-from service import calculate, intake
+from service import calculate, intake, problems
 from service.desk import Desk
 from service.errors import Fault, InvalidValue
 from service.executors import Work
@@ -24,7 +24,7 @@ from service.routes.bodies import check_coding, check_digest, read_body
 from service.routes.doors import Handler, door
 from service.settings import Settings
 
-CALCULATIONS = ("measures", "allocations")
+CALCULATIONS = tuple(intake.MODELS)
 """Names of the calculations; each is the last word of its path."""
 
 SHORT_BODY = 128 * 1024
@@ -141,14 +141,15 @@ class _Task:
             return False
         request = self._taken.request
         rules = getattr(request, "rules", ("none",))
-        return len(request.measures) * len(rules) <= SHORT_WORK and "shapley" not in rules
+        times = len(rules) * len(getattr(request, "candidates", ("none",)))
+        return len(request.measures) * times <= SHORT_WORK and "shapley" not in rules
 
     def run(self, work: Work) -> bytes:
         """Return the answer's bytes."""
         self._clock.mark("wait")
         mark = _wants_mark(self._parameters())
-        answer = calculate.answer(self._taken or self.decode(), work, self._calculation.settings)
-        self.scenarios = answer.scenarios
+        answer = calculate.answer(self._taken or self.decode(), work, self._calculation.settings, problems.describe)
+        self.scenarios = answer.provenance.scenarios
         self._clock.mark("compute")
         data = formats.write(answer, self._form, mark=mark)
         self._clock.mark("write")

@@ -1,15 +1,15 @@
 """One request model per calculation."""
 
 from collections.abc import Sequence
-from typing import Annotated, Literal, Self
+from typing import Annotated, Any, Literal, Self
 
-from pydantic import AfterValidator, Field, model_validator
+from pydantic import AfterValidator, Field, WithJsonSchema, model_validator
 from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
 
 from service.risk.measures import Measure, Smoothing, Text
 from service.risk.measures.contract import STRICT
-from service.schemas.losses import Losses, Number
+from service.schemas.losses import AttributeName, Losses, Number
 
 MOST_MEASURES = 32
 
@@ -75,3 +75,48 @@ class AllocationsRequest(MeasuresRequest):
         if self.capital is not None and self.capital_measure is not None:
             raise PydanticCustomError("capital", "give capital or capital_measure, not both")
         return self
+
+
+MOST_CANDIDATES = 1000
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class Candidate:
+    """One deal that might be added to the book, or taken from it with the opposite sign."""
+
+    id: Text
+    """Its name, unique in the request and not that of a sub-portfolio."""
+    values: Annotated[list[Number], Field(min_length=1)]
+    """Its loss in each scenario, in the order of the base's scenarios, in currency."""
+    attributes: dict[AttributeName, Text] = Field(default_factory=dict)
+    """What it belongs to; comes back in no figure."""
+    expected_profit: Number | None = None
+    """Expected profit as a gain, in currency."""
+
+
+CandidateDocument = Annotated[Any, WithJsonSchema({"$ref": "#/components/schemas/Candidate"})]
+"""A candidate as sent: each is judged alone, so that a bad one does not spoil the others."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class IncrementsRequest:
+    """What is asked of `POST /v1/increments`."""
+
+    losses: Losses
+    """The book as it is."""
+    measures: Measures
+    """The risk measures to compute, 1 to 32, with distinct names."""
+    candidates: Annotated[list[CandidateDocument], Field(min_length=1, max_length=MOST_CANDIDATES)]
+    """The deals to try, 1 to 1000, each alone."""
+    base_digest: Annotated[str | None, Field(pattern=r"^sha-256:[0-9a-f]{64}$")] = None
+    """`losses_digest` of the book that is meant; another book is refused with status 409."""
+    hurdle_rate: Number | None = None
+    """Least return on capital, without unit, for `meets_hurdle`."""
+    cost_of_capital: Annotated[Number | None, Field(ge=0.0)] = None
+    """Cost of capital per horizon, without unit, for `required_profit`."""
+    capital_limit: Number | None = None
+    """Amount, in currency, that the measure of the enlarged book should not pass."""
+    interval_coverage: Coverage = 0.95
+    """Nominal coverage of the intervals, without unit."""
+    reference: Text | None = None
+    """Label of this request; comes back unchanged."""

@@ -5,7 +5,7 @@ OpenAPI document and a test holds every answer against it.
 """
 
 from dataclasses import dataclass
-from typing import Annotated, Literal
+from typing import Annotated, Any, Literal
 
 from pydantic import Field
 
@@ -333,6 +333,105 @@ class AllocationsAnswer:
         )
 
 
+@dataclass(frozen=True, slots=True)
+class Moved:
+    """How the contribution of one sub-portfolio moves when a candidate joins."""
+
+    id: Annotated[str, Field(description="The sub-portfolio.")]
+    before: Annotated[Money, Field(description="Its Euler contribution to the book as it is, in currency.")]
+    after: Annotated[Money, Field(description="Its Euler contribution to the enlarged book, in currency.")]
+
+
+@dataclass(frozen=True, slots=True)
+class CandidateFigures:
+    """What one candidate changes in one measure."""
+
+    measure: Annotated[str, Field(description="Name of the measure.")]
+    total_with: Annotated[Figure, Field(description="The measure of the enlarged book.")]
+    increment: Annotated[
+        Figure, Field(description="With less without; its error is that of the difference on the same scenarios.")
+    ]
+    contribution: Annotated[Figure, Field(description="Euler contribution of the candidate inside the enlarged book.")]
+    stand_alone: Annotated[Figure, Field(description="The measure of the candidate alone.")]
+    diversification_benefit: Annotated[
+        Money | None, Field(description="1 - increment / stand-alone figure, without unit.")
+    ]
+    return_on_capital: Annotated[Money | None, Field(description="Expected profit over increment, without unit.")]
+    required_profit: Annotated[Money | None, Field(description="Cost of capital times increment, in currency.")]
+    meets_hurdle: Annotated[
+        bool | None,
+        Field(description="Whether the expected profit is at least hurdle rate times increment; null without both."),
+    ]
+    within_limit: Annotated[
+        bool | None, Field(description="Whether the measure of the enlarged book is at most `capital_limit`.")
+    ]
+    moved: Annotated[list[Moved], Field(description="How the contributions of the others move, in order.")]
+
+
+@dataclass(frozen=True, slots=True)
+class CandidateResult:
+    """What one candidate changes, or why it was refused."""
+
+    id: Annotated[str | None, Field(description="The candidate; null if it has no readable name.")]
+    status: Annotated[Literal["ok", "refused"], Field(description="Whether it was judged.")]
+    figures: Annotated[list[CandidateFigures], Field(description="One per measure, in the order asked.")]
+    problem: Annotated[
+        dict[str, Any] | None,
+        Field(
+            description="Why it was refused, as a problem document; its pointers are into the whole request.",
+            json_schema_extra={"$ref": "#/components/schemas/Problem"},
+        ),
+    ]
+
+
+@dataclass(frozen=True, slots=True)
+class BaseFigure:
+    """One measure of the book as it is."""
+
+    measure: Annotated[str, Field(description="Name of the measure.")]
+    total: Annotated[Figure, Field(description="The measure of the total loss.")]
+
+
+@dataclass(frozen=True, slots=True)
+class IncrementsAnswer:
+    """Answer of `POST /v1/increments`."""
+
+    base: Annotated[list[BaseFigure], Field(description="The book as it is, one per measure.")]
+    candidates: Annotated[list[CandidateResult], Field(description="One per candidate, in the order asked.")]
+    refused: Annotated[Whole, Field(description="How many candidates were refused.")]
+    labels: Annotated[Labels, Field(description="Labels of the request, unchanged.")]
+    notes: Annotated[list[Note], Field(description="What the caller may want to know.")]
+    provenance: Annotated[Provenance, Field(description="What an auditor needs to repeat the figures.")]
+
+    def table(self) -> Table:
+        """Return one row per candidate and measure; a refused candidate has one row with its reason."""
+        rows: list[tuple[object, ...]] = []
+        for one in self.candidates:
+            if one.problem is not None:
+                rows.append((one.id, one.status, *[None] * 14, str(one.problem["detail"]), self.labels.currency))
+            rows += [
+                (
+                    one.id,
+                    one.status,
+                    figures.measure,
+                    *_spread(figures.increment),
+                    figures.total_with.value,
+                    figures.contribution.value,
+                    figures.contribution.standard_error,
+                    figures.stand_alone.value,
+                    figures.diversification_benefit,
+                    figures.return_on_capital,
+                    figures.required_profit,
+                    None if figures.meets_hurdle is None else str(figures.meets_hurdle).lower(),
+                    None if figures.within_limit is None else str(figures.within_limit).lower(),
+                    None,
+                    self.labels.currency,
+                )
+                for figures in one.figures
+            ]
+        return Table(INCREMENTS_COLUMNS, rows)
+
+
 def _spread(figure: Figure) -> tuple[float, float | None, float | None, float | None]:
     """Return value, standard error and both ends of the interval."""
     ends = (None, None) if figure.interval is None else (figure.interval.lower, figure.interval.upper)
@@ -367,4 +466,12 @@ ALLOCATIONS_COLUMNS = (
     *_ratio("return_on_capital"),
     *_money("allocated_capital"),
     *_text("currency"),
+)
+INCREMENTS_COLUMNS = (
+    *_text("id", "status", "measure"),
+    *_money("increment", "standard_error", "lower", "upper", "total_with", "contribution", "contribution_error"),
+    *_money("stand_alone"),
+    *_ratio("diversification_benefit", "return_on_capital"),
+    *_money("required_profit"),
+    *_text("meets_hurdle", "within_limit", "problem", "currency"),
 )

@@ -190,8 +190,8 @@ def test_a_place_given_to_one_who_left_goes_to_the_next():
         desk.computing += 1
         with pytest.raises(Cancelled):
             await second
-        assert await third == 3
         release.set()
+        assert await third == 3
         await first
 
     on_a_desk(scenario, max_concurrent=1)

@@ -2,6 +2,7 @@
 
 import math
 from dataclasses import dataclass as plain
+from dataclasses import replace
 from functools import lru_cache
 from typing import Literal
 
@@ -150,7 +151,7 @@ class CompoundComponent(Component):
     @property
     def law_of_sum(self) -> AggregateLaw:
         """The law of the sum of the claims after `claim_cover`, before the terms of the year; cached."""
-        return _law_of_sum(_ADAPTER.dump_json(self))
+        return _law_of_sum(_ADAPTER.dump_json(replace(self, driver=None)))
 
     def tails(self, factors: FactorSet) -> Tails:  # noqa: ARG002  # as the contract
         """Return the tails of the sum: the claims' own index, and a rate that the number of claims may lower.

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from pydantic.dataclasses import dataclass
 
 from service.errors import Fault, InvalidValue
-from service.risk.copulas import CopulaFamily, GaussianCopula, IndependentCopula
+from service.risk.copulas import CopulaFamily, GaussianSampler, IndependentCopula, Sampler
 from service.risk.covers import Tails
 from service.risk.measures.contract import STRICT, Text
 from service.risk.marginals import MarginalLaw
@@ -38,11 +38,14 @@ class FactorSet:
         One each; None for observed changes, which have no law.
     dependence : CopulaFamily or None
         Their copula; None for observed changes.
+    sampler : Sampler or None
+        The copula bound to these factors.
     """
 
     ids: tuple[str, ...]
     marginals: tuple[MarginalLaw, ...] | None = None
     dependence: CopulaFamily | None = None
+    sampler: Sampler | None = None
 
     @cached_property
     def positions(self) -> dict[str, int]:
@@ -63,12 +66,17 @@ class FactorSet:
         """Return the tails of a factor."""
         return tails_of(self.marginal(name))
 
+    @property
+    def independent(self) -> bool:
+        """Whether the factors are independent of each other."""
+        return isinstance(self.dependence, IndependentCopula)
+
     def correlation(self, columns: Indices) -> Array | None:
         """Return the correlation (k, k) of the normal scores; None if more than a correlation ties them."""
-        if isinstance(self.dependence, IndependentCopula):
+        if self.independent:
             return np.eye(columns.size)
-        if isinstance(self.dependence, GaussianCopula):
-            return self.dependence.correlation.among(len(self.ids), columns)
+        if isinstance(self.sampler, GaussianSampler):
+            return self.sampler.root.correlations(columns)
         return None
 
 

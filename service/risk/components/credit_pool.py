@@ -34,7 +34,7 @@ from service.risk.measures.contract import STRICT, Text
 
 TINY = 1e-300  # in place of a share of 0 of the obligor's own in the index
 LENGTH_SLACK = 1e-9  # w'Rw may pass 1 by rounding of the weights
-CLOSE = 0.3  # spread of the conditional index, at factors 2 standard deviations out, within one bucket
+CLOSE = 1.2  # spread of the conditional index, at factors 2 standard deviations out, within one bucket
 FAR = 2.0  # those standard deviations
 DENSE = 8  # a bucket of fewer entries is drawn obligor by obligor
 MANY = 32  # obligors of one kind from which they are drawn as one number

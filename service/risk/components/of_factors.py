@@ -27,6 +27,7 @@ from service.risk.covers import Tails, harmonic
 from service.risk.measures.contract import STRICT, Text
 from service.risk.marginals import NormalMarginal
 
+TINY = 1e-300  # in place of a reach of 0
 FEW_PAIRS = 4  # pairs per factor up to which they are added one by one instead of by a matrix product
 
 
@@ -110,7 +111,7 @@ def _summed(exposures: Iterable[FactorExposure]) -> dict[str, float]:
 def _linear_tails(amounts: dict[str, float], factors: FactorSet) -> Tails:
     tails = Tails()
     for name, amount in amounts.items():
-        tails = tails.plus(factors.tails(name).times(amount))
+        tails = tails.plus(factors.tails(name).times(amount), independent=factors.independent)
     return tails
 
 
@@ -240,15 +241,17 @@ def _product_rate(first: str, second: str, factors: FactorSet) -> float:
     |XY| is at most (w X² + Y²/w)/2; of laws on the line only the normal has E[exp(t X²)], for
     t < 1/(2σ²), and with w = σ_Y/σ_X and Hölder's inequality that is t < 1/(2 σ_X σ_Y).
     """
-    spread = 1.0
-    for name in (first, second):
-        law = factors.marginal(name)
-        if isinstance(law, NormalMarginal):
-            spread *= law.standard_deviation
-        elif not all(math.isfinite(end) for end in law.support):
-            return 0.0
-    normals = sum(isinstance(factors.marginal(name), NormalMarginal) for name in (first, second))
-    return 1.0 / (2.0 * spread) if normals == 2 else math.inf  # noqa: PLR2004  # both of them
+    laws = [factors.marginal(name) for name in (first, second)]
+    reaches = [max(abs(end) for end in law.support) for law in laws]
+    if all(isinstance(law, NormalMarginal) for law in laws):
+        return 1.0 / (2.0 * math.prod(law.variance for law in laws) ** 0.5)
+    if math.isfinite(max(reaches)):
+        return math.inf
+    if math.isinf(min(reaches)):
+        return 0.0
+    bounded = int(reaches[1] < reaches[0])
+    other = factors.tails((second, first)[bounded])
+    return min(other.upper_exponential, other.lower_exponential) / max(reaches[bounded], TINY)
 
 
 @plain(frozen=True, slots=True)

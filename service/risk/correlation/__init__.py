@@ -30,10 +30,10 @@ Correlation = TypeAliasType(
 """Any form of a correlation matrix, told apart by `kind`."""
 
 TYPICAL: tuple[CorrelationForm, ...] = (
-    MatrixCorrelation(kind="matrix", values=((1.0, 0.5, 0.2), (0.5, 1.0, 0.3), (0.2, 0.3, 1.0))),
-    KendallTauCorrelation(kind="kendall_tau", values=((1.0, 0.4, 0.1), (0.4, 1.0, 0.2), (0.1, 0.2, 1.0))),
-    SpearmanRhoCorrelation(kind="spearman_rho", values=((1.0, 0.4, 0.1), (0.4, 1.0, 0.2), (0.1, 0.2, 1.0))),
-    LoadingsCorrelation(kind="loadings", values=((0.7, 0.1), (0.5, 0.4), (-0.3, 0.2))),
+    MatrixCorrelation(kind="matrix", values=[[1.0, 0.5, 0.2], [0.5, 1.0, 0.3], [0.2, 0.3, 1.0]]),
+    KendallTauCorrelation(kind="kendall_tau", values=[[1.0, 0.4, 0.1], [0.4, 1.0, 0.2], [0.1, 0.2, 1.0]]),
+    SpearmanRhoCorrelation(kind="spearman_rho", values=[[1.0, 0.4, 0.1], [0.4, 1.0, 0.2], [0.1, 0.2, 1.0]]),
+    LoadingsCorrelation(kind="loadings", values=[[0.7, 0.1], [0.5, 0.4], [-0.3, 0.2]]),
     EqualCorrelation(kind="equal", value=0.3),
 )
 """One realistic instance of each, for three factors."""

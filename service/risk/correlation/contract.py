@@ -5,13 +5,16 @@ from dataclasses import dataclass as plain
 from pydantic import ConfigDict
 from pydantic.dataclasses import dataclass
 
+from service.errors import Fault, InvalidValue
 from service.risk.correlation.roots import Root
 
 STRICT = ConfigDict(
     strict=True, extra="forbid", allow_inf_nan=False, use_attribute_docstrings=True, use_enum_values=True
 )
 
+NOT_A_CORRELATION = "not_a_correlation"
 SLACK = 1e-9  # entries, diagonal and row norms may be off by this much, as sums of rounded decimals are
+MOST_FAULTS = 50  # a table of wrong entries is one mistake, not a thousand
 
 
 @plain(frozen=True, slots=True)
@@ -47,3 +50,10 @@ class CorrelationForm:
             As `check`, and if the matrix is not positive semi-definite and is not to be repaired.
         """
         raise NotImplementedError
+
+
+def refuse(faults: list[Fault]) -> None:
+    """Raise the faults, if any."""
+    if faults:
+        more = f" (and {len(faults) - 1} more)" if len(faults) > 1 else ""
+        raise InvalidValue(faults[0].detail + more, faults=faults)

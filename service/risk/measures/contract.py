@@ -27,6 +27,9 @@ ABOVE = "`zero`: the figure itself; `mean`: its excess over the expected loss."
 Smoothing = Literal["auto", "none"]
 
 MAX_TEXT = 200
+PATTERN = (  # what the OpenAPI document can say of a safe text: refuses no safe one
+    r"^[^\x00-/:-@\[-^`{-\xa9\xab-\xb1\xb4\xb6-\xb8\xbb\xbf\xd7\xf7\u2028\u2029][^\x00-\x1f\x7f-\x9f\u2028\u2029]*$"
+)
 UNSAFE = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029]")
 
 
@@ -46,7 +49,7 @@ def text(value: str) -> str:
 Text = Annotated[
     str,
     AfterValidator(text),
-    Field(json_schema_extra={"minLength": 1, "maxLength": MAX_TEXT, "pattern": r"^[\p{L}\p{N}_][^\x00-\x1f]*$"}),
+    Field(json_schema_extra={"minLength": 1, "maxLength": MAX_TEXT, "pattern": PATTERN}),
 ]
 
 

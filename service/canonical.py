@@ -1,0 +1,61 @@
+"""A request in one form, whatever it was sent in: defaults filled in, the losses by their digest."""
+
+from collections.abc import Mapping, Sequence
+from dataclasses import asdict
+from typing import Any
+
+from service.intake import Intake
+from service.risk.loss_table import LossTable
+from service.risk.measures import RiskMeasure
+from service.schemas.requests import AllocationsRequest, IncrementsRequest, MeasuresRequest
+
+
+def canonical_request(intake: Intake, table: LossTable, digest: str) -> dict[str, Any]:
+    """Return the canonical form of a request, for its digest.
+
+    Parameters
+    ----------
+    intake : Intake
+    table : LossTable
+    digest : str
+        Of the losses.
+    """
+    request = intake.request
+    losses = request.losses
+    document: dict[str, Any] = {
+        "calculation": intake.calculation,
+        "losses": {
+            "digest": digest,
+            "sub_portfolios": [
+                {"attributes": one.attributes, "expected_profit": one.expected_profit, "id": one.id}
+                for one in table.sub_portfolios
+            ],
+            "scenarios_are": losses.scenarios_are,
+            "scenario_ids": table.scenario_ids,
+            "currency": losses.currency,
+            "valuation_date": losses.valuation_date,
+            "horizon": losses.horizon,
+        },
+        "measures": _measures(request.measures),
+        "interval_coverage": request.interval_coverage,
+        "reference": request.reference,
+    }
+    if isinstance(request, IncrementsRequest):
+        names = ("candidates", "base_digest", "hurdle_rate", "cost_of_capital", "capital_limit")
+        return document | {name: getattr(request, name) for name in names}
+    if isinstance(request, MeasuresRequest):
+        asked = ("group_by", "include_stand_alone", "tail_detail")
+        document |= {name: getattr(request, name) for name in asked}
+    if isinstance(request, AllocationsRequest):
+        capital_measure = [] if request.capital_measure is None else [request.capital_measure]
+        document |= {
+            "rules": request.rules,
+            "capital": request.capital,
+            "capital_measure": _measures(capital_measure),
+            "smoothing": request.smoothing,
+        }
+    return document
+
+
+def _measures(measures: Sequence[RiskMeasure]) -> list[Mapping[str, Any]]:
+    return [asdict(measure) | {"label": measure.name} for measure in measures]

@@ -1,0 +1,44 @@
+"""From SVG to PNG, with the font that is shipped and no other: the same picture on every machine."""
+
+from importlib.resources import as_file, files
+
+from service.errors import Fault, NotAcceptable
+
+FONT = "LiberationSans-Regular.ttf"
+FAMILY = "Liberation Sans"
+ZOOM = 2.0  # pixels of the PNG per pixel of the SVG
+SIGNATURE = b"\x89PNG\r\n\x1a\n"
+
+
+def png(svg: str, *, zoom: float = ZOOM) -> bytes:
+    """Return a picture as PNG.
+
+    Parameters
+    ----------
+    svg : str
+        A picture of its own, not one made for the inside of a page.
+    zoom : float
+
+    Raises
+    ------
+    NotAcceptable
+        Where the optional package that draws it is not installed.
+    """
+    try:
+        import resvg_py
+    except ImportError:
+        detail = "PNG needs the package resvg-py: install tailrace with its extra `png`. SVG is there without it."
+        fault = Fault(detail=detail, code=NotAcceptable.code)
+        raise NotAcceptable(detail, faults=[fault]) from None
+    with as_file(files("service.representations") / "fonts" / FONT) as font:
+        # Without system fonts a text in any other font would not be drawn at all, and nothing would say so.
+        return bytes(
+            resvg_py.svg_to_bytes(
+                svg_string=svg,
+                zoom=zoom,
+                skip_system_fonts=True,
+                font_files=[str(font)],
+                font_family=FAMILY,
+                sans_serif_family=FAMILY,
+            )
+        )

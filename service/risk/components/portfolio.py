@@ -1,0 +1,323 @@
+"""Portfolio: the components of all sub-portfolios, their signs and covers, put together for blocks of scenarios."""
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from typing import Literal
+
+import numpy as np
+from numpy.random import Generator
+
+from service.errors import CallerError, Fault, pointing
+from service.risk.components.contract import (
+    Array,
+    Component,
+    FactorSet,
+    Indices,
+    PreparedComponent,
+    refuse,
+)
+from service.risk.components.of_factors import ConstantComponent, LinearComponent
+from service.risk.covers import CoverStep, Tails, check_cover, covered, tails_after
+
+PADDING = 8  # doubles between rows of scratch: rows a power of two apart would share their place in the cache
+FEW_FACTORS = 0.06  # filled part of the exposure matrix up to which factors are added one by one
+
+
+@dataclass(frozen=True, slots=True)
+class SubPortfolioTerms:
+    """A sub-portfolio as the arithmetic sees it: components are added, the sign applied, then each cover step."""
+
+    id: str
+    components: tuple[Component, ...]
+    sign: Literal["loss", "profit"] = "loss"
+    cover: tuple[CoverStep, ...] = ()
+
+    @property
+    def factor(self) -> float:
+        """What the sum of the components is multiplied by."""
+        return -1.0 if self.sign == "profit" else 1.0
+
+    @property
+    def used(self) -> frozenset[str]:
+        """Ids of all factors that it depends on."""
+        return frozenset(name for one in self.components for name in (*one.used, *one.used_scores))
+
+    def owner(self, number: int) -> str:
+        """Return the owner of the stream of its component with this number."""
+        return f"sub_portfolio/{self.id}/{number}"
+
+    def tails(self, factors: FactorSet) -> Tails:
+        """Return which moments of its loss exist, after sign and cover."""
+        groups = [
+            (frozenset((*one.used, *one.used_scores)), one.tails(factors)) for one in self.components
+        ]
+        return tails_after(self.cover, together(groups, factors).times(self.factor))
+
+
+def together(parts: Sequence[tuple[frozenset[str], Tails]], factors: FactorSet) -> Tails:
+    """Return the tails of the sum of parts, each with the factors that it depends on.
+
+    Parts without factors are independent of all others; with independent factors so are parts without a
+    factor in common. All others may be as dependent as can be.
+    """
+    groups: list[tuple[frozenset[str], Tails]] = []
+    for part in parts:
+        names, tails = part
+        for other in [one for one in groups if names and one[0] and (not factors.independent or names & one[0])]:
+            groups.remove(other)
+            names, tails = names | other[0], tails.plus(other[1])
+        groups.append((names, tails))
+    total = Tails()
+    for _, tails in groups:
+        total = total.plus(tails, independent=True)
+    return total
+
+
+class BlockScratch:
+    """Arrays of one thread that each block fills anew."""
+
+    __slots__ = ("_arrays",)
+
+    def __init__(self) -> None:
+        self._arrays: dict[str, Array] = {}
+
+    def empty(self, name: str, rows: int, columns: int) -> Array:
+        """Return an array (rows, columns) with anything in it; the same one for the same name."""
+        known = self._arrays.get(name)
+        if known is None or known.shape[0] < rows or known.shape[1] < columns:
+            known = self._arrays[name] = np.empty((rows, columns + PADDING))
+        return known[:rows, :columns]
+
+
+class FactorRows:
+    """Values, normal scores and uniforms of the factors that a portfolio uses, in one block of n scenarios.
+
+    Attributes
+    ----------
+    scenarios : int
+    rows : ndarray of shape (k used, n)
+        Values of the factors used, in the order of `Portfolio.used`.
+    """
+
+    __slots__ = ("_places", "rows", "scenarios")
+
+    def __init__(self, scenarios: int, rows: Array, places: Indices) -> None:
+        self.scenarios = scenarios
+        self.rows = rows
+        self._places = places
+
+    def values(self, columns: Indices) -> Array:
+        """Return the values of factors, shape (k, n)."""
+        return taken(self.rows, self._places[columns])
+
+    def normal_scores(self, columns: Indices) -> Array:
+        """Return the normal scores of factors, shape (k, n)."""
+        raise NotImplementedError
+
+    def uniform(self, column: int) -> Array:
+        """Return the uniform of a factor, shape (n,)."""
+        raise NotImplementedError
+
+
+def taken(rows: Array, places: Indices) -> Array:
+    """Return rows (k, n): a view where they lie side by side."""
+    first = int(places[0]) if places.size else 0
+    if np.array_equal(places, np.arange(first, first + places.size)):
+        return rows[first : first + places.size]
+    return rows[places]
+
+
+class _OwnBlock:
+    """A block as one component sees it: the factors, and its own stream when it asks for it."""
+
+    __slots__ = ("_factors", "_generator", "_owner", "_streams")
+
+    def __init__(self, factors: FactorRows, streams: Callable[[str], Generator], owner: str) -> None:
+        self._factors = factors
+        self._streams = streams
+        self._owner = owner
+        self._generator: Generator | None = None
+
+    @property
+    def scenarios(self) -> int:
+        return self._factors.scenarios
+
+    def values(self, columns: Indices) -> Array:
+        return self._factors.values(columns)
+
+    def normal_scores(self, columns: Indices) -> Array:
+        return self._factors.normal_scores(columns)
+
+    def uniform(self, column: int) -> Array:
+        return self._factors.uniform(column)
+
+    @property
+    def generator(self) -> Generator:
+        if self._generator is None:
+            self._generator = self._streams(self._owner)
+        return self._generator
+
+
+@dataclass(frozen=True, slots=True)
+class _Added:
+    """A component that is added to a row of losses, and the pointer to it."""
+
+    row: int
+    prepared: PreparedComponent
+    owner: str
+    factor: float
+    pointer: str
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Portfolio:
+    """d sub-portfolios bound to their factors.
+
+    Attributes
+    ----------
+    sub_portfolios : tuple of SubPortfolioTerms
+    factors : FactorSet
+    used : ndarray of shape (k used,)
+        Columns of the factors whose values are needed, in order.
+    places : ndarray of shape (k,)
+        Row of each factor among those used; -1 for the rest.
+    exposures : ndarray of shape (d, k used)
+        Of all linear components together, with sign.
+    amounts : ndarray of shape (d,)
+        Of all constant components together, with sign.
+    added : tuple of _Added
+        All other components.
+    """
+
+    sub_portfolios: tuple[SubPortfolioTerms, ...]
+    factors: FactorSet
+    used: Indices
+    places: Indices
+    exposures: Array
+    amounts: Array
+    added: tuple[_Added, ...]
+
+    @classmethod
+    def of(cls, sub_portfolios: Sequence[SubPortfolioTerms], factors: FactorSet) -> "Portfolio":
+        """Check and prepare.
+
+        Raises
+        ------
+        InvalidValue
+            With pointers that begin at `sub_portfolios`.
+        """
+        refuse(_faults(sub_portfolios, factors))
+        names = {name for terms in sub_portfolios for one in terms.components for name in one.used}
+        used = np.array(sorted(factors.positions[name] for name in names), dtype=np.intp)
+        places = np.full(len(factors.ids), -1, dtype=np.intp)
+        places[used] = np.arange(used.size)
+        exposures = np.zeros((len(sub_portfolios), used.size))
+        amounts = np.zeros(len(sub_portfolios))
+        added = []
+        for row, terms in enumerate(sub_portfolios):
+            for number, one in enumerate(terms.components):
+                if isinstance(one, LinearComponent):
+                    for name, amount in one.amounts.items():
+                        exposures[row, places[factors.positions[name]]] += terms.factor * amount
+                elif isinstance(one, ConstantComponent):
+                    amounts[row] += terms.factor * one.amount
+                else:
+                    pointer = f"/sub_portfolios/{row}/components/{number}"
+                    prepared = one.prepared(factors)
+                    added.append(_Added(row, prepared, terms.owner(number), terms.factor, pointer))
+        return cls(tuple(sub_portfolios), factors, used, places, exposures, amounts, tuple(added))
+
+    def losses(
+        self,
+        rows: FactorRows,
+        streams: Callable[[str], Generator],
+        *,
+        scratch: BlockScratch,
+        out: Array,
+    ) -> Array:
+        """Return the losses (n, d) of a block, written into `out` in C order.
+
+        Parameters
+        ----------
+        rows : FactorRows
+        streams : callable
+            The generator of an owner in this block.
+        scratch : BlockScratch
+            Of the thread.
+        out : ndarray of shape (n, d)
+        """
+        covers = any(terms.cover for terms in self.sub_portfolios)
+        if not self.added and not covers and not self._sparse:
+            np.matmul(rows.rows.T, self.exposures.T, out=out)
+            out += self.amounts
+            return out
+        work = scratch.empty("losses", len(self.sub_portfolios), rows.scenarios)
+        self._linear(rows.rows, work)
+        component = scratch.empty("component", 1, rows.scenarios)[0]
+        for one in self.added:
+            with pointing(one.pointer):
+                one.prepared.losses(_OwnBlock(rows, streams, one.owner), component)
+            if one.factor < 0.0:
+                np.subtract(work[one.row], component, out=work[one.row])
+            else:
+                work[one.row] += component
+        for row, terms in enumerate(self.sub_portfolios):
+            if terms.cover:
+                covered(terms.cover, work[row], out=work[row])
+        np.copyto(out, work.T)
+        return out
+
+    @property
+    def _sparse(self) -> bool:
+        filled = np.count_nonzero(self.exposures)
+        return bool(filled <= max(FEW_FACTORS * self.exposures.size, 2 * self.exposures.shape[0]))
+
+    def _linear(self, values: Array, work: Array) -> None:
+        """Write the losses of the linear and constant components into `work` (d, n)."""
+        if not self._sparse:
+            np.matmul(self.exposures, values, out=work)
+            work += self.amounts[:, None]
+            return
+        term = np.empty(work.shape[1])
+        for row, exposures in enumerate(self.exposures):
+            filled = np.flatnonzero(exposures)
+            if not filled.size:
+                work[row] = self.amounts[row]
+                continue
+            np.multiply(values[filled[0]], exposures[filled[0]], out=work[row])
+            for place in filled[1:]:
+                work[row] += np.multiply(values[place], exposures[place], out=term)
+            if self.amounts[row] != 0.0:
+                work[row] += self.amounts[row]
+
+    def tails(self) -> list[Tails]:
+        """Return which moments of each sub-portfolio's loss exist."""
+        return [terms.tails(self.factors) for terms in self.sub_portfolios]
+
+    def total_tails(self) -> Tails:
+        """Return which moments of the total loss exist."""
+        parts = [(terms.used, tails) for terms, tails in zip(self.sub_portfolios, self.tails(), strict=True)]
+        return together(parts, self.factors)
+
+
+def _faults(sub_portfolios: Sequence[SubPortfolioTerms], factors: FactorSet) -> list[Fault]:
+    """Return all that does not fit, with pointers that begin at `sub_portfolios`."""
+    faults: list[Fault] = []
+    known: set[str] = set()
+    for row, terms in enumerate(sub_portfolios):
+        here = f"/sub_portfolios/{row}"
+        if terms.id in known:
+            faults.append(Fault(detail=f"the id '{terms.id}' is taken", code="not_unique", pointer=f"{here}/id"))
+        known.add(terms.id)
+        checks: list[tuple[str, Callable[[], None]]] = [
+            (f"{here}/components/{number}", lambda one=one: one.check(factors))  # type: ignore[misc]
+            for number, one in enumerate(terms.components)
+        ]
+        checks.append((f"{here}/cover", lambda terms=terms: check_cover(terms.cover)))  # type: ignore[misc]
+        for pointer, check in checks:
+            try:
+                with pointing(pointer):
+                    check()
+            except CallerError as error:
+                faults += error.faults
+    return faults
