@@ -1,5 +1,6 @@
 """From SVG to PNG, with the font that is shipped and no other: the same picture on every machine."""
 
+from collections.abc import Sequence
 from importlib.resources import as_file, files
 
 from service.errors import Fault, NotAcceptable
@@ -10,7 +11,7 @@ ZOOM = 2.0  # pixels of the PNG per pixel of the SVG
 SIGNATURE = b"\x89PNG\r\n\x1a\n"
 
 
-def png(svg: str, *, zoom: float = ZOOM) -> bytes:
+def png(svg: str, *, zoom: float = ZOOM, fonts: Sequence[str] = ()) -> bytes:
     """Return a picture as PNG.
 
     Parameters
@@ -18,6 +19,10 @@ def png(svg: str, *, zoom: float = ZOOM) -> bytes:
     svg : str
         A picture of its own, not one made for the inside of a page.
     zoom : float
+        Pixels of the PNG per pixel of the SVG.
+    fonts : sequence of str
+        Files of further fonts. The shipped one has the Latin, Greek, Cyrillic and Hebrew scripts; without
+        another, names in other scripts are boxes here (in SVG the reader's own fonts draw them).
 
     Raises
     ------
@@ -37,7 +42,7 @@ def png(svg: str, *, zoom: float = ZOOM) -> bytes:
                 svg_string=svg,
                 zoom=zoom,
                 skip_system_fonts=True,
-                font_files=[str(font)],
+                font_files=[str(font), *fonts],
                 font_family=FAMILY,
                 sans_serif_family=FAMILY,
             )

@@ -98,7 +98,7 @@ class CoverStep:
         raise NotImplementedError
 
     def preimage(self, amounts: Array) -> Array:
-        """Return the largest amounts that this step maps to at most `amounts`, shape (n,); infinite where all or none."""
+        """Return the largest amounts that this step maps to at most `amounts`, shape (n,); infinite for all or none."""
         raise NotImplementedError
 
     def misfit(self, reach: tuple[float, float]) -> str | None:  # noqa: ARG002  # members that bound use it

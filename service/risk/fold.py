@@ -4,7 +4,9 @@ Whatever depends on the order of summation is kept per block and folded in block
 result is the same bytes for any number of threads.
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -41,7 +43,7 @@ class Fold:
 
 
 @dataclass(frozen=True, slots=True)
-class _Survivors:
+class Survivors:
     """Losses above their column's threshold, from one worker's blocks."""
 
     columns: Indices
@@ -73,14 +75,15 @@ def fold(
     scenarios, count = losses.shape
     rows = max(LEAST_ROWS, BLOCK_BYTES // (8 * count))
     edges = range(0, scenarios, rows)
-    thresholds = None if tail is None else _thresholds(losses, tail)
+    step = max(1, scenarios // SAMPLE)
+    thresholds = None if tail is None else sample_thresholds(losses[::step], tail, scenarios)
     totals = np.empty(scenarios)
     sums = np.empty((len(edges), count))
     crossed = np.empty((len(edges), count)) if products else None
     workers = min(effort.threads, len(edges))
 
-    def work(worker: int) -> _Survivors | None:
-        sieve = None if thresholds is None else _Sieve(thresholds, rows)
+    def work(worker: int) -> Survivors | None:
+        sieve = None if thresholds is None else Sieve(thresholds, rows)
         for number in range(worker, len(edges), workers):
             effort.checkpoint(number / len(edges))
             part = slice(edges[number], edges[number] + rows)
@@ -96,25 +99,60 @@ def fold(
                 sieve.add(block)
         return None if sieve is None else sieve.survivors()
 
-    survivors = effort.map(work, range(workers))
+    parts = effort.map(work, range(workers))
     tails = None
     if tail is not None and thresholds is not None:
-        tails = _tails(losses, thresholds, [part for part in survivors if part is not None], tail, effort)
+        survivors = [part for part in parts if part is not None]
+        tails = completed_tails(thresholds, survivors, tail, effort, HeldColumns(losses))
     return Fold(totals, sums.sum(axis=0), None if crossed is None else crossed.sum(axis=0), tails)
 
 
-def _thresholds(losses: Array, tail: int) -> Array:
-    """Return per column a value that a little more than `tail` losses ought to exceed."""
-    scenarios = losses.shape[0]
-    sample = losses[:: max(1, scenarios // SAMPLE)].T.copy()
-    size = sample.shape[1]
+def sample_thresholds(sample: Array, tail: int, scenarios: int) -> Array:
+    """Return per column a value that a little more than `tail` of all losses ought to exceed.
+
+    Parameters
+    ----------
+    sample : ndarray of shape (m, d)
+        Some of the scenarios.
+    tail : int
+    scenarios : int
+        Number of all scenarios.
+    """
+    columns = sample.T.copy()
+    size = columns.shape[1]
     share = min(1.0, tail / scenarios)
     rank = int(size * share + SAMPLE_SPREADS * np.sqrt(size * share * (1.0 - share)) + 2.0)
     place = max(0, size - rank)
-    return np.asarray(np.partition(sample, place, axis=1)[:, place])
+    return np.asarray(np.partition(columns, place, axis=1)[:, place])
 
 
-class _Sieve:
+class Columns(Protocol):
+    """What the tail of a column may still need once the pass is over."""
+
+    def equal(self, columns: Indices, values: Array) -> Indices:
+        """Return how often each of some columns takes its value, shape (k,)."""
+
+    def column(self, column: int) -> Array:
+        """Return all losses of one column, shape (n,)."""
+
+
+@dataclass(frozen=True, slots=True)
+class HeldColumns:
+    """The columns of a table in memory."""
+
+    losses: Array
+
+    def equal(self, columns: Indices, values: Array) -> Indices:
+        """Return how often each of some columns takes its value, shape (k,)."""
+        counts = [np.count_nonzero(self.losses[:, j] == value) for j, value in zip(columns, values, strict=True)]
+        return np.array(counts, dtype=np.intp)
+
+    def column(self, column: int) -> Array:
+        """Return all losses of one column, shape (n,)."""
+        return self.losses[:, column]
+
+
+class Sieve:
     """Collects the losses above their column's threshold; its scratch is made once and used for every block."""
 
     def __init__(self, thresholds: Array, rows: int) -> None:
@@ -133,41 +171,41 @@ class _Sieve:
         self._columns.append(self._column.take(found))
         self._losses.append(block.reshape(-1).take(found))
 
-    def survivors(self) -> _Survivors:
+    def survivors(self) -> Survivors:
         """Return them column by column."""
         columns = np.concatenate(self._columns)
         order = np.argsort(columns, kind="stable")
         starts = np.concatenate([[0], np.cumsum(np.bincount(columns, minlength=self._count))])
-        return _Survivors(starts, np.concatenate(self._losses).take(order))
+        return Survivors(starts, np.concatenate(self._losses).take(order))
 
 
-def _tails(losses: Array, thresholds: Array, parts: list[_Survivors], tail: int, effort: Effort) -> Array:
-    """Return the `tail` largest losses of each column, descending, shape (d, tail)."""
-    count = losses.shape[1]
+def completed_tails(
+    thresholds: Array, parts: Sequence[Survivors], tail: int, effort: Effort, columns: Columns
+) -> Array:
+    """Return the `tail` largest losses of each column, descending, shape (d, tail).
+
+    Where fewer losses than needed exceed the threshold, all others are at or below it; so if the threshold
+    itself is common enough it is what is missing (columns that are mostly zero), else the column is partitioned.
+    """
+    count = thresholds.size
+    sizes = np.sum([np.diff(part.columns) for part in parts], axis=0)
+    short = np.flatnonzero(sizes < tail)
+    common = dict(zip(short.tolist(), columns.equal(short, thresholds[short]) if short.size else (), strict=True))
+    partitioned = {
+        j: np.partition(columns.column(j), -tail)[-tail:] for j, times in common.items() if times < tail - sizes[j]
+    }
     tails = np.empty((count, tail))
 
-    def work(columns: Indices) -> None:
+    def work(piece: Indices) -> None:
         effort.checkpoint()
-        for j in columns:
-            found = np.concatenate([part.losses[part.columns[j] : part.columns[j + 1]] for part in parts])
-            missing = tail - found.size
-            if missing > 0:
-                found = _completed(losses[:, j], found, float(thresholds[j]), missing)
+        for j in piece.tolist():
+            found = partitioned.get(j)
+            if found is None:
+                found = np.concatenate([part.losses[part.columns[j] : part.columns[j + 1]] for part in parts])
+            if found.size < tail:
+                found = np.concatenate([found, np.full(tail - found.size, thresholds[j])])
             found.sort()
             tails[j] = found[: -tail - 1 : -1]
 
-    pieces = np.array_split(np.arange(count), min(count, 4 * effort.threads))
-    effort.map(work, pieces)
+    effort.map(work, np.array_split(np.arange(count), min(count, 4 * effort.threads)))
     return tails
-
-
-def _completed(column: Array, found: Array, threshold: float, missing: int) -> Array:
-    """Return the tail of a column of which fewer losses than needed exceed the threshold.
-
-    All others are at or below it, so if the threshold itself is common enough it is what is missing
-    (columns that are mostly zero); else the column is partitioned.
-    """
-    if np.count_nonzero(column == threshold) >= missing:
-        return np.concatenate([found, np.full(missing, threshold)])
-    place = column.size - found.size - missing
-    return np.partition(column, place)[place:]

@@ -5,6 +5,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
+from service.errors import NotDefined
 from service.risk.effort import Effort
 from service.risk.fold import fold
 from service.risk.loss_table import Group, LossTable, check_magnitude, group_losses
@@ -15,6 +16,24 @@ from service.risk.uncertainty import Sampling
 
 CHUNK_BYTES = 1 << 25  # of sorted columns held at a time
 KEPT_BYTES = 1 << 28  # of the tail's rows held between measures
+
+
+def depth_of(measure: RiskMeasure, scenarios: int, *, contributions: bool) -> float:
+    """Return how deep a measure looks into equally probable scenarios; 1 where everything has to be ordered."""
+    depth = measure.depth(scenarios, contributions=contributions)
+    return depth if depth < MOST_PARTIAL else 1.0
+
+
+def deepest(measures: Sequence[RiskMeasure], scenarios: int, *, contributions: bool) -> float:
+    """Return how deep the deepest of the measures looks that need not order everything; 1 if there is none."""
+    depths = [depth_of(measure, scenarios, contributions=contributions) for measure in measures]
+    return max((depth for depth in depths if depth < 1.0), default=1.0)
+
+
+def column_tail(measures: Sequence[RiskMeasure], scenarios: int) -> int | None:
+    """Return how many of the largest losses of each column the measures need; None if all or none."""
+    depth = deepest(measures, scenarios, contributions=False)
+    return min(scenarios, int(np.ceil(depth * scenarios)) + 1) if depth < 1.0 else None
 
 
 @dataclass(slots=True)
@@ -28,7 +47,8 @@ class Frame:
     groups : sequence of Group
         Their G summed losses stand beside the d columns.
     effort : Effort
-    columns : tuple of two ndarrays, of shapes (n, d) and (n, G)
+    columns : tuple of two ndarrays, of shapes (n, d) and (n, G), or None
+        None for a simulation that is not held: then only measures of a tail, and rules that need no more.
     totals : ndarray of shape (n,)
     expected : ndarray of shape (d + G,)
         Mean loss of each column.
@@ -37,7 +57,7 @@ class Frame:
     table: LossTable
     groups: Sequence[Group]
     effort: Effort
-    columns: tuple[Array, Array]
+    columns: tuple[Array, Array] | None
     totals: Array
     expected: Array
     _tails: Array | None
@@ -62,11 +82,7 @@ class Frame:
         NotDefined
             Where losses add up to more than can be squared.
         """
-        partial = [depth for measure in measures if (depth := cls._depth(table, measure, contributions=True)) < 1.0]
-        alone = [depth for measure in measures if (depth := cls._depth(table, measure, contributions=False)) < 1.0]
-        tail = None
-        if stand_alone and alone:
-            tail = min(table.scenarios, int(np.ceil(max(alone) * table.scenarios)) + 1)
+        tail = column_tail(measures, table.scenarios) if stand_alone and table.plain else None
         sums = group_losses(table.losses, groups)
         folded = fold(table.losses, effort, probabilities=table.probabilities, tail=tail)
         check_magnitude(folded.totals)
@@ -78,16 +94,17 @@ class Frame:
                 tails = np.concatenate([tails, beside.tails])
         if table.probabilities is None:
             expected = expected / table.scenarios
-        ranking = ranked(folded.totals, table, depth=max(partial) if partial else 1.0)
+        depth = deepest(measures, table.scenarios, contributions=True) if table.plain else 1.0
+        ranking = ranked(folded.totals, table, depth=depth)
         return cls(table, groups, effort, (table.losses, sums), folded.totals, expected, tails, ranking)
 
-    @staticmethod
-    def _depth(table: LossTable, measure: RiskMeasure, *, contributions: bool) -> float:
+    def _depth(self, measure: RiskMeasure, *, contributions: bool) -> float:
         """Return how deep `measure` looks; 1 where everything has to be ordered."""
-        if not table.plain:
-            return 1.0
-        depth = measure.depth(table.scenarios, contributions=contributions)
-        return depth if depth < MOST_PARTIAL else 1.0
+        return depth_of(measure, self.scenarios, contributions=contributions) if self.table.plain else 1.0
+
+    def hold(self, rows: list[Array]) -> None:
+        """Keep the rows of the deepest ranking, in chunks of shape (m, c)."""
+        self._rows = rows
 
     @property
     def scenarios(self) -> int:
@@ -104,7 +121,7 @@ class Frame:
 
     def depth(self, measure: RiskMeasure) -> float:
         """Return the share of worst scenarios that `measure`, its error and its contributions look at."""
-        return self._depth(self.table, measure, contributions=True)
+        return self._depth(measure, contributions=True)
 
     def ranking(self, measure: RiskMeasure) -> Ranking:
         """Return the scenarios in the order of their total, as deep as `measure` looks."""
@@ -123,9 +140,9 @@ class Frame:
         """Yield the losses of all columns in the order of `ranking`, in chunks of shape (m, c)."""
         held = self._ranking.order.size
         keep = 8 * held * self.expected.size <= KEPT_BYTES
-        if keep and ranking.order.size <= held and not ranking.ordered.complete:
+        if (self._rows or keep) and ranking.order.size <= held and not ranking.ordered.complete:
             if not self._rows:
-                self._rows = list(self._chunks(self._ranking.order))
+                self.hold(list(self._chunks(self._ranking.order)))
             for rows in self._rows:
                 self.effort.checkpoint()
                 yield rows[: ranking.order.size]
@@ -135,14 +152,14 @@ class Frame:
     def chunks(self) -> Iterator[Array]:
         """Yield the losses of all columns in scenario order, in chunks of shape (n, c)."""
         width = max(1, CHUNK_BYTES // (8 * self.scenarios))
-        for table in self.columns:
+        for table in self._held():
             for start in range(0, table.shape[1], width):
                 self.effort.checkpoint()
                 yield table[:, start : start + width]
 
     def _chunks(self, order: Indices) -> Iterator[Array]:
         width = max(1, CHUNK_BYTES // (8 * order.size))
-        for table in self.columns:
+        for table in self._held():
             if table.shape[1] and width >= table.shape[1]:
                 self.effort.checkpoint()
                 yield table.take(order, axis=0)
@@ -153,7 +170,7 @@ class Frame:
 
     def alone(self, measure: RiskMeasure) -> Iterator[Ordered]:
         """Yield the columns as ordered distributions, as deep as `measure` looks, a few at a time."""
-        if self._tails is not None and self._depth(self.table, measure, contributions=False) < 1.0:
+        if self._tails is not None and self._depth(measure, contributions=False) < 1.0:
             depth = measure.depth(self.scenarios, contributions=False)
             kept = min(self._tails.shape[1], int(np.ceil(depth * self.scenarios)) + 1)
             width = max(1, CHUNK_BYTES // (32 * kept))
@@ -162,10 +179,22 @@ class Frame:
                 yield self._ordered(self._tails[start : start + width, :kept], None)
             return
         width = max(1, CHUNK_BYTES // (8 * self.scenarios))
-        for table in self.columns:
+        for table in self._held():
             for start in range(0, table.shape[1], width):
                 self.effort.checkpoint()
                 yield self._sorted(table[:, start : start + width].T)
+
+    def _held(self) -> tuple[Array, Array]:
+        """Return the columns.
+
+        Raises
+        ------
+        NotDefined
+            For a simulation that is not held.
+        """
+        if self.columns is None:
+            raise NotDefined("this needs all simulated losses at hand, and they are too many to be held")
+        return self.columns
 
     def _ordered(self, values: Array, orders: Indices | None) -> Ordered:
         """Return ordered distributions (c, m) whose positions hold the scenarios `orders` (c, m)."""
@@ -189,5 +218,5 @@ class Frame:
 
     def one(self, values: Array, measure: RiskMeasure) -> tuple[Ordered, Indices]:
         """Return any loss (n,) as a single ordered distribution and the scenario number of each position."""
-        order = worst(values, self._depth(self.table, measure, contributions=False))
+        order = worst(values, self._depth(measure, contributions=False))
         return self._ordered(values[order][None, :], order[None, :]), order

@@ -127,9 +127,7 @@ def decayed(scenarios: int, decay: float | None) -> Array | None:
     return np.asarray(weights / weights.sum())
 
 
-def _scaled(
-    changes: Array, scaling: HorizonScaling | None
-) -> tuple[Array, Indices, int, tuple[tuple[str, str], ...]]:
+def _scaled(changes: Array, scaling: HorizonScaling | None) -> tuple[Array, Indices, int, tuple[tuple[str, str], ...]]:
     """Return values, first and last period of each scenario, block length and notes."""
     n = changes.shape[0]
     each = np.column_stack([np.arange(n), np.arange(n)])

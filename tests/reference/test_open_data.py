@@ -1,11 +1,12 @@
 """Open data through the running service, in every form a table can be sent in.
 
-Source of the figures: the dossier's own evaluation of the data (mark: own; see data/README.md for where the data
+Source of the figures: our own evaluation of the data (mark: own; see data/README.md for where the data
 are from); quantiles also by numpy's inverted_cdf.
 """
 
 import base64
 import csv
+import hashlib
 import json
 
 import numpy as np
@@ -23,6 +24,19 @@ def _columns(name):
     with (DATA / f"{name}.csv").open(newline="") as file:
         header, *lines = csv.reader(file)
     return header, np.array(lines, dtype=np.float64)
+
+
+@pytest.mark.parametrize(
+    ("name", "digest"),
+    [
+        ("european_indices_1991_1998", "3dda07f77a7ef02e"),
+        ("danish_fire_1980_1990", "916322c6609e01b6"),
+        ("liability_loss_alae", "d003ab71b092278e"),
+    ],
+)
+def test_the_data_are_those_of_the_readme(name, digest):
+    _, values = _columns(name)
+    assert hashlib.sha256(values.astype("<f8").tobytes()).hexdigest()[:16] == digest
 
 
 def _european_indices():

@@ -52,7 +52,11 @@ def draw(
     allocations = getattr(answer, "allocations", None)
     if allocations is None:
         raise InvalidValue.of(
-            Fault(detail="contributions are drawn of allocations, not of measures", code=InvalidValue.code, parameter="chart")
+            Fault(
+                detail="contributions are drawn of allocations, not of measures",
+                code=InvalidValue.code,
+                parameter="chart",
+            )
         )
     if len(allocations) != 1:
         detail = f"contributions are drawn of one measure and one rule, not of {len(allocations)} results"

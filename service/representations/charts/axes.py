@@ -9,6 +9,7 @@ from service.representations.charts.canvas import SMALL, Canvas
 from service.representations.wording import Amounts, width
 
 GAP = 14.0  # least space between two labels
+MOST_DECIMALS = 9
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,15 +88,14 @@ def along(
             last = x + room
 
 
-def tick_amounts(ticks: Sequence[float], currency: str | None) -> Amounts:
-    """Return how to write ticks: as many decimals as tell them apart."""
-    amounts = Amounts.of(ticks, currency, significant=3)
-    decimals = amounts.decimals
-    while decimals > 0 and all(_same(tick, amounts.power, decimals - 1) for tick in ticks):
-        decimals -= 1
-    while decimals < 9 and len({Amounts(amounts.power, decimals, None).text(tick) for tick in ticks}) < len(ticks):  # noqa: PLR2004  # more digits tell nothing
+def tick_writer(scale: Scale, ticks: Sequence[float], amounts: Amounts) -> Callable[[float], str]:
+    """Return what writes ticks in the unit of `amounts`: with as many decimals as tell them apart."""
+    if scale.kind == "log":
+        return lambda tick: f"{tick / 10.0**amounts.power:,.6g}"
+    decimals = 0
+    while decimals < MOST_DECIMALS and not all(_same(tick, amounts.power, decimals) for tick in ticks):
         decimals += 1
-    return Amounts(amounts.power, decimals, currency)
+    return Amounts(amounts.power, decimals, None).text
 
 
 def _same(tick: float, power: int, decimals: int) -> bool:

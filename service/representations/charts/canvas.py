@@ -16,6 +16,7 @@ SIZE = 13.0  # of the usual text, in pixels
 SMALL = 12.0
 HEADING = 15.0
 WIDTH, NARROW = 760, 360
+EDGE = 16.0  # pixels left free around a picture
 
 LIGHT = {
     "ink": "#1b222b",

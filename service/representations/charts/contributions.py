@@ -3,7 +3,7 @@
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from service.representations.charts.axes import Scale, along, tick_amounts
+from service.representations.charts.axes import Scale, along, tick_writer
 from service.representations.charts.canvas import HEADING, SMALL, Canvas, Look, wrapped
 from service.representations.shapes import Allocation, GroupPart, Labels, Part, SubPortfolioPart
 from service.representations.wording import (
@@ -71,7 +71,6 @@ def contributions_chart(
     right = look.width - 16 - (FIGURES_NARROW if look.narrow else FIGURES + SHARES) - 10
     x = _across(rows, left, right)
     ticks = x.ticks(2 if look.narrow else 5)
-    written = tick_amounts(ticks, labels.currency)
     pitch = TALL if len(rows) <= FEW_ROWS else LOW
     top = foot + 22
     ground = top + pitch * len(rows) + 4
@@ -79,11 +78,11 @@ def contributions_chart(
                 size=SMALL)  # fmt: skip
     if not look.narrow:
         canvas.text(look.width - 16, top - 8, "share", anchor="end", tint="soft", size=SMALL)
-    along(canvas, x, ground, written.text, ticks=ticks, up=ground - top + 2)
+    along(canvas, x, ground, tick_writer(x, ticks, amounts), ticks=ticks, up=ground - top + 2)
     for number, one in enumerate(rows):
         _draw(canvas, one, top + number * pitch, pitch, x, amounts)
     canvas.line(x(0.0), top - 2, x(0.0), ground, tint="ink")
-    canvas.text((left + right) / 2, ground + 35, shortened(f"amount{written.inside}", right - left + 60, look.size),
+    canvas.text((left + right) / 2, ground + 35, shortened(f"amount{amounts.inside}", right - left + 60, look.size),
                 anchor="middle", tint="soft")  # fmt: skip
     told = [f"{one.name} {amounts.text(one.value)}{_told(one, amounts)}" for one in rows]
     return canvas.finish(
@@ -150,10 +149,10 @@ def _legend(canvas: Canvas, parts: Sequence[Part], y: float) -> float:
         x += 148
     if ends is None:
         return y
-    words = f"interval for the error of sampling ({odds(ends.coverage)} repetitions)"
+    words = f"interval for the error of sampling, right in {odds(ends.coverage)} repetitions"
     if canvas.look.narrow:
         x, y = 16.0, y + 17
-        words = f"interval, error of sampling ({odds(ends.coverage)})"
+        words = f"interval for the error of sampling, right in {odds(ends.coverage)} repetitions"
     canvas.span(x, x + 14, y - 4)
     for number, line in enumerate(wrapped(words, canvas.look.width - x - step - 16)):
         y += 16 * bool(number)

@@ -3,7 +3,7 @@
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from service.representations.charts.axes import Scale, along, tick_amounts
+from service.representations.charts.axes import Scale, along, tick_writer
 from service.representations.charts.canvas import HEADING, SMALL, Canvas, Look, wrapped
 from service.representations.charts.marks import MOST, Flags, Mark, interval_words, left_out
 from service.representations.shapes import Distribution, Histogram, Labels
@@ -14,7 +14,7 @@ HIGH, HIGH_NARROW = 190.0, 150.0  # of a plot
 HEADROOM = 1.12  # of the highest bar
 FEWEST_IN_TAIL = 3  # bins or losses that are worth a picture of their own
 STICK = 7.0  # width of a single loss
-LABELLED_ATOMS = 5
+NAMED_ATOMS = 5
 HAIR = 1.0  # least height of a bar that is not empty
 
 
@@ -40,16 +40,15 @@ def distribution_chart(
     """
     canvas = Canvas(look or Look())
     drawn = marks[:MOST]
-    whole = tick_amounts(
-        [*distribution.body_range, *distribution.tail_range, *(one.at for one in drawn)], labels.currency
+    amounts = Amounts.of(
+        [distribution.mean, *(one.value for one in drawn), distribution.tail_from], labels.currency, significant=4
     )
-    amounts = Amounts.of([distribution.mean, *(one.value for one in drawn), distribution.tail_from], labels.currency)
     canvas.text(16, 25, "Loss distribution", size=HEADING)
     mean = Mark(name="mean", value=distribution.mean, at=distribution.mean)
     enlarged = _enlarged(distribution)
     body = [mean, *(one for one in drawn if not enlarged or one.at < distribution.tail_from)]
     worst = probability(distribution.tail_probability)
-    plot = _Plot(canvas, distribution, whole, amounts)
+    plot = _Plot(canvas, distribution, amounts)
     foot = plot.draw(
         34,
         "All losses" if not distribution.above + distribution.below else "Nearly all losses",
@@ -100,7 +99,6 @@ class _Plot:
 
     canvas: Canvas
     distribution: Distribution
-    ticks: Amounts
     amounts: Amounts
 
     def draw(
@@ -118,25 +116,28 @@ class _Plot:
         low, high = _widened(span)
         margin = 0.02 * (high - low) if self.distribution.atoms else 0.0
         x = Scale(low - margin, high + margin, LEFT, look.width - RIGHT)
-        flags = Flags(marks, x, self.amounts, look.size)
         binned = any(histogram.masses)
         atoms = [(loss, mass) for loss, mass in self.distribution.atoms if low <= loss <= high]
+        if binned and len(atoms) <= NAMED_ATOMS:
+            marks = [*marks, *(_named(loss, mass) for loss, mass in atoms)]
+        flags = Flags(marks, x, self.amounts, look)
         tallest = max(histogram.masses) if binned else max((mass for _, mass in atoms), default=1.0)
-        below = (root and "probability by square root") or "probability"
-        canvas.text(16, top + 16, f"{caption} ({below} {'of each bar' if binned else 'of each loss'})", tint="soft")
+        height = f"probability of each {'bar' if binned else 'loss'}"
+        canvas.text(16, top + 16, f"{caption}: {height}{', square root' if root else ''}", tint="soft")
         head = top + 26 + flags.height
         ground = head + (HIGH_NARROW if look.narrow else HIGH)
         y = Scale(0.0, tallest * HEADROOM, ground, head + 6, "root" if root else "linear")
-        for tick in y.ticks(4):
+        for tick in y.ticks(5):
             canvas.line(LEFT, y(tick), look.width - RIGHT, y(tick), tint="line")
             canvas.text(LEFT - 6, y(tick) + 4, probability(tick), anchor="end", tint="soft", size=SMALL)
         self._bars(histogram, x, y)
-        self._sticks(atoms, x, y, tallest * HEADROOM, named=binned)
+        self._sticks(atoms, x, y)
         ticks = x.ticks(4 if look.narrow else 8)
-        written = tick_amounts(ticks, self.ticks.currency)
-        along(canvas, x, ground, written.text, ticks=ticks)
-        flags.draw(canvas, top + 24, lambda _: ground)
-        canvas.text((LEFT + look.width - RIGHT) / 2, ground + 35, f"loss{written.inside}", anchor="middle", tint="soft")
+        along(canvas, x, ground, tick_writer(x, ticks, self.amounts), ticks=ticks)
+        flags.draw(canvas, top + 24, lambda mark: self._foot(mark, atoms, x, y))
+        canvas.text(
+            (LEFT + look.width - RIGHT) / 2, ground + 35, f"loss{self.amounts.inside}", anchor="middle", tint="soft"
+        )
         return ground + 42
 
     def _bars(self, histogram: Histogram, x: Scale, y: Scale) -> None:
@@ -156,19 +157,24 @@ class _Plot:
             if shapes:
                 self.canvas.path("".join(shapes), fill=tint)
 
-    def _sticks(self, atoms: Sequence[tuple[float, float]], x: Scale, y: Scale, top: float, *, named: bool) -> None:
-        """Draw single losses; one that is taller than the plot is broken, and named where bars stand beside it."""
+    def _sticks(self, atoms: Sequence[tuple[float, float]], x: Scale, y: Scale) -> None:
+        """Draw single losses; one that is taller than the plot is broken."""
         for loss, mass in atoms:
             tint = "tail" if loss >= self.distribution.tail_from else "body"
             high = min(y(mass), y.start - HAIR)
             self.canvas.box(x(loss) - STICK / 2, high, STICK, y.start - high, fill=tint)
-            if mass > top:
+            if mass > y.high:
                 self.canvas.line(x(loss) - 7, high + 15, x(loss) + 7, high + 10, tint="page", thick=3)
-            if named and len(atoms) <= LABELLED_ATOMS:
-                words = f"{probability(mass)} at {self.amounts.text(loss)}"
-                right = x(loss) > (x.start + x.end) / 2
-                beside = -STICK if right else STICK
-                self.canvas.text(x(loss) + beside, high + 14, words, anchor="end" if right else "start", size=SMALL)
+
+    @staticmethod
+    def _foot(mark: Mark, atoms: Sequence[tuple[float, float]], x: Scale, y: Scale) -> float:
+        """Return where the line of a mark ends: on top of a single loss, else at the axis."""
+        return min((y(mass) for loss, mass in atoms if abs(x(loss) - x(mark.at)) < STICK), default=y.start)
+
+
+def _named(loss: float, mass: float) -> Mark:
+    """Return the label of a single loss that stands beside bars."""
+    return Mark(name=f"single loss, {probability(mass)}", value=loss, at=loss)
 
 
 def _widened(span: tuple[float, float]) -> tuple[float, float]:

@@ -3,7 +3,7 @@
 from bisect import bisect_right
 from collections.abc import Sequence
 
-from service.representations.charts.axes import Scale, along, tick_amounts
+from service.representations.charts.axes import Scale, along, tick_writer
 from service.representations.charts.canvas import HEADING, SMALL, Canvas, Look, wrapped
 from service.representations.charts.marks import MOST, Flags, Mark, interval_words, left_out
 from service.representations.shapes import Distribution, Labels
@@ -37,12 +37,12 @@ def exceedance_chart(
     canvas = Canvas(look or Look())
     look = canvas.look
     drawn = marks[:MOST]
-    amounts = Amounts.of([distribution.highest, *(one.value for one in drawn)], labels.currency)
+    amounts = Amounts.of([one.value for one in drawn] or [distribution.highest], labels.currency, significant=4)
     canvas.text(16, 25, "Exceedance curve", size=HEADING)
     right = look.width - (RIGHT if not look.narrow else RIGHT - 16)
     left = LEFT if not look.narrow else LEFT - 8
     x = _across(distribution, drawn, left, right)
-    flags = Flags(drawn, x, amounts, look.size)
+    flags = Flags(drawn, x, amounts, look)
     least = min((one for one in distribution.exceeding if one > 0.0), default=0.1)
     head = 62 + flags.height
     ground = head + (HIGH_NARROW if look.narrow else HIGH)
@@ -54,14 +54,13 @@ def exceedance_chart(
         canvas.text(left - 6, y(tick) + 4, probability(tick), anchor="end", tint="soft", size=SMALL)
         canvas.text(right + 6, y(tick) + 4, f"{1.0 / tick:,.6g}", tint="soft", size=SMALL)
     ticks = x.ticks(4 if look.narrow else 8)
-    written = tick_amounts(ticks, labels.currency)
-    along(canvas, x, ground, written.text, ticks=ticks, up=ground - head)
+    along(canvas, x, ground, tick_writer(x, ticks, amounts), ticks=ticks, up=ground - head)
     _curve(canvas, distribution, x, y)
     feet = {one: min(y(_exceeding(distribution, one.at)), ground) for one in drawn}
     flags.draw(canvas, 52, lambda one: feet[one])
     for one, foot in feet.items():
         canvas.dot(x(one.at), foot, 4, fill="page", stroke="ink")
-    canvas.text((left + right) / 2, ground + 35, f"loss{written.inside}", anchor="middle", tint="soft")
+    canvas.text((left + right) / 2, ground + 35, f"loss{amounts.inside}", anchor="middle", tint="soft")
     worst = f"The curve ends at the worst of {distribution.scenarios:,} scenarios, {amounts.text(distribution.highest)}"
     notes = [sentence(worst + amounts.after), interval_words(drawn), left_out(marks)]
     lines = [line for words in notes if words for line in wrapped(words, look.width - 32)]

@@ -2,9 +2,10 @@
 
 from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
+from typing import NamedTuple
 
 from service.representations.charts.axes import Scale
-from service.representations.charts.canvas import Canvas
+from service.representations.charts.canvas import EDGE, Canvas, Look
 from service.representations.shapes import Figure, Measure, Measured
 from service.representations.wording import Amounts, measure_words, odds, shortened, width
 
@@ -87,75 +88,87 @@ def interval_words(marks: Iterable[Mark]) -> str | None:
     coverage = next((one.coverage for one in marks if one.coverage is not None), None)
     if coverage is None:
         return None
-    return f"Bracketed lines: intervals for the error of sampling ({odds(coverage)} repetitions hold the true figure)."
+    return f"Brackets: intervals for the error of sampling, right in {odds(coverage)} repetitions."
+
+
+class _Label(NamedTuple):
+    """A label in its place: the line of its mark runs down from its row at `x`."""
+
+    mark: Mark
+    row: int
+    side: str
+    words: str
+    x: float
+    taken: tuple[float, float]
+    """What it covers of its row."""
 
 
 @dataclass(frozen=True, slots=True)
 class Flags:
-    """Labels of marks, placed in rows so that none covers another."""
+    """Labels of marks, placed in rows so that none covers another and few are crossed by a line."""
 
     marks: Sequence[Mark]
     scale: Scale
     amounts: Amounts
-    size: float
+    look: Look
 
     @property
     def row(self) -> float:
         """Height of a row."""
         return ROW_WITH_SPAN if any(one.lower is not None for one in self.marks) else ROW
 
-    def placed(self) -> list[tuple[Mark, int, str, str]]:
-        """Return each mark with its row, its side and its words.
+    def placed(self) -> list[_Label]:
+        """Return the labels in the better of two arrangements: laid from the left on, or from the right on."""
+        ascending = sorted(self.marks, key=lambda one: one.at)
+        return min((self._laid(ascending), self._laid(ascending[::-1])), key=_faults)
 
-        Labels to the right of their line go down from left to right and those to the left of it go down
-        from right to left, so that no line crosses the label of another.
-        """
-        middle = (self.scale.start + self.scale.end) / 2
-        right = sorted((one for one in self.marks if self.scale(one.at) < middle), key=lambda one: one.at)
-        left = sorted((one for one in self.marks if self.scale(one.at) >= middle), key=lambda one: -one.at)
-        rows: list[list[tuple[float, float]]] = []
-        placed = []
-        for side, chosen in (("start", right), ("end", left)):
-            lowest = 0
-            for one in chosen:
-                x = self.scale(one.at)
-                room = (self.scale.end - x if side == "start" else x - self.scale.start) - BESIDE
-                words = shortened(one.words(self.amounts), room, self.size)
-                wide = width(words, self.size) + BESIDE + 8
-                taken = (x - 4, x + wide) if side == "start" else (x - wide, x + 4)
-                taken = self._with_span(one, taken)
-                number = next(n for n in range(lowest, len(rows) + 1) if n == len(rows) or _free(rows[n], taken))
-                if number == len(rows):
-                    rows.append([])
-                rows[number].append(taken)
-                lowest = number
-                placed.append((one, number, side, words))
-        return placed
+    def _laid(self, marks: Sequence[Mark]) -> list[_Label]:
+        """Return the labels, each put where it disturbs those before it least."""
+        laid: list[_Label] = []
+        for one in marks:
+            rows = range(2 + max((label.row for label in laid), default=-1))
+            choices = [self._label(one, row, side) for row in rows for side in ("start", "end")]
+            free = [choice for choice in choices if not any(_overlap(choice, label) for label in laid)]
+            laid.append(min(free, key=lambda choice: _faults([*laid, choice])))
+        return laid
 
-    def _with_span(self, one: Mark, taken: tuple[float, float]) -> tuple[float, float]:
-        if one.lower is None or one.upper is None:
-            return taken
-        return min(taken[0], self.scale(one.lower) - 4), max(taken[1], self.scale(one.upper) + 4)
+    def _label(self, one: Mark, row: int, side: str) -> _Label:
+        x, words = self.scale(one.at), one.words(self.amounts)
+        room = (self.look.width - EDGE - x if side == "start" else x - EDGE) - BESIDE
+        words = shortened(words, room, self.look.size)
+        wide = width(words, self.look.size) + BESIDE + 4
+        left, right = (x - 4, x + wide) if side == "start" else (x - wide, x + 4)
+        if one.lower is not None and one.upper is not None:
+            left, right = min(left, self.scale(one.lower) - 4), max(right, self.scale(one.upper) + 4)
+        return _Label(one, row, side, words, x, (left, right))
 
     @property
     def height(self) -> float:
         """Height of all rows."""
-        return self.row * (1 + max((number for _, number, _, _ in self.placed()), default=-1))
+        return self.row * (1 + max((label.row for label in self.placed()), default=-1))
 
     def draw(self, canvas: Canvas, top: float, foot: Callable[[Mark], float]) -> None:
         """Draw lines down to `foot`, then intervals and labels over them, the first row at `top`."""
-        placed = sorted(self.placed(), key=lambda one: one[0].at)
-        for number, (one, row, _, _) in enumerate(placed):
-            x = self.scale(one.at)
+        labels = sorted(self.placed(), key=lambda label: label.x)
+        for number, label in enumerate(labels):
             dashes = DASHES[number % len(DASHES)]
-            canvas.line(x, top + row * self.row + 2, x, foot(one), tint="ink", thick=1.5, dashes=dashes)
-        for one, row, side, words in placed:
-            x, y = self.scale(one.at), top + row * self.row
+            high, low = top + label.row * self.row + 2, foot(label.mark)
+            canvas.line(label.x, high, label.x, low, tint="page", thick=4)
+            canvas.line(label.x, high, label.x, low, tint="ink", thick=1.5, dashes=dashes)
+        for label in labels:
+            one, y = label.mark, top + label.row * self.row
             if one.lower is not None and one.upper is not None:
                 canvas.span(self.scale(one.lower), self.scale(one.upper), y + 19)
-            beside = BESIDE if side == "start" else -BESIDE
-            canvas.text(x + beside, y + 12, words, anchor=side, full=one.words(self.amounts))
+            beside = BESIDE if label.side == "start" else -BESIDE
+            canvas.text(label.x + beside, y + 12, label.words, anchor=label.side, full=one.words(self.amounts))
 
 
-def _free(row: Sequence[tuple[float, float]], taken: tuple[float, float]) -> bool:
-    return all(taken[1] <= start or taken[0] >= end for start, end in row)
+def _overlap(one: _Label, other: _Label) -> bool:
+    return one.row == other.row and one.taken[0] < other.taken[1] and other.taken[0] < one.taken[1]
+
+
+def _faults(labels: Sequence[_Label]) -> tuple[int, int, int]:
+    """Return what speaks against an arrangement: texts cut short, texts crossed by lines, rows used."""
+    cut = sum(label.words.endswith("…") for label in labels)
+    crossed = sum(one.taken[0] < other.x < one.taken[1] and other.row < one.row for one in labels for other in labels)
+    return cut, crossed, sum(label.row for label in labels)

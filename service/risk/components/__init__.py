@@ -72,9 +72,7 @@ TYPICAL: tuple[Component, ...] = (
         losses=[250.0, 60.0, 0.0, -40.0],
         beyond="linear",
     ),
-    IdiosyncraticComponent(
-        kind="idiosyncratic", marginal=LognormalMarginal(family="lognormal", mu=3.0, sigma=0.8)
-    ),
+    IdiosyncraticComponent(kind="idiosyncratic", marginal=LognormalMarginal(family="lognormal", mu=3.0, sigma=0.8)),
     CompoundComponent(
         kind="compound",
         frequency=PoissonFrequency(family="poisson", mean=4.0),

@@ -18,7 +18,7 @@ one before it ends, until less than `FARTHEST` of the probability is beyond.
 
 import math
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import KW_ONLY, dataclass, replace
 from fractions import Fraction
 from functools import reduce
 
@@ -86,22 +86,23 @@ class AggregateLaw:
         Nodes of the distribution function, both not decreasing, amounts in currency.
     stepped : bool
         Whether the law stands on the nodes; else it is linear between them.
-    bounds : tuple of QuantileBound
-        At the probabilities `STATED`.
     cell : float
         Width of a cell of the first grid, in currency.
     cells : int
         Cells of a grid.
     grids : int
+    bounds : tuple of QuantileBound
+        At the probabilities `STATED`.
     """
 
     probabilities: Array
     amounts: Array
+    _: KW_ONLY
     stepped: bool
-    bounds: tuple[QuantileBound, ...]
     cell: float
     cells: int
-    grids: int
+    grids: int = 1
+    bounds: tuple[QuantileBound, ...] = ()
 
     def quantile(self, uniforms: Array) -> Array:
         """Return inf{x : F(x) >= u} for each u, shape (n,); beyond 1 - `FARTHEST` the last node."""
@@ -124,7 +125,8 @@ class AggregateLaw:
             return f"the sum stands on multiples of {self.cell:.6g} and is exact on {self.cells} of them{tail}"
         return (
             f"{self.grids} grid(s) of {self.cells} cells, the first of width {self.cell:.6g}; the quantile at "
-            f"{worst.probability:g} lies between {worst.lower:.8g} and {worst.upper:.8g}, {worst.value:.8g} is used{tail}"
+            f"{worst.probability:g} lies between {worst.lower:.8g} and {worst.upper:.8g}, and is taken as "
+            f"{worst.value:.8g}{tail}"
         )
 
 
@@ -142,7 +144,7 @@ def aggregate_law(frequency: FrequencyLaw, sizes: ClaimSizes) -> AggregateLaw:
     """
     positive = float(sizes.beyond(np.zeros(1))[0])
     if positive <= 0.0:
-        return AggregateLaw(np.ones(1), np.zeros(1), True, (), 0.0, 1, 1)
+        return AggregateLaw(np.ones(1), np.zeros(1), stepped=True, cell=0.0, cells=1)
     if sizes.atoms is not None:
         exact = _on_lattice(frequency, sizes, sizes.atoms)
         if exact is not None:
@@ -182,7 +184,7 @@ def _on_lattice(frequency: FrequencyLaw, sizes: ClaimSizes, atoms: Array) -> Agg
     for size in LATTICE_SIZES:
         if float(np.max(atoms)) / cell >= size:
             continue
-        points = cell * np.arange(size)
+        points = cell * np.arange(size, dtype=np.float64)
         beyond = sizes.beyond(points * (1.0 + SLACK))
         masses = -np.diff(beyond, prepend=1.0)
         cumulated = _cumulated(sum_masses(frequency, masses))
@@ -190,10 +192,10 @@ def _on_lattice(frequency: FrequencyLaw, sizes: ClaimSizes, atoms: Array) -> Agg
             continue
         kept = min(int(np.searchsorted(cumulated, 1.0 - FARTHEST)) + 1, size)
         cumulated, points = cumulated[:kept], points[:kept]
-        law = AggregateLaw(cumulated, points, True, (), cell, size, 1)
+        law = AggregateLaw(cumulated, points, stepped=True, cell=cell, cells=size)
         values = law.quantile(np.array(STATED))
         bounds = tuple(QuantileBound(p, float(x), float(x), float(x)) for p, x in zip(STATED, values, strict=True))
-        return AggregateLaw(cumulated, points, True, bounds, cell, size, 1)
+        return replace(law, bounds=bounds)
     return None
 
 
@@ -226,7 +228,7 @@ class _Grid:
 
     @classmethod
     def of(cls, frequency: FrequencyLaw, sizes: ClaimSizes, cell: float, size: int, *, bounded: bool) -> "_Grid":
-        points = cell * np.arange(size + 1)
+        points = cell * np.arange(size + 1, dtype=np.float64)
         reached = sizes.beyond(points * (1.0 - SLACK))  # P(Y >= jh)
         reached[0] = 1.0
         passed = sizes.beyond(points[:-1] * (1.0 + SLACK))  # P(Y > jh)
@@ -266,14 +268,15 @@ def _on_grids(frequency: FrequencyLaw, sizes: ClaimSizes, cell: float, size: int
     reached = 0.0
     for grid in grids:
         places = _thinned(reached / grid.cell, grid.used)
-        amounts.append((places + 0.5) * grid.cell)  # the central law holds the mean of F over each cell
+        # the central law holds the mean of F over each cell: F at its middle, but for terms of second order
+        amounts.append(np.asarray((places + 0.5) * grid.cell, dtype=np.float64))
         probabilities.append(grid.central[places])
         reached = grid.used * grid.cell
     joined = np.minimum(np.maximum.accumulate(np.concatenate(probabilities)), 1.0)
     nodes = np.concatenate(amounts)
-    law = AggregateLaw(joined, nodes, False, (), grids[0].cell, size, len(grids))
+    law = AggregateLaw(joined, nodes, stepped=False, cell=grids[0].cell, cells=size, grids=len(grids))
     bounds = tuple(_bound(law, grids, probability) for probability in STATED)
-    return AggregateLaw(joined, nodes, False, bounds, grids[0].cell, size, len(grids))
+    return replace(law, bounds=bounds)
 
 
 def _thinned(first: float, used: int) -> np.ndarray[tuple[int], np.dtype[np.intp]]:

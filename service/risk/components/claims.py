@@ -37,13 +37,13 @@ from service.risk.covers import (
     preimage,
     tails_after,
 )
-from service.risk.measures.contract import STRICT, Text
 from service.risk.marginals import EmpiricalMarginal, Marginal, MarginalLaw, PointMarginal
+from service.risk.measures.contract import STRICT, Text
 from service.risk.score_tables import ScoreTable
 from service.risk.scores import NormalScores
 
 PIECE = 1 << 16  # claims drawn at a time, 0.5 MB
-FARTHEST_SCORE = 38.0  # normal scores beyond have probability 0 in binary64
+FARTHEST_SCORE = 37.0  # normal scores beyond have a probability that binary64 cannot tell from 0
 SCORE_STEP = 1.0 / 64.0  # of the trapezoidal rule over normal scores, exact to rounding for smooth integrands
 HALVINGS = 60  # of the interval in which an exponential rate is looked for
 CACHED = 32  # laws of sums kept; each is a few hundred kilobytes

@@ -17,10 +17,11 @@ from numpy.typing import NDArray
 from pydantic.dataclasses import dataclass
 
 from service.errors import Fault, InvalidValue
-from service.risk.copulas import CopulaFamily, GaussianSampler, IndependentCopula, Sampler
+from service.risk.copulas import CopulaFamily, IndependentCopula, Sampler
+from service.risk.copulas.elliptical import GaussianSampler
 from service.risk.covers import Tails
-from service.risk.measures.contract import STRICT, Text
 from service.risk.marginals import MarginalLaw
+from service.risk.measures.contract import STRICT, Text
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.intp]

@@ -11,7 +11,6 @@ from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
 from typing_extensions import TypeAliasType
 
-from service.risk.components.contract import Array
 from service.risk.measures.contract import STRICT
 
 Counts = NDArray[np.int64]

@@ -48,9 +48,7 @@ class SubPortfolioTerms:
 
     def tails(self, factors: FactorSet) -> Tails:
         """Return which moments of its loss exist, after sign and cover."""
-        groups = [
-            (frozenset((*one.used, *one.used_scores)), one.tails(factors)) for one in self.components
-        ]
+        groups = [(frozenset((*one.used, *one.used_scores)), one.tails(factors)) for one in self.components]
         return tails_after(self.cover, together(groups, factors).times(self.factor))
 
 

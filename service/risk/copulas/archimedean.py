@@ -98,8 +98,7 @@ class FrankCopula(CopulaFamily):
             raise InvalidValue.at("/theta", detail, code="out_of_range")
 
     def prepared(self, factor_ids: Sequence[str]) -> Sampler:
-        """Return the sampler; with theta below 0 the second factor is turned round (R. B. Nelsen, An Introduction to
-        Copulas, 2006, exercise 4.? )."""
+        """Return the sampler; below 0 the second factor is turned round: C(u, v; -theta) = u - C(u, 1 - v; theta)."""
         self.check(factor_ids)
         turned = (1,) if self.theta < 0.0 and len(factor_ids) > 1 else ()
         return ArchimedeanSampler.of(Frank(abs(self.theta)), len(factor_ids), turned=turned)

@@ -10,8 +10,11 @@ from numpy.random import Generator
 from numpy.typing import NDArray
 from scipy import special
 
+from service.risk.streams import SMALLEST
+
 Array = NDArray[np.float64]
 
+HALF_LIFE = np.log(2.0)  # exp(-t) is a half
 SPLIT = 700.0  # exp(-700) and exp(700) are normal binary64 numbers
 WHOLE = 36.0  # logarithm from which every binary64 number is whole
 LISTED = 4096  # values of a Sibuya variable that are looked up; beyond them its tail is a power to 1e-8
@@ -22,7 +25,13 @@ def log_one_less_exp(log_t: Array) -> Array:
     """Return ln(1 - exp(-t)) from ln t, accurate for t near 0 and for large t."""
     t = np.exp(np.clip(log_t, -SPLIT, SPLIT))
     small = np.log(-np.expm1(-t)) + np.minimum(log_t + SPLIT, 0.0)
-    return np.where(t < np.log(2.0), small, np.log1p(-np.exp(-t)))
+    return np.where(t < HALF_LIFE, small, np.log1p(-np.exp(-np.maximum(t, HALF_LIFE))))
+
+
+def log_whole(log_far: Array, shift: float) -> Array:
+    """Return the logarithm of the first whole number above exp(log_far) - shift."""
+    whole = np.floor(np.exp(np.minimum(log_far, WHOLE)) - shift) + 1.0
+    return np.where(log_far < WHOLE, np.log(whole), log_far)
 
 
 def log_positive_stable(alpha: float, uniforms: Array, exponentials: Array) -> Array:
@@ -44,6 +53,12 @@ def log_positive_stable(alpha: float, uniforms: Array, exponentials: Array) -> A
     logs = (1.0 - alpha) * (np.log(np.sin((1.0 - alpha) * angle)) - np.log(exponentials))
     logs += alpha * np.log(np.sin(alpha * angle)) - np.log(sine)
     return np.asarray(logs / alpha)
+
+
+def stable_draws(count: int, generator: Generator) -> tuple[Array, Array]:
+    """Return uniforms and exponentials for `log_positive_stable`, each of shape (count,)."""
+    uniforms = np.maximum(generator.random(count), SMALLEST)
+    return uniforms, np.maximum(generator.standard_exponential(count), SMALLEST)
 
 
 def log_sibuya(alpha: float, uniforms: Array) -> Array:
@@ -68,8 +83,7 @@ def log_sibuya(alpha: float, uniforms: Array) -> Array:
     beyond = uniforms < exceeding[0]
     if beyond.any():
         far = -(np.log(uniforms[beyond]) + special.gammaln(1.0 - alpha)) / alpha
-        whole = np.floor(np.exp(np.minimum(far, WHOLE)) - (1.0 - alpha) / 2.0) + 1.0
-        result[beyond] = np.where(far < WHOLE, np.log(whole), far)
+        result[beyond] = log_whole(far, (1.0 - alpha) / 2.0)
     return result
 
 
@@ -93,8 +107,7 @@ def log_log_series(theta: float, uniforms: Array, exponentials: Array) -> Array:
     x = theta * uniforms
     log_rate = np.log(-log_one_less_exp(np.log(np.minimum(x, WHOLE)))) - np.maximum(x - WHOLE, 0.0)
     far = np.log(exponentials) - log_rate
-    whole = np.floor(np.exp(np.minimum(far, WHOLE))) + 1.0
-    return np.where(far < WHOLE, np.log(whole), far)
+    return log_whole(far, 0.0)
 
 
 def log_tilted_stable(alpha: float, log_times: Array, generator: Generator) -> Array:
@@ -117,10 +130,8 @@ def log_tilted_stable(alpha: float, log_times: Array, generator: Generator) -> A
     result = np.empty_like(log_times)
     tiny = log_times < TINY_TIME
     if tiny.any():
-        count = int(np.count_nonzero(tiny))
-        uniforms = 1.0 - generator.random(count)
-        stable = log_positive_stable(alpha, uniforms * (1.0 - 1e-16), generator.standard_exponential(count))
-        result[tiny] = log_times[tiny] / alpha + stable
+        uniforms, exponentials = stable_draws(int(np.count_nonzero(tiny)), generator)
+        result[tiny] = log_times[tiny] / alpha + log_positive_stable(alpha, uniforms, exponentials)
     waiting = np.flatnonzero(~tiny)
     while waiting.size:
         accepted, values = _tilted_trial(alpha, np.exp(log_times[waiting]), generator)

@@ -70,6 +70,26 @@ Level = Annotated[
 ]
 
 
+@plain(frozen=True, slots=True, kw_only=True)
+class Needs:
+    """What the tails of a loss must allow: moments of every order up to the index exist, or exponential ones.
+
+    Attributes
+    ----------
+    upper_index, lower_index : float
+        The figure exists if the tail indices are above these; 0 for always.
+    error_index : float
+        Its standard error exists if both indices are above this.
+    exponential : float
+        The figure exists if E exp(t L) is finite for t up to this, its error for twice as much; 0 for always.
+    """
+
+    upper_index: float = 0.0
+    lower_index: float = 0.0
+    error_index: float = 0.0
+    exponential: float = 0.0
+
+
 @plain(frozen=True, slots=True)
 class ContributionWeights:
     """Scenario weights of the total for its Euler contributions.
@@ -96,10 +116,13 @@ class RiskMeasure:
     but for the parameters that say otherwise.
     """
 
-    upper_index_needed: ClassVar[float] = 0.0
-    """The figure exists if the upper tail index is above this (0: always)."""
     of_tail: ClassVar[bool] = False
     """Whether it looks at the scenarios beyond a quantile alone."""
+
+    @property
+    def needs(self) -> Needs:
+        """What the tails of a loss must allow for the figure, and for its error, to exist."""
+        return Needs(upper_index=1.0, error_index=2.0)
 
     @property
     def carrier_factor(self) -> float:

@@ -4,6 +4,7 @@ The figure is sum x_k [g(P(L >= x_k)) - g(P(L > x_k))] (Wang, ASTIN Bulletin 26(
 integral, losses may be negative).
 """
 
+from math import inf
 from typing import Annotated, Literal
 
 import numpy as np
@@ -11,7 +12,7 @@ from pydantic import Field
 from pydantic.dataclasses import dataclass
 from scipy import special
 
-from service.risk.measures.contract import STRICT, ContributionWeights, LocatedMeasure
+from service.risk.measures.contract import STRICT, ContributionWeights, LocatedMeasure, Needs
 from service.risk.quantiles import Array, Ordered, Ties, decimal
 from service.risk.uncertainty import Influence
 
@@ -23,6 +24,10 @@ FARTHEST_SCORE = 40.0  # normal scores beyond +-38 have probability 0 in binary6
 @dataclass(frozen=True, kw_only=True, config=STRICT)
 class _Distortion(LocatedMeasure):
     """Members bring g and its derivative on (0, 1]."""
+
+    @property
+    def needs(self) -> Needs:
+        return Needs(upper_index=1.0, lower_index=1.0, error_index=2.0)
 
     def distorted(self, survival: Array) -> Array:
         """Return g(survival)."""
@@ -122,9 +127,11 @@ class ProportionalHazard(_Distortion):
         return max(2.0 * self.exponent - 1.0, LEAST_FACTOR)
 
     @property
-    def upper_index(self) -> float:
-        """Tail index below which the figure is infinite."""
-        return 1.0 / float(decimal(self.exponent))
+    def needs(self) -> Needs:
+        """The integral of P(L > x)^exponent is finite for a tail index above 1/exponent."""
+        exponent = float(decimal(self.exponent))
+        error = 2.0 / (2.0 * exponent - 1.0) if exponent > 0.5 else inf  # noqa: PLR2004  # from there on infinite
+        return Needs(upper_index=1.0 / exponent, lower_index=1.0, error_index=error)
 
     def distorted(self, survival: Array) -> Array:
         return np.asarray(survival**self.exponent)

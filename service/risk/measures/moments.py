@@ -1,7 +1,7 @@
 """Measures of the whole distribution that are no distortions: standard deviation, expectile, entropic."""
 
 from itertools import pairwise
-from typing import Annotated, ClassVar, Literal
+from typing import Annotated, Literal
 
 import numpy as np
 from pydantic import Field
@@ -14,6 +14,7 @@ from service.risk.measures.contract import (
     ContributionWeights,
     Level,
     LocatedMeasure,
+    Needs,
     RiskMeasure,
     Smoothing,
     means,
@@ -39,12 +40,14 @@ def _per_position(ordered: Ordered) -> Array:
 class StandardDeviation(RiskMeasure):
     """A multiple of the population standard deviation; translation-invariant, so it has no `above`."""
 
-    upper_index_needed: ClassVar[float] = 2.0
-
     kind: Literal["standard_deviation"]
     """Tag of this measure."""
     multiple: Annotated[float, Field(gt=0.0)] = 1.0
     """Factor on the standard deviation."""
+
+    @property
+    def needs(self) -> Needs:
+        return Needs(upper_index=2.0, lower_index=2.0, error_index=4.0)
 
     @property
     def parameters(self) -> dict[str, float]:
@@ -108,12 +111,14 @@ class Expectile(LocatedMeasure):
     (2017) 487-506.
     """
 
-    upper_index_needed: ClassVar[float] = 1.0
-
     kind: Literal["expectile"]
     """Tag of this measure."""
     level: Level
     """Weight of the losses above the expectile, between 0 and 1."""
+
+    @property
+    def needs(self) -> Needs:
+        return Needs(upper_index=1.0, lower_index=1.0, error_index=2.0)
 
     @property
     def parameters(self) -> dict[str, float]:
@@ -209,12 +214,14 @@ class Entropic(LocatedMeasure):
     the Aumann-Shapley integral of the derivative along the diagonal (Denault, J. of Risk 4(1), 2001, 1-34).
     """
 
-    upper_index_needed: ClassVar[float] = float("inf")
-
     kind: Literal["entropic"]
     """Tag of this measure."""
     aversion: Annotated[float, Field(gt=0.0)]
     """Risk aversion, in 1/currency."""
+
+    @property
+    def needs(self) -> Needs:
+        return Needs(exponential=self.aversion)
 
     @property
     def parameters(self) -> dict[str, float]:

@@ -13,6 +13,7 @@ from service.risk.measures.contract import (
     ContributionWeights,
     Level,
     LocatedMeasure,
+    Needs,
     Smoothing,
 )
 from service.risk.measures.local_line import LocalLine, local_line
@@ -85,6 +86,11 @@ class _Quantile(LocatedMeasure):
         weights = np.zeros((positions.size, ordered.values.shape[-1]))
         weights[np.arange(positions.size), positions] = 1.0
         return weights
+
+    @property
+    def needs(self) -> Needs:
+        """A quantile always exists, and its order-statistic interval too."""
+        return Needs(upper_index=1.0, lower_index=1.0) if self.above == "mean" else Needs()
 
     def values(self, ordered: Ordered) -> Array:
         return ordered.at(ordered.position(self.share))
@@ -207,7 +213,6 @@ class ExpectedShortfall(LocatedMeasure):
     Acerbi and Tasche, J. Banking & Finance 26 (2002) 1487-1503, definition 2.6.
     """
 
-    upper_index_needed = 1.0
     of_tail = True
 
     kind: Literal["expected_shortfall"]
@@ -304,6 +309,13 @@ class RangeValueAtRisk(LocatedMeasure):
     @property
     def parameters(self) -> dict[str, float]:
         return {"lower_level": self.lower_level, "upper_level": self.upper_level}
+
+    @property
+    def needs(self) -> Needs:
+        """A mean of quantiles exists, but for one that reaches an end of the distribution."""
+        outer, inner = self.shares
+        upper, lower = (1.0 if inner == 0 else 0.0), (1.0 if outer == 1 else 0.0)
+        return Needs(upper_index=upper, lower_index=lower, error_index=2.0 * max(upper, lower))
 
     @property
     def shares(self) -> tuple[Fraction, Fraction]:

@@ -75,9 +75,7 @@ def test_a_layer_and_what_is_kept_of_it_are_the_whole(limit, share):
 
 @pytest.mark.parametrize(
     "steps",
-    [
-        [step] for step in TYPICAL
-    ]
+    [[step] for step in TYPICAL]
     + [
         [cede(10.0)],
         [cede(10.0, 5.0)],

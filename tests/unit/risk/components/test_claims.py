@@ -1,5 +1,6 @@
 """Components with draws of their own from a law."""
 
+import json
 import math
 
 import numpy as np
@@ -86,7 +87,10 @@ def test_scenarios_with_more_claims_than_a_piece():
 
 
 def test_terms_of_the_year_come_after_the_sum():
-    cover = (layer(0.5, 0.5, annual_deductible=1.0, annual_limit=2.0), QuotaShareCover(kind="quota_share", retained=0.5))
+    cover = (
+        layer(0.5, 0.5, annual_deductible=1.0, annual_limit=2.0),
+        QuotaShareCover(kind="quota_share", retained=0.5),
+    )
     found = losses(compound(poisson(4.0), UNIT, *cover), FACTORS, GivenBlock(EMPTY))
     counts = GivenBlock(EMPTY).generator.poisson(4.0, SCENARIOS)
     np.testing.assert_allclose(found, 0.5 * np.minimum(np.maximum(0.5 * counts - 1.0, 0.0), 2.0), atol=1e-15)
@@ -98,7 +102,10 @@ def test_terms_of_the_year_come_after_the_sum():
         ((), 2.0),
         ((layer(1.0, 3.0),), 2.0 * (math.exp(-0.5) - math.exp(-2.0))),
         ((layer(1.0),), 2.0 * math.exp(-0.5)),
-        ((CedeLayerCover(kind="cede_layer", attachment=1.0, limit=3.0, share=0.5),), 2.0 - math.exp(-0.5) + math.exp(-2.0)),
+        (
+            (CedeLayerCover(kind="cede_layer", attachment=1.0, limit=3.0, share=0.5),),
+            2.0 - math.exp(-0.5) + math.exp(-2.0),
+        ),
         ((layer(1.0, 3.0), QuotaShareCover(kind="quota_share", retained=0.5)), math.exp(-0.5) - math.exp(-2.0)),
     ],
 )
@@ -156,7 +163,9 @@ def test_the_law_of_a_sum_is_made_once():
         ),
         (compound(poisson(1.0), LIGHT, layer(0.0, 5.0), layer(5.0)), "/claim_cover/1", "nothing reaches"),
         (
-            compound(poisson(1.0), EmpiricalMarginal(family="empirical", values=[2.0, 3.0]), CapCover(kind="cap", amount=1.0)),
+            compound(
+                poisson(1.0), EmpiricalMarginal(family="empirical", values=[2.0, 3.0]), CapCover(kind="cap", amount=1.0)
+            ),
             "/claim_cover/0",
             "above the cap",
         ),
@@ -181,7 +190,7 @@ def test_what_does_not_fit_is_refused(component, pointer, words):
 def test_wrong_frequencies_are_refused(frequency):
     document = {"kind": "compound", "frequency": frequency, "severity": {"family": "exponential", "mean": 1.0}}
     with pytest.raises(ValueError, match="frequency"):
-        TypeAdapter(CompoundComponent).validate_python(document)
+        TypeAdapter(CompoundComponent).validate_json(json.dumps(document))
 
 
 def test_the_tail_of_a_sum_is_that_of_a_claim():

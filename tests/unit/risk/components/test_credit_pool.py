@@ -7,7 +7,13 @@ import pytest
 from scipy import special
 
 from service.errors import InvalidValue
-from service.risk.components import CreditObligor, CreditPoolComponent, FactorLoading, FactorSet, conditional_probability
+from service.risk.components import (
+    CreditObligor,
+    CreditPoolComponent,
+    FactorLoading,
+    FactorSet,
+    conditional_probability,
+)
 from service.risk.components.credit_pool import DENSE, MANY
 from service.risk.copulas import ComonotonicCopula
 from service.risk.covers import Tails
@@ -57,9 +63,7 @@ def test_default_probabilities_are_met_over_the_factors():
     random = np.random.Generator(np.random.Philox(5))
     first = random.standard_normal(200_000)
     second = 0.5 * first + math.sqrt(0.75) * random.standard_normal(200_000)
-    component = pool(
-        obligor(0.03, 1.0, 1.0, a=0.4, b=0.3), obligor(0.01, 2.0, 0.5, b=-0.6), obligor(0.2, 3.0, 1.0)
-    )
+    component = pool(obligor(0.03, 1.0, 1.0, a=0.4, b=0.3), obligor(0.01, 2.0, 0.5, b=-0.6), obligor(0.2, 3.0, 1.0))
     found = losses(component, FACTORS, GivenBlock(np.vstack([first, second])))
     assert component.mean(FACTORS) == pytest.approx(0.03 + 0.01 + 0.6)
     assert_mean(found, 0.64)

@@ -150,7 +150,10 @@ def test_grids_that_are_none_are_refused(points, values, words):
     ("component", "pointers"),
     [
         (linear(a=1.0, d=2.0), ["/exposures/1/factor"]),
-        (quadratic([("a", "d", 1.0), ("e", "b", 1.0)], f=1.0), ["/delta/0/factor", "/gamma/0/second", "/gamma/1/first"]),
+        (
+            quadratic([("a", "d", 1.0), ("e", "b", 1.0)], f=1.0),
+            ["/delta/0/factor", "/gamma/0/second", "/gamma/1/first"],
+        ),
         (grid("flat"), []),
     ],
 )

@@ -1,0 +1,211 @@
+"""A simulation too large to be held: blocks stream through, and what stays is the totals and the tails.
+
+The table that a `Frame` sees gives any rows asked for: those of the tail are kept, others are simulated again.
+"""
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from service.risk.effort import Effort
+from service.risk.fold import Sieve, completed_tails, sample_thresholds
+from service.risk.frame import Frame, column_tail, deepest
+from service.risk.loss_table import Group, SubPortfolio, check_magnitude, group_losses
+from service.risk.measures import RiskMeasure
+from service.risk.quantiles import Array, Indices
+from service.risk.ranking import ranked
+from service.risk.simulation import Plan, Workbench
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class StreamedLosses:
+    """Rows of an (n, d) table of which only some are held.
+
+    Attributes
+    ----------
+    plan : Plan
+    effort : Effort
+    numbers : ndarray of int of shape (k,)
+        Scenarios that are held, ascending.
+    rows : ndarray of shape (k, d + G)
+        Their losses, groups at the right.
+    """
+
+    plan: Plan
+    effort: Effort
+    numbers: Indices
+    rows: Array
+
+    @property
+    def shape(self) -> tuple[int, int]:
+        """Scenarios and sub-portfolios."""
+        return self.plan.scenarios, self.plan.columns
+
+    def __getitem__(self, number: int) -> Array:
+        """Return the losses of one scenario, shape (d,)."""
+        return self.take(np.array([number]))[0]
+
+    def take(self, numbers: Indices, axis: int = 0) -> Array:  # noqa: ARG002  # as NumPy's
+        """Return the losses of scenarios (m,), shape (m, d), C order."""
+        places = np.minimum(np.searchsorted(self.numbers, numbers), max(self.numbers.size - 1, 0))
+        if self.numbers.size and np.array_equal(self.numbers[places], numbers):
+            return np.ascontiguousarray(self.rows[places, : self.plan.columns])
+        return self._again(numbers)
+
+    def _again(self, numbers: Indices) -> Array:
+        """Simulate the blocks that hold the scenarios once more."""
+        out = np.empty((numbers.size, self.plan.columns))
+        blocks = numbers // self.plan.block_size
+        bench = Workbench()
+
+        def work(block: int) -> None:
+            self.effort.checkpoint()
+            losses = self.plan.losses(block, bench.scratch)
+            inside = np.flatnonzero(blocks == block)
+            out[inside] = losses[numbers[inside] - self.plan.part(block).start] + 0.0
+
+        self.effort.map(work, np.unique(blocks).tolist())
+        return out
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class StreamedTable:
+    """What a `Frame` asks of a loss table, for a simulation that is not held."""
+
+    losses: StreamedLosses
+    sub_portfolios: tuple[SubPortfolio, ...]
+    probabilities: None = None
+    clusters: None = None
+    scenario_ids: None = None
+    sampled: bool = True
+    plain: bool = True
+
+    @property
+    def scenarios(self) -> int:
+        """Number n of scenarios."""
+        return self.losses.shape[0]
+
+    def __len__(self) -> int:
+        """Return the number d of sub-portfolios."""
+        return self.losses.shape[1]
+
+
+@dataclass(slots=True)
+class _Kept:
+    """What one worker keeps of its blocks."""
+
+    numbers: list[Indices]
+    rows: list[Array]
+    sieve: Sieve | None
+
+
+def streamed(
+    plan: Plan,
+    sub_portfolios: tuple[SubPortfolio, ...],
+    groups: Sequence[Group],
+    measures: Sequence[RiskMeasure],
+    effort: Effort,
+    *,
+    stand_alone: bool,
+) -> Frame:
+    """Return the frame of a simulation in one pass over its blocks.
+
+    Parameters
+    ----------
+    plan : Plan
+    sub_portfolios : tuple of SubPortfolio
+    groups : sequence of Group
+    measures : sequence of RiskMeasure
+        All of a tail (see `Frame`).
+    effort : Effort
+    stand_alone : bool
+        Whether the tails of the columns are needed.
+
+    Raises
+    ------
+    NotDefined
+        Where losses add up to more than can be squared.
+    """
+    scenarios, columns = plan.scenarios, plan.columns + len(groups)
+    depth = deepest(measures, scenarios, contributions=True)
+    tail = column_tail(measures, scenarios) if stand_alone else None
+    bench = Workbench()
+    first = _extended(plan.losses(0, bench.scratch), groups)
+    least = sample_thresholds(first[:, : plan.columns].sum(axis=1)[:, None], int(depth * scenarios) + 1, scenarios)[0]
+    thresholds = None if tail is None else sample_thresholds(first, tail, scenarios)
+    totals = np.empty(scenarios)
+    sums = np.empty((plan.blocks, columns))
+    workers = min(effort.threads, plan.blocks)
+
+    def work(worker: int) -> _Kept:
+        kept = _Kept([], [], None if thresholds is None else Sieve(thresholds, plan.block_size))
+        for number in range(worker, plan.blocks, workers):
+            effort.checkpoint(number / plan.blocks)
+            part = plan.part(number)
+            block = _extended(plan.losses(number, bench.scratch), groups)
+            total = np.add.reduce(block[:, : plan.columns], axis=1, out=totals[part])
+            np.add.reduce(block, axis=0, out=sums[number])
+            chosen = np.flatnonzero(total > least)
+            kept.numbers.append(chosen + part.start)
+            kept.rows.append(block[chosen])
+            if kept.sieve is not None:
+                kept.sieve.add(block)
+        return kept
+
+    parts = effort.map(work, range(workers))
+    check_magnitude(totals)
+    numbers = np.concatenate([one for part in parts for one in part.numbers])
+    order = np.argsort(numbers)
+    rows = np.concatenate([one for part in parts for one in part.rows])
+    for part in parts:
+        part.rows.clear()
+    losses = StreamedLosses(plan, effort, numbers[order], rows[order])
+    table = StreamedTable(losses, sub_portfolios)
+    tails = None
+    if tail is not None and thresholds is not None:
+        sieves = [part.sieve.survivors() for part in parts if part.sieve is not None]
+        tails = completed_tails(thresholds, sieves, tail, effort, _Again(plan, groups, effort))
+    ranking = ranked(totals, table, depth=depth)
+    frame = Frame(table, groups, effort, None, totals, sums.sum(axis=0) / scenarios, tails, ranking)
+    frame.hold([_extended(table.losses.take(ranking.order), groups)])
+    return frame
+
+
+def _extended(losses: Array, groups: Sequence[Group]) -> Array:
+    """Return a block with its groups at the right and no negative zero, in fresh memory."""
+    if not groups:
+        return losses + 0.0
+    return np.concatenate([losses, group_losses(losses, groups)], axis=1) + 0.0
+
+
+@dataclass(frozen=True, slots=True)
+class _Again:
+    """The columns of a simulation, by simulating it once more."""
+
+    plan: Plan
+    groups: Sequence[Group]
+    effort: Effort
+
+    def equal(self, columns: Indices, values: Array) -> Indices:
+        """Return how often each of some columns takes its value, shape (k,)."""
+
+        def count(block: Array) -> Indices:
+            return np.count_nonzero(block[:, columns] == values, axis=0)
+
+        counts = self._mapped(count)
+        return np.sum(counts, axis=0)
+
+    def column(self, column: int) -> Array:
+        """Return all losses of one column, shape (n,)."""
+        return np.concatenate(self._mapped(lambda block: block[:, column].copy()))
+
+    def _mapped(self, function: Callable[[Array], Any]) -> list[Any]:
+        bench = Workbench()
+
+        def work(number: int) -> Any:
+            self.effort.checkpoint()
+            return function(_extended(self.plan.losses(number, bench.scratch), self.groups))
+
+        return self.effort.map(work, range(self.plan.blocks))
