@@ -26,7 +26,7 @@ from service.errors import (
 )
 from service.executors import Work
 from service.intake import Intake
-from service.provenance import PREFIX, losses_digest, request_digest
+from service.provenance import PREFIX, document_digest, losses_digest
 from service.resolve import loss_table
 from service.risk import figures, increments
 from service.risk.allocation import RULES, Case
@@ -154,7 +154,7 @@ class _Calculation:
             "notes": self.notes.listed(),
             "provenance": Provenance(
                 service_version=__version__,
-                request_digest=request_digest(canonical_request(self.intake, self.frame.table, self.losses_digest)),
+                request_digest=document_digest(canonical_request(self.intake, self.frame.table, self.losses_digest)),
                 losses_digest=self.losses_digest,
                 method=METHOD,
                 seed=None,

@@ -48,9 +48,9 @@ def losses_digest(
     return PREFIX + digest.hexdigest()
 
 
-def request_digest(request: dict[str, Any]) -> str:
-    """Return the digest of a request in canonical form."""
-    return PREFIX + hashlib.sha256(canonical(request)).hexdigest()
+def document_digest(document: dict[str, Any]) -> str:
+    """Return the digest of a JSON document in canonical form."""
+    return PREFIX + hashlib.sha256(canonical(document)).hexdigest()
 
 
 def canonical(document: dict[str, Any]) -> bytes:

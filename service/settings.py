@@ -25,6 +25,10 @@ class Settings:
         32 * MEBIBYTE, "size of a JSON request without its table", unit="bytes", least=1024
     )
     max_cells: int = _setting(50_000_000, "scenarios times sub-portfolios of one loss table", unit="cells")
+    max_scenarios: int = _setting(100_000_000, "simulated scenarios of one request", unit="scenarios")
+    max_memory_bytes: int = _setting(
+        2048 * MEBIBYTE, "memory that the simulated losses of one request may take", unit="bytes", least=MEBIBYTE
+    )
     max_sub_portfolios: int = _setting(10_000, "sub-portfolios of one request", unit="sub-portfolios")
     max_groups: int = _setting(1_000, "groups of one request", unit="groups")
     max_seconds: float = _setting(60.0, "computing time of one request", unit="seconds", least=0.001)

@@ -1,6 +1,6 @@
 """What pictures and pages need of an answer: its shape alone, since the answers themselves stand above."""
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import Protocol
 
 from service.representations.table import Table
@@ -228,6 +228,8 @@ class Measure(Protocol):
     def kind(self) -> str: ...
     @property
     def above(self) -> str: ...
+    @property
+    def parameters(self) -> Mapping[str, float]: ...
 
 
 class Histogram(Protocol):

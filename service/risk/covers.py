@@ -23,6 +23,10 @@ STRICT = ConfigDict(
 
 Array = NDArray[np.float64]
 
+ATTACHMENT = "Amount, in currency, above which the layer pays."
+LIMIT = "Most, in currency, that falls into the layer (before `share`); unlimited if absent."
+SHARE = "Part of the layer that is written or ceded, above 0 and at most 1."
+
 MISFIT = "cover_does_not_fit"
 EVERYWHERE = (-math.inf, math.inf)
 
@@ -115,12 +119,9 @@ class CoverStep:
 class _LayerTerms(CoverStep):
     """What the writer's and the buyer's view of a layer share."""
 
-    attachment: Annotated[float, Field(ge=0.0)]
-    """Amount, in currency, above which the layer pays."""
-    limit: Annotated[float, Field(gt=0.0)] | None = None
-    """Most, in currency, that falls into the layer (before `share`); unlimited if absent."""
-    share: Annotated[float, Field(gt=0.0, le=1.0)] = 1.0
-    """Part of the layer that is written or ceded, above 0 and at most 1."""
+    attachment: Annotated[float, Field(ge=0.0, description=ATTACHMENT)]
+    limit: Annotated[Annotated[float, Field(gt=0.0)] | None, Field(description=LIMIT)] = None
+    share: Annotated[float, Field(gt=0.0, le=1.0, description=SHARE)] = 1.0
 
     def paid(self, amounts: Array, *, out: Array | None = None) -> Array:
         """Return share min(max(x - attachment, 0), limit)."""

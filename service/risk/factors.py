@@ -8,6 +8,7 @@ import numpy as np
 from numpy.random import Generator
 
 from service.errors import Fault, InvalidValue, pointing
+from service.risk.components.claims import CompoundComponent
 from service.risk.components.contract import Array, FactorSet, Indices
 from service.risk.components.portfolio import BlockScratch, FactorRows, Portfolio, SubPortfolioTerms
 from service.risk.copulas import CopulaFamily, Sampler
@@ -212,6 +213,20 @@ class FactorModel:
             for number, one in enumerate(terms.components)
             if one.own_draws
         )
+
+    @property
+    def notes(self) -> tuple[tuple[str, str, str], ...]:
+        """Code, words and pointer of what the caller may doubt: repaired correlations, grids of driven sums."""
+        notes = []
+        repair = self.sampler.repair
+        if repair is not None:
+            notes.append((repair.code, repair.detail, "/dependence/correlation"))
+        for row, terms in enumerate(self.portfolio.sub_portfolios):
+            for number, one in enumerate(terms.components):
+                if isinstance(one, CompoundComponent) and one.driver is not None:
+                    pointer = f"/sub_portfolios/{row}/components/{number}"
+                    notes.append(("driven_sum", one.law_of_sum.statement, pointer))
+        return tuple(notes)
 
     def existence(self) -> tuple[list[Tails], Tails]:
         """Return which moments exist of each sub-portfolio's loss and of the total."""

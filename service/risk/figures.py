@@ -5,8 +5,8 @@ from dataclasses import replace
 import numpy as np
 
 from service.risk.frame import Frame
-from service.risk.measures import RiskMeasure, full_influence, full_values
-from service.risk.quantiles import Array, Ordered
+from service.risk.measures import ExpectedShortfall, RiskMeasure, full_influence, full_values
+from service.risk.quantiles import Array, Indices, Ordered
 from service.risk.uncertainty import (
     Estimates,
     Influence,
@@ -101,6 +101,28 @@ def lean_of_total(frame: Frame, measure: RiskMeasure) -> tuple[float, Influence]
     of = spread(influence, Sampling.of(ordered))
     lean = measure.lean(ordered, full_values(measure, ordered), of)
     return float((usual_lean(of) if lean is None else lean)[0]), influence
+
+
+def tail_scenarios(frame: Frame, level: float) -> tuple[Indices, Array]:
+    """Return the scenarios beyond the quantile of the total, and their weights in its expected shortfall.
+
+    Parameters
+    ----------
+    frame : Frame
+    level : float
+        Confidence level.
+
+    Returns
+    -------
+    ndarray of int of shape (m,)
+    ndarray of shape (m,)
+        Summing to 1.
+    """
+    measure = ExpectedShortfall(kind="expected_shortfall", level=level)
+    ranking = frame.ranking(measure)
+    weights = measure.contribution_weights(ranking.ordered, ranking.ties, "auto").values
+    inside = np.flatnonzero(weights)
+    return ranking.order[inside], weights[inside]
 
 
 def figure_of(frame: Frame, measure: RiskMeasure, loss: Array) -> tuple[float, Array]:

@@ -8,7 +8,7 @@ import numpy as np
 from service.errors import NotDefined
 from service.risk.effort import Effort
 from service.risk.fold import fold
-from service.risk.loss_table import Group, LossTable, check_magnitude, group_losses
+from service.risk.loss_table import Group, LossTable, Scenarios, check_magnitude, group_losses
 from service.risk.measures import RiskMeasure
 from service.risk.quantiles import Array, Indices, Ordered
 from service.risk.ranking import MOST_PARTIAL, Ranking, ranked, worst
@@ -42,7 +42,7 @@ class Frame:
 
     Attributes
     ----------
-    table : LossTable
+    table : Scenarios
         n scenarios, d sub-portfolios.
     groups : sequence of Group
         Their G summed losses stand beside the d columns.
@@ -54,7 +54,7 @@ class Frame:
         Mean loss of each column.
     """
 
-    table: LossTable
+    table: Scenarios
     groups: Sequence[Group]
     effort: Effort
     columns: tuple[Array, Array] | None

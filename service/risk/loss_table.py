@@ -2,6 +2,7 @@
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any, Protocol
 
 import numpy as np
 
@@ -47,6 +48,45 @@ class Group:
     attribute: str
     name: str | None
     members: Indices
+
+
+class Scenarios(Protocol):
+    """What figures need of the scenarios, whether their losses are held or not."""
+
+    @property
+    def losses(self) -> Any:
+        """The losses (n, d): an array, or what gives any rows by `take`."""
+
+    @property
+    def probabilities(self) -> Array | None:
+        """Of the scenarios; None when all are 1/n."""
+
+    @property
+    def clusters(self) -> Indices | None:
+        """Of scenarios that are dependent within clusters."""
+
+    @property
+    def sampled(self) -> bool:
+        """Whether the scenarios are draws."""
+
+    @property
+    def sub_portfolios(self) -> tuple[SubPortfolio, ...]:
+        """One per column."""
+
+    @property
+    def scenario_ids(self) -> tuple[str, ...] | None:
+        """Labels."""
+
+    @property
+    def plain(self) -> bool:
+        """Whether the scenarios are equally probable and independent."""
+
+    @property
+    def scenarios(self) -> int:
+        """Number n of scenarios."""
+
+    def __len__(self) -> int:
+        """Return the number d of sub-portfolios."""
 
 
 @dataclass(frozen=True, slots=True)

@@ -4,7 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from service.risk.loss_table import LossTable
+from service.risk.loss_table import Scenarios
 from service.risk.quantiles import Array, Indices, Ordered, Ties
 
 MOST_PARTIAL = 0.5  # share of scenarios from which on all are ordered
@@ -73,13 +73,13 @@ def tie_tolerance(rows: Array) -> float:
     return columns * 2.0**-52 * float(np.max(np.add.reduce(np.abs(rows), axis=1))) if columns > 1 else 0.0
 
 
-def ranked(totals: Array, table: LossTable, *, depth: float) -> Ranking:
+def ranked(totals: Array, table: Scenarios, *, depth: float) -> Ranking:
     """Return the ranking of `totals` (n,), the row sums of `table`.
 
     Parameters
     ----------
     totals : ndarray of shape (n,)
-    table : LossTable
+    table : Scenarios
     depth : float
         Share of the worst scenarios needed; all are kept unless the table is plain, and always enough that
         no atom is cut.
@@ -94,7 +94,7 @@ def ranked(totals: Array, table: LossTable, *, depth: float) -> Ranking:
         order = _worst_first(totals, edge)
 
 
-def ranked_with(totals: Array, table: LossTable, loss: Array, *, depth: float) -> tuple[Ranking, Array]:
+def ranked_with(totals: Array, table: Scenarios, loss: Array, *, depth: float) -> tuple[Ranking, Array]:
     """Return the ranking of a table enlarged by one column, and its rows in that order.
 
     The totals are those that a request with the enlarged table would have, to the last bit.
@@ -103,7 +103,7 @@ def ranked_with(totals: Array, table: LossTable, loss: Array, *, depth: float) -
     ----------
     totals : ndarray of shape (n,)
         Row sums of `table`.
-    table : LossTable
+    table : Scenarios
     loss : ndarray of shape (n,)
         The further column.
     depth : float
@@ -128,7 +128,7 @@ def ranked_with(totals: Array, table: LossTable, loss: Array, *, depth: float) -
     return ranking_of(exact[again], order[again], table, tolerance), rows[again]
 
 
-def ranking_of(values: Array, order: Indices, table: LossTable, tolerance: float) -> Ranking:
+def ranking_of(values: Array, order: Indices, table: Scenarios, tolerance: float) -> Ranking:
     """Return the ranking of scenarios that are in order already."""
     ordered = Ordered.of(
         values[None, :],

@@ -53,6 +53,11 @@ class Plan:
         )
         return cls(model, seed, SCRAMBLINGS << exponent, sequences)
 
+    def of_size(self, scenarios: int) -> "Plan":
+        """Return the same plan with another number of scenarios."""
+        make = Plan.quasi_random if self.sobol else Plan.random
+        return make(self.model, seed=self.seed, scenarios=scenarios)
+
     @property
     def block_size(self) -> int:
         """Scenarios of a block."""

@@ -3,9 +3,10 @@
 from collections.abc import Sequence
 from typing import Annotated, Any, Literal, Self
 
-from pydantic import AfterValidator, Field, WithJsonSchema, model_validator
+from pydantic import AfterValidator, Field, GetJsonSchemaHandler, model_validator
 from pydantic.dataclasses import dataclass
-from pydantic_core import PydanticCustomError
+from pydantic.json_schema import JsonSchemaValue
+from pydantic_core import CoreSchema, PydanticCustomError
 
 from service.risk.measures import Measure, Smoothing, Text
 from service.risk.measures.contract import STRICT
@@ -94,7 +95,17 @@ class Candidate:
     """Expected profit as a gain, in currency."""
 
 
-CandidateDocument = Annotated[Any, WithJsonSchema({"$ref": "#/components/schemas/Candidate"})]
+class _DescribedAs:
+    """Gives an annotation the JSON schema of a model that does not validate it."""
+
+    def __init__(self, model: Any) -> None:
+        self._model = model
+
+    def __get_pydantic_json_schema__(self, _schema: CoreSchema, handler: GetJsonSchemaHandler) -> JsonSchemaValue:
+        return handler(self._model.__pydantic_core_schema__)
+
+
+CandidateDocument = Annotated[Any, _DescribedAs(Candidate)]
 """A candidate as sent: each is judged alone, so that a bad one does not spoil the others."""
 
 

@@ -377,10 +377,7 @@ class CandidateResult:
     figures: Annotated[list[CandidateFigures], Field(description="One per measure, in the order asked.")]
     problem: Annotated[
         dict[str, Any] | None,
-        Field(
-            description="Why it was refused, as a problem document; its pointers are into the whole request.",
-            json_schema_extra={"$ref": "#/components/schemas/Problem"},
-        ),
+        Field(description="Why it was refused; null if it was judged."),
     ]
 
 

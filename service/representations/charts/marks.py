@@ -100,7 +100,9 @@ class _Label(NamedTuple):
     words: str
     x: float
     taken: tuple[float, float]
-    """What it covers of its row."""
+    """What it covers of its row, interval and all."""
+    text: tuple[float, float]
+    """What its words cover."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -137,10 +139,10 @@ class Flags:
         room = (self.look.width - EDGE - x if side == "start" else x - EDGE) - BESIDE
         words = shortened(words, room, self.look.size)
         wide = width(words, self.look.size) + BESIDE + 4
-        left, right = (x - 4, x + wide) if side == "start" else (x - wide, x + 4)
+        left, right = text = (x - 4, x + wide) if side == "start" else (x - wide, x + 4)
         if one.lower is not None and one.upper is not None:
             left, right = min(left, self.scale(one.lower) - 4), max(right, self.scale(one.upper) + 4)
-        return _Label(one, row, side, words, x, (left, right))
+        return _Label(one, row, side, words, x, (left, right), text)
 
     @property
     def height(self) -> float:
@@ -170,5 +172,5 @@ def _overlap(one: _Label, other: _Label) -> bool:
 def _faults(labels: Sequence[_Label]) -> tuple[int, int, int]:
     """Return what speaks against an arrangement: texts cut short, texts crossed by lines, rows used."""
     cut = sum(label.words.endswith("…") for label in labels)
-    crossed = sum(one.taken[0] < other.x < one.taken[1] and other.row < one.row for one in labels for other in labels)
+    crossed = sum(one.text[0] < other.x < one.text[1] and other.row < one.row for one in labels for other in labels)
     return cut, crossed, sum(label.row for label in labels)

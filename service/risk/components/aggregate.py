@@ -119,10 +119,10 @@ class AggregateLaw:
     @property
     def statement(self) -> str:
         """The grid and its error in words."""
-        worst = max(self.bounds, key=_width)
         tail = f"; quantiles stop at probability 1 − {FARTHEST:g}"
         if self.stepped:
             return f"the sum stands on multiples of {self.cell:.6g} and is exact on {self.cells} of them{tail}"
+        worst = max(self.bounds, key=_width)
         return (
             f"{self.grids} grid(s) of {self.cells} cells, the first of width {self.cell:.6g}; the quantile at "
             f"{worst.probability:g} lies between {worst.lower:.8g} and {worst.upper:.8g}, and is taken as "

@@ -17,8 +17,10 @@ from service.risk.components.contract import (
     Array,
     Block,
     Component,
+    Exponents,
     FactorSet,
     PreparedComponent,
+    exponent_of,
     refuse,
     tails_of,
     unknown_factors,
@@ -167,6 +169,11 @@ class CompoundComponent(Component):
             amounts = covered(terms.of_claim, self._typical_claims)
             upper, lower = _rate(amounts, upper, growth), _rate(-amounts, lower, growth)
         return terms.year_tails(Tails(claim.upper_index, claim.lower_index, upper, lower))
+
+    def exponents(self, factors: FactorSet, factor: float) -> Exponents:
+        if self.driver is None:
+            return {}
+        return {(self.driver, self.driver): exponent_of(self.tails(factors).times(factor))}
 
     @property
     def _typical_claims(self) -> Array:

@@ -25,6 +25,7 @@ from service.risk.measures.contract import STRICT, Text
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.intp]
+Exponents = dict[tuple[str, str], float]
 
 
 @plain(frozen=True)
@@ -166,6 +167,14 @@ class Component:
         """Return which moments of the loss exist; factors have marginals here."""
         return Tails()
 
+    def exponents(self, factors: FactorSet, factor: float) -> Exponents:  # noqa: ARG002  # members use them
+        """Return how fast `factor` times the loss grows with products of the factors' normal scores far out.
+
+        The coefficients of z_a z_b / 2, ids in order, (a, a) for a square; infinity where an exponential
+        does not keep up. What has draws of its own, or grows more slowly, is left out.
+        """
+        return {}
+
     @property
     def independent(self) -> bool:
         """Whether its loss is independent of the factors and of all other components."""
@@ -174,6 +183,11 @@ class Component:
     def mean(self, factors: FactorSet) -> float | None:  # noqa: ARG002  # members use them
         """Return the expected loss in currency where it has a closed form, else None."""
         return None
+
+
+def exponent_of(tails: Tails) -> float:
+    """Return the coefficient of z²/2 in an amount that is exponential far out: -ln P(Z > z) is about z²/2."""
+    return math.inf if tails.upper_exponential == 0.0 else 1.0 / tails.upper_exponential
 
 
 def unknown_factors(named: Sequence[tuple[str, str]], factors: FactorSet) -> list[Fault]:
@@ -213,10 +227,12 @@ __all__ = [
     "Array",
     "Block",
     "Component",
+    "Exponents",
     "FactorSet",
     "Indices",
     "PreparedComponent",
     "Text",
+    "exponent_of",
     "finite_sum",
     "once",
     "refuse",

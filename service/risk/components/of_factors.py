@@ -15,9 +15,11 @@ from service.risk.components.contract import (
     Array,
     Block,
     Component,
+    Exponents,
     FactorSet,
     Indices,
     PreparedComponent,
+    exponent_of,
     finite_sum,
     once,
     refuse,
@@ -93,6 +95,9 @@ class LinearComponent(Component):
     def tails(self, factors: FactorSet) -> Tails:
         return _linear_tails(self.amounts, factors)
 
+    def exponents(self, factors: FactorSet, factor: float) -> Exponents:
+        return _linear_exponents(self.amounts, factors, factor)
+
     def mean(self, factors: FactorSet) -> float | None:
         return finite_sum(amount * factors.marginal(name).mean for name, amount in self.amounts.items())
 
@@ -113,6 +118,10 @@ def _linear_tails(amounts: dict[str, float], factors: FactorSet) -> Tails:
     for name, amount in amounts.items():
         tails = tails.plus(factors.tails(name).times(amount), independent=factors.independent)
     return tails
+
+
+def _linear_exponents(amounts: dict[str, float], factors: FactorSet, factor: float) -> Exponents:
+    return {(name, name): exponent_of(factors.tails(name).times(factor * amount)) for name, amount in amounts.items()}
 
 
 @plain(frozen=True, slots=True)
@@ -203,6 +212,13 @@ class DeltaGammaComponent(Component):
             tails = tails.plus(_product_tails(first, second, factors).times(half))
         return tails
 
+    def exponents(self, factors: FactorSet, factor: float) -> Exponents:
+        sums = _linear_exponents(self.amounts, factors, factor)
+        for (first, second), half in self.halves.items():
+            for pair, coefficient in _product_exponents(first, second, factors, factor * half).items():
+                sums[pair] = sums.get(pair, 0.0) + coefficient
+        return sums
+
     def mean(self, factors: FactorSet) -> float | None:
         """Return δ′μ + ½Σγ(σ² + μ²); None with a product of two factors, which the copula would decide."""
         terms = [amount * factors.marginal(name).mean for name, amount in self.amounts.items()]
@@ -252,6 +268,18 @@ def _product_rate(first: str, second: str, factors: FactorSet) -> float:
     bounded = int(reaches[1] < reaches[0])
     other = factors.tails((second, first)[bounded])
     return min(other.upper_exponential, other.lower_exponential) / max(reaches[bounded], TINY)
+
+
+def _product_exponents(first: str, second: str, factors: FactorSet, half: float) -> Exponents:
+    """Return the coefficients of half × X_a X_b: half σ_a σ_b (twice that for a square) of two normals."""
+    laws = [factors.marginal(name) for name in (first, second)]
+    if all(isinstance(law, NormalMarginal) for law in laws):
+        coefficient = half * math.prod(law.variance for law in laws) ** 0.5
+        return {(first, second): 2.0 * coefficient if first == second else coefficient}
+    rate = Tails(upper_exponential=_product_rate(first, second, factors)).times(abs(half))
+    bounded = max(abs(end) for end in laws[0].support) < math.inf
+    name = second if bounded else first
+    return {(name, name): exponent_of(rate)}
 
 
 @plain(frozen=True, slots=True)
@@ -345,6 +373,9 @@ class RevaluationGridComponent(Component):
         above = factor.bounded_below().times(right)
         below = factor.bounded_above().times(left)
         return above.plus(below, independent=True)  # never both at once
+
+    def exponents(self, factors: FactorSet, factor: float) -> Exponents:
+        return {(self.factor, self.factor): exponent_of(self.tails(factors).times(factor))}
 
 
 @plain(frozen=True, slots=True)

@@ -1,7 +1,8 @@
 """Portfolio: the components of all sub-portfolios, their signs and covers, put together for blocks of scenarios."""
 
+import math
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
@@ -11,6 +12,7 @@ from service.errors import CallerError, Fault, pointing
 from service.risk.components.contract import (
     Array,
     Component,
+    Exponents,
     FactorSet,
     Indices,
     PreparedComponent,
@@ -20,6 +22,7 @@ from service.risk.components.of_factors import ConstantComponent, LinearComponen
 from service.risk.covers import CoverStep, Tails, check_cover, covered, tails_after
 
 PADDING = 8  # doubles between rows of scratch: rows a power of two apart would share their place in the cache
+MOST_EIGENVALUES = 400  # factors up to which the exponential moment of a normal dependence is judged exactly
 FEW_FACTORS = 0.06  # filled part of the exposure matrix up to which factors are added one by one
 
 
@@ -290,12 +293,79 @@ class Portfolio:
 
     def tails(self) -> list[Tails]:
         """Return which moments of each sub-portfolio's loss exist."""
-        return [terms.tails(self.factors) for terms in self.sub_portfolios]
+        return [self._judged([terms], terms.tails(self.factors)) for terms in self.sub_portfolios]
 
     def total_tails(self) -> Tails:
         """Return which moments of the total loss exist."""
-        parts = [(terms.used, tails) for terms, tails in zip(self.sub_portfolios, self.tails(), strict=True)]
-        return together(parts, self.factors)
+        parts = [(terms.used, terms.tails(self.factors)) for terms in self.sub_portfolios]
+        return self._judged(self.sub_portfolios, together(parts, self.factors))
+
+    def _judged(self, terms: Sequence[SubPortfolioTerms], tails: Tails) -> Tails:
+        """Return the tails with the exponential moment that a normal dependence allows, where that is known."""
+        forms = [exponential_rate(terms, self.factors, sign) for sign in (1.0, -1.0)]
+        upper, lower = forms
+        if upper is None or lower is None:
+            return tails
+        return replace(
+            tails,
+            upper_exponential=max(upper, tails.upper_exponential),
+            lower_exponential=max(lower, tails.lower_exponential),
+        )
+
+
+def exponential_rate(sub_portfolios: Sequence[SubPortfolioTerms], factors: FactorSet, sign: float) -> float | None:
+    """Return up to which t the summed loss (times `sign`) surely has E[exp(tL)] under normal dependence, else None.
+
+    Far out the loss is at most z'Mz/2 in the factors' normal scores z, and E[exp(t z'Mz/2)] is finite if and only
+    if t times the largest eigenvalue of MR is below 1. Independent parts are judged one by one.
+    """
+    sums: Exponents = {}
+    least = math.inf
+    for terms in sub_portfolios:
+        exponents, own = _exponents(terms, factors, sign)
+        least = min(least, own)
+        for pair, coefficient in exponents.items():
+            sums[pair] = sums.get(pair, 0.0) + coefficient
+    if not all(math.isfinite(coefficient) for coefficient in sums.values()):
+        return 0.0
+    names = sorted({name for pair, coefficient in sums.items() if coefficient != 0.0 for name in pair})
+    if not names:
+        return least
+    if len(names) > MOST_EIGENVALUES:
+        return None
+    correlation = np.eye(1) if len(names) == 1 else factors.correlation(factors.columns(names))
+    if correlation is None:
+        return None
+    form = np.zeros((len(names), len(names)))
+    place = {name: number for number, name in enumerate(names)}
+    for (first, second), coefficient in sums.items():
+        if coefficient != 0.0:
+            form[place[first], place[second]] = form[place[second], place[first]] = coefficient
+    largest = float(np.max(np.linalg.eigvals(form @ correlation).real))
+    return min(least, 1.0 / largest) if largest > 0.0 else least
+
+
+def _exponents(terms: SubPortfolioTerms, factors: FactorSet, sign: float) -> tuple[Exponents, float]:
+    """Return the coefficients of a sub-portfolio's loss (times `sign`), and the least rate of its independent parts."""
+    kept = tails_after(terms.cover, Tails(upper_exponential=1.0, lower_exponential=1.0))
+    rate = kept.upper_exponential if sign > 0.0 else kept.lower_exponential
+    sums: Exponents = {}
+    least = math.inf
+    if math.isinf(rate):
+        return sums, least
+    for one in terms.components:
+        if one.independent:
+            own = one.tails(factors).times(sign * terms.factor)
+            least = min(least, own.upper_exponential * rate)
+        for (first, second), coefficient in one.exponents(factors, sign * terms.factor).items():
+            if terms.cover and (first != second or coefficient < 0.0):  # a gain may not come through the cover
+                parts = [(name, name) for name in (first, second) if first != second]
+                size = abs(coefficient)
+            else:
+                parts, size = [(first, second)], coefficient
+            for pair in parts:
+                sums[pair] = sums.get(pair, 0.0) + size / rate
+    return sums, least
 
 
 def _faults(sub_portfolios: Sequence[SubPortfolioTerms], factors: FactorSet) -> list[Fault]:

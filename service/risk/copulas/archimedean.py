@@ -122,9 +122,7 @@ class ArchimedeanSampler:
     repair: Repair | None = None
 
     @classmethod
-    def of(
-        cls, generator: ArchimedeanGenerator, factors: int, *, turned: tuple[int, ...] = ()
-    ) -> "ArchimedeanSampler":
+    def of(cls, generator: ArchimedeanGenerator, factors: int, *, turned: tuple[int, ...] = ()) -> "ArchimedeanSampler":
         """Return the sampler of so many factors."""
         return cls((UniformScores(),) * factors, generator, turned)
 
@@ -143,7 +141,7 @@ class ArchimedeanSampler:
         values = draw.exponentials(len(self.laws))
         for row in values:  # a row fits the cache, and so do all steps on it
             np.log(row, out=row)
-            row -= log_shared
+            np.subtract(row, log_shared, out=row)
             row[...] = self.generator.logits(row)
         for j in self.turned:
             np.negative(values[j], out=values[j])

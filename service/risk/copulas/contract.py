@@ -83,7 +83,9 @@ def grouped(factor_ids: Sequence[str], groups: Sequence[Sequence[str]]) -> list[
             if name not in numbers:
                 close = get_close_matches(name, factor_ids, n=1)
                 hint = f"; did you mean '{close[0]}'?" if close else ""
-                faults.append(Fault(detail=f"there is no factor '{name}'{hint}", code="unknown_factor", pointer=pointer))
+                faults.append(
+                    Fault(detail=f"there is no factor '{name}'{hint}", code="unknown_factor", pointer=pointer)
+                )
             elif name in seen:
                 where = "twice in this group" if seen[name] == g else f"in group {seen[name]} already (from 0)"
                 faults.append(Fault(detail=f"the factor '{name}' is {where}", code="not_allowed", pointer=pointer))
@@ -93,6 +95,8 @@ def grouped(factor_ids: Sequence[str], groups: Sequence[Sequence[str]]) -> list[
     if missing and not faults:
         more = f" and {len(missing) - NAMED} more" if len(missing) > NAMED else ""
         names = ", ".join(f"'{name}'" for name in missing[:NAMED]) + more
-        faults.append(Fault(detail=f"every factor is in one group; in none: {names}", code="missing", pointer="/groups"))
+        faults.append(
+            Fault(detail=f"every factor is in one group; in none: {names}", code="missing", pointer="/groups")
+        )
     refuse(faults)
     return [np.array([numbers[name] for name in names], dtype=np.intp) for names in groups]

@@ -3,6 +3,7 @@
 Logarithms, because at strong dependence such a variable spans hundreds of powers of ten.
 """
 
+from collections.abc import Callable
 from functools import lru_cache
 
 import numpy as np
@@ -13,12 +14,14 @@ from scipy import special
 from service.risk.streams import SMALLEST
 
 Array = NDArray[np.float64]
+Indices = NDArray[np.intp]
 
 HALF_LIFE = np.log(2.0)  # exp(-t) is a half
 SPLIT = 700.0  # exp(-700) and exp(700) are normal binary64 numbers
 WHOLE = 36.0  # logarithm from which every binary64 number is whole
 LISTED = 4096  # values of a Sibuya variable that are looked up; beyond them its tail is a power to 1e-8
-TINY_TIME = -300.0  # logarithm of the time below which tilting changes nothing that can be seen
+MOST_PARTS = 6  # times up to this are cut into parts of at most 1, for which a simple rejection is cheaper
+HALF_NORMAL = np.sqrt(np.pi / 2.0)  # integral of exp(-x^2 / 2) from 0 on
 
 
 def log_one_less_exp(log_t: Array) -> Array:
@@ -76,7 +79,7 @@ def log_sibuya(alpha: float, uniforms: Array) -> Array:
     References
     ----------
     M. Hofert, Efficiently sampling nested Archimedean copulas, Computational Statistics & Data Analysis 55 (2011)
-    57-70, section 3.3.
+    57-70.
     """
     exceeding, logs = _sibuya_table(alpha)
     result = logs.take(exceeding.size - np.searchsorted(exceeding, uniforms, side="right"))
@@ -91,7 +94,8 @@ def log_sibuya(alpha: float, uniforms: Array) -> Array:
 def _sibuya_table(alpha: float) -> tuple[Array, Array]:
     """Return P(V > k) for k from LISTED down to 1, and ln(1), ..., ln(LISTED + 1)."""
     k = np.arange(1.0, LISTED + 2.0)
-    return np.cumprod(1.0 - alpha / k[:-1])[::-1].copy(), np.log(k)
+    exceeding: Array = np.cumprod(1.0 - alpha / k[:-1])[::-1].copy()
+    return exceeding, np.log(k)
 
 
 def log_log_series(theta: float, uniforms: Array, exponentials: Array) -> Array:
@@ -101,8 +105,8 @@ def log_log_series(theta: float, uniforms: Array, exponentials: Array) -> Array:
 
     References
     ----------
-    A. W. Kemp, Efficient generation of logarithmically distributed pseudo-random variables, Applied Statistics 30 (1981)
-    249-253.
+    A. W. Kemp, Efficient generation of logarithmically distributed pseudo-random variables, Applied Statistics 30
+    (1981) 249-253.
     """
     x = theta * uniforms
     log_rate = np.log(-log_one_less_exp(np.log(np.minimum(x, WHOLE)))) - np.maximum(x - WHOLE, 0.0)
@@ -120,7 +124,12 @@ def log_tilted_stable(alpha: float, log_times: Array, generator: Generator) -> A
     log_times : ndarray of shape (n,)
         Logarithm of each variable's time.
     generator : Generator
-        Some ten numbers are drawn for each variable whatever its parameters: rejection, twice.
+        Some ten to fifty numbers are drawn for each variable, whatever its parameters.
+
+    Notes
+    -----
+    Variables of short times are sums of thinned stable ones (Hofert 2011, as `log_sibuya`), others come from a
+    rejection whose cost has a bound.
 
     References
     ----------
@@ -128,70 +137,114 @@ def log_tilted_stable(alpha: float, log_times: Array, generator: Generator) -> A
     Modeling and Computer Simulation 19(4), 2009, article 18.
     """
     result = np.empty_like(log_times)
-    tiny = log_times < TINY_TIME
-    if tiny.any():
-        uniforms, exponentials = stable_draws(int(np.count_nonzero(tiny)), generator)
-        result[tiny] = log_times[tiny] / alpha + log_positive_stable(alpha, uniforms, exponentials)
-    waiting = np.flatnonzero(~tiny)
-    while waiting.size:
-        accepted, values = _tilted_trial(alpha, np.exp(log_times[waiting]), generator)
-        result[waiting[accepted]] = values[accepted]
-        waiting = waiting[~accepted]
+    short = log_times <= np.log(MOST_PARTS)
+    counts = np.maximum(np.ceil(np.exp(log_times[short])), 1.0).astype(np.intp)
+    parts = np.repeat(log_times[short] - np.log(counts), counts)
+    result[short] = log_sums(_until_accepted(_thinned_trial, alpha, parts, generator), counts)
+    result[~short] = _until_accepted(_enclosed_trial, alpha, log_times[~short], generator)
     return result
 
 
-def _tilted_trial(alpha: float, times: Array, generator: Generator) -> tuple[NDArray[np.bool_], Array]:
-    """Make one trial for each variable: whether it is accepted, and the logarithms.
+def log_sums(logs: Array, counts: Indices) -> Array:
+    """Return logarithms of sums of consecutive exp(logs), `counts` (n,) of them each and at least 1."""
+    if not counts.size:
+        return np.empty(0)
+    starts = np.cumsum(counts) - counts
+    largest = np.maximum.reduceat(logs, starts)
+    ratios = np.exp(np.maximum(logs - np.repeat(largest, counts), -SPLIT))
+    return np.asarray(largest + np.log(np.add.reduceat(ratios, starts)))
 
-    The names are those of the paper. With zeta^2 = B(U)/B(0) the density of X given the angle U is proportional to
-    exp(-g(X)), g(X) = h ((1 - alpha) X + alpha X^-b), h = time / zeta^2, in units in which g is least at X = 1. It is
-    enclosed by a half normal below 1, a constant up to 1 + delta and an exponential beyond. The variable is
-    alpha h X^-b.
+
+def _until_accepted(
+    trial: Callable[[float, Array, Generator], tuple[Indices, Array]],
+    alpha: float,
+    log_times: Array,
+    generator: Generator,
+) -> Array:
+    """Repeat the trial for those variables that were not accepted yet."""
+    result = np.empty_like(log_times)
+    waiting = np.arange(log_times.size)
+    while waiting.size:
+        accepted, values = trial(alpha, log_times[waiting], generator)
+        result[waiting[accepted]] = values
+        waiting = np.delete(waiting, accepted)
+    return result
+
+
+def _thinned_trial(alpha: float, log_times: Array, generator: Generator) -> tuple[Indices, Array]:
+    """Draw untilted variables and keep each with probability exp(-V): exp(-time) of them.
+
+    Returns
+    -------
+    ndarray of shape (a,)
+        Which are kept.
+    ndarray of shape (a,)
+        Their logarithms.
     """
+    logs = log_times / alpha + log_positive_stable(alpha, *stable_draws(log_times.size, generator))
+    kept = np.flatnonzero(generator.standard_exponential(logs.size) >= np.exp(np.minimum(logs, SPLIT)))
+    return kept, logs[kept]
+
+
+def _enclosed_trial(alpha: float, log_times: Array, generator: Generator) -> tuple[Indices, Array]:
+    """Make one trial of Devroye's double rejection for each variable, for times not small.
+
+    The variable is alpha h X^-b, b = (1 - alpha) / alpha, h = time / zeta^2, zeta^2 = B(U) / B(0), with an angle U and,
+    given it, an X whose density is proportional to exp(-h ((1 - alpha) X + alpha X^-b)), in units in which its mode
+    is 1. First the angle is drawn below an enclosing function, then X.
+    """
+    times = np.exp(log_times)
     n = times.size
-    half = np.sqrt(np.pi / 2.0)
-    b = (1.0 - alpha) / alpha
     gamma = times * alpha * (1.0 - alpha)
     root = np.sqrt(gamma)
-    xi = ((2.0 + half) * np.sqrt(2.0 * gamma) + 1.0) / np.pi
-    psi = np.exp(-gamma * np.pi**2 / 8.0) * (2.0 + half) * np.sqrt(gamma / np.pi)
+    xi = ((2.0 + HALF_NORMAL) * np.sqrt(2.0) * root + 1.0) / np.pi
+    psi = np.exp(-gamma * np.pi**2 / 8.0) * (2.0 + HALF_NORMAL) * root / np.sqrt(np.pi)
     peaked = gamma >= 1.0
 
-    # the angle, from a mixture of a half normal (or a uniform) and an arch that ends in pi
-    first = np.where(peaked, xi * half / np.maximum(root, 1e-300), xi * np.pi)
-    of_first = generator.random(n) * (first + 2.0 * psi * np.sqrt(np.pi)) < first
+    # a half normal or a uniform, or an arch that ends in pi
+    first = xi * np.where(peaked, HALF_NORMAL / root, np.pi)
+    from_first = generator.random(n) * (first + 2.0 * psi * np.sqrt(np.pi)) < first
     w = generator.random(n)
-    inner = np.where(peaked, np.abs(generator.standard_normal(n)) / np.maximum(root, 1e-300), np.pi * w)
-    u = np.where(of_first, inner, np.pi * (1.0 - w**2))
-    inside = (u > 0.0) & (u < np.pi)
-    u = np.where(inside, u, 1.0)
+    u = np.where(peaked, np.abs(generator.standard_normal(n)) / root, np.pi * w)
+    u = np.where(from_first, u, np.pi * (1.0 - w**2))
+    level = generator.random(n)
+    inside = np.flatnonzero((u > 0.0) & (u < np.pi))
+    u, level, peaked = u[inside], level[inside], peaked[inside]
+    times, gamma, root, xi, psi = times[inside], gamma[inside], root[inside], xi[inside], psi[inside]
     zeta = np.sqrt(_zolotarev(alpha, u))
     z = -1.0 / np.expm1(-np.log1p(alpha * zeta / root) / alpha)
-    enclosing = np.pi * (np.where(peaked, xi * np.exp(-0.5 * gamma * u**2), xi) + psi / np.sqrt(np.pi - u))
-    target = np.exp(times * (1.0 - zeta**-2.0)) * ((1.0 + half) * root / zeta + z)
-    level = generator.random(n) * enclosing
-    inside &= level <= target
-    rest = np.log(np.where(inside, target / np.maximum(level, 1e-300), 1.0))
+    level *= np.pi * (xi * np.where(peaked, np.exp(-0.5 * gamma * u**2), 1.0) + psi / np.sqrt(np.pi - u))
+    target = np.exp(times * (1.0 - zeta**-2.0)) * ((1.0 + HALF_NORMAL) * root / zeta + z)
+    below = np.flatnonzero((level <= target) & (level > 0.0))
 
-    # X given the angle
-    h = times / zeta**2
-    delta = alpha * zeta / root
+    h = times[below] / zeta[below] ** 2
+    rest = np.log(target[below] / level[below])
+    kept, log_x = _given_angle(alpha, h, alpha * zeta[below] / root[below], z[below], rest, generator)
+    return inside[below[kept]], np.log(alpha * h[kept]) - log_x * ((1.0 - alpha) / alpha)
+
+
+def _given_angle(
+    alpha: float, h: Array, delta: Array, z: Array, rest: Array, generator: Generator
+) -> tuple[Indices, Array]:
+    """Draw X below a half normal up to 1, a constant up to 1 + delta and an exponential beyond.
+
+    `rest` is the exponential that the first rejection left over. Returned are those accepted and their ln X.
+    """
     tail = z / ((1.0 - alpha) * h)
-    part = generator.random(n) * (delta * (1.0 + half) + tail)
-    normal, exponential = np.abs(generator.standard_normal(n)), generator.standard_exponential(n)
-    below, beyond = part < delta * half, part >= delta * (1.0 + half)
-    x = np.where(below, 1.0 - delta * normal, 1.0 + delta * generator.random(n))
-    x = np.where(beyond, 1.0 + delta + tail * exponential, x)
-    inside &= x > 0.0
-    log_x = np.log(np.where(inside, x, 1.0))
-    with np.errstate(over="ignore"):  # an x so near 0 is refused
-        height = h * ((1.0 - alpha) * (x - 1.0) + alpha * np.expm1(-b * log_x))
-    height -= np.where(below, 0.5 * normal**2, 0.0) + np.where(beyond, exponential, 0.0)
-    return inside & (height <= rest), np.log(alpha * h) - b * log_x
+    part = generator.random(h.size) * (delta * (1.0 + HALF_NORMAL) + tail)
+    normal, exponential = np.abs(generator.standard_normal(h.size)), generator.standard_exponential(h.size)
+    low, high = part < delta * HALF_NORMAL, part >= delta * (1.0 + HALF_NORMAL)
+    x = np.where(low, 1.0 - delta * normal, 1.0 + delta * generator.random(h.size))
+    x = np.where(high, 1.0 + delta + tail * exponential, x)
+    log_x = np.log(np.maximum(x, np.exp(-SPLIT)))
+    height = h * ((1.0 - alpha) * (x - 1.0) + alpha * np.expm1(np.minimum(log_x * ((alpha - 1.0) / alpha), SPLIT)))
+    height -= np.where(low, 0.5 * normal**2, 0.0) + np.where(high, exponential, 0.0)
+    kept = np.flatnonzero((x > 0.0) & (height <= rest))
+    return kept, log_x[kept]
 
 
 def _zolotarev(alpha: float, angle: Array) -> Array:
-    """Return B(angle) / B(0) of Zolotarev's integral: sinc(u) / (sinc(alpha u)^alpha sinc((1 - alpha) u)^(1 - alpha))."""
+    """Return B(u) / B(0) of Zolotarev's integral: sinc(u) / (sinc(alpha u)^alpha sinc((1 - alpha) u)^(1 - alpha))."""
     u = angle / np.pi
     product = np.sinc(alpha * u) ** alpha * np.sinc((1.0 - alpha) * u) ** (1.0 - alpha)
     return np.asarray(np.sinc(u) / product)

@@ -2,8 +2,8 @@
 
 Given the shared variable V, a factor's uniform is psi(E / V) with an exponential E of its own and psi the Laplace
 transform of V: A. W. Marshall and I. Olkin, Families of multivariate distributions, J. of the American Statistical
-Association 83 (1988) 834-841. Whatever may be large or small is kept as a logarithm, and the uniform as its logit, which
-is found from ln u in the lower tail and from ln(1 - u) in the upper one, never from 1 - u.
+Association 83 (1988) 834-841. Whatever may be large or small is kept as a logarithm, and the uniform as its logit,
+which is found from ln u in the lower tail and from ln(1 - u) in the upper one, never from 1 - u.
 """
 
 from dataclasses import dataclass
@@ -45,7 +45,7 @@ class Clayton:
     """psi(t) = (1 + t)^(-1/theta), theta > 0: V is gamma of shape 1/theta.
 
     V is drawn as a gamma variable of shape 1 + 1/theta times U^theta, which is the same law and has a smooth table for
-    every theta (G. Marsaglia and W. W. Tsang, ACM Trans. Mathematical Software 26, 2000, 363-372, section 6).
+    every theta (G. Marsaglia and W. W. Tsang, ACM Trans. Mathematical Software 26, 2000, 363-372).
     """
 
     theta: float

@@ -14,12 +14,10 @@ A sum of more than 1000 terms is replaced by the (tilted) stable variable that i
 by more than 3e-5.
 """
 
-from collections.abc import Callable
 from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
-from numpy.random import Generator
 from numpy.typing import NDArray
 from scipy import special
 
@@ -27,6 +25,7 @@ from service.risk.copulas.frailties import (
     LISTED,
     log_positive_stable,
     log_sibuya,
+    log_sums,
     log_tilted_stable,
     log_whole,
     stable_draws,
@@ -73,12 +72,13 @@ def log_inner(generator: GeneratorName, outer: float, inner: float, log_outer: A
     few = log_outer <= np.log(MOST_TERMS)
     many = ~few
     counts = np.rint(np.exp(log_outer[few])).astype(np.intp)
+    uniforms = np.maximum(draw.generator.random(int(counts.sum())), SMALLEST)
     if generator == "joe":
-        result[few] = _log_sums(counts, lambda uniforms: log_sibuya(alpha, uniforms), draw.generator)
+        result[few] = log_sums(log_sibuya(alpha, uniforms), counts)
         stable = log_positive_stable(alpha, *stable_draws(int(many.sum()), draw.generator))
         result[many] = log_outer[many] / alpha + stable
     else:
-        result[few] = _log_sums(counts, TiltedSibuya.of(outer, inner), draw.generator)
+        result[few] = log_sums(TiltedSibuya.of(outer, inner)(uniforms), counts)
         times = log_outer[many] - log_expm1(outer)
         result[many] = log_expm1(inner) + log_tilted_stable(alpha, times, draw.generator)
     return result
@@ -143,16 +143,3 @@ def _tilted_sibuya(outer: float, inner: float) -> TiltedSibuya:
 def _log_rate(theta: float) -> float:
     """Return ln(-ln(1 - exp(-theta)))."""
     return float(-theta if theta > FALL else np.log(-np.log1p(-np.exp(-theta))))
-
-
-def _log_sums(counts: NDArray[np.intp], log_values: Callable[[Array], Array], generator: Generator) -> Array:
-    """Return the logarithms of sums of `counts` (n,) independent variables each, counts at least 1."""
-    if not counts.size:
-        return np.empty(0)
-    ends = np.cumsum(counts)
-    starts = ends - counts
-    logs = log_values(np.maximum(generator.random(int(ends[-1])), SMALLEST))
-    largest = np.maximum.reduceat(logs, starts)
-    logs -= np.repeat(largest, counts)
-    return np.asarray(largest + np.log(np.add.reduceat(np.exp(np.maximum(logs, -745.0)), starts)))
-

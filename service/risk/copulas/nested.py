@@ -2,12 +2,11 @@
 
 from collections.abc import Sequence
 from dataclasses import dataclass as plain
-from typing import Annotated
+from typing import Annotated, Literal
 
 import numpy as np
 from pydantic import Field
 from pydantic.dataclasses import dataclass
-from typing import Literal
 
 from service.errors import Fault
 from service.risk.copulas.contract import Array, CopulaFamily, FactorIds, Indices, Sampler, grouped
@@ -44,7 +43,7 @@ class NestedCopula(CopulaFamily):
     generator: GeneratorName
     """The copula of any pair of factors."""
     theta: Theta
-    """Strength of the dependence across groups, without unit: above 0 for clayton and frank, 1 or more for gumbel and joe."""
+    """Strength of the dependence across groups, without unit: above 0; for gumbel and joe 1 or more."""
     groups: Annotated[list[NestedGroup], Field(min_length=1)]
     """Each factor is in one group."""
 

@@ -19,11 +19,7 @@ from service.risk.correlation.roots import Root
 Correlation = TypeAliasType(
     "Correlation",
     Annotated[
-        MatrixCorrelation
-        | KendallTauCorrelation
-        | SpearmanRhoCorrelation
-        | LoadingsCorrelation
-        | EqualCorrelation,
+        MatrixCorrelation | KendallTauCorrelation | SpearmanRhoCorrelation | LoadingsCorrelation | EqualCorrelation,
         Discriminator("kind"),
     ],
 )

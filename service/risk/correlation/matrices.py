@@ -69,7 +69,7 @@ class _Whole(CorrelationForm):
         given = self.correlations(np.clip((values + values.T) / 2.0, -1.0, 1.0), mixing)
         np.fill_diagonal(given, 1.0)
         try:
-            return DenseRoot(np.linalg.cholesky(given), triangular=True)
+            return DenseRoot(np.asarray(np.linalg.cholesky(given)), triangular=True)
         except np.linalg.LinAlgError:
             eigenvalues, vectors = np.linalg.eigh(given)
         smallest = float(eigenvalues[0])
@@ -104,7 +104,7 @@ class KendallTauCorrelation(_Whole):
     """Kendall's tau of each pair, from which the copula's correlation is sin(π·tau/2).
 
     The relation holds for every elliptical copula: H. B. Fang, K. T. Fang and S. Kotz, J. of Multivariate Analysis
-    82 (2002) 1-16, theorem 3.1. Of a grouped Student t copula it holds within a group and nearly between groups.
+    82 (2002) 1-16. Of a grouped Student t copula it holds within a group and nearly between groups.
     """
 
     kind: Literal["kendall_tau"]
@@ -122,7 +122,7 @@ class SpearmanRhoCorrelation(_Whole):
     """Spearman's rho of each pair; the copula's correlation is 2·sin(π·rho/6) if it is Gaussian.
 
     The closed form is of K. Pearson (1907); see W. H. Kruskal, J. of the American Statistical Association 53 (1958)
-    814-861, page 827. For a Student t copula the relation is solved numerically.
+    814-861. For a Student t copula the relation is solved numerically.
     """
 
     kind: Literal["spearman_rho"]
@@ -138,31 +138,31 @@ class SpearmanRhoCorrelation(_Whole):
 
 
 def _wrong_entries(values: Array) -> list[Fault]:
-    """Return faults of the entries of a square matrix: its range, diagonal and symmetry."""
-    found = [
-        (
-            np.abs(values) > 1.0 + SLACK,
-            "out_of_range",
-            lambda i, j: f"{values[i, j]:.15g} is not between -1 and 1",
-        ),
+    """Return faults of the entries of a square matrix: of its range, else of its diagonal, else of its symmetry."""
+    for wrong, code, words in (
+        (np.abs(values) > 1.0 + SLACK, "out_of_range", "{here} is not between -1 and 1"),
         (
             np.diag(np.abs(np.diag(values) - 1.0) > SLACK),
             NOT_A_CORRELATION,
-            lambda i, j: f"the diagonal of a correlation matrix is 1, not {values[i, j]:.15g}",
+            "the diagonal of a correlation matrix is 1, not {here}",
         ),
         (
             np.tril(np.abs(values - values.T) > SLACK),
             NOT_A_CORRELATION,
-            lambda i, j: f"the matrix is not symmetric: {values[i, j]:.15g} here, {values[j, i]:.15g} across",
+            "the matrix is not symmetric: {here} here and {across} across the diagonal",
         ),
-    ]
-    faults: list[Fault] = []
-    for wrong, code, words in found:
-        for i, j in np.argwhere(wrong)[:MOST_FAULTS]:
-            faults.append(Fault(detail=words(i, j), code=code, pointer=f"/values/{i}/{j}"))
-        if faults:
-            break
-    return faults
+    ):
+        places = np.argwhere(wrong)[:MOST_FAULTS].tolist()
+        if places:
+            return [
+                Fault(
+                    detail=words.format(here=repr(float(values[i, j])), across=repr(float(values[j, i]))),
+                    code=code,
+                    pointer=f"/values/{i}/{j}",
+                )
+                for i, j in places
+            ]
+    return []
 
 
 def _from_spectrum(eigenvalues: Array, vectors: Array) -> Array:

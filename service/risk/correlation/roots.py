@@ -1,6 +1,7 @@
 """Roots of a correlation matrix: from independent normals to correlated ones."""
 
 from dataclasses import dataclass, field
+from itertools import pairwise
 from typing import Protocol
 
 import numpy as np
@@ -55,7 +56,7 @@ class DenseRoot:
         k, r = self.values.shape
         cuts = [k * i // STRIPES for i in range(STRIPES + 1)] if self.triangular and k > STRIPES else [0, k]
         stripes = []
-        for first, last in zip(cuts[:-1], cuts[1:], strict=True):
+        for first, last in pairwise(cuts):
             part = self.values[first:last, : last if self.triangular else r]
             stripes.append((first, last, np.ascontiguousarray(part)))
         object.__setattr__(self, "stripes", tuple(stripes))

@@ -1,7 +1,7 @@
 """What a marginal is: the law of one factor or loss, known by its quantile function and both of its tails."""
 
 import math
-from typing import Annotated, Self
+from typing import TYPE_CHECKING, Annotated, Self
 
 import numpy as np
 from pydantic import AfterValidator, ConfigDict, Field, ValidationInfo, model_validator
@@ -37,7 +37,8 @@ def _above_zero(value: float, info: ValidationInfo) -> None:
         raise PydanticCustomError(OUT_OF_RANGE, "{name} is above 0, not {value}", context)
 
 
-def _between(value: float, info: ValidationInfo, least: float, most: float) -> float:
+def between(value: float, info: ValidationInfo, least: float, most: float) -> float:
+    """Return `value` if it lies between two positive bounds."""
     _above_zero(value, info)
     if least <= value <= most:
         return value
@@ -46,11 +47,11 @@ def _between(value: float, info: ValidationInfo, least: float, most: float) -> f
 
 
 def _scale(value: float, info: ValidationInfo) -> float:
-    return _between(value, info, SMALLEST, LARGEST)
+    return between(value, info, SMALLEST, LARGEST)
 
 
 def _shape(value: float, info: ValidationInfo) -> float:
-    return _between(value, info, 1.0 / EXTREME_SHAPE, EXTREME_SHAPE)
+    return between(value, info, 1.0 / EXTREME_SHAPE, EXTREME_SHAPE)
 
 
 Amount = Annotated[float, AfterValidator(_amount), Field(json_schema_extra={"minimum": -LARGEST, "maximum": LARGEST})]
@@ -131,10 +132,11 @@ class MarginalLaw:
         """The lowest and the highest value."""
         raise NotImplementedError
 
-    @property
-    def mean(self) -> float:
-        """E X; infinity where E|X| is infinite."""
-        raise NotImplementedError
+    if TYPE_CHECKING:  # some members have a field of this name, which a property of their base would hide
+
+        @property
+        def mean(self) -> float:
+            """E X; infinity where E|X| is infinite."""
 
     @property
     def variance(self) -> float:

@@ -29,7 +29,7 @@ class NormalMarginal(MarginalLaw):
 
     family: Literal["normal"]
     """Tag of this law."""
-    mean: Amount  # type: ignore[assignment]  # the figure of this name is the parameter itself
+    mean: Amount
     """Mean, in the unit of the factor."""
     standard_deviation: Scale
     """Standard deviation, above 0, in the unit of the factor."""

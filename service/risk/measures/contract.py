@@ -125,6 +125,11 @@ class RiskMeasure:
         return Needs(upper_index=1.0, error_index=2.0)
 
     @property
+    def tail_share(self) -> float | None:
+        """Share of the mass beyond the quantile that it looks at; None for a measure of the whole distribution."""
+        return None
+
+    @property
     def carrier_factor(self) -> float:
         """What the effective number of carriers is multiplied by before an error is trusted."""
         return 1.0

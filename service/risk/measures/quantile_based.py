@@ -77,6 +77,10 @@ class _Quantile(LocatedMeasure):
         """Mass above the quantile."""
         raise NotImplementedError
 
+    @property
+    def tail_share(self) -> float:
+        return float(self.share)
+
     def depth(self, scenarios: int, *, contributions: bool) -> float:
         return 1.0 if self.above == "mean" else window_depth(float(self.share), scenarios, smoothed=contributions)
 
@@ -229,6 +233,10 @@ class ExpectedShortfall(LocatedMeasure):
         """Mass of the tail."""
         return 1 - decimal(self.level)
 
+    @property
+    def tail_share(self) -> float:
+        return float(self.share)
+
     def depth(self, scenarios: int, *, contributions: bool) -> float:
         return 1.0 if self.above == "mean" else window_depth(float(self.share), scenarios, smoothed=contributions)
 
@@ -321,6 +329,10 @@ class RangeValueAtRisk(LocatedMeasure):
     def shares(self) -> tuple[Fraction, Fraction]:
         """Mass above the lower and above the upper level."""
         return 1 - decimal(self.lower_level), 1 - decimal(self.upper_level)
+
+    @property
+    def tail_share(self) -> float:
+        return float(next(share for share in reversed(self.shares) if share > 0))
 
     def depth(self, scenarios: int, *, contributions: bool) -> float:
         return 1.0 if self.above == "mean" else window_depth(float(self.shares[0]), scenarios, smoothed=contributions)

@@ -207,6 +207,12 @@ def test_sobol_points_drive_the_factors_and_nothing_else():
     assert losses[:, 4].mean() == pytest.approx(6.0, rel=3e-3)
 
 
+def test_the_grid_of_a_driven_sum_is_stated():
+    [(code, detail, pointer)] = model(*ALL).notes
+    assert (code, pointer) == ("driven_sum", "/sub_portfolios/4/components/0")
+    assert "lies between" in detail
+
+
 def test_models_without_factors():
     found = FactorModel.of([("unused", NORMAL)], INDEPENDENT, [SubPortfolioTerms("a", (own(NORMAL),))])
     assert_mean(blocks(found)[:, 0], 0.5)
@@ -249,15 +255,39 @@ def test_a_limited_layer_on_a_law_without_a_mean_has_one():
     )
 
 
+def rate(*terms, dependence=INDEPENDENT, law=LIGHT):
+    return FactorModel.of((("a", law), ("b", law)), dependence, terms).existence()[1].upper_exponential
+
+
+A, B = (SubPortfolioTerms(name, (linear(**{name: 1.0}),)) for name in "ab")
+
+
 def test_exponential_moments_of_totals():
-    """Exponential losses of mean 3: independent ones have E exp(tL) for t < 1/3, perfectly dependent ones for half."""
-    factors = (("a", LIGHT), ("b", LIGHT))
-    terms = [SubPortfolioTerms(name, (linear(**{name: 1.0}),)) for name in "ab"]
-    together = FactorModel.of(factors, INDEPENDENT, terms).existence()[1]
-    assert together.upper_exponential == pytest.approx(1.0 / 3.0)
-    assert FactorModel.of(factors, GAUSSIAN, terms).existence()[1].upper_exponential == pytest.approx(1.0 / 6.0)
-    with_own = [*terms, SubPortfolioTerms("own", (own(LIGHT),))]
-    assert FactorModel.of(factors, GAUSSIAN, with_own).existence()[1].upper_exponential == pytest.approx(1.0 / 6.0)
+    """Exponential losses of mean 3: independent ones have E exp(tL) for t < 1/3, perfectly dependent ones for half.
+
+    With normal scores of correlation ρ the density of (x, y) falls as exp(-(x + y - 2ρ√(xy))/(3(1 - ρ²))), least
+    at x = y, so t < 1/(3(1 + ρ)). Under other copulas the perfectly dependent case is the bound.
+    """
+    assert rate(A, B) == pytest.approx(1.0 / 3.0)
+    assert rate(A, B, dependence=GAUSSIAN) == pytest.approx(1.0 / (3.0 * 1.4))
+    assert rate(A, B, dependence=STUDENT) == pytest.approx(1.0 / 6.0)
+    own_draws = SubPortfolioTerms("own", (own(ExponentialMarginal(family="exponential", mean=30.0)),))
+    assert rate(A, B, own_draws, dependence=STUDENT) == pytest.approx(1.0 / 30.0)
+    half = SubPortfolioTerms("b", B.components, cover=(QuotaShareCover(kind="quota_share", retained=0.5),))
+    assert rate(half) == pytest.approx(2.0 / 3.0)
+    assert rate(SubPortfolioTerms("b", B.components, cover=(CapCover(kind="cap", amount=9.0),))) == math.inf
+    assert rate(A, law=LOGNORMAL) == 0.0
+
+
+def test_exponential_moments_of_quadratic_forms():
+    """E exp(t x'Γx/2) of x ~ N(0, Σ) is det(1 - tΓΣ)^(-1/2): finite up to the largest eigenvalue of ΓΣ."""
+    form = np.array([[2.0, -1.5], [-1.5, 0.5]])
+    pairs = [FactorPair(first=n, second=m, amount=form["ab".index(n), "ab".index(m)]) for n, m in ("aa", "ab", "bb")]
+    terms = SubPortfolioTerms("q", (DeltaGammaComponent(kind="delta_gamma", gamma=pairs),))
+    largest = max(np.linalg.eigvals(form @ (4.0 * np.array([[1.0, 0.4], [0.4, 1.0]]))))
+    assert rate(terms, dependence=GAUSSIAN, law=NORMAL) == pytest.approx(1.0 / largest)
+    covered = SubPortfolioTerms("q", terms.components, cover=(FloorCover(kind="floor", amount=0.0),))
+    assert rate(covered, dependence=GAUSSIAN, law=NORMAL) < 1.0 / largest  # gains are no longer there to offset
 
 
 def test_all_that_does_not_fit_is_listed():

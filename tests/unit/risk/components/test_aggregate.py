@@ -88,6 +88,7 @@ def test_a_tail_beyond_all_grids_is_refused():
 def test_claims_that_are_always_zero():
     law = aggregate_law(geometric(1.0), ClaimSizes(np.zeros_like, lambda _: 0.0))
     np.testing.assert_array_equal(law.quantile(np.array([0.0, 0.5, 1.0])), 0.0)
+    assert "is exact" in law.statement
 
 
 def test_a_lattice_law_is_exact():

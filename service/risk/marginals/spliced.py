@@ -1,0 +1,203 @@
+"""The spliced marginal: one law up to a threshold, another beyond it."""
+
+import math
+from functools import cached_property
+from typing import Annotated, Literal
+
+import numpy as np
+from pydantic import Discriminator
+from pydantic.dataclasses import dataclass
+from typing_extensions import TypeAliasType
+
+from service.risk.marginals.bounded import BetaMarginal, UniformMarginal
+from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, refusal
+from service.risk.marginals.discrete import DiscreteMarginal, EmpiricalMarginal, PointMarginal
+from service.risk.marginals.extremes import (
+    GeneralizedExtremeValueMarginal,
+    GeneralizedParetoMarginal,
+    GumbelMarginal,
+)
+from service.risk.marginals.inverse_gaussian import InverseGaussianMarginal
+from service.risk.marginals.moments import Array
+from service.risk.marginals.positive import (
+    ExponentialMarginal,
+    GammaMarginal,
+    LognormalByMeanMarginal,
+    LognormalMarginal,
+    WeibullMarginal,
+)
+from service.risk.marginals.power_tails import BurrXIIMarginal, LomaxMarginal, ParetoMarginal
+from service.risk.marginals.two_sided import LogisticMarginal, NormalMarginal, StudentTMarginal
+from service.risk.score_tables import Atoms, Piece
+
+LEAST_MASS = 1e-200  # of what is left of the body and of the tail; less has too few digits to be scaled up
+
+SplicePart = TypeAliasType(
+    "SplicePart",
+    Annotated[
+        NormalMarginal
+        | StudentTMarginal
+        | LognormalMarginal
+        | LognormalByMeanMarginal
+        | GammaMarginal
+        | WeibullMarginal
+        | ParetoMarginal
+        | LomaxMarginal
+        | GeneralizedParetoMarginal
+        | GumbelMarginal
+        | GeneralizedExtremeValueMarginal
+        | ExponentialMarginal
+        | UniformMarginal
+        | BetaMarginal
+        | InverseGaussianMarginal
+        | BurrXIIMarginal
+        | LogisticMarginal
+        | EmpiricalMarginal
+        | PointMarginal,
+        Discriminator("family"),
+    ],
+)
+"""Any marginal that is not spliced itself, told apart by `family`."""
+
+
+
+
+def _probability(value: float) -> float:
+    if 0.0 < value < 1.0:
+        return value
+    raise PydanticCustomError("out_of_range", "tail_probability is above 0 and below 1, not {value}", {"value": f"{value:.6g}"})
+
+
+Probability = Annotated[
+    float,
+    AfterValidator(_probability),
+    Field(json_schema_extra={"exclusiveMinimum": 0.0, "exclusiveMaximum": 1.0}),
+]
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class SplicedMarginal(MarginalLaw):
+    """A body cut to values up to the threshold and a tail cut to values beyond it, with a probability each."""
+
+    family: Literal["spliced"]
+    """Tag of this law."""
+    body: SplicePart
+    """Law of the values up to the threshold, given that they are."""
+    tail: SplicePart
+    """Law of the values beyond the threshold, given that they are."""
+    threshold: Amount
+    """Where the tail begins, in the unit of the factor."""
+    tail_probability: Probability
+    """Probability of a value beyond the threshold, above 0 and below 1."""
+
+    def _check(self) -> None:
+        for name, part in (("body", self.body), ("tail", self.tail)):
+            low, high = part.support
+            gap = isinstance(part, DiscreteMarginal)  # its values are apart anyway
+            if (name == "body" and not self.threshold <= high and not gap) or self.threshold < low and not (gap and name == "tail"):
+                detail = "threshold {threshold} lies outside the values of the {name}, which go from {low} to {high}"
+                raise refusal(detail, threshold=self.threshold, name=name, low=low, high=high)
+        if not self._kept >= LEAST_MASS:
+            raise refusal("the body has no probability at or below threshold {threshold}", threshold=self.threshold)
+        if not self._left >= LEAST_MASS:
+            raise refusal("the tail has no probability beyond threshold {threshold}", threshold=self.threshold)
+
+    @cached_property
+    def _kept(self) -> float:
+        """Probability that the body keeps."""
+        return float(self.body.below(np.array(self.threshold)))
+
+    @cached_property
+    def _left(self) -> float:
+        """Probability that the tail keeps."""
+        return float(self.tail.beyond(np.array(self.threshold)))
+
+    @property
+    def _body_probability(self) -> float:
+        return 1.0 - self.tail_probability
+
+    def _quantile(self, lower: Array, upper: Array) -> Array:
+        mass, rest = self.tail_probability, self._body_probability
+        in_tail = (upper < mass) if mass <= rest else (lower > rest)
+        cut = float(self.body.beyond(np.array(self.threshold)))
+        share = np.clip(np.where(in_tail, 1.0, lower / rest), 0.0, 1.0)
+        left = np.clip(np.where(in_tail, 0.0, (upper - mass) / rest), 0.0, 1.0)
+        body = np.minimum(self.body.quantile(share * self._kept, cut + left * self._kept), self.threshold)
+        start = float(self.tail.below(np.array(self.threshold)))
+        left = np.clip(np.where(in_tail, upper / mass, 1.0), 0.0, 1.0)
+        share = np.clip(np.where(in_tail, (lower - rest) / mass, 0.0), 0.0, 1.0)
+        tail = np.maximum(self.tail.quantile(start + share * self._left, left * self._left), self.threshold)
+        return np.where(in_tail, tail, body)
+
+    def below(self, values: Array) -> Array:
+        values = np.asarray(values, dtype=np.float64)
+        return np.where(values <= self.threshold, self._body_below(values), 1.0 - self._tail_beyond(values))
+
+    def beyond(self, values: Array) -> Array:
+        values = np.asarray(values, dtype=np.float64)
+        mass, rest = self.tail_probability, self._body_probability
+        at = np.minimum(values, self.threshold)
+        near = self.body.beyond(at) - self.body.beyond(np.array(self.threshold))
+        far = self._kept - self.body.below(at)
+        between = rest * np.where(self.body.below(at) < 0.5, far, near) / self._kept  # noqa: PLR2004  # the median
+        return np.where(values <= self.threshold, np.minimum(mass + between, 1.0), self._tail_beyond(values))
+
+    def _body_below(self, values: Array) -> Array:
+        return self._body_probability * self.body.below(np.minimum(values, self.threshold)) / self._kept
+
+    def _tail_beyond(self, values: Array) -> Array:
+        return self.tail_probability * self.tail.beyond(np.maximum(values, self.threshold)) / self._left
+
+    @property
+    def support(self) -> tuple[float, float]:
+        return (self.body.support[0], self.tail.support[1])
+
+    @property
+    def mean(self) -> float:
+        return self._centre[0]
+
+    @property
+    def variance(self) -> float:
+        return self._centre[1]
+
+    @cached_property
+    def _centre(self) -> tuple[float, float]:
+        """Mean and variance, from the moments of both parts about the threshold."""
+        index = min(self.upper_tail_index, self.lower_tail_index)
+        if index <= 1.0:
+            return math.inf, math.inf
+        deficit, excess = self.body.deficit_moments(self.threshold), self.tail.excess_moments(self.threshold)
+        below, beyond = self._body_probability / self._kept, self.tail_probability / self._left
+        first = beyond * excess[0] - below * deficit[0]
+        if index <= 2.0:  # noqa: PLR2004  # the second moment
+            return self.threshold + first, math.inf
+        return self.threshold + first, below * deficit[1] + beyond * excess[1] - first * first
+
+    def _limited_mean(self, limit: float) -> float:
+        weight = self._body_probability / self._kept
+        if limit <= self.threshold:
+            return limit - weight * (limit - self.body.limited_mean(limit))
+        start = self.threshold - weight * (self.threshold - self.body.limited_mean(self.threshold))
+        gained = self.tail.limited_mean(limit) - self.tail.limited_mean(self.threshold)
+        return start + self.tail_probability / self._left * gained
+
+    @property
+    def upper_tail_index(self) -> float:
+        return self.tail.upper_tail_index
+
+    @property
+    def lower_tail_index(self) -> float:
+        return self.body.lower_tail_index
+
+    @property
+    def exponential_moment(self) -> float:
+        return self.tail.exponential_moment
+
+    @property
+    def lower_exponential_moment(self) -> float:
+        return self.body.lower_exponential_moment
+
+    @property
+    def pieces(self) -> tuple[Piece, ...]:
+        rest, mass = self._body_probability, self.tail_probability
+        return (Piece(rest, mass, self._body_atoms), Piece(1.0, 0.0, self._tail_atoms))
