@@ -30,8 +30,10 @@ from service.schemas.results import (
     StandAloneFigure,
     SubPortfolioLoss,
     Tail,
+    TailFactor,
     TailScenario,
 )
+from service.sources import FactorMean
 
 WORST_LISTED = 10
 USUAL_LEVEL = 0.99  # of the tail detail where no measure has a level
@@ -47,16 +49,23 @@ class Notes:
         Number of scenarios of the request.
     pointed : bool
         Whether the request is a JSON document that can be pointed into.
+    made : dict
+        The notes by code and measure.
     """
 
     scenarios: int
     pointed: bool
-    _made: dict[tuple[str, int | None], Note] = field(default_factory=dict)
+    made: dict[tuple[str, int | None], Note] = field(default_factory=dict)
 
     def add(self, code: NoteCode, detail: str, number: int | None = None) -> None:
         """Make a note, of measure `number` if given."""
         pointer = f"/measures/{number}" if self.pointed and number is not None else None
-        self._made.setdefault((code, number), Note(code, detail, pointer))
+        self.made.setdefault((code, number), Note(code, detail, pointer))
+
+    def say(self, code: str, detail: str, pointer: str | None) -> None:
+        """Make a note on something else than a measure."""
+        known: NoteCode = code  # type: ignore[assignment]  # the sources know the codes of notes
+        self.made.setdefault((pointer or code, None), Note(known, detail, pointer if self.pointed else None))
 
     def of_estimates(self, number: int, measure: RiskMeasure, estimates: Estimates) -> None:
         """Make the notes that the remarks on `estimates` call for."""
@@ -64,9 +73,14 @@ class Notes:
             known: NoteCode = code  # type: ignore[assignment]  # the remarks are codes of notes
             self.add(known, self._detail(code, measure, estimates), number)
 
+    def take(self, others: "Notes") -> None:
+        """Add the notes of others that are not made yet."""
+        for key, note in others.made.items():
+            self.made.setdefault(key, note)
+
     def listed(self) -> list[Note]:
         """Return the notes made, in the order of the measures."""
-        return list(self._made.values())
+        return list(self.made.values())
 
     def _detail(self, code: str, measure: RiskMeasure, estimates: Estimates) -> str:
         tail = estimates.tail_scenarios
@@ -289,18 +303,20 @@ def candidate_figures(
     )
 
 
-def tail(frame: Frame, measures: Sequence[RiskMeasure]) -> Tail:
-    """Return the worst scenarios of the total."""
+def tail_level(measures: Sequence[RiskMeasure]) -> float:
+    """Return the level of the first measure that has one."""
+    return next((level for one in measures if (level := one.parameters.get("level")) is not None), USUAL_LEVEL)
+
+
+def tail(frame: Frame, level: float, factors: Sequence[FactorMean]) -> Tail:
+    """Return the worst scenarios of the total, and the factors beyond its quantile at `level`."""
     table, totals = frame.table, frame.totals
-    level = next((level for one in measures if (level := one.parameters.get("level")) is not None), USUAL_LEVEL)
     worst = np.argsort(-totals, kind="stable")[:WORST_LISTED]
+    rows = table.losses.take(worst, axis=0)
     listed = []
-    for number in worst.tolist():
-        losses = [
-            SubPortfolioLoss(one.id, value)
-            for one, value in zip(table.sub_portfolios, table.losses[number].tolist(), strict=True)
-        ]
+    for number, row in zip(worst.tolist(), rows.tolist(), strict=True):
+        losses = [SubPortfolioLoss(one.id, value) for one, value in zip(table.sub_portfolios, row, strict=True)]
         probability = 1.0 / table.scenarios if table.probabilities is None else float(table.probabilities[number])
         label = None if table.scenario_ids is None else table.scenario_ids[number]
         listed.append(TailScenario(number, label, probability, float(totals[number]), losses))
-    return Tail(level, listed, [])
+    return Tail(level, listed, [TailFactor(one.id, one.mean, one.normal_score) for one in factors])

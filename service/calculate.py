@@ -1,13 +1,12 @@
 """From a request to its answer, one class per calculation; HTTP and terminal share it."""
 
+import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import replace
-from functools import cached_property
 from typing import Any
 
 import numpy as np
-import orjson
 from numpy.typing import NDArray
 from pydantic import TypeAdapter, ValidationError
 
@@ -22,20 +21,25 @@ from service.errors import (
     LimitExceeded,
     LossesChanged,
     TailraceError,
+    TooLong,
     pointing,
 )
 from service.executors import Work
+from service.frames import Demand, framed
 from service.intake import Intake
-from service.provenance import PREFIX, document_digest, losses_digest
-from service.resolve import loss_table
+from service.payloads import json_text
+from service.provenance import PREFIX, document_digest
 from service.risk import figures, increments
-from service.risk.allocation import RULES, Case
+from service.risk.allocation import RULES, Case, Contributions
 from service.risk.frame import Frame
 from service.risk.increments import Base
-from service.risk.loss_table import Group, LossTable, check_magnitude, groups_of
-from service.risk.measures import RiskMeasure
+from service.risk.loss_table import Group, check_magnitude, groups_of
+from service.risk.measures import RangeValueAtRisk, RiskMeasure
+from service.risk.uncertainty import Estimates
+from service.schemas.losses import FactorLosses, ScenarioLosses
 from service.schemas.requests import AllocationsRequest, Candidate, IncrementsRequest, MeasuresRequest
 from service.schemas.results import (
+    AllocationResult,
     AllocationsAnswer,
     BaseFigure,
     CandidateFigures,
@@ -45,16 +49,20 @@ from service.schemas.results import (
     Labels,
     MeasuresAnswer,
     Provenance,
+    Tail,
 )
 from service.settings import Settings, variable
+from service.sources import Source, source_of
 from service.validation import echo, refusal
 
-METHOD = "given scenarios, exact weighted order statistics"
+LARGEST = int(sys.float_info.max)
 SEED_DIGITS = 13  # hexadecimal digits of the losses digest that seed what is drawn: 52 bits
 
 Answer = MeasuresAnswer | AllocationsAnswer | IncrementsAnswer
 Describe = Callable[[TailraceError], dict[str, Any]]
 
+MEAN = RangeValueAtRisk(kind="range_value_at_risk", lower_level=0.0, upper_level=1.0)
+"""The expected loss as a measure, for what its error needs."""
 CANDIDATE: TypeAdapter[Candidate] = TypeAdapter(Candidate)
 
 
@@ -76,19 +84,19 @@ def answer(intake: Intake, work: Work, settings: Settings, describe: Describe) -
     TailraceError
         Where a figure does not exist, a limit is passed, time is up or the caller has gone.
     """
-    table = loss_table(intake.request.losses, intake.table, part=intake.part, settings=settings)
+    source = source_of(intake, work, settings)
     request = intake.request
     if isinstance(request, IncrementsRequest):
-        return _Increments(intake, request, table, work, describe).answer()
-    groups = _groups(request, table, settings)
+        return _Increments(intake, request, source, work, settings, describe).answer()
+    groups = _groups(request, source, settings)
     if isinstance(request, AllocationsRequest):
-        return _Allocations(intake, request, table, groups, work).answer()
-    return _Measures(intake, request, table, groups, work).answer()
+        return _Allocations(intake, request, source, groups, work, settings).answer()
+    return _Measures(intake, request, source, groups, work, settings).answer()
 
 
-def _groups(request: MeasuresRequest, table: LossTable, settings: Settings) -> tuple[Group, ...]:
+def _groups(request: MeasuresRequest, source: Source, settings: Settings) -> tuple[Group, ...]:
     with pointing("/group_by"):
-        groups = groups_of(table.sub_portfolios, request.group_by)
+        groups = groups_of(source.sub_portfolios, request.group_by)
         if len(groups) > settings.max_groups:
             detail = f"{len(groups)} groups are more than the {settings.max_groups} allowed here"
             name = "max_groups"
@@ -108,40 +116,45 @@ def placed(intake: Intake) -> Iterator[None]:
 
 
 def _placed(fault: Fault, intake: Intake) -> Fault:
-    if fault.pointer is None:
+    number = (fault.pointer or "").removeprefix("/")
+    if not number.isdigit():
         return fault
-    if intake.part is not None:
-        return replace(fault, pointer=None, part=intake.part, row=int(fault.pointer.strip("/")) + 1)
-    rows = intake.request.losses.values is not None and intake.request.losses.layout == "by_scenario"
-    return fault.beneath("/losses/values") if rows else replace(fault, pointer="/losses")
+    losses = intake.request.losses
+    if isinstance(losses, ScenarioLosses):
+        if intake.part is not None:
+            return replace(fault, pointer=None, part=intake.part, row=int(number) + 1)
+        if losses.values is not None and losses.layout == "by_scenario":
+            return fault.beneath("/losses/values")
+    return replace(fault, pointer="/losses")
 
 
 class _Calculation:
     """What all calculations on a frame share."""
 
-    def __init__(self, intake: Intake, frame: Frame) -> None:
-        self.intake, self.frame = intake, frame
-        self.coverage = intake.request.interval_coverage
-        self.notes = Notes(frame.scenarios, pointed=intake.part != "body")
-        if not frame.table.sampled:
+    def __init__(self, intake: Intake, source: Source, demand: Demand, work: Work, settings: Settings) -> None:
+        losses = intake.request.losses
+        stop = losses.simulation.stop_when if isinstance(losses, FactorLosses) else None
+        with placed(intake):
+            self.made = framed(source, demand, stop, work, settings)
+        self.intake, self.source, self.frame = intake, source, self.made.frame
+        self.coverage = demand.coverage
+        self.notes = Notes(self.frame.scenarios, pointed=intake.part != "body")
+        for code, detail, pointer in self.made.notes:
+            self.notes.say(code, detail, pointer)
+        if source.table is not None and not source.table.sampled:
             self.notes.add("population", "the scenarios are the whole distribution: no figure has a sampling error")
-
-    @cached_property
-    def losses_digest(self) -> str:
-        """The digest of the losses."""
-        table = self.frame.table
-        ids = [one.id for one in table.sub_portfolios]
-        return losses_digest(ids, table.losses, table.probabilities, self.frame.effort)
 
     def total(self, number: int, measure: RiskMeasure) -> Figure:
         """Return the figure of the total, with its notes."""
-        estimates = figures.total(self.frame, measure, self.coverage)
+        estimates = self.made.estimated(measure, "total", lambda frame: figures.total(frame, measure, self.coverage))
         self.notes.of_estimates(number, measure, estimates)
         return figure_list(estimates, self.coverage)[0]
 
     def alone(self, number: int, measure: RiskMeasure) -> list[Figure]:
         """Return the stand-alone figures, with their notes."""
-        estimates = figures.stand_alone(self.frame, measure, self.coverage)
+        estimates = self.made.estimated(
+            measure, "alone", lambda frame: figures.stand_alone(frame, measure, self.coverage)
+        )
         self.notes.of_estimates(number, measure, estimates)
         return figure_list(estimates, self.coverage)
 
@@ -154,34 +167,46 @@ class _Calculation:
             "notes": self.notes.listed(),
             "provenance": Provenance(
                 service_version=__version__,
-                request_digest=document_digest(canonical_request(self.intake, self.frame.table, self.losses_digest)),
-                losses_digest=self.losses_digest,
-                method=METHOD,
-                seed=None,
+                request_digest=document_digest(canonical_request(self.intake, self.source)),
+                losses_digest=self.source.digest,
+                method=self.source.method,
+                seed=self.source.seed,
                 scenarios=self.frame.scenarios,
             ),
         }
 
     def shared(self, request: MeasuresRequest) -> dict[str, Any]:
         """Return what measures and allocations hold besides their results."""
-        expected = figures.expected_loss(self.frame, self.coverage)
+        expected = self.made.estimated(MEAN, "total", lambda frame: figures.expected_loss(frame, self.coverage))
         return {
             "expected_loss": figure_list(expected, self.coverage)[0],
             "scenarios": self.frame.scenarios,
-            "tail": answers.tail(self.frame, request.measures) if request.tail_detail else None,
+            "tail": self._tail(request) if request.tail_detail else None,
             **self.record(),
         }
+
+    def _tail(self, request: MeasuresRequest) -> Tail:
+        """Return the worst scenarios, and what the factors are in the tail."""
+        level = answers.tail_level(request.measures)
+        numbers, weights = figures.tail_scenarios(self.frame, level)
+        source = replace(self.source, plan=self.made.plan)
+        return answers.tail(self.frame, level, source.factor_means(numbers, weights))
 
 
 class _Measures(_Calculation):
     """`POST /v1/measures`."""
 
     def __init__(
-        self, intake: Intake, request: MeasuresRequest, table: LossTable, groups: tuple[Group, ...], work: Work
+        self,
+        intake: Intake,
+        request: MeasuresRequest,
+        source: Source,
+        groups: tuple[Group, ...],
+        work: Work,
+        settings: Settings,
     ) -> None:
-        with placed(intake):
-            frame = Frame.of(table, groups, request.measures, work, stand_alone=request.include_stand_alone)
-        super().__init__(intake, frame)
+        demand = Demand(request.measures, request.interval_coverage, groups, request.include_stand_alone)
+        super().__init__(intake, source, demand, work, settings)
         self.request = request
 
     def answer(self) -> MeasuresAnswer:
@@ -198,14 +223,25 @@ class _Allocations(_Calculation):
     """`POST /v1/allocations`."""
 
     def __init__(
-        self, intake: Intake, request: AllocationsRequest, table: LossTable, groups: tuple[Group, ...], work: Work
+        self,
+        intake: Intake,
+        request: AllocationsRequest,
+        source: Source,
+        groups: tuple[Group, ...],
+        work: Work,
+        settings: Settings,
     ) -> None:
         measures: list[RiskMeasure] = list(request.measures)
         if request.capital_measure is not None:
             measures.append(request.capital_measure)
-        with placed(intake):
-            frame = Frame.of(table, groups, measures, work, stand_alone=request.include_stand_alone)
-        super().__init__(intake, frame)
+        demand = Demand(
+            measures,
+            request.interval_coverage,
+            groups,
+            request.include_stand_alone,
+            all_losses=request.rules != ["euler"],
+        )
+        super().__init__(intake, source, demand, work, settings)
         self.request = request
 
     def answer(self) -> AllocationsAnswer:
@@ -215,13 +251,29 @@ class _Allocations(_Calculation):
             with pointing(f"/measures/{number}"):
                 total = self.total(number, measure)
                 alone = self.alone(number, measure) if self.request.include_stand_alone else None
-                for rule in self.request.rules:
-                    split = RULES[rule](self._case(measure))
-                    self.notes.of_estimates(number, measure, split.figures)
-                    parts = figure_list(split.figures, self.coverage)
-                    head = (measure.name, rule)
-                    results.append(answers.allocation_result(head, number, total, split, parts, alone, of, self.notes))
+                results += [self._split(number, measure, rule, total, alone, of) for rule in self.request.rules]
         return AllocationsAnswer(allocations=results, **self.shared(self.request))
+
+    def _split(  # each is made once for all rules
+        self,
+        number: int,
+        measure: RiskMeasure,
+        rule: str,
+        total: Figure,
+        alone: list[Figure] | None,
+        of: answers.Shared,
+    ) -> AllocationResult:
+        """Return one measure split by one rule."""
+        splits: list[Contributions] = []
+
+        def split(frame: Frame) -> Estimates:
+            splits.append(RULES[rule](self._case(frame, measure)))
+            return splits[-1].figures
+
+        estimates = self.made.estimated(measure, "parts", split)
+        self.notes.of_estimates(number, measure, estimates)
+        parts = figure_list(estimates, self.coverage)
+        return answers.allocation_result((measure.name, rule), number, total, splits[0], parts, alone, of, self.notes)
 
     def _capital(self) -> float | None:
         if self.request.capital_measure is None:
@@ -230,13 +282,13 @@ class _Allocations(_Calculation):
             estimates = figures.total(self.frame, self.request.capital_measure, self.coverage)
             return figure_list(estimates, self.coverage)[0].value
 
-    def _case(self, measure: RiskMeasure) -> Case:
+    def _case(self, frame: Frame, measure: RiskMeasure) -> Case:
         return Case(
-            frame=self.frame,
+            frame=frame,
             measure=measure,
             coverage=self.coverage,
             smoothing=self.request.smoothing,
-            seed=int(self.losses_digest.removeprefix(PREFIX)[:SEED_DIGITS], 16),
+            seed=int(self.source.digest.removeprefix(PREFIX)[:SEED_DIGITS], 16),
         )
 
 
@@ -244,31 +296,40 @@ class _Increments(_Calculation):
     """`POST /v1/increments`."""
 
     def __init__(
-        self, intake: Intake, request: IncrementsRequest, table: LossTable, work: Work, describe: Describe
+        self,
+        intake: Intake,
+        request: IncrementsRequest,
+        source: Source,
+        work: Work,
+        settings: Settings,
+        describe: Describe,
     ) -> None:
-        with placed(intake):
-            frame = Frame.of(table, (), request.measures, work, stand_alone=False)
-        super().__init__(intake, frame)
+        if request.base_digest not in (None, source.digest):
+            detail = f"the losses have the digest {source.digest}, not the one given"
+            raise LossesChanged.at("/base_digest", detail)
+        demand = Demand(request.measures, request.interval_coverage, stand_alone=False, all_losses=True)
+        super().__init__(intake, source, demand, work, settings)
         self.request, self.describe = request, describe
-        self.ids = [one.id for one in table.sub_portfolios]
+        self.ids = [one.id for one in source.sub_portfolios]
 
     def answer(self) -> IncrementsAnswer:
-        if self.request.base_digest not in (None, self.losses_digest):
-            detail = f"the losses have the digest {self.losses_digest}, not the one given"
-            raise LossesChanged.at("/base_digest", detail)
         bases, totals = [], []
         for number, measure in enumerate(self.request.measures):
             with pointing(f"/measures/{number}"):
                 totals.append(BaseFigure(measure.name, self.total(number, measure)))
                 bases.append(increments.base_of(self.frame, measure))
-        results = self.frame.effort.map(
+        judged = self.frame.effort.map(
             lambda number: self._candidate(number, bases), range(len(self.request.candidates))
         )
+        results = [result for result, _ in judged]
+        for _, notes in judged:  # in the order of the candidates, whichever was ready first
+            self.notes.take(notes)
         refused = sum(one.status == "refused" for one in results)
         return IncrementsAnswer(base=totals, candidates=results, refused=refused, **self.record())
 
-    def _candidate(self, number: int, bases: list[Base]) -> CandidateResult:
-        """Return what one candidate changes, or its problem."""
+    def _candidate(self, number: int, bases: list[Base]) -> tuple[CandidateResult, Notes]:
+        """Return what one candidate changes, or its problem; several are judged at the same time."""
+        notes = Notes(self.frame.scenarios, pointed=self.notes.pointed)
         document = self.request.candidates[number]
         self.frame.effort.checkpoint(number / len(self.request.candidates))
         name = document.get("id") if isinstance(document, dict) else None
@@ -277,15 +338,18 @@ class _Increments(_Calculation):
                 candidate = self._read(number, document)
                 with pointing("/values"):
                     loss = self._loss(document["values"])
-                parts = [self._figures(candidate, base, loss, measure) for measure, base in enumerate(bases)]
+                parts = [self._figures(candidate, base, loss, measure, notes) for measure, base in enumerate(bases)]
+        except TooLong:
+            raise
         except CallerError as error:
-            return CandidateResult(name if isinstance(name, str) else None, "refused", [], self.describe(error))
-        return CandidateResult(candidate.id, "ok", parts, None)
+            known = name if isinstance(name, str) else None
+            return CandidateResult(known, "refused", [], self.describe(error)), notes
+        return CandidateResult(candidate.id, "ok", parts, None), notes
 
     def _read(self, number: int, document: Any) -> Candidate:
         shell = document | {"values": [0.0]} if isinstance(document, dict) and "values" in document else document
         try:
-            candidate = CANDIDATE.validate_json(orjson.dumps(shell))
+            candidate = CANDIDATE.validate_json(json_text(shell))
         except ValidationError as error:
             raise refusal(error, shell, Candidate) from None
         earlier = [one.get("id") for one in self.request.candidates[:number] if isinstance(one, dict)]
@@ -299,7 +363,7 @@ class _Increments(_Calculation):
             count = f"{len(values)} values are" if isinstance(values, list) else "no list is"
             detail = f"{count} given, but the book has {self.frame.scenarios} scenarios"
             raise InvalidValue.at("", detail, code="wrong_count")
-        wrong = next((number for number, value in enumerate(values) if type(value) not in (int, float)), None)
+        wrong = next((number for number, value in enumerate(values) if not _is_number(value)), None)
         loss = np.array(values if wrong is None else values[:wrong], dtype=np.float64) + 0.0
         if wrong is None and not np.isfinite(loss).all():
             wrong = int(np.argmin(np.isfinite(loss)))
@@ -308,10 +372,17 @@ class _Increments(_Calculation):
         check_magnitude(self.frame.totals + loss)
         return loss
 
-    def _figures(self, candidate: Candidate, base: Base, loss: NDArray[np.float64], number: int) -> CandidateFigures:
+    def _figures(
+        self, candidate: Candidate, base: Base, loss: NDArray[np.float64], number: int, notes: Notes
+    ) -> CandidateFigures:
         increment = increments.increment_of(self.frame, base, loss, self.coverage)
         for estimates in (increment.increment, increment.contribution, increment.stand_alone):
-            self.notes.of_estimates(number, base.measure, estimates)
+            notes.of_estimates(number, base.measure, estimates)
         return answers.candidate_figures(
-            self.request, candidate.expected_profit, number, base, increment, self.ids, self.notes
+            self.request, candidate.expected_profit, number, base, increment, self.ids, notes
         )
+
+
+def _is_number(value: Any) -> bool:
+    """Return whether a decoded JSON value is a number that binary64 can hold, or its infinity."""
+    return type(value) is float or (type(value) is int and abs(value) <= LARGEST)

@@ -5,33 +5,33 @@ from dataclasses import asdict
 from typing import Any
 
 from service.intake import Intake
-from service.risk.loss_table import LossTable
 from service.risk.measures import RiskMeasure
+from service.schemas.losses import ScenarioLosses
 from service.schemas.requests import AllocationsRequest, IncrementsRequest, MeasuresRequest
+from service.sources import Source
 
 
-def canonical_request(intake: Intake, table: LossTable, digest: str) -> dict[str, Any]:
+def canonical_request(intake: Intake, source: Source) -> dict[str, Any]:
     """Return the canonical form of a request, for its digest.
 
     Parameters
     ----------
     intake : Intake
-    table : LossTable
-    digest : str
-        Of the losses.
+    source : Source
+        What its losses were resolved to.
     """
     request = intake.request
     losses = request.losses
     document: dict[str, Any] = {
         "calculation": intake.calculation,
         "losses": {
-            "digest": digest,
+            "digest": source.digest,
             "sub_portfolios": [
                 {"attributes": one.attributes, "expected_profit": one.expected_profit, "id": one.id}
-                for one in table.sub_portfolios
+                for one in source.sub_portfolios
             ],
-            "scenarios_are": losses.scenarios_are,
-            "scenario_ids": table.scenario_ids,
+            "scenarios_are": losses.scenarios_are if isinstance(losses, ScenarioLosses) else None,
+            "scenario_ids": None if source.table is None else source.table.scenario_ids,
             "currency": losses.currency,
             "valuation_date": losses.valuation_date,
             "horizon": losses.horizon,

@@ -5,14 +5,13 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
-import orjson
 from numpy.typing import NDArray
 from pydantic import TypeAdapter, ValidationError
 
 from service import payloads, query
 from service.errors import Fault, InvalidValue, UnsupportedMediaType, pointing
 from service.payloads import Sheet
-from service.schemas.losses import ScenarioLosses
+from service.schemas.losses import FactorLosses, HistoryLosses, Losses, ScenarioLosses
 from service.schemas.requests import AllocationsRequest, IncrementsRequest, MeasuresRequest
 from service.settings import Settings
 from service.validation import refusal
@@ -42,15 +41,15 @@ class Intake:
     calculation : str
         `measures`, `allocations` or `increments`.
     request : MeasuresRequest or AllocationsRequest
-    table : ndarray of shape (rows, columns) or Sheet
-        The numbers as they were sent: bare, or with a header.
+    table : ndarray of shape (rows, columns), Sheet or None
+        The numbers as they were sent: bare, or with a header; None where the losses have no table apart.
     part : str or None
         Where a table with a header stands: `body` or `table`.
     """
 
     calculation: str
     request: Request
-    table: NDArray[np.float64] | Sheet
+    table: NDArray[np.float64] | Sheet | None
     part: str | None = None
 
 
@@ -97,24 +96,30 @@ def read(
 def _json_body(calculation: str, body: bytes, settings: Settings) -> Intake:
     envelope = payloads.split_envelope(body, max_bytes=settings.max_envelope_bytes)
     request = _validated(calculation, envelope.document, envelope.text)
-    losses = request.losses
+    return Intake(calculation, request, _table(request.losses, envelope, settings))
+
+
+def _table(losses: Losses, envelope: payloads.Envelope, settings: Settings) -> NDArray[np.float64] | None:
+    """Return the table that stands in the JSON itself; None where there is none to be decoded."""
+    if isinstance(losses, FactorLosses):
+        return None
     if losses.part is not None:
         detail = "part says that the table is another part of a multipart request, but the body is JSON alone"
         raise InvalidValue.at("/losses/part", detail)
     if losses.packed is not None and envelope.packed is not None:
         packed = losses.packed
         with pointing("/losses/packed"):
-            table = payloads.unpack(
+            return payloads.unpack(
                 envelope.packed,
                 dtype=packed.dtype,
                 rows=packed.rows,
                 columns=packed.columns,
                 max_cells=settings.max_cells,
             )
-    else:
-        with pointing("/losses/values"):
-            table = payloads.rows_from_json(envelope.table or b"", max_cells=settings.max_cells)
-    return Intake(calculation, request, table)
+    if isinstance(losses, HistoryLosses):
+        return None
+    with pointing("/losses/values"):
+        return payloads.rows_from_json(envelope.table or b"", max_cells=settings.max_cells)
 
 
 def read_parts(
@@ -140,7 +145,7 @@ def read_parts(
     """
     envelope = payloads.split_envelope(request, max_bytes=settings.max_envelope_bytes)
     model = _validated(calculation, envelope.document, envelope.text)
-    if model.losses.part is None:
+    if isinstance(model.losses, FactorLosses) or model.losses.part is None:
         detail = 'a request of two parts says "part": "table" where its losses are, and holds no other table'
         raise InvalidValue.at("/losses", detail)
     return Intake(calculation, model, _sheet(model.losses, table, media_type, TABLE_PART, settings), TABLE_PART)
@@ -154,21 +159,27 @@ def _table_body(
         raise UnsupportedMediaType(detail, faults=[Fault(detail=detail, code="media_type", header="Content-Type")])
     document = query.table_request(parameters, calculation)
     try:
-        request = _validated(calculation, document, orjson.dumps(document))
+        request = _validated(calculation, document, payloads.json_text(document))
     except InvalidValue as error:
         error.faults = tuple(
             replace(fault, pointer=None, parameter=query.parameter_at(fault.pointer or "")) for fault in error.faults
         )
         raise
+    if isinstance(request.losses, FactorLosses):
+        raise TypeError("a table body is a table of scenarios")
     return Intake(calculation, request, _sheet(request.losses, body, media_type, BODY_PART, settings), BODY_PART)
 
 
-def _sheet(losses: ScenarioLosses, data: bytes | memoryview, media_type: str, part: str, settings: Settings) -> Sheet:
+def _sheet(
+    losses: ScenarioLosses | HistoryLosses, data: bytes | memoryview, media_type: str, part: str, settings: Settings
+) -> Sheet:
     """Return the table with a header that `data` holds."""
     reader = payloads.TABLE_READERS[media_type]
-    texts = [] if losses.scenario_id_column is None else [losses.scenario_id_column]
+    given = losses if isinstance(losses, ScenarioLosses) else None
+    texts = [given.scenario_id_column] if given is not None and given.scenario_id_column is not None else []
+    ignored = given.ignore_columns or () if given is not None else ()
     try:
-        return reader(data, text_columns=texts, ignore=losses.ignore_columns or (), max_cells=settings.max_cells)
+        return reader(data, text_columns=texts, ignore=ignored, max_cells=settings.max_cells)
     except InvalidValue as error:
         error.faults = tuple(replace(fault, part=part) for fault in error.faults)
         raise
@@ -177,7 +188,7 @@ def _sheet(losses: ScenarioLosses, data: bytes | memoryview, media_type: str, pa
 def _validated(calculation: str, document: dict[str, Any], text: bytes) -> Request:
     """Return the model of a document; `null` in an optional field means absent."""
     if b"null" in text:
-        text = orjson.dumps(_without_nulls(document))
+        text = payloads.json_text(_without_nulls(document))
     try:
         request: Request = ADAPTERS[calculation].validate_json(text)
     except ValidationError as error:

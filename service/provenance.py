@@ -1,6 +1,7 @@
 """Canonical forms and their digests: the same numbers have the same digest however they were sent."""
 
 import hashlib
+import json
 import sys
 from collections.abc import Callable, Iterable, Sequence
 from typing import Any, Protocol
@@ -55,7 +56,10 @@ def document_digest(document: dict[str, Any]) -> str:
 
 def canonical(document: dict[str, Any]) -> bytes:
     """Return a JSON document in one form: sorted names, no white space, shortest numbers, UTF-8."""
-    return orjson.dumps(document, option=orjson.OPT_SORT_KEYS)
+    try:
+        return orjson.dumps(document, option=orjson.OPT_SORT_KEYS)
+    except TypeError:  # a whole number beyond 64 bits, in a candidate that was refused for it
+        return json.dumps(document, sort_keys=True, separators=(",", ":")).encode()
 
 
 def _piece_digest(piece: memoryview) -> bytes:

@@ -12,6 +12,7 @@ from service.payloads.arrow_table import table_from_arrow
 from service.payloads.csv_table import table_from_csv
 from service.payloads.envelope import Envelope, split_envelope
 from service.payloads.json_table import rows_from_json
+from service.payloads.json_text import json_text
 from service.payloads.media_types import ARROW, CSV, PARQUET
 from service.payloads.multipart import Parts, split_multipart
 from service.payloads.packed import unpack
@@ -27,6 +28,7 @@ __all__ = [
     "Parts",
     "Sheet",
     "TableReader",
+    "json_text",
     "rows_from_json",
     "split_envelope",
     "split_multipart",

@@ -53,7 +53,9 @@ def _sound(books: Sequence[BookHead], root: str) -> str:
 
 def _row(book: BookHead, root: str) -> list[Cell]:
     about = [book.reference, book.valuation_date, book.currency and f"amounts in {book.currency}"]
-    forms = "&nbsp;".join(link(book_path(root, book.name, f"allocations.{form}"), form.upper()) for form in ("csv", "json"))
+    forms = "&nbsp;".join(
+        link(book_path(root, book.name, f"allocations.{form}"), form.upper()) for form in ("csv", "json")
+    )
     return [
         Cell(f'<a href="{escape(book_path(root, book.name, "report"))}">{name(book.name)}, report</a>'),
         Cell(", ".join(name(words) for words in about if words) or "–", "words"),

@@ -9,6 +9,7 @@ from urllib.parse import quote
 
 from service.representations.charts.canvas import DARK, LIGHT, dark_style
 
+SHORT = 25  # rows of a table that paper does not break
 INKS = ("ink", "soft", "line", "page")  # that pages share with the pictures in them
 
 
@@ -19,10 +20,10 @@ def _inks(palette: Mapping[str, str]) -> str:
 STYLE = (
     f":root{{{_inks(LIGHT)}"
     """--link:#0b57a4;--shade:#f1f4f7;--warn:#8f2d0c;
-color-scheme:light dark;font:16px/1.5 "Liberation Sans",Arial,Helvetica,sans-serif}
+color-scheme:light dark;font:16px/1.5 "Liberation Sans",Arial,Helvetica,"DejaVu Sans Condensed",sans-serif}
 *{box-sizing:border-box}
 body{margin:0;background:var(--page);color:var(--ink);overflow-wrap:break-word}
-header,main,footer{max-width:60rem;margin:0 auto;padding:0 1.2rem}
+header,main,footer{max-width:64rem;margin:0 auto;padding:0 1.2rem}
 header{padding-top:1rem}footer{padding-bottom:2rem;color:var(--soft);font-size:.9rem}
 nav ul{list-style:none;display:flex;flex-wrap:wrap;gap:.2rem 1.2rem;margin:0;padding:0;font-size:.95rem}
 a{color:var(--link)}a:focus-visible,[tabindex]:focus-visible{outline:3px solid var(--link);outline-offset:2px}
@@ -38,22 +39,24 @@ p,ul,dl{margin:.5rem 0}.soft{color:var(--soft)}.caution{border-left:4px solid va
 figure{margin:1rem 0}figcaption{color:var(--soft);font-size:.95rem}
 .picture{display:block;width:100%;height:auto;max-width:760px}.phone{display:none}
 .scroll{overflow-x:auto;margin:.8rem 0}
-table{border-collapse:collapse;font-size:.92rem;font-variant-numeric:tabular-nums}
+table{border-collapse:collapse;font-size:.9rem;font-variant-numeric:tabular-nums}
 caption{text-align:left;font-weight:bold;padding:.3rem 0}
 caption span{font-weight:normal;color:var(--soft)}
-th,td{padding:.32rem .7rem;text-align:right;vertical-align:top;border-bottom:1px solid var(--line)}
+th,td{padding:.32rem .6rem;text-align:right;vertical-align:top;border-bottom:1px solid var(--line)}
 thead th{vertical-align:bottom;white-space:normal!important;border-bottom:2px solid var(--soft);font-weight:600}
 th.text,td.text{text-align:left}td.words{text-align:left;min-width:14rem}
-tbody th,tfoot th{text-align:left;font-weight:normal;min-width:10.5rem;max-width:18rem;overflow-wrap:anywhere;
+tbody th,tfoot th{text-align:left;font-weight:normal;min-width:9rem;max-width:18rem;overflow-wrap:anywhere;
 position:sticky;left:0;background:var(--page)}
 tfoot th,tfoot td{font-weight:600;border-top:2px solid var(--soft)}.number{white-space:nowrap}
-dt{font-weight:600;margin-top:.5rem}dd{margin:0;overflow-wrap:anywhere}
+dl{display:grid;grid-template-columns:max-content 1fr;gap:.2rem 1.2rem}
+dt{font-weight:600}dd{margin:0 0 .3rem;overflow-wrap:anywhere}
 code,pre{font-family:"Liberation Mono",ui-monospace,Consolas,monospace;font-size:.9rem}
 code{overflow-wrap:anywhere}pre{background:var(--shade);border:1px solid var(--line);padding:.7rem;overflow-x:auto}
-.damaged{color:var(--warn);font-weight:600}
+pre.wrap{white-space:pre-wrap;overflow-wrap:anywhere}.damaged{color:var(--warn);font-weight:600}
 @media screen and (max-width:40rem){
 .desk{display:none}.phone{display:block}header,main,footer{padding-left:.9rem;padding-right:.9rem}
 h1{font-size:1.45rem}th,td{padding:.3rem .45rem}tbody th,tfoot th{min-width:7.5rem;max-width:9rem}
+td.words{min-width:12rem}dl{display:block}
 }
 @media screen and (prefers-color-scheme:dark){
 """
@@ -69,8 +72,10 @@ header,.skip{display:none}header,main,footer{max-width:none;padding:0}a{color:in
 h2{margin-top:1.4rem}h1,h2,h3,caption{break-after:avoid}p{orphans:3;widows:3}
 figure,.card,tr{break-inside:avoid}thead{display:table-header-group}tfoot{display:table-row-group}
 .scroll{overflow:visible}table{font-size:8.5pt;width:100%}th,td{padding:.18rem .4rem}
-tbody th,tfoot th{position:static;min-width:7rem}.card,pre{background:none}pre{white-space:pre-wrap}.figure{font-size:15pt}
-.picture{max-width:100%;max-height:245mm}
+tbody th,tfoot th{position:static;min-width:7rem}.card,pre{background:none}pre{white-space:pre-wrap}
+.figure{font-size:15pt}.cards{grid-template-columns:repeat(3,1fr)}.allocation{break-before:page}
+.short{break-inside:avoid}thead{break-after:avoid}
+.picture{max-width:100%;max-height:215mm}
 }
 """
 )
@@ -163,12 +168,13 @@ def table(
     columns = "".join(
         f'<th scope="col" class="{"number" if head.kind == "number" else "text"}">{head.html}</th>' for head in heads
     )
-    body = "".join(f"<tr>{_cells(row)}</tr>\n" for row in rows)
+    lines = [f"<tr>{_cells(row)}</tr>\n" for row in rows]
+    length = "short" if len(lines) <= SHORT else "long"
     feet = "" if foot is None else f"<tfoot><tr>{_cells(foot)}</tr></tfoot>"
     small = f" <span>{escape(unit)}</span>" if unit else ""
     return (
-        f'<div class="scroll" role="region" tabindex="0" aria-label="{escape(caption)}"><table>'
-        f"<caption>{escape(caption)}{small}</caption>\n<thead><tr>{columns}</tr></thead>\n<tbody>\n{body}</tbody>"
+        f'<div class="scroll {length}" role="region" tabindex="0" aria-label="{escape(caption)}"><table>'
+        f"<caption>{escape(caption)}{small}</caption>\n<thead><tr>{columns}</tr></thead>\n<tbody>\n{''.join(lines)}</tbody>"
         f"{feet}</table></div>\n"
     )
 

@@ -202,10 +202,8 @@ class _Report:
         for attribute in dict.fromkeys(one.attribute for one in result.groups):
             groups = [one for one in result.groups if one.attribute == attribute]
             tables.append(self._parts(f"By {attribute}", attribute, result, groups))
-        return (
-            f"<section><h2>{name(title[:1].upper() + title[1:])}</h2>\n<p>{escape(' '.join(filter(None, words)))}</p>\n"
-            f"{picture}{''.join(tables)}</section>\n"
-        )
+        heading = f"<h2>{name(title[:1].upper() + title[1:])}</h2>\n<p>{escape(' '.join(filter(None, words)))}</p>\n"
+        return f'<section class="allocation">{heading}{picture}{"".join(tables)}</section>\n'
 
     def _parts(self, caption: str, head: str, result: Allocation, parts: Sequence[Part]) -> str:
         """Return the table of sub-portfolios or of one attribute's groups, largest contribution first."""
@@ -259,7 +257,7 @@ class _Report:
             cells = [
                 [
                     Cell(name(one.id)),
-                    Cell(Amounts.of([one.mean], None).text(one.mean)),
+                    Cell(Amounts.of([one.mean], None, significant=4).text(one.mean)),
                     Cell(f"{one.normal_score:z.2f}"),
                 ]
                 for one in tail.factors

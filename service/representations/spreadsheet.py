@@ -119,20 +119,25 @@ def xml_formulas(base_url: str, book: BookHead) -> dict[str, str]:
 
 def power_query(base_url: str, book: BookHead) -> str:
     """Return a query in M that loads the table of contributions, numbers read as in English wherever it runs."""
-    columns = ", ".join(f'{{"{column}", type number}}' for column in NUMBER_COLUMNS)
+    columns = ",\n".join(f'            {{"{column}", type number}}' for column in NUMBER_COLUMNS)
     path = book_path("", book.name, "allocations.csv").removeprefix("/")
     return (
         "let\n"
         "    Answer = Web.Contents(\n"
         f'        "{_typed(base_url)}",\n'
-        f'        [RelativePath = "{_typed(path)}", Query = [measure = "expected_shortfall", level = "0.99"]]\n'
+        "        [\n"
+        f'            RelativePath = "{_typed(path)}",\n'
+        '            Query = [measure = "expected_shortfall", level = "0.99"]\n'
+        "        ]\n"
         "    ),\n"
         "    Rows = Csv.Document(\n"
         '        Answer, [Delimiter = ",", Encoding = 65001, QuoteStyle = QuoteStyle.Csv]\n'
         "    ),\n"
         "    Named = Table.PromoteHeaders(Rows, [PromoteAllScalars = true]),\n"
         "    Numbers = Table.TransformColumnTypes(\n"
-        f'        Named, {{{columns}}}, "en-US"\n'
+        "        Named,\n"
+        f"        {{\n{columns}\n        }},\n"
+        '        "en-US"\n'
         "    )\n"
         "in\n"
         "    Numbers\n"
@@ -154,18 +159,17 @@ def _xpath(words: str) -> str:
     return f"concat({pieces})"
 
 
-def _code(words: str) -> str:
-    return f"<pre><code>{escape(words)}</code></pre>\n"
+def _code(words: str, kind: str = "wrap") -> str:
+    return f'<pre class="{kind}"><code>{escape(words)}</code></pre>\n'
 
 
 def _one(base_url: str, book: BookHead) -> str:
-    rows = [[Cell(escape(language)), Cell(f"<code>{escape(formula)}</code>", "words")]
-            for language, formula in cell_formulas(base_url, book).items()]  # fmt: skip
+    formulas = "".join(f"<h3>{words}</h3>\n{_code(cell)}" for words, cell in cell_formulas(base_url, book).items())
     return (
-        "<section><h2>One figure in a cell</h2>\n<p>This address answers exactly one number, unrounded, with a decimal "
-        f"point:</p>\n{_code(cell_address(base_url, book))}"
-        + table("The same as a formula", [Cell("spreadsheet", "text"), Cell("formula", "words")], rows)
-        + "<p>LibreOffice Calc takes semicolons in every language. NUMBERVALUE is needed everywhere: WEBSERVICE "
+        "<section><h2>One figure in a cell</h2>\n<p>This address answers exactly one number, unrounded, with a "
+        f"decimal point:</p>\n{_code(cell_address(base_url, book))}<p>As a formula it is, by the language and the "
+        f"separators of the spreadsheet:</p>\n{formulas}"
+        "<p>LibreOffice Calc takes semicolons in every language. NUMBERVALUE is needed everywhere: WEBSERVICE "
         "answers text, and where the decimal sign is a comma that text is not a number.</p>\n"
         "<p><code>of</code> is <code>total</code>, <code>stand_alone</code>, <code>contribution</code>, "
         "<code>share</code> or <code>expected_loss</code>; <code>field</code> is <code>value</code>, "
@@ -206,9 +210,9 @@ def _linked(base_url: str, book: BookHead) -> str:
 def _query(base_url: str, book: BookHead) -> str:
     return (
         "<section><h2>The whole table, as a query in Excel</h2>\n<p>Data, Get Data, From Other Sources, Blank Query, "
-        f"Advanced Editor: replace what is there by</p>\n{_code(power_query(base_url, book))}<p>The last step reads "
-        "numbers as in English (USA), so that the query works in every language. Choose anonymous access unless this "
-        "server asks for a key; a cell formula cannot send one.</p></section>\n"
+        f"Advanced Editor: replace what is there by</p>\n{_code(power_query(base_url, book), 'query')}<p>The last step "
+        "reads numbers as in English (USA), so that the query works in every language. Choose anonymous access unless "
+        "this server asks for a key; a cell formula cannot send one.</p></section>\n"
     )
 
 

@@ -15,6 +15,7 @@ from service.risk.copulas import CopulaFamily, Sampler
 from service.risk.covers import Tails
 from service.risk.marginals import MarginalLaw
 from service.risk.score_tables import ScoreTable
+from service.risk.score_tables import Scratch as TableScratch
 from service.risk.scores import Law, Scores
 from service.risk.streams import BLOCK, Draw, RandomDraw, Scratch, stream
 
@@ -25,11 +26,12 @@ FACTORS = "factors"
 class ModelScratch(BlockScratch):
     """Arrays of one thread that each block fills anew, those of the draws included."""
 
-    __slots__ = ("draws",)
+    __slots__ = ("draws", "tables")
 
     def __init__(self) -> None:
         super().__init__()
         self.draws = Scratch()
+        self.tables = TableScratch()
 
 
 class _SampledRows(FactorRows):
@@ -190,7 +192,7 @@ class FactorModel:
         scores = self.sampler.scores(draw)
         rows = scratch.empty("factors", len(self.tables), draw.scenarios)
         for row, column, table in zip(rows, self.portfolio.used.tolist(), self.tables, strict=True):
-            table.values(scores.values[:, column], out=row)
+            table.values(scores.values[:, column], out=row, scratch=scratch.tables)
         return _SampledRows(scores, rows, self.portfolio.places)
 
     @cached_property

@@ -4,10 +4,15 @@ import datetime as dt
 import re
 from typing import Annotated, Any, Literal, Self
 
-from pydantic import AfterValidator, Field, WithJsonSchema, model_validator
+from pydantic import AfterValidator, Discriminator, Field, WithJsonSchema, model_validator
 from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
+from typing_extensions import TypeAliasType
 
+from service.risk.components import AnyComponent, ObservedComponent
+from service.risk.copulas import Copula, IndependentCopula
+from service.risk.covers import Cover
+from service.risk.marginals import Marginal
 from service.risk.measures import Text
 from service.risk.measures.contract import STRICT
 
@@ -35,6 +40,10 @@ def _attribute(name: str) -> str:
     if "/" in name:
         raise PydanticCustomError("attribute", "the name of an attribute holds no '/'")
     return name
+
+
+def _independent() -> IndependentCopula:
+    return IndependentCopula(family="independent")
 
 
 AttributeName = Annotated[Text, AfterValidator(_attribute)]
@@ -142,5 +151,145 @@ def _no_header(losses: ScenarioLosses) -> None:
             raise PydanticCustomError("table", "{name} is for tables with a header (part: table)", {"name": name})
 
 
-Losses = ScenarioLosses
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class Factor:
+    """One factor: a quantity that losses depend on."""
+
+    id: Text
+    """Its name, unique in the request."""
+    marginal: Marginal
+    """Its probability law, in its own unit."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class FactorSubPortfolio:
+    """One sub-portfolio of a factor spec: components are added, the sign applied, then each cover step."""
+
+    id: Text
+    """Its name, unique in the request."""
+    components: Annotated[list[AnyComponent], Field(min_length=1)]
+    """What its loss is made of; the parts are added."""
+    attributes: dict[AttributeName, Text] = Field(default_factory=dict)
+    """What it belongs to, e.g. {"entity": "north", "line": "hull"}; the answer can be grouped by these."""
+    expected_profit: Number | None = None
+    """Expected profit as a gain (positive is a profit), in currency; never derived from the losses."""
+    sign: Literal["loss", "profit"] = "loss"
+    """`profit` negates the sum of the components."""
+    cover: list[Cover] = Field(default_factory=list)
+    """Steps that map the running amount in turn."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class StopWhen:
+    """When a simulation has been long enough."""
+
+    relative_standard_error: Annotated[Number, Field(gt=0.0, lt=1.0)]
+    """Largest standard error of any measure of the total, as a part of its figure, that is good enough."""
+    max_scenarios: Count
+    """Scenarios after which it stops in any case."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class SimulationPlan:
+    """How many scenarios are simulated, and how."""
+
+    scenarios: Count = 100_000
+    """Number of scenarios; with `sobol` the next eight times a power of two."""
+    seed: Annotated[int, Field(ge=0, le=2**53 - 1, json_schema_extra={"format": "int64"})] = 1
+    """Seed of all draws, from 0 to 2^53 - 1."""
+    method: Literal["random", "sobol"] = "random"
+    """Independent random draws, or Sobol points in eight independent scramblings."""
+    stop_when: StopWhen | None = None
+    """If given, the number of scenarios is doubled until the error is small enough, twice in a row."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class FactorLosses:
+    """A factor model that the service simulates."""
+
+    kind: Literal["factors"]
+    """Tag of this source."""
+    factors: list[Factor]
+    """The factors; may be empty if no component refers to one."""
+    sub_portfolios: Annotated[list[FactorSubPortfolio], Field(min_length=1)]
+    """The sub-portfolios and what their losses are made of."""
+    dependence: Copula = Field(default_factory=_independent)
+    """Copula of the factors; independent if absent."""
+    simulation: SimulationPlan = Field(default_factory=SimulationPlan)
+    """How it is simulated."""
+    currency: Text | None = None
+    """Currency of all amounts; a label, nothing is converted."""
+    valuation_date: Date | None = None
+    """Valuation date, YYYY-MM-DD; a label."""
+    horizon: Text | None = None
+    """Horizon of the losses, e.g. `1 year`; a label."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class HistorySubPortfolio:
+    """One sub-portfolio whose loss is a function of observed factor changes."""
+
+    id: Text
+    """Its name, unique in the request."""
+    components: Annotated[list[ObservedComponent], Field(min_length=1)]
+    """What its loss is made of; the parts are added."""
+    attributes: dict[AttributeName, Text] = Field(default_factory=dict)
+    """What it belongs to; the answer can be grouped by these."""
+    expected_profit: Number | None = None
+    """Expected profit as a gain (positive is a profit), in currency; never derived from the losses."""
+    sign: Literal["loss", "profit"] = "loss"
+    """`profit` negates the sum of the components."""
+    cover: list[Cover] = Field(default_factory=list)
+    """Steps that map the running amount in turn."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class HorizonScalingRule:
+    """How changes of one period become changes over the horizon."""
+
+    periods: Count
+    """Periods of the horizon."""
+    method: Literal["overlapping", "square_root_of_time"]
+    """Sums of so many consecutive changes, or each change times the square root of their number."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class HistoryLosses:
+    """Observed factor changes are the scenarios: exactly one of `changes`, `packed` and `part` holds them."""
+
+    kind: Literal["history"]
+    """Tag of this source."""
+    factors: Annotated[list[Text], Field(min_length=1)]
+    """Names of the factors, one per column of the changes."""
+    sub_portfolios: Annotated[list[HistorySubPortfolio], Field(min_length=1)]
+    """The sub-portfolios and what their losses are made of."""
+    changes: Annotated[list[list[Number]] | None, Field(min_length=1)] = None
+    """Change of each factor in each period, a row per period, oldest first, in the factors' units."""
+    packed: PackedTable | None = None
+    """The changes as packed binary values, a row per period."""
+    part: Literal["table"] | None = None
+    """The changes stand in the part `table` of a multipart request; its columns are named by the factors."""
+    decay: Annotated[Number | None, Field(gt=0.0, le=1.0)] = None
+    """Weight of a period relative to the next more recent one; equal weights if absent."""
+    horizon_scaling: HorizonScalingRule | None = None
+    """How the changes are brought to a longer horizon."""
+    currency: Text | None = None
+    """Currency of all amounts; a label, nothing is converted."""
+    valuation_date: Date | None = None
+    """Valuation date, YYYY-MM-DD; a label."""
+    horizon: Text | None = None
+    """Horizon of the losses, e.g. `10 days`; a label."""
+
+    @model_validator(mode="after")
+    def _one_table(self) -> Self:
+        given = [name for name in ("changes", "packed", "part") if getattr(self, name) is not None]
+        if len(given) != 1:
+            words = " and ".join(given) if given else "none"
+            raise PydanticCustomError(
+                "table", "exactly one of changes, packed and part holds the changes, not {given}", {"given": words}
+            )
+        return self
+
+
+Losses = TypeAliasType("Losses", Annotated[ScenarioLosses | FactorLosses | HistoryLosses, Discriminator("kind")])
 """Any source of losses, told apart by `kind`."""

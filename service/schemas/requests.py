@@ -3,10 +3,9 @@
 from collections.abc import Sequence
 from typing import Annotated, Any, Literal, Self
 
-from pydantic import AfterValidator, Field, GetJsonSchemaHandler, model_validator
+from pydantic import AfterValidator, Field, GetCoreSchemaHandler, GetPydanticSchema, model_validator
 from pydantic.dataclasses import dataclass
-from pydantic.json_schema import JsonSchemaValue
-from pydantic_core import CoreSchema, PydanticCustomError
+from pydantic_core import CoreSchema, PydanticCustomError, core_schema
 
 from service.risk.measures import Measure, Smoothing, Text
 from service.risk.measures.contract import STRICT
@@ -95,17 +94,11 @@ class Candidate:
     """Expected profit as a gain, in currency."""
 
 
-class _DescribedAs:
-    """Gives an annotation the JSON schema of a model that does not validate it."""
-
-    def __init__(self, model: Any) -> None:
-        self._model = model
-
-    def __get_pydantic_json_schema__(self, _schema: CoreSchema, handler: GetJsonSchemaHandler) -> JsonSchemaValue:
-        return handler(self._model.__pydantic_core_schema__)
+def _unjudged(_source: Any, handler: GetCoreSchemaHandler) -> CoreSchema:
+    return core_schema.no_info_wrap_validator_function(lambda value, _judge: value, handler(Candidate))
 
 
-CandidateDocument = Annotated[Any, _DescribedAs(Candidate)]
+CandidateDocument = Annotated[Any, GetPydanticSchema(_unjudged)]
 """A candidate as sent: each is judged alone, so that a bad one does not spoil the others."""
 
 

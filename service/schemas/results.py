@@ -24,6 +24,12 @@ NoteCode = Literal[
     "does_not_add_up",
     "sampled_shapley",
     "no_expected_profit",
+    "sobol_points",
+    "stopped",
+    "overlapping_periods",
+    "square_root_of_time",
+    "nearest_correlation",
+    "driven_sum",
 ]
 
 
@@ -42,7 +48,13 @@ class Note:
             "`smoothed_quantile`: contributions to a quantile were smoothed over the window given. "
             "`does_not_add_up`: the contributions of this rule do not add up to the total; see `residual`. "
             "`sampled_shapley`: a sample of orders of entry stands for all of them; the error includes it. "
-            "`no_expected_profit`: some sub-portfolios have no expected profit, so the total has no return on capital."
+            "`no_expected_profit`: some sub-portfolios have no expected profit, so the total has no return on capital. "
+            "`sobol_points`: how many Sobol points were taken for the scenarios asked for. "
+            "`stopped`: why a simulation with `stop_when` ended. "
+            "`overlapping_periods`: sums of overlapping periods depend on each other, and errors allow for it. "
+            "`square_root_of_time`: changes were multiplied by the square root of the number of periods. "
+            "`nearest_correlation`: how far the nearest correlation matrix lies from the one given. "
+            "`driven_sum`: how exact the quantile function of a driven compound is."
         ),
     ]
     detail: Annotated[str, Field(description="The same in a sentence.")]

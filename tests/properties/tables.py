@@ -8,7 +8,7 @@ from service.risk.allocation import RULES
 from service.risk.measures import TYPICAL
 from tests.unit.risk.arithmetic import es, measure, var
 
-EXAMPLES = 12  # of each property and measure: the same ones in every run
+EXAMPLES = 8  # of each property and measure: the same ones in every run
 bounded = settings(derandomize=True, max_examples=EXAMPLES, deadline=None, database=None)
 
 MILD = (  # measures that look at more than the worst scenario of a small table

@@ -133,7 +133,5 @@ def test_simulated_layers_have_their_expected_loss(row):
         claim_cover=[LayerCover(kind="layer", attachment=float(row["attachment"]), limit=float(row["limit"]))],
     )
     assert component.tails(FACTORS).upper_index == math.inf
-    if probability * mean < 0.01:
-        pytest.skip("too rare to be seen in so few scenarios")
     found = losses(component, FACTORS, GivenBlock(np.zeros((1, 10_000))))
     assert_mean(found, mean * float(row["expected_layer_loss_per_claim"]))

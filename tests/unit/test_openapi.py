@@ -7,6 +7,7 @@ import pytest
 
 from service import openapi, problems
 from service.app import create_app
+from service.payloads import TABLE_READERS
 from service.routes.doors import Door
 from service.settings import Settings
 
@@ -75,7 +76,7 @@ def test_references_lead_somewhere():
 
 
 def test_optional_fields_of_requests_are_absent_not_null():
-    waiting, seen = ["MeasuresRequest", "AllocationsRequest"], set()
+    waiting, seen = ["MeasuresRequest", "AllocationsRequest", "IncrementsRequest"], set()
     while waiting:
         name = waiting.pop()
         if name in seen:
@@ -84,7 +85,7 @@ def test_optional_fields_of_requests_are_absent_not_null():
         text = json.dumps(DOCUMENT["components"]["schemas"][name])
         assert "null" not in text.replace("not null", ""), name
         waiting += re.findall(r'"#/components/schemas/(\w+)"', text)
-    assert {"Measure", "ScenarioLosses", "PackedTable"} <= seen
+    assert {"Measure", "ScenarioLosses", "PackedTable", "Candidate"} <= seen
 
 
 def test_operation_ids_and_tags():
@@ -94,23 +95,87 @@ def test_operation_ids_and_tags():
     assert {tag for operation in operations for tag in operation["tags"]} == {tag["name"] for tag in DOCUMENT["tags"]}
 
 
-@pytest.mark.parametrize("path", ["/v1/measures", "/v1/allocations"])
-def test_calculations_promise_their_problems(path):
+REFUSALS = {"400", "406", "413", "415", "422", "500", "503"}
+BODIES = {"application/json", "multipart/form-data"}
+FORMS = {"application/json", "text/csv", "text/event-stream"}
+
+
+@pytest.mark.parametrize(
+    ("path", "statuses", "bodies"),
+    [
+        ("/v1/measures", REFUSALS, BODIES | TABLE_READERS.keys()),
+        ("/v1/allocations", REFUSALS, BODIES | TABLE_READERS.keys()),
+        ("/v1/increments", REFUSALS | {"409"}, BODIES),
+    ],
+)
+def test_calculations_promise_their_bodies_answers_and_problems(path, statuses, bodies):
     operation = DOCUMENT["paths"][path]["post"]
-    assert operation["responses"].keys() == {"200", "400", "406", "413", "415", "422", "500", "503"}
-    assert {"application/json", "multipart/form-data", "text/csv"} < operation["requestBody"]["content"].keys()
-    assert operation["responses"]["200"]["content"].keys() == {"application/json", "text/csv"}
-    for status in operation["responses"].keys() - {"200"}:
+    assert operation["responses"].keys() == statuses | {"200"}
+    assert operation["requestBody"]["content"].keys() == bodies
+    assert operation["responses"]["200"]["content"].keys() == FORMS
+    for status in statuses:
         response = DOCUMENT["components"]["responses"][f"Problem{status}"]
         assert response["content"].keys() == {problems.MEDIA_TYPE}
     assert "Retry-After" in DOCUMENT["components"]["responses"]["Problem503"]["headers"]
+    assert "losses_changed" in DOCUMENT["components"]["responses"]["Problem409"]["description"]
 
 
-def test_examples_come_in_pairs(tmp_path):
-    (tmp_path / "the_smallest.request.json").write_text('{"losses": {}}')
-    (tmp_path / "the_smallest.response.json").write_text('{"measures": []}')
-    operation = openapi.build(tmp_path)["paths"]["/v1/measures"]["post"]
-    asked = operation["requestBody"]["content"]["application/json"]["examples"]
-    answered = operation["responses"]["200"]["content"]["application/json"]["examples"]
-    assert asked == {"the_smallest": {"summary": "The smallest", "value": {"losses": {}}}}
-    assert answered["the_smallest"]["value"] == {"measures": []}
+def test_increments_have_no_parameters_of_a_table():
+    parameters = {one["name"] for one in DOCUMENT["paths"]["/v1/increments"]["post"]["parameters"]}
+    assert parameters == {"bom", "refresh", "X-Request-ID", "Prefer", "Content-Digest"}
+    assert {"measure", "level", "rule"} < {
+        one["name"] for one in DOCUMENT["paths"]["/v1/allocations"]["post"]["parameters"]
+    }
+
+
+def test_a_refused_candidate_has_a_typed_problem():
+    components = DOCUMENT["components"]["schemas"]
+    problem = components["CandidateResult"]["properties"]["problem"]
+    assert {"$ref": "#/components/schemas/CandidateProblem"} in problem["anyOf"]
+    assert components["Problem"]["properties"].keys() == components["CandidateProblem"]["properties"].keys() | {
+        "instance"
+    }
+    candidates = components["IncrementsRequest"]["properties"]["candidates"]
+    assert candidates["items"] == {"$ref": "#/components/schemas/Candidate"}
+
+
+def test_examples_are_shown_under_their_media_types(tmp_path):
+    row = {"title": "The smallest", "shows": "One measure.", "calculation": "measures", "query": ""}
+    files = {
+        "small.request.json": b'{"losses": {}}',
+        "small.response.json": b'{"measures": []}',
+        "table.request.csv": b"a,b\n1,2\n",
+        "table.response.csv": b'"measure"\r\n',
+        "bytes.request.arrow": b"\xff\xff\xff\xff",
+    }
+    for name, content in files.items():
+        (tmp_path / name).write_bytes(content)
+    small = {"name": "small", "request": "small.request.json", "response": "small.response.json"}
+    table = {"name": "table", "request": "table.request.csv", "response": "table.response.csv"}
+    unseen = {"name": "bytes", "request": "bytes.request.arrow", "response": "small.response.json"}
+    json_type, csv_type = "application/json", "text/csv"
+    index = [
+        row | small | {"content_type": json_type, "accept": json_type},
+        row | table | {"content_type": csv_type, "accept": csv_type, "query": "measure=wang&shift=1"},
+        row | unseen | {"content_type": "application/vnd.apache.arrow.stream", "accept": json_type},
+    ]
+    (tmp_path / "index.json").write_text(json.dumps(index))
+    paths = openapi.build(tmp_path)["paths"]
+    asked = paths["/v1/measures"]["post"]["requestBody"]["content"]
+    answered = paths["/v1/measures"]["post"]["responses"]["200"]["content"]
+    assert asked[json_type]["examples"] == {
+        "small": {"summary": "The smallest", "description": "One measure.", "value": {"losses": {}}}
+    }
+    assert answered[json_type]["examples"].keys() == {"small"}
+    assert asked[csv_type]["examples"]["table"]["value"] == "a,b\n1,2\n"
+    assert asked[csv_type]["examples"]["table"]["description"] == "One measure. Query: `measure=wang&shift=1`."
+    assert answered[csv_type]["examples"]["table"]["value"] == '"measure"\r\n'
+    assert "examples" not in asked["application/vnd.apache.arrow.stream"]
+    assert "examples" not in paths["/v1/allocations"]["post"]["requestBody"]["content"][json_type]
+
+
+def test_the_document_is_written_to_be_read_and_compared():
+    document = {"a": [1, 2.5, "é"], "b": [[1, 2], [3, 4]], "c": {}, "d": [{"e": None}], "f": {"g": []}}
+    text = openapi.written(document)
+    assert json.loads(text) == document
+    assert text.splitlines()[1:6] == [' "a": [1, 2.5, "é"],', ' "b": [', "  [1, 2],", "  [3, 4]", " ],"]

@@ -11,11 +11,12 @@ from html import escape
 
 from service.representations.wording import width
 
-FONT = "Liberation Sans, Arial, Helvetica, sans-serif"
+FONT = "Liberation Sans, Arial, Helvetica, DejaVu Sans Condensed, sans-serif"
 SIZE = 13.0  # of the usual text, in pixels
 SMALL = 12.0
 HEADING = 15.0
 WIDTH, NARROW = 760, 360
+WIDER = 1.14  # than the shipped font the reader's own may be
 EDGE = 16.0  # pixels left free around a picture
 
 LIGHT = {
@@ -182,7 +183,7 @@ def wrapped(words: str, room: float, size: float = SMALL) -> list[str]:
     """Return `words` broken into lines no wider than `room`."""
     lines: list[str] = []
     for word in words.split(" "):
-        if lines and width(f"{lines[-1]} {word}", size) <= room:
+        if lines and WIDER * width(f"{lines[-1]} {word}", size) <= room:
             lines[-1] += f" {word}"
         else:
             lines.append(word)

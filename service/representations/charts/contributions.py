@@ -62,7 +62,7 @@ def contributions_chart(
     amounts = Amounts.of([one.value for one in rows], labels.currency)
     title = f"Contributions to {measure_words(result.measure)}"
     canvas.text(16, 25, shortened(title, look.width - 32, HEADING), size=HEADING, full=title)
-    of = f"{'sub-portfolios' if attribute is None else attribute}, {rule_words(result.rule)} rule"
+    of = f"{'sub-portfolio' if attribute is None else attribute}, {rule_words(result.rule)} rule"
     total = Amounts.of([result.total.value], labels.currency)
     subtitle = f"by {of}; total {total.text(result.total.value)}{total.after}"
     canvas.text(16, 44, shortened(subtitle, look.width - 32, look.size), tint="soft", full=subtitle)
@@ -72,7 +72,7 @@ def contributions_chart(
     x = _across(rows, left, right)
     ticks = x.ticks(2 if look.narrow else 5)
     pitch = TALL if len(rows) <= FEW_ROWS else LOW
-    top = foot + 22
+    top = foot + 30
     ground = top + pitch * len(rows) + 4
     canvas.text(look.width - (16 if look.narrow else 16 + SHARES), top - 8, "contribution", anchor="end", tint="soft",
                 size=SMALL)  # fmt: skip
@@ -169,11 +169,11 @@ def _draw(canvas: Canvas, one: _Row, top: float, pitch: float, x: Scale, amounts
     start, end = sorted((x(0.0), x(one.value)))
     high = 0.52 * pitch
     canvas.box(start, middle - high / 2, max(end - start, 0.8), high, fill="part")
-    if one.alone is not None:
-        canvas.diamond(x(one.alone), middle, 0.19 * pitch, stroke="alone")
     if one.lower is not None and one.upper is not None:
         canvas.line(x(one.lower), middle, x(one.upper), middle, tint="page", thick=4)
         canvas.span(x(one.lower), x(one.upper), middle, reach=0.17 * pitch)
+    if one.alone is not None:
+        canvas.diamond(x(one.alone), middle, 0.19 * pitch, stroke="alone")
     edge = look.width - 16
     canvas.text(edge - (0 if look.narrow else SHARES), base, amounts.text(one.value), anchor="end", size=size)
     if not look.narrow:

@@ -122,8 +122,8 @@ class _Plot:
             marks = [*marks, *(_named(loss, mass) for loss, mass in atoms)]
         flags = Flags(marks, x, self.amounts, look)
         tallest = max(histogram.masses) if binned else max((mass for _, mass in atoms), default=1.0)
-        height = f"probability of each {'bar' if binned else 'loss'}"
-        canvas.text(16, top + 16, f"{caption}: {height}{', square root' if root else ''}", tint="soft")
+        height = "square-root heights" if root else f"probability of each {'bar' if binned else 'loss'}"
+        canvas.text(16, top + 16, f"{caption}: {height}", tint="soft")
         head = top + 26 + flags.height
         ground = head + (HIGH_NARROW if look.narrow else HIGH)
         y = Scale(0.0, tallest * HEADROOM, ground, head + 6, "root" if root else "linear")

@@ -5,7 +5,7 @@ from dataclasses import dataclass
 from typing import NamedTuple
 
 from service.representations.charts.axes import Scale
-from service.representations.charts.canvas import EDGE, Canvas, Look
+from service.representations.charts.canvas import EDGE, WIDER, Canvas, Look
 from service.representations.shapes import Figure, Measure, Measured
 from service.representations.wording import Amounts, measure_words, odds, shortened, width
 
@@ -34,6 +34,11 @@ class Mark:
         """Return name and figure."""
         added = " (drawn from the mean)" if self.at != self.value else ""
         return f"{self.name}: {amounts.text(self.value)}{added}"
+
+    def short(self, amounts: Amounts, room: float, size: float) -> str:
+        """Return the name, cut to the room there is, and the whole figure."""
+        figure = f": {amounts.text(self.value)}"
+        return shortened(self.name, room - width(figure, size), size) + figure
 
     def told(self, amounts: Amounts) -> str:
         """Return name, figure and interval, for a screen reader."""
@@ -137,7 +142,8 @@ class Flags:
     def _label(self, one: Mark, row: int, side: str) -> _Label:
         x, words = self.scale(one.at), one.words(self.amounts)
         room = (self.look.width - EDGE - x if side == "start" else x - EDGE) - BESIDE
-        words = shortened(words, room, self.look.size)
+        if WIDER * width(words, self.look.size) > room:
+            words = one.short(self.amounts, room / WIDER, self.look.size)
         wide = width(words, self.look.size) + BESIDE + 4
         left, right = text = (x - 4, x + wide) if side == "start" else (x - wide, x + 4)
         if one.lower is not None and one.upper is not None:
@@ -171,6 +177,6 @@ def _overlap(one: _Label, other: _Label) -> bool:
 
 def _faults(labels: Sequence[_Label]) -> tuple[int, int, int]:
     """Return what speaks against an arrangement: texts cut short, texts crossed by lines, rows used."""
-    cut = sum(label.words.endswith("…") for label in labels)
+    cut = sum("…" in label.words for label in labels)
     crossed = sum(one.text[0] < other.x < one.text[1] and other.row < one.row for one in labels for other in labels)
     return cut, crossed, sum(label.row for label in labels)

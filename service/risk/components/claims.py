@@ -39,9 +39,9 @@ from service.risk.covers import (
     preimage,
     tails_after,
 )
-from service.risk.marginals import EmpiricalMarginal, Marginal, MarginalLaw, PointMarginal
+from service.risk.marginals import DiscreteMarginal, Marginal, MarginalLaw
 from service.risk.measures.contract import STRICT, Text
-from service.risk.score_tables import ScoreTable
+from service.risk.score_tables import ScoreTable, Scratch
 from service.risk.scores import NormalScores
 
 PIECE = 1 << 16  # claims drawn at a time, 0.5 MB
@@ -246,11 +246,11 @@ class _Drawn:
         scenarios = np.flatnonzero(counts)  # those with claims, whose claims lie from `first` on
         first = ends[scenarios] - counts[scenarios]
         claims = int(ends[-1]) if ends.size else 0
-        scratch = np.empty(min(PIECE, claims))
+        held, scratch = np.empty(min(PIECE, claims)), Scratch()
         for start in range(0, claims, PIECE):
-            piece = scratch[: min(PIECE, claims - start)]
+            piece = held[: min(PIECE, claims - start)]
             generator.standard_normal(out=piece)
-            self.table.values(piece, out=piece)
+            self.table.values(piece, out=piece, scratch=scratch)
             covered(self.terms.of_claim, piece, out=piece)
             low = int(np.searchsorted(first, start, side="right")) - 1
             high = int(np.searchsorted(first, start + piece.size))
@@ -289,10 +289,6 @@ def _law_of_sum(component: bytes) -> AggregateLaw:
     reach: tuple[float, float] = severity.support
     for step in steps:
         reach = step.reach(reach)
-    atoms = None
-    if isinstance(severity, EmpiricalMarginal):
-        atoms = covered(steps, np.unique(np.array(severity.values, dtype=float)))
-    elif isinstance(severity, PointMarginal):
-        atoms = covered(steps, np.array([severity.value]))
+    atoms = covered(steps, severity.atoms.values) if isinstance(severity, DiscreteMarginal) else None
     sizes = ClaimSizes(beyond, quantile_above, atoms, reach[1])
     return aggregate_law(compound.frequency, sizes)

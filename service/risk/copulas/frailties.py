@@ -94,8 +94,8 @@ def log_sibuya(alpha: float, uniforms: Array) -> Array:
 def _sibuya_table(alpha: float) -> tuple[Array, Array]:
     """Return P(V > k) for k from LISTED down to 1, and ln(1), ..., ln(LISTED + 1)."""
     k = np.arange(1.0, LISTED + 2.0)
-    exceeding: Array = np.cumprod(1.0 - alpha / k[:-1])[::-1].copy()
-    return exceeding, np.log(k)
+    exceeding = np.cumprod(1.0 - alpha / k[:-1], dtype=np.float64)
+    return exceeding[::-1].copy(), np.log(k)
 
 
 def log_log_series(theta: float, uniforms: Array, exponentials: Array) -> Array:

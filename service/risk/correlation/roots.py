@@ -8,13 +8,22 @@ import numpy as np
 from numpy.typing import NDArray
 
 from service.risk.correlation.nearest import Repair
-from service.risk.streams import Draw
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.intp]
 
 STRIPES = 3  # a triangular matrix is multiplied in this many stripes, which leave out a third of its zeros
 ROWS = 256  # rows to which the common part is added at a time
+
+
+class NormalSource(Protocol):
+    """What a root draws from: n scenarios of independent normals, see `service.risk.streams.Draw`."""
+
+    def normals(self, rows: int) -> Array:
+        """Return independent standard normals, shape (rows, n)."""
+
+    def empty(self, rows: int) -> Array:
+        """Return an array of shape (rows, n) with anything in it."""
 
 
 class Root(Protocol):
@@ -28,7 +37,7 @@ class Root(Protocol):
     def dimensions(self) -> int:
         """How many independent normals a scenario takes."""
 
-    def normals(self, draw: Draw) -> Array:
+    def normals(self, draw: NormalSource) -> Array:
         """Return correlated standard normals, shape (k, n), in an array of the draw."""
 
     def correlations(self, factors: Indices) -> Array:
@@ -66,7 +75,7 @@ class DenseRoot:
         """How many independent normals a scenario takes."""
         return int(self.values.shape[1])
 
-    def normals(self, draw: Draw) -> Array:
+    def normals(self, draw: NormalSource) -> Array:
         """Return A times independent normals."""
         independent = draw.normals(self.dimensions)
         correlated = draw.empty(self.values.shape[0])
@@ -100,7 +109,7 @@ class FactorRoot:
         """How many independent normals a scenario takes: the common ones first."""
         return int(self.loadings.shape[1] + self.loadings.shape[0])
 
-    def normals(self, draw: Draw) -> Array:
+    def normals(self, draw: NormalSource) -> Array:
         """Return loadings times the common normals plus own times the factor's."""
         common = draw.normals(self.loadings.shape[1])
         correlated = draw.normals(self.loadings.shape[0])
@@ -139,7 +148,7 @@ class NegativeEqualRoot:
         """How many independent normals a scenario takes."""
         return self.factors
 
-    def normals(self, draw: Draw) -> Array:
+    def normals(self, draw: NormalSource) -> Array:
         """Return independent normals drawn apart from their mean, whose own variance shrinks."""
         a = np.sqrt(1.0 - self.value)
         b = np.sqrt(1.0 + (self.factors - 1) * self.value)

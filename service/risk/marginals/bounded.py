@@ -9,7 +9,7 @@ from pydantic.dataclasses import dataclass
 from scipy import special
 
 from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, between, refusal
-from service.risk.marginals.moments import Array
+from service.risk.marginals.moments import Array, Flags
 from service.risk.marginals.special_functions import log_gamma_1p, log_gamma_ratio
 
 LEAST_SHAPE, MOST_SHAPE = 1e-6, 1e8  # of a beta law; beyond, SciPy's functions lose digits
@@ -104,7 +104,7 @@ class BetaMarginal(MarginalLaw):
         near, share = self._share(values)
         return np.where(near, special.betaincc(self.a, self.b, share), special.betainc(self.b, self.a, share))
 
-    def _share(self, values: Array) -> tuple[Array, Array]:
+    def _share(self, values: Array) -> tuple[Flags, Array]:
         """Return whether the lower end is the nearer one, and the distance from the nearer one over the width."""
         width = self.upper - self.lower
         near = np.asarray(values - self.lower < self.upper - values)

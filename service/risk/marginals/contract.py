@@ -178,6 +178,10 @@ class MarginalLaw:
     def _limited_mean(self, limit: float) -> float:
         return limit - self.deficit_moments(limit)[0]
 
+    def layer_mean(self, start: float, stop: float) -> float:
+        """Return E min((X - start)+, stop - start), what a layer between two finite amounts is hit by."""
+        return self.limited_mean(stop) - self.limited_mean(start)
+
     def excess_moments(self, limit: float) -> tuple[float, float]:
         """Return E (X - limit)+ and E ((X - limit)+)²."""
         return excess_moments(self, limit)
@@ -218,4 +222,4 @@ class MarginalLaw:
 def refusal(detail: str, **context: str | float) -> PydanticCustomError:
     """Return the refusal of parameters that do not go together; `detail` may name the context in braces."""
     words = {name: value if isinstance(value, str) else f"{value:.6g}" for name, value in context.items()}
-    return PydanticCustomError("not_allowed", detail, words)  # type: ignore[arg-type]  # written here, by us
+    return PydanticCustomError("not_allowed", detail, words)

@@ -9,7 +9,7 @@ from pydantic_core import PydanticCustomError
 from scipy import special
 
 from service.risk.marginals.contract import OUT_OF_RANGE, STRICT, MarginalLaw, Scale
-from service.risk.marginals.moments import Array
+from service.risk.marginals.moments import Array, Flags
 
 NODES, WEIGHTS = special.roots_legendre(20)
 ROOT_HALF = math.sqrt(0.5)
@@ -73,7 +73,7 @@ class InverseGaussianMarginal(MarginalLaw):
         tail = np.exp(-0.5 * a * a) * factor
         return np.where(values < self.mean, 1.0 - tail, tail)
 
-    def _factor(self, y: Array, under: Array) -> tuple[Array, Array]:
+    def _factor(self, y: Array, under: Flags) -> tuple[Array, Array]:
         """Return a and the tail (below where `under`, else beyond) over exp(-a²/2), y being x/mean."""
         root = np.sqrt(self.shape / self.mean / y)
         a, b = root * (y - 1.0), root * (y + 1.0)

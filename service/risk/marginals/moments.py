@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from scipy import special
 
 Array = NDArray[np.float64]
+Flags = NDArray[np.bool_]
 
 NODES, WEIGHTS = special.roots_legendre(32)
 NARROWEST = 2.0**-10  # first panel, in units of ln(probability)

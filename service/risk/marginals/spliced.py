@@ -5,12 +5,13 @@ from functools import cached_property
 from typing import Annotated, Literal
 
 import numpy as np
-from pydantic import Discriminator
+from pydantic import AfterValidator, Discriminator, Field
 from pydantic.dataclasses import dataclass
+from pydantic_core import PydanticCustomError
 from typing_extensions import TypeAliasType
 
 from service.risk.marginals.bounded import BetaMarginal, UniformMarginal
-from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, refusal
+from service.risk.marginals.contract import OUT_OF_RANGE, STRICT, Amount, MarginalLaw, refusal
 from service.risk.marginals.discrete import DiscreteMarginal, EmpiricalMarginal, PointMarginal
 from service.risk.marginals.extremes import (
     GeneralizedExtremeValueMarginal,
@@ -65,7 +66,8 @@ SplicePart = TypeAliasType(
 def _probability(value: float) -> float:
     if 0.0 < value < 1.0:
         return value
-    raise PydanticCustomError("out_of_range", "tail_probability is above 0 and below 1, not {value}", {"value": f"{value:.6g}"})
+    detail = "tail_probability is above 0 and below 1, not {value}"
+    raise PydanticCustomError(OUT_OF_RANGE, detail, {"value": f"{value:.6g}"})
 
 
 Probability = Annotated[
@@ -91,12 +93,11 @@ class SplicedMarginal(MarginalLaw):
     """Probability of a value beyond the threshold, above 0 and below 1."""
 
     def _check(self) -> None:
+        outside = {"body": self.threshold > self.body.support[1], "tail": self.threshold < self.tail.support[0]}
         for name, part in (("body", self.body), ("tail", self.tail)):
-            low, high = part.support
-            gap = isinstance(part, DiscreteMarginal)  # its values are apart anyway
-            if (name == "body" and not self.threshold <= high and not gap) or self.threshold < low and not (gap and name == "tail"):
-                detail = "threshold {threshold} lies outside the values of the {name}, which go from {low} to {high}"
-                raise refusal(detail, threshold=self.threshold, name=name, low=low, high=high)
+            if outside[name] and not isinstance(part, DiscreteMarginal):  # whose values have gaps anyway
+                detail = "threshold {threshold} lies outside the {name}, whose values go from {low} to {high}"
+                raise refusal(detail, threshold=self.threshold, name=name, low=part.support[0], high=part.support[1])
         if not self._kept >= LEAST_MASS:
             raise refusal("the body has no probability at or below threshold {threshold}", threshold=self.threshold)
         if not self._left >= LEAST_MASS:
@@ -178,8 +179,7 @@ class SplicedMarginal(MarginalLaw):
         if limit <= self.threshold:
             return limit - weight * (limit - self.body.limited_mean(limit))
         start = self.threshold - weight * (self.threshold - self.body.limited_mean(self.threshold))
-        gained = self.tail.limited_mean(limit) - self.tail.limited_mean(self.threshold)
-        return start + self.tail_probability / self._left * gained
+        return start + self.tail_probability / self._left * self.tail.layer_mean(self.threshold, limit)
 
     @property
     def upper_tail_index(self) -> float:
@@ -201,3 +201,23 @@ class SplicedMarginal(MarginalLaw):
     def pieces(self) -> tuple[Piece, ...]:
         rest, mass = self._body_probability, self.tail_probability
         return (Piece(rest, mass, self._body_atoms), Piece(1.0, 0.0, self._tail_atoms))
+
+    @property
+    def _body_atoms(self) -> Atoms | None:
+        if not isinstance(self.body, DiscreteMarginal):
+            return None
+        rest, mass, whole = self._body_probability, self.tail_probability, self.body.atoms
+        kept = whole.part(slice(0, int(np.searchsorted(whole.values, self.threshold, side="right"))))
+        left = (kept.upper - kept.upper[-1]) / self._kept
+        return Atoms(kept.values, rest * kept.masses / self._kept, rest * kept.lower / self._kept, mass + rest * left)
+
+    @property
+    def _tail_atoms(self) -> Atoms | None:
+        if not isinstance(self.tail, DiscreteMarginal):
+            return None
+        rest, mass, whole = self._body_probability, self.tail_probability, self.tail.atoms
+        first = int(np.searchsorted(whole.values, self.threshold, side="right"))
+        kept = whole.part(slice(first, None))
+        before = whole.lower[first - 1] if first else 0.0
+        share = (kept.lower - before) / self._left
+        return Atoms(kept.values, mass * kept.masses / self._left, rest + mass * share, mass * kept.upper / self._left)

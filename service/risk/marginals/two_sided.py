@@ -9,7 +9,7 @@ from scipy import special
 
 from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, Scale, Shape
 from service.risk.marginals.moments import Array
-from service.risk.marginals.special_functions import log_gamma_ratio
+from service.risk.marginals.special_functions import decayed, log_gamma_ratio
 from service.risk.score_tables import Affine
 from service.risk.scores import NormalScores, StudentScores, UniformScores
 
@@ -142,6 +142,17 @@ class StudentTMarginal(MarginalLaw):
         # E (T - |t|)+, the same on both sides
         beyond = density * (self.df + t * t) / (self.df - 1.0) - abs(t) * tail
         return (limit if t < 0.0 else self.location) - self.scale * beyond
+
+    def layer_mean(self, start: float, stop: float) -> float:
+        """Return the integral of P(X > x) over the layer by parts, which needs no mean."""
+        low, high = (start - self.location) / self.scale, (stop - self.location) / self.scale
+        bends = [math.log1p(t * t / self.df) for t in (low, high)]
+        # of t f(t) dt = sqrt(df)/(2 B) exp(-(df - 1)/2 s) ds with s = ln(1 + t²/df)
+        first, width = min(bends), max(bends) - min(bends)
+        rate = 0.5 * (self.df - 1.0)
+        inner = 0.5 * math.exp(0.5 * math.log(self.df) - self._log_beta - rate * first) * decayed(rate, width)
+        ends = [t * float(self._under(np.array(-t))) for t in (low, high)]
+        return self.scale * (ends[1] - ends[0] + math.copysign(inner, bends[1] - bends[0]))
 
     @property
     def affine(self) -> Affine:

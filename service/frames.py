@@ -1,0 +1,254 @@
+"""From a source of losses to the frame that figures are computed on: held, streamed, or one of each scrambling."""
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
+from functools import reduce
+from math import ceil
+from typing import Literal
+
+import numpy as np
+from scipy import special
+
+from service.errors import Fault, Limit, LimitExceeded, NotDefined
+from service.executors import Work
+from service.risk import figures
+from service.risk.covers import Tails
+from service.risk.frame import Frame, depth_of
+from service.risk.loss_table import Group, LossTable
+from service.risk.measures import RiskMeasure
+from service.risk.quantiles import Array
+from service.risk.simulation import Plan, simulated
+from service.risk.streaming import streamed
+from service.risk.streams import BLOCK, SCRAMBLINGS
+from service.risk.uncertainty import Estimates
+from service.schemas.losses import StopWhen
+from service.settings import Settings, variable
+from service.sources import Source
+
+FIRST_LOOK = 65_536  # scenarios before the first look at the error
+TAIL_OF_FIRST_LOOK = 1_000  # tail scenarios before it
+LOOKS_IN_A_ROW = 2  # that must meet the target
+CELL_BYTES = 8
+PART_HELD = 2  # a table may take one part in so many of the memory; sorted copies of it take the rest
+
+Note = tuple[str, str, str | None]
+
+
+@dataclass(frozen=True, slots=True)
+class Demand:
+    """What a calculation needs of the scenarios.
+
+    Attributes
+    ----------
+    measures : sequence of RiskMeasure
+    coverage : float
+        Nominal coverage of the intervals.
+    groups : sequence of Group
+    stand_alone : bool
+        Whether each column is looked at alone.
+    all_losses : bool
+        Whether a rule or a candidate needs more than the tail.
+    """
+
+    measures: Sequence[RiskMeasure]
+    coverage: float
+    groups: Sequence[Group] = ()
+    stand_alone: bool = True
+    all_losses: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class Framed:
+    """The frame of all scenarios and, for Sobol points, one of each scrambling.
+
+    Attributes
+    ----------
+    frame : Frame
+    coverage : float
+    scramblings : tuple of Frame
+        Empty where errors come from the scenarios themselves.
+    plan : Plan or None
+        As it was carried out.
+    columns : sequence of Tails
+        Of each sub-portfolio and group, where the law is known; else empty.
+    total : Tails
+    notes : tuple of (str, str, str or None)
+        Code, detail and pointer into the request.
+    """
+
+    frame: Frame
+    coverage: float
+    scramblings: tuple[Frame, ...] = ()
+    plan: Plan | None = None
+    columns: Sequence[Tails] = ()
+    total: Tails = Tails()  # noqa: RUF009  # frozen: thin tails, as scenarios that were given have
+    notes: tuple[Note, ...] = ()
+
+    def estimated(
+        self, measure: RiskMeasure, of: Literal["total", "alone", "parts"], function: Callable[[Frame], Estimates]
+    ) -> Estimates:
+        """Return the figures that `function` finds on the frame, with such errors as the scenarios allow.
+
+        With Sobol points the figure is that of all points and its error that of the mean over the
+        scramblings, with Student's t (Owen, Lecture Notes in Statistics 106, 1995, 299-317). Where the law
+        is known to have no second moment there is no error.
+        """
+        pooled = function(self.frame)
+        if self.scramblings:
+            values = np.stack([function(frame).values for frame in self.scramblings])
+            errors = values.std(axis=0, ddof=1) / np.sqrt(SCRAMBLINGS)
+            half = float(special.stdtrit(SCRAMBLINGS - 1, (1.0 + self.coverage) / 2.0)) * errors
+            pooled = replace(
+                pooled,
+                standard_errors=errors,
+                lower=pooled.values - half,
+                upper=pooled.values + half,
+                method="scramblings",
+            )
+        return self._sure(measure, of, pooled)
+
+    def _sure(self, measure: RiskMeasure, of: Literal["total", "alone", "parts"], figures_: Estimates) -> Estimates:
+        """Take the error from figures whose law has none."""
+        if not self.columns:
+            return figures_
+        laws = [self.total] if of == "total" else list(self.columns)
+        known = np.array([_has_error(measure, law) for law in laws])
+        if of == "parts":
+            known &= _has_error(measure, self.total)
+        if known.all():
+            return figures_
+        errors, lower, upper = (
+            np.where(known, part, np.nan) for part in (figures_.standard_errors, figures_.lower, figures_.upper)
+        )
+        return replace(figures_, standard_errors=errors, lower=lower, upper=upper).remarked("no_error")
+
+
+def framed(source: Source, demand: Demand, stop: StopWhen | None, work: Work, settings: Settings) -> Framed:
+    """Return the frame of a source's scenarios, simulating them if need be.
+
+    Raises
+    ------
+    NotDefined
+        For a figure that the law of the losses does not have.
+    LimitExceeded
+        For a simulation that neither fits into memory nor can be streamed.
+    """
+    if source.table is not None:
+        frame = Frame.of(source.table, demand.groups, demand.measures, work, stand_alone=demand.stand_alone)
+        return Framed(frame, demand.coverage, notes=source.notes)
+    if source.plan is None or source.tails is None:
+        raise ValueError("a source has a table or a plan")
+    *each, total = source.tails
+    columns = each + [reduce(Tails.plus, [each[member] for member in group.members]) for group in demand.groups]
+    _refuse_missing(source, demand, columns, total)
+    if stop is None:
+        made = _carried_out(source, source.plan, demand, work, settings)
+    else:
+        made = _until(source, source.plan, demand, stop, work, settings)
+    return replace(made, columns=columns, total=total, notes=source.notes + made.notes)
+
+
+def _carried_out(source: Source, plan: Plan, demand: Demand, work: Work, settings: Settings) -> Framed:
+    """Return the frame of one plan."""
+    size = CELL_BYTES * plan.scenarios * plan.columns
+    if size <= settings.max_memory_bytes // PART_HELD:
+        return _held(source, plan, demand, work, simulated(plan, work))
+    partial = all(depth_of(measure, plan.scenarios, contributions=True) < 1.0 for measure in demand.measures)
+    if plan.sobol or demand.all_losses or not partial:
+        raise _too_large(size, settings)
+    frame = streamed(plan, source.sub_portfolios, demand.groups, demand.measures, work, stand_alone=demand.stand_alone)
+    return Framed(frame, demand.coverage, plan=plan)
+
+
+def _held(source: Source, plan: Plan, demand: Demand, work: Work, losses: Array) -> Framed:
+    """Return the frame of simulated losses in memory."""
+
+    def of(part: Array, *, sampled: bool) -> Frame:
+        table = LossTable(part, None, sampled, source.sub_portfolios)
+        return Frame.of(table, demand.groups, demand.measures, work, stand_alone=demand.stand_alone)
+
+    size = plan.scenarios // SCRAMBLINGS
+    parts = [losses[k * size : (k + 1) * size] for k in range(SCRAMBLINGS)] if plan.sobol else []
+    scramblings = tuple(of(part, sampled=False) for part in parts)
+    return Framed(of(losses, sampled=not plan.sobol), demand.coverage, scramblings, plan)
+
+
+def _until(source: Source, plan: Plan, demand: Demand, stop: StopWhen, work: Work, settings: Settings) -> Framed:
+    """Simulate, look at the errors of the totals, and double until they are small enough twice in a row."""
+    light = replace(demand, stand_alone=False, groups=())
+    shares = [share for one in demand.measures if (share := one.tail_share) is not None]
+    first = max(FIRST_LOOK, ceil(TAIL_OF_FIRST_LOOK / min(shares))) if shares else FIRST_LOOK
+    scenarios = min(-(-first // BLOCK) * BLOCK, stop.max_scenarios)
+    met = 0
+    while True:
+        longer = plan.of_size(scenarios)
+        worst = max(_relative_errors(_carried_out(source, longer, light, work, settings), demand))
+        met = met + 1 if worst <= stop.relative_standard_error else 0
+        if met == LOOKS_IN_A_ROW or scenarios >= stop.max_scenarios:
+            break
+        scenarios = min(2 * scenarios, stop.max_scenarios)
+    reached = f"the largest relative standard error of a total is {worst:.3g}"
+    if met < LOOKS_IN_A_ROW:
+        note = f"stopped at the most scenarios allowed, {longer.scenarios}: {reached}"
+    else:
+        note = f"stopped after {longer.scenarios} scenarios: {reached}; intervals are not corrected for stopping"
+    made = _carried_out(source, longer, demand, work, settings)
+    return replace(made, notes=(*made.notes, ("stopped", note, "/losses/simulation/stop_when")))
+
+
+def _relative_errors(made: Framed, demand: Demand) -> list[float]:
+    """Return the standard error of each measure of the total over its size; infinite where there is none."""
+    ratios = []
+    for measure in demand.measures:
+        total = made.estimated(measure, "total", lambda frame, measure=measure: figures.total(frame, measure, 0.95))  # type: ignore[misc]
+        ratio = float(total.standard_errors[0]) / abs(float(total.values[0])) if total.values[0] != 0.0 else np.inf
+        ratios.append(ratio if np.isfinite(ratio) else np.inf)
+    return ratios
+
+
+def _has_error(measure: RiskMeasure, law: Tails) -> bool:
+    needs = measure.needs
+    lower = needs.lower_index == 0.0 or law.lower_index > needs.error_index
+    return law.upper_index > needs.error_index and lower and law.upper_exponential >= 2.0 * needs.exponential
+
+
+def _missing(measure: RiskMeasure, law: Tails) -> str | None:
+    """Return why a figure does not exist; None if it does."""
+    needs = measure.needs
+    if law.upper_index <= needs.upper_index:
+        return f"its upper tail index is {law.upper_index:.6g} and must be above {needs.upper_index:.6g}"
+    if law.lower_index <= needs.lower_index:
+        return f"its lower tail index is {law.lower_index:.6g} and must be above {needs.lower_index:.6g}"
+    if needs.exponential > 0.0 and law.upper_exponential <= needs.exponential:
+        return f"E[exp(t L)] is finite for t below {law.upper_exponential:.6g} only"
+    return None
+
+
+def _refuse_missing(source: Source, demand: Demand, columns: Sequence[Tails], total: Tails) -> None:
+    """Refuse means and measures that the laws of the losses do not have."""
+    for number, (one, law) in enumerate(zip(source.sub_portfolios, columns, strict=False)):
+        if min(law.upper_index, law.lower_index) <= 1.0:
+            detail = f"the loss of {one.id!r} has no mean: a tail index is {min(law.upper_index, law.lower_index):.6g}"
+            raise NotDefined.at(f"/losses/sub_portfolios/{number}", detail, code="infinite_mean")
+    names = [one.id for one in source.sub_portfolios] + [f"{one.attribute} {one.name}" for one in demand.groups]
+    for number, measure in enumerate(demand.measures):
+        laws = [("the total", total)]
+        if demand.stand_alone:
+            laws += [(repr(name), law) for name, law in zip(names, columns, strict=True)]
+        for name, law in laws:
+            reason = _missing(measure, law)
+            if reason is not None:
+                detail = f"{measure.name} of {name} does not exist: {reason}"
+                raise NotDefined.at(f"/measures/{number}", detail, code="infinite_figure")
+
+
+def _too_large(size: int, settings: Settings) -> LimitExceeded:
+    name = "max_memory_bytes"
+    detail = (
+        f"the simulated losses take {size} bytes, and {settings.max_memory_bytes // PART_HELD} may be held; value at "
+        "risk, expected shortfall, range value at risk and return level above zero by the rule euler need no more "
+        "than their tails, so ask for these alone, or for fewer scenarios"
+    )
+    limit = Limit(name=name, allowed=settings.max_memory_bytes, asked=PART_HELD * size, setting=variable(name))
+    fault = Fault(detail=detail, code=LimitExceeded.code, pointer="/losses/simulation/scenarios")
+    return LimitExceeded(detail, limit=limit, faults=[fault])

@@ -1,0 +1,223 @@
+"""From the `losses` of a request, of whatever kind, to scenarios and what is known of where they come from."""
+
+from collections.abc import Sequence
+from dataclasses import asdict, dataclass
+
+import numpy as np
+from scipy import special
+
+from service.errors import Fault, InvalidValue, Limit, LimitExceeded, pointing
+from service.executors import Work
+from service.intake import Intake
+from service.payloads import Sheet
+from service.provenance import document_digest, losses_digest
+from service.resolve import loss_table
+from service.risk.components.portfolio import SubPortfolioTerms
+from service.risk.covers import Tails
+from service.risk.factors import FactorModel
+from service.risk.history import HistoryLosses as Changes
+from service.risk.history import HorizonScaling, history_losses
+from service.risk.loss_table import LossTable, SubPortfolio
+from service.risk.quantiles import Array, Indices
+from service.risk.simulation import Plan
+from service.schemas.losses import (
+    FactorLosses,
+    FactorSubPortfolio,
+    HistoryLosses,
+    HistorySubPortfolio,
+    ScenarioLosses,
+)
+from service.settings import Settings, variable
+
+GIVEN = "given scenarios, exact weighted order statistics"
+RANDOM = "simulated scenarios, random draws"
+SOBOL = "simulated scenarios, Sobol points in 8 scramblings"
+OBSERVED = "observed changes of the factors as scenarios"
+
+
+@dataclass(frozen=True, slots=True)
+class FactorMean:
+    """The mean of a factor given the tail, in its unit and as a normal score."""
+
+    id: str
+    mean: float
+    normal_score: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Source:
+    """Where losses come from.
+
+    Attributes
+    ----------
+    digest : str
+        Of the losses.
+    method : str
+        How the figures come about.
+    sub_portfolios : tuple of SubPortfolio
+    table : LossTable or None
+        The scenarios, where they are there already.
+    plan : Plan or None
+        The simulation that makes them.
+    changes : Changes or None
+        The observed changes that they were made of.
+    factor_ids : tuple of str
+        Of these changes.
+    tails : sequence of Tails, or None
+        Of each sub-portfolio and then of the total, where the law is known.
+    notes : tuple of (str, str, str or None)
+        Code, detail and pointer into the request.
+    """
+
+    digest: str
+    method: str
+    sub_portfolios: tuple[SubPortfolio, ...]
+    table: LossTable | None = None
+    plan: Plan | None = None
+    changes: Changes | None = None
+    factor_ids: tuple[str, ...] = ()
+    tails: Sequence[Tails] | None = None
+    notes: tuple[tuple[str, str, str | None], ...] = ()
+
+    @property
+    def seed(self) -> int | None:
+        """Seed of the simulation."""
+        return None if self.plan is None else self.plan.seed
+
+    def factor_means(self, scenarios: Indices, weights: Array) -> list[FactorMean]:
+        """Return the mean of each factor over scenarios (m,) with weights that sum to 1; none for given scenarios."""
+        order = np.argsort(scenarios)
+        numbers, w = scenarios[order], weights[order]
+        if self.plan is not None:
+            draws = self.plan.factors(numbers)
+            ids, values, scores = self.plan.model.factors.ids, draws.values, draws.normal_scores
+        elif self.changes is not None:
+            every = self.changes.values
+            ranks = np.argsort(np.argsort(every, axis=0, kind="stable"), axis=0) + 1.0
+            ids, values = self.factor_ids, every[numbers]
+            scores = np.asarray(special.ndtri(ranks / (every.shape[0] + 1.0)))[numbers]
+        else:
+            return []
+        return [
+            FactorMean(name, mean, score)
+            for name, mean, score in zip(ids, (w @ values).tolist(), (w @ scores).tolist(), strict=True)
+        ]
+
+
+def source_of(intake: Intake, work: Work, settings: Settings) -> Source:
+    """Return the source of a request's losses; a factor model is checked and planned, not yet simulated.
+
+    Raises
+    ------
+    CallerError
+        Where it does not fit together; pointers are into the request.
+    """
+    losses = intake.request.losses
+    if isinstance(losses, ScenarioLosses):
+        if intake.table is None:
+            raise InvalidValue.at("/losses", "there is no table")
+        table = loss_table(losses, intake.table, part=intake.part, settings=settings)
+        ids = [one.id for one in table.sub_portfolios]
+        digest = losses_digest(ids, table.losses, table.probabilities, work)
+        return Source(digest, GIVEN, table.sub_portfolios, table=table)
+    with pointing("/losses"):
+        return _simulated(losses, settings) if isinstance(losses, FactorLosses) else _observed(losses, intake, work)
+
+
+def _described(columns: Sequence[FactorSubPortfolio] | Sequence[HistorySubPortfolio]) -> tuple[SubPortfolio, ...]:
+    return tuple(SubPortfolio(one.id, one.attributes, one.expected_profit) for one in columns)
+
+
+def _terms(columns: Sequence[FactorSubPortfolio] | Sequence[HistorySubPortfolio]) -> list[SubPortfolioTerms]:
+    return [SubPortfolioTerms(one.id, tuple(one.components), one.sign, tuple(one.cover)) for one in columns]
+
+
+def _simulated(losses: FactorLosses, settings: Settings) -> Source:
+    """Return a factor model with its plan; pointers are into `losses`."""
+    model = FactorModel.of(
+        [(one.id, one.marginal) for one in losses.factors], losses.dependence, _terms(losses.sub_portfolios)
+    )
+    asked = losses.simulation
+    most = asked.scenarios if asked.stop_when is None else asked.stop_when.max_scenarios
+    if max(most, asked.scenarios) > settings.max_scenarios:
+        raise _too_many(max(most, asked.scenarios), settings)
+    with pointing("/simulation"):
+        make = Plan.quasi_random if asked.method == "sobol" else Plan.random
+        plan = make(model, seed=asked.seed, scenarios=asked.scenarios)
+    notes = [(code, detail, f"/losses{pointer}") for code, detail, pointer in model.notes]
+    if asked.method == "sobol" and plan.scenarios != asked.scenarios:
+        detail = f"{plan.scenarios} points were taken, eight times a power of two"
+        notes.append(("sobol_points", detail, "/losses/simulation/scenarios"))
+    each, total = model.existence()
+    return Source(
+        _spec_digest(losses),
+        SOBOL if plan.sobol else RANDOM,
+        _described(losses.sub_portfolios),
+        plan=plan,
+        tails=(*each, total),
+        notes=tuple(notes),
+    )
+
+
+def _observed(losses: HistoryLosses, intake: Intake, work: Work) -> Source:
+    """Return observed changes as scenarios; pointers are into `losses`."""
+    changes = _changes(losses, intake)
+    scaling = losses.horizon_scaling
+    made = history_losses(
+        losses.factors,
+        changes,
+        _terms(losses.sub_portfolios),
+        decay=losses.decay,
+        scaling=None if scaling is None else HorizonScaling(scaling.periods, scaling.method),
+    )
+    columns = _described(losses.sub_portfolios)
+    table = LossTable(
+        made.losses + 0.0,
+        made.probabilities,
+        sampled=True,
+        sub_portfolios=columns,
+        scenario_ids=made.labels,
+        clusters=made.clusters,
+    )
+    digest = document_digest(
+        {"spec": _spec_digest(losses), "changes": losses_digest(losses.factors, changes, None, work)}
+    )
+    factor_ids = tuple(losses.factors)
+    notes = tuple((code, detail, "/losses/horizon_scaling") for code, detail in made.notes)
+    return Source(digest, OBSERVED, columns, table=table, changes=made, factor_ids=factor_ids, notes=notes)
+
+
+def _changes(losses: HistoryLosses, intake: Intake) -> Array:
+    """Return the changes (n, k) in the order of the factors."""
+    if isinstance(intake.table, Sheet):
+        names = list(intake.table.names)
+        if sorted(names) != sorted(losses.factors):
+            detail = f"the table has the columns {', '.join(names[:20])}, not the factors"
+            raise InvalidValue.at("/factors", detail, code="unknown_column")
+        return np.ascontiguousarray(intake.table.values[:, [names.index(name) for name in losses.factors]])
+    if intake.table is not None:
+        return intake.table
+    rows = losses.changes or []
+    odd = next((number for number, row in enumerate(rows) if len(row) != len(losses.factors)), None)
+    if odd is not None:
+        detail = f"row {odd} has {len(rows[odd])} changes for {len(losses.factors)} factors"
+        raise InvalidValue.at(f"/changes/{odd}", detail, code="wrong_count")
+    return np.array(rows, dtype=np.float64) + 0.0
+
+
+def _spec_digest(losses: FactorLosses | HistoryLosses) -> str:
+    """Return the digest of what makes the losses: all but the labels, and the table where there is one."""
+    document = asdict(losses)
+    for name in ("currency", "valuation_date", "horizon", "changes", "packed", "part"):
+        document.pop(name, None)
+    for one in document["sub_portfolios"]:
+        del one["attributes"], one["expected_profit"]
+    return document_digest(document)
+
+
+def _too_many(asked: int, settings: Settings) -> LimitExceeded:
+    name = "max_scenarios"
+    detail = f"{asked} scenarios are more than the {settings.max_scenarios} allowed here"
+    limit = Limit(name=name, allowed=settings.max_scenarios, asked=asked, setting=variable(name))
+    fault = Fault(detail=detail, code=LimitExceeded.code, pointer="/simulation/scenarios")
+    return LimitExceeded(detail, limit=limit, faults=[fault])
