@@ -93,19 +93,17 @@ class Framed:
         scramblings, with Student's t (Owen, Lecture Notes in Statistics 106, 1995, 299-317). Where the law
         is known to have no second moment there is no error.
         """
-        pooled = function(self.frame)
-        if self.scramblings:
-            values = np.stack([function(frame).values for frame in self.scramblings])
-            errors = values.std(axis=0, ddof=1) / np.sqrt(SCRAMBLINGS)
-            half = float(special.stdtrit(SCRAMBLINGS - 1, (1.0 + self.coverage) / 2.0)) * errors
-            pooled = replace(
-                pooled,
-                standard_errors=errors,
-                lower=pooled.values - half,
-                upper=pooled.values + half,
-                method="scramblings",
-            )
-        return self._sure(measure, of, pooled)
+        values = [function(frame).values for frame in self.scramblings]
+        return self._sure(measure, of, self.combined(function(self.frame), values))
+
+    def combined(self, pooled: Estimates, values: Sequence[Array]) -> Estimates:
+        """Return pooled figures with the error that their `values` in each scrambling show; unchanged without any."""
+        if not values:
+            return pooled
+        errors = np.stack(values).std(axis=0, ddof=1) / np.sqrt(SCRAMBLINGS)
+        half = float(special.stdtrit(SCRAMBLINGS - 1, (1.0 + self.coverage) / 2.0)) * errors
+        lower, upper = pooled.values - half, pooled.values + half
+        return replace(pooled, standard_errors=errors, lower=lower, upper=upper, method="scramblings")
 
     def _sure(self, measure: RiskMeasure, of: Literal["total", "alone", "parts"], figures_: Estimates) -> Estimates:
         """Take the error from figures whose law has none."""
@@ -222,6 +220,14 @@ def _missing(measure: RiskMeasure, law: Tails) -> str | None:
     if needs.exponential > 0.0 and law.upper_exponential <= needs.exponential:
         return f"E[exp(t L)] is finite for t below {law.upper_exponential:.6g} only"
     return None
+
+
+def missing(measures: Sequence[RiskMeasure], law: Tails) -> str | None:
+    """Return why a loss of this law does not have its mean or one of the measures; None if it has all."""
+    if min(law.upper_index, law.lower_index) <= 1.0:
+        return f"the loss has no mean: a tail index is {min(law.upper_index, law.lower_index):.6g}"
+    reasons = ((measure, _missing(measure, law)) for measure in measures)
+    return next((f"{measure.name} does not exist: {reason}" for measure, reason in reasons if reason), None)
 
 
 def _refuse_missing(source: Source, demand: Demand, columns: Sequence[Tails], total: Tails) -> None:

@@ -156,7 +156,7 @@ def _ends(figure: Figure) -> tuple[float | None, float | None]:
 
 
 def _percent(ratio: float | None) -> str | None:
-    return None if ratio is None else f"{100.0 * ratio:.1f} %"
+    return None if ratio is None else f"{100.0 * ratio:z.1f} %"
 
 
 def _short(value: float) -> str:

@@ -276,7 +276,7 @@ class _Report:
         )
         words = [sentence(self.answer.provenance.method)]
         if methods:
-            words.append(f"Intervals of the totals: {', '.join(methods)}.")
+            words.append(f"Intervals of the totals: {', '.join(methods).replace('_', ' ')}.")
         else:
             words.append("No figure has an interval.")
         notes = "".join(f"<li>{escape(sentence(note.detail))}</li>" for note in self.answer.notes)

@@ -7,6 +7,8 @@ from pydantic import AfterValidator, Field, GetCoreSchemaHandler, GetPydanticSch
 from pydantic.dataclasses import dataclass
 from pydantic_core import CoreSchema, PydanticCustomError, core_schema
 
+from service.risk.components import AnyComponent
+from service.risk.covers import Cover
 from service.risk.measures import Measure, Smoothing, Text
 from service.risk.measures.contract import STRICT
 from service.schemas.losses import AttributeName, Losses, Number
@@ -86,12 +88,26 @@ class Candidate:
 
     id: Text
     """Its name, unique in the request and not that of a sub-portfolio."""
-    values: Annotated[list[Number], Field(min_length=1)]
-    """Its loss in each scenario, in the order of the base's scenarios, in currency."""
+    values: Annotated[list[Number] | None, Field(min_length=1)] = None
+    """Its loss in each scenario, in the order of the base's scenarios, in currency; or else `components`."""
+    components: Annotated[list[AnyComponent] | None, Field(min_length=1)] = None
+    """What its loss is made of, on the factors of the base; the parts are added."""
+    sign: Literal["loss", "profit"] = "loss"
+    """`profit` negates the sum of the components."""
+    cover: list[Cover] = Field(default_factory=list)
+    """Steps that map the running amount of the components in turn."""
     attributes: dict[AttributeName, Text] = Field(default_factory=dict)
     """What it belongs to; comes back in no figure."""
     expected_profit: Number | None = None
     """Expected profit as a gain, in currency."""
+
+    @model_validator(mode="after")
+    def _one_loss(self) -> Self:
+        if (self.values is None) == (self.components is None):
+            raise PydanticCustomError("candidate", "exactly one of values and components says what it loses")
+        if self.values is not None and (self.cover or self.sign != "loss"):
+            raise PydanticCustomError("candidate", "sign and cover go with components")
+        return self
 
 
 def _unjudged(_source: Any, handler: GetCoreSchemaHandler) -> CoreSchema:

@@ -70,8 +70,9 @@ def _mostly_zero(rng, n, d):
 
 
 def _cancelling(rng, n, d):
-    losses = rng.normal(size=(n, d)) * 1e6
-    losses[:, -1] = np.round(rng.normal(size=n), 1) - losses[:, :-1].sum(axis=1)
+    """Columns of a million that cancel to totals of a few, all multiples of 1/8: no sum of them is rounded."""
+    losses = np.round(rng.normal(size=(n, d)) * 8e6) / 8.0
+    losses[:, -1] = rng.integers(-20, 20, size=n) / 8.0 - losses[:, :-1].sum(axis=1)
     return losses
 
 

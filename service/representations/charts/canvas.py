@@ -34,7 +34,7 @@ DARK = {
     "soft": "#b3bdc9",
     "line": "#3b4653",
     "page": "#14191f",
-    "body": "#5f7fa3",
+    "body": "#57779a",
     "tail": "#f0936a",
     "part": "#74b0e0",
     "alone": "#98a4b2",

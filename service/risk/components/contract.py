@@ -66,7 +66,13 @@ class FactorSet:
 
     def tails(self, name: str) -> Tails:
         """Return the tails of a factor."""
-        return tails_of(self.marginal(name))
+        if name not in self._tails:
+            self._tails[name] = tails_of(self.marginal(name))
+        return self._tails[name]
+
+    @cached_property
+    def _tails(self) -> dict[str, Tails]:
+        return {}
 
     @property
     def independent(self) -> bool:

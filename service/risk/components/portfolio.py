@@ -22,7 +22,8 @@ from service.risk.components.of_factors import ConstantComponent, LinearComponen
 from service.risk.covers import CoverStep, Tails, check_cover, covered, tails_after
 
 PADDING = 8  # doubles between rows of scratch: rows a power of two apart would share their place in the cache
-MOST_EIGENVALUES = 400  # factors up to which the exponential moment of a normal dependence is judged exactly
+MOST_OF_ONE = 64  # factors of a sub-portfolio up to which the exponential moment of a normal dependence is exact
+MOST_OF_ALL = 400  # likewise of the total
 FEW_FACTORS = 0.06  # filled part of the exposure matrix up to which factors are added one by one
 
 
@@ -293,17 +294,16 @@ class Portfolio:
 
     def tails(self) -> list[Tails]:
         """Return which moments of each sub-portfolio's loss exist."""
-        return [self._judged([terms], terms.tails(self.factors)) for terms in self.sub_portfolios]
+        return [self._judged([terms], terms.tails(self.factors), MOST_OF_ONE) for terms in self.sub_portfolios]
 
     def total_tails(self) -> Tails:
         """Return which moments of the total loss exist."""
         parts = [(terms.used, terms.tails(self.factors)) for terms in self.sub_portfolios]
-        return self._judged(self.sub_portfolios, together(parts, self.factors))
+        return self._judged(self.sub_portfolios, together(parts, self.factors), MOST_OF_ALL)
 
-    def _judged(self, terms: Sequence[SubPortfolioTerms], tails: Tails) -> Tails:
+    def _judged(self, terms: Sequence[SubPortfolioTerms], tails: Tails, most: int) -> Tails:
         """Return the tails with the exponential moment that a normal dependence allows, where that is known."""
-        forms = [exponential_rate(terms, self.factors, sign) for sign in (1.0, -1.0)]
-        upper, lower = forms
+        upper, lower = (exponential_rate(terms, self.factors, sign, most=most) for sign in (1.0, -1.0))
         if upper is None or lower is None:
             return tails
         return replace(
@@ -313,11 +313,14 @@ class Portfolio:
         )
 
 
-def exponential_rate(sub_portfolios: Sequence[SubPortfolioTerms], factors: FactorSet, sign: float) -> float | None:
-    """Return up to which t the summed loss (times `sign`) surely has E[exp(tL)] under normal dependence, else None.
+def exponential_rate(
+    sub_portfolios: Sequence[SubPortfolioTerms], factors: FactorSet, sign: float, *, most: int = MOST_OF_ALL
+) -> float | None:
+    """Return up to which t the summed loss (times `sign`) surely has E[exp(tL)] under normal dependence.
 
     Far out the loss is at most z'Mz/2 in the factors' normal scores z, and E[exp(t z'Mz/2)] is finite if and only
-    if t times the largest eigenvalue of MR is below 1. Independent parts are judged one by one.
+    if t times the largest eigenvalue of MR is below 1. Independent parts are judged one by one. None under any
+    other dependence, and with more than `most` factors.
     """
     sums: Exponents = {}
     least = math.inf
@@ -331,7 +334,7 @@ def exponential_rate(sub_portfolios: Sequence[SubPortfolioTerms], factors: Facto
     names = sorted({name for pair, coefficient in sums.items() if coefficient != 0.0 for name in pair})
     if not names:
         return least
-    if len(names) > MOST_EIGENVALUES:
+    if len(names) > most:
         return None
     correlation = np.eye(1) if len(names) == 1 else factors.correlation(factors.columns(names))
     if correlation is None:
@@ -341,8 +344,17 @@ def exponential_rate(sub_portfolios: Sequence[SubPortfolioTerms], factors: Facto
     for (first, second), coefficient in sums.items():
         if coefficient != 0.0:
             form[place[first], place[second]] = form[place[second], place[first]] = coefficient
-    largest = float(np.max(np.linalg.eigvals(form @ correlation).real))
+    largest = _largest_eigenvalue(form, correlation)
     return min(least, 1.0 / largest) if largest > 0.0 else least
+
+
+def _largest_eigenvalue(form: Array, correlation: Array) -> float:
+    """Return that of the product of two symmetric matrices, the second positive semi-definite."""
+    sizes = np.diag(form)
+    if np.count_nonzero(form) == np.count_nonzero(sizes) and np.all(sizes >= 0.0):
+        roots = np.sqrt(sizes)
+        return float(np.linalg.eigvalsh(roots[:, None] * correlation * roots)[-1])
+    return float(np.max(np.linalg.eigvals(form @ correlation).real))
 
 
 def _exponents(terms: SubPortfolioTerms, factors: FactorSet, sign: float) -> tuple[Exponents, float]:

@@ -9,23 +9,38 @@ from scipy import special
 
 Array = NDArray[np.float64]
 
+NEWTON_STEPS = 4
+TINY = 1e-12  # eta over exp(y) - 1 is 1 up to rounding
 FARTHEST = 9.0  # normal scores of the table; beyond it, once in 4e18 draws, the quantile is computed
 INTERVALS = 4096  # of the table: the error is below 1e-11
-LARGE_SHAPE = 1e8  # from here on a gamma variable is the cube of a normal one to 1e-11
+LARGE_SHAPE = 1e5  # from here on an asymptotic inversion is used, with an error below 1e-12
 
 
 def log_gamma_quantile(shape: float, scores: Array) -> Array:
-    """Return the logarithm of the gamma quantile (scale 1) of the probability Phi(score).
-
-    Beyond shape 1e8 by the cube root of Wilson and Hilferty (Proc. National Academy of Sciences 17, 1931, 684-688).
-    """
+    """Return the logarithm of the gamma quantile (scale 1) of the probability Phi(score)."""
     if shape > LARGE_SHAPE:
-        cube_root = 1.0 - 1.0 / (9.0 * shape) + scores / (3.0 * np.sqrt(shape))
-        return np.asarray(np.log(shape) + 3.0 * np.log(cube_root))
+        return np.asarray(np.log(shape) + _log_ratio(shape, scores)[0])
     nearer = special.ndtr(-np.abs(scores))
     below = special.gammaincinv(shape, nearer)
     above = special.gammainccinv(shape, nearer)
     return np.asarray(np.log(np.where(scores < 0.0, below, above)))
+
+
+def _log_ratio(shape: float, scores: Array) -> tuple[Array, Array]:
+    """Return y = ln(quantile / shape) for a large shape, and its slope over the score.
+
+    y solves exp(y) - 1 - y = eta^2 / 2 with the sign of eta, where eta = x - (1/3 - x/36) / shape up to terms in
+    shape^-2, x = score / sqrt(shape): N. M. Temme, Asymptotic inversion of incomplete gamma functions, Mathematics of
+    Computation 58 (1992) 755-764.
+    """
+    x = scores / np.sqrt(shape)
+    eta = x - (1.0 / 3.0 - x / 36.0) / shape
+    y = eta.copy()
+    for _ in range(NEWTON_STEPS):
+        step = (np.expm1(y) - y - 0.5 * eta**2) / np.where(y == 0.0, 1.0, np.expm1(y))
+        y -= step
+    steepness = np.divide(eta, np.expm1(y), out=np.ones_like(y), where=np.abs(y) > TINY)
+    return y, steepness * (1.0 + 1.0 / (36.0 * shape)) / np.sqrt(shape)
 
 
 @dataclass(frozen=True, slots=True)
@@ -69,7 +84,7 @@ def _table(shape: float) -> LogGamma:
     nodes = np.linspace(-FARTHEST, FARTHEST, INTERVALS + 1)
     logs = log_gamma_quantile(shape, nodes)
     if shape > LARGE_SHAPE:
-        slopes = 1.0 / np.sqrt(shape) / (1.0 - 1.0 / (9.0 * shape) + nodes / (3.0 * np.sqrt(shape)))
+        slopes = _log_ratio(shape, nodes)[1]
     else:
         log_density = shape * logs - np.exp(logs) - special.gammaln(shape)  # of the logarithm
         slopes = np.exp(-0.5 * nodes**2 - 0.5 * np.log(2.0 * np.pi) - log_density)

@@ -30,10 +30,10 @@ class ParetoMarginal(MarginalLaw):
         return self.scale * np.exp(-log_upper(lower, upper) / self.shape)
 
     def _below(self, values: Array) -> Array:
-        return -np.expm1(-self.shape * np.log(values / self.scale))
+        return -np.expm1(-self.shape * np.log1p((values - self.scale) / self.scale))
 
     def _beyond(self, values: Array) -> Array:
-        return np.exp(-self.shape * np.log(values / self.scale))
+        return np.exp(-self.shape * np.log1p((values - self.scale) / self.scale))
 
     @property
     def support(self) -> tuple[float, float]:

@@ -233,11 +233,17 @@ class Entropic(LocatedMeasure):
         return np.stack(rows)
 
     def values(self, ordered: Ordered) -> Array:
-        """Return L_max + ln E[exp(aversion (L - L_max))] / aversion, which cannot overflow."""
-        top = ordered.values[:, :1]
-        raised = self.aversion * (ordered.values - top)
-        mean = np.sum(_per_position(ordered) * np.expm1(raised), axis=-1)
-        return np.asarray(top[:, 0] + np.log1p(mean) / self.aversion)
+        """Return L_max + ln E[exp(aversion (L - L_max))] / aversion, which cannot overflow.
+
+        L_max is the largest loss that has a probability. Where the mean is near 1 its distance from 1 is summed.
+        """
+        p = _per_position(ordered)
+        top = np.max(np.where(p > 0.0, ordered.values, -np.inf), axis=-1)
+        raised = self.aversion * (np.minimum(ordered.values, top[:, None]) - top[:, None])
+        excess = np.sum(p * np.expm1(raised), axis=-1)
+        mean = np.sum(p * np.exp(raised), axis=-1)
+        logarithm = np.where(excess > -0.5, np.log1p(np.maximum(excess, -0.5)), np.log(mean))  # noqa: PLR2004  # half of 1
+        return np.asarray(top + logarithm / self.aversion)
 
     def influence(self, ordered: Ordered, values: Array) -> Influence:
         """Return (exp(aversion (L - figure)) - 1) / aversion: delta method on the mean of exp."""
@@ -254,16 +260,23 @@ class Entropic(LocatedMeasure):
         """Return int g_t (X_i - E_t[X_i]) dt, g_t = exp(t aversion L)/E[exp(t aversion L)], E_t the mean under it."""
         per_scenario = np.divide(weights.values, ties.p, out=np.zeros_like(ties.p), where=ties.p > 0.0)
         values = (per_scenario[:, None] * rows).T
-        for point, share in self._panels(float(ordered.values[0, 0] - ordered.values[0, -1])):
-            gibbs, active = self._gibbs(ordered.values[0], ties.p, point)
-            centre = (gibbs * ties.p[:active]) @ rows[:active]
+        ((losses, p),) = self._each(ordered)
+        for point, share in self._panels(float(losses[0] - losses[-1])):
+            gibbs, active = self._gibbs(losses, p, point)
+            centre = (gibbs * p[:active]) @ rows[:active]
             values[:, :active] -= share * centre[:, None] * gibbs
         return Influence(values, np.zeros(rows.shape[1]))
 
     @staticmethod
     def _each(ordered: Ordered) -> "list[tuple[Array, Array]]":
-        p = np.broadcast_to(_per_position(ordered), ordered.values.shape)
-        return list(zip(ordered.values, p, strict=True))
+        """Return losses and probabilities of each distribution; losses without any moved to the nearest with some."""
+        found = []
+        for values, p in zip(
+            ordered.values, np.broadcast_to(_per_position(ordered), ordered.values.shape), strict=True
+        ):
+            ends = values[np.flatnonzero(p)[[0, -1]]]
+            found.append((np.clip(values, ends[1], ends[0]), p))
+        return found
 
     def _average_gibbs(self, values: Array, p: Array) -> Array:
         weights = np.zeros_like(values)

@@ -53,8 +53,6 @@ def as_asked(measure):
     """Return a measure of a request as the service holds it."""
     above = measure.get("above", "zero")
     parameters = {key: value for key, value in measure.items() if key not in ("kind", "above", "label")}
-    if measure["kind"] == "standard_deviation":
-        parameters = {"multiple": 1} | parameters
     name = " ".join([measure["kind"], *(f"{value:.15g}" for value in parameters.values())])
     name += " above mean" if above == "mean" else ""
     return SimpleNamespace(name=measure.get("label", name), kind=measure["kind"], above=above, parameters=parameters)

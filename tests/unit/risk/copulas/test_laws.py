@@ -68,9 +68,7 @@ def archimedean(cls, family, theta):
 
 def turned(theta):
     copula = SurvivalClaytonCopula(family="survival_clayton", theta=theta)
-    return pair(
-        copula, forms.tau_clayton(theta), lambda u, v: u + v - 1.0 + forms.clayton(1.0 - u, 1.0 - v, theta)
-    )
+    return pair(copula, forms.tau_clayton(theta), lambda u, v: u + v - 1.0 + forms.clayton(1.0 - u, 1.0 - v, theta))
 
 
 def nested(generator, outer, inner):

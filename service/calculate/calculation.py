@@ -1,0 +1,129 @@
+"""What all calculations on the scenarios of one source share."""
+
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from dataclasses import replace
+from typing import Any
+
+from service import __version__, answers
+from service.answers import Notes, figure_list
+from service.canonical import canonical_request
+from service.errors import CallerError, Fault, Limit, LimitExceeded, TailraceError, pointing
+from service.executors import Work
+from service.frames import Demand, framed
+from service.intake import Intake
+from service.provenance import document_digest
+from service.risk import figures
+from service.risk.loss_table import Group, groups_of
+from service.risk.measures import RangeValueAtRisk, RiskMeasure
+from service.schemas.losses import FactorLosses, ScenarioLosses
+from service.schemas.requests import MeasuresRequest
+from service.schemas.results import Figure, Labels, Provenance, Tail
+from service.settings import Settings, variable
+from service.sources import Source
+
+Describe = Callable[[TailraceError], dict[str, Any]]
+"""Makes the problem document of an error, for what is refused inside an answer."""
+
+MEAN = RangeValueAtRisk(kind="range_value_at_risk", lower_level=0.0, upper_level=1.0)
+"""The expected loss as a measure, for what its error needs."""
+
+
+def groups_asked(request: MeasuresRequest, source: Source, settings: Settings) -> tuple[Group, ...]:
+    """Return the groups that a request asks for."""
+    with pointing("/group_by"):
+        groups = groups_of(source.sub_portfolios, request.group_by)
+        if len(groups) > settings.max_groups:
+            detail = f"{len(groups)} groups are more than the {settings.max_groups} allowed here"
+            name = "max_groups"
+            limit = Limit(name=name, allowed=settings.max_groups, asked=len(groups), setting=variable(name))
+            raise LimitExceeded(detail, limit=limit, faults=[Fault(detail=detail, code=LimitExceeded.code)])
+    return groups
+
+
+@contextmanager
+def placed(intake: Intake) -> Iterator[None]:
+    """Say of a fault found at a scenario where the caller put that scenario."""
+    try:
+        yield
+    except CallerError as error:
+        error.faults = tuple(_placed(fault, intake) for fault in error.faults)
+        raise
+
+
+def _placed(fault: Fault, intake: Intake) -> Fault:
+    number = (fault.pointer or "").removeprefix("/")
+    if not number.isdigit():
+        return fault
+    losses = intake.request.losses
+    if isinstance(losses, ScenarioLosses):
+        if intake.part is not None:
+            return replace(fault, pointer=None, part=intake.part, row=int(number) + 1)
+        if losses.values is not None and losses.layout == "by_scenario":
+            return fault.beneath("/losses/values")
+    return replace(fault, pointer="/losses")
+
+
+class Calculation:
+    """What all calculations on a frame share."""
+
+    def __init__(self, intake: Intake, source: Source, demand: Demand, work: Work, settings: Settings) -> None:
+        losses = intake.request.losses
+        stop = losses.simulation.stop_when if isinstance(losses, FactorLosses) else None
+        with placed(intake):
+            self.made = framed(source, demand, stop, work, settings)
+        self.intake, self.source, self.frame = intake, source, self.made.frame
+        self.coverage = demand.coverage
+        self.notes = Notes(self.frame.scenarios, pointed=intake.part != "body")
+        for code, detail, pointer in self.made.notes:
+            self.notes.say(code, detail, pointer)
+        if source.table is not None and not source.table.sampled:
+            self.notes.add("population", "the scenarios are the whole distribution: no figure has a sampling error")
+
+    def total(self, number: int, measure: RiskMeasure) -> Figure:
+        """Return the figure of the total, with its notes."""
+        estimates = self.made.estimated(measure, "total", lambda frame: figures.total(frame, measure, self.coverage))
+        self.notes.of_estimates(number, measure, estimates)
+        return figure_list(estimates, self.coverage)[0]
+
+    def alone(self, number: int, measure: RiskMeasure) -> list[Figure]:
+        """Return the stand-alone figures, with their notes."""
+        estimates = self.made.estimated(
+            measure, "alone", lambda frame: figures.stand_alone(frame, measure, self.coverage)
+        )
+        self.notes.of_estimates(number, measure, estimates)
+        return figure_list(estimates, self.coverage)
+
+    def record(self) -> dict[str, Any]:
+        """Return labels, notes and provenance, which every answer holds."""
+        request = self.intake.request
+        losses = request.losses
+        return {
+            "labels": Labels(losses.currency, losses.valuation_date, losses.horizon, request.reference),
+            "notes": self.notes.listed(),
+            "provenance": Provenance(
+                service_version=__version__,
+                request_digest=document_digest(canonical_request(self.intake, self.source)),
+                losses_digest=self.source.digest,
+                method=self.source.method,
+                seed=self.source.seed,
+                scenarios=self.frame.scenarios,
+            ),
+        }
+
+    def shared(self, request: MeasuresRequest) -> dict[str, Any]:
+        """Return what measures and allocations hold besides their results."""
+        expected = self.made.estimated(MEAN, "total", lambda frame: figures.expected_loss(frame, self.coverage))
+        return {
+            "expected_loss": figure_list(expected, self.coverage)[0],
+            "scenarios": self.frame.scenarios,
+            "tail": self._tail(request) if request.tail_detail else None,
+            **self.record(),
+        }
+
+    def _tail(self, request: MeasuresRequest) -> Tail:
+        """Return the worst scenarios, and what the factors are in the tail."""
+        level = answers.tail_level(request.measures)
+        numbers, weights = figures.tail_scenarios(self.frame, level)
+        source = replace(self.source, plan=self.made.plan)
+        return answers.tail(self.frame, level, source.factor_means(numbers, weights))

@@ -1,0 +1,205 @@
+"""Candidates as sent, each read alone: a name, and a loss in every scenario of the base."""
+
+import sys
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+from pydantic import TypeAdapter, ValidationError
+
+from service.errors import CallerError, InvalidValue, TooLong, pointing
+from service.executors import Work
+from service.frames import missing
+from service.payloads import json_text
+from service.risk.components import ObservedComponent
+from service.risk.components.portfolio import SubPortfolioTerms
+from service.risk.factors import FactorModel
+from service.risk.frame import Frame
+from service.risk.history import history_losses
+from service.risk.loss_table import check_magnitude
+from service.risk.measures import RiskMeasure
+from service.risk.quantiles import Array
+from service.risk.simulation import Plan, simulated
+from service.schemas.requests import Candidate
+from service.sources import Source
+from service.validation import echo, refusal
+
+LARGEST = int(sys.float_info.max)
+CANDIDATE: TypeAdapter[Candidate] = TypeAdapter(Candidate)
+OBSERVED: TypeAdapter[Any] = TypeAdapter(list[ObservedComponent])
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Read:
+    """A candidate that was read, or the reason why it was not.
+
+    Attributes
+    ----------
+    number : int
+        In the request.
+    name : str or None
+    candidate : Candidate or None
+    loss : ndarray of shape (n,) or None
+        In scenario order.
+    error : CallerError or None
+    """
+
+    number: int
+    name: str | None
+    candidate: Candidate | None = None
+    loss: Array | None = None
+    error: CallerError | None = None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Reader:
+    """Reads candidates against a base.
+
+    Attributes
+    ----------
+    source : Source
+        Of the base, its plan as carried out.
+    frame : Frame
+        Of the base.
+    measures : sequence of RiskMeasure
+        That are asked of each candidate.
+    documents : sequence
+        All candidates as sent.
+    work : Work
+    """
+
+    source: Source
+    frame: Frame
+    measures: Sequence[RiskMeasure]
+    documents: Sequence[Any]
+    work: Work
+
+    def read(self, numbers: Sequence[int]) -> list[Read]:
+        """Return some candidates, those made of components simulated together."""
+        read = [self._one(number) for number in numbers]
+        made = [one for one in read if one.error is None and one.loss is None and one.candidate is not None]
+        if not made:
+            return read
+        terms = [_terms(one.candidate) for one in made if one.candidate is not None]
+        losses = dict(zip([one.number for one in made], self._losses(terms).T, strict=True))
+        return [replace(one, loss=losses[one.number]) if one.number in losses else one for one in read]
+
+    def _one(self, number: int) -> Read:
+        document = self.documents[number]
+        known = document.get("id") if isinstance(document, dict) else None
+        name = known if isinstance(known, str) else None
+        try:
+            with pointing(f"/candidates/{number}"):
+                candidate = self._candidate(number, document)
+                loss = None
+                if candidate.values is not None:
+                    with pointing("/values"):
+                        loss = self._values(document["values"])
+                else:
+                    self._check(candidate, document)
+        except TooLong:
+            raise
+        except CallerError as error:
+            return Read(number, name, error=error)
+        return Read(number, candidate.id, candidate, loss)
+
+    def _candidate(self, number: int, document: Any) -> Candidate:
+        """Return the model of a candidate; its values are looked at apart, many at a time."""
+        given = isinstance(document, dict) and document.get("values") is not None
+        shell = document | {"values": [0.0]} if given else document
+        try:
+            candidate = CANDIDATE.validate_json(json_text(shell))
+        except ValidationError as error:
+            raise refusal(error, shell, Candidate) from None
+        earlier = [one.get("id") for one in self.documents[:number] if isinstance(one, dict)]
+        taken = [one.id for one in self.source.sub_portfolios]
+        if candidate.id in taken or candidate.id in earlier:
+            raise InvalidValue.at("/id", f"{candidate.id!r} is taken already", code="repeated")
+        return candidate
+
+    def _values(self, values: Any) -> Array:
+        """Return losses (n,) that were sent as a list."""
+        if not isinstance(values, list) or len(values) != self.frame.scenarios:
+            count = f"{len(values)} values are" if isinstance(values, list) else "no list is"
+            detail = f"{count} given, but the book has {self.frame.scenarios} scenarios"
+            raise InvalidValue.at("", detail, code="wrong_count")
+        wrong = next((number for number, value in enumerate(values) if not _is_number(value)), None)
+        loss = np.array(values if wrong is None else values[:wrong], dtype=np.float64) + 0.0
+        if wrong is None and not np.isfinite(loss).all():
+            wrong = int(np.argmin(np.isfinite(loss)))
+        if wrong is not None:
+            raise InvalidValue.at(f"/{wrong}", f"{echo(values[wrong])} is not a finite number", code="wrong_type")
+        check_magnitude(self.frame.totals + loss)
+        return loss
+
+    def _check(self, candidate: Candidate, document: Any) -> None:
+        """Refuse components that do not fit the base, or whose loss does not have the measures asked for."""
+        terms = [_terms(candidate)]
+        if self.source.plan is not None:
+            with _here():
+                law = self._model(terms).existence()[1]
+            reason = missing(self.measures, law)
+            if reason is not None:
+                raise InvalidValue.at("/components", reason, code="infinite_figure")
+        elif self.source.changes is not None:
+            try:
+                OBSERVED.validate_json(json_text(document["components"]))
+            except ValidationError as error:
+                with pointing("/components"):
+                    raise refusal(error, document["components"], list[ObservedComponent]) from None
+            with _here():
+                self._observed(terms)
+        else:
+            detail = "the base is a table of scenarios: a candidate gives its values in each of them"
+            raise InvalidValue.at("/components", detail, code="not_allowed")
+
+    def _losses(self, terms: Sequence[SubPortfolioTerms]) -> Array:
+        """Return the losses of candidates made of components, shape (n, c)."""
+        if self.source.plan is not None:
+            return simulated(replace(self.source.plan, model=self._model(terms)), self.work)
+        return self._observed(terms) + 0.0
+
+    def _model(self, terms: Sequence[SubPortfolioTerms]) -> FactorModel:
+        """Return the factor model of the base with other sub-portfolios: its factors draw the same numbers."""
+        plan = self._plan
+        factors = plan.model.factors
+        pairs = [(name, factors.marginal(name)) for name in factors.ids]
+        if factors.dependence is None:
+            raise ValueError("a factor model has a copula")
+        return FactorModel.of(pairs, factors.dependence, terms)
+
+    @property
+    def _plan(self) -> Plan:
+        if self.source.plan is None:
+            raise ValueError("the base is not simulated")
+        return self.source.plan
+
+    def _observed(self, terms: Sequence[SubPortfolioTerms]) -> Array:
+        made = self.source.changes
+        if made is None:
+            raise ValueError("the base is not observed")
+        return history_losses(self.source.factor_ids, made.values, terms).losses
+
+
+@contextmanager
+def _here() -> Iterator[None]:
+    """Point into the candidate, not into the source that it was made for a moment."""
+    try:
+        yield
+    except CallerError as error:
+        error.faults = tuple(
+            replace(fault, pointer=fault.pointer.removeprefix("/sub_portfolios/0")) if fault.pointer else fault
+            for fault in error.faults
+        )
+        raise
+
+
+def _terms(candidate: Candidate) -> SubPortfolioTerms:
+    return SubPortfolioTerms(candidate.id, tuple(candidate.components or ()), candidate.sign, tuple(candidate.cover))
+
+
+def _is_number(value: Any) -> bool:
+    """Return whether a decoded JSON value is a number that binary64 can hold, or its infinity."""
+    return type(value) is float or (type(value) is int and abs(value) <= LARGEST)
