@@ -9,6 +9,7 @@ import numpy as np
 
 from service.errors import NotDefined
 from service.risk.allocation import Contributions
+from service.risk.comparisons import Change, State
 from service.risk.frame import Frame
 from service.risk.increments import Base, Increment
 from service.risk.measures import RiskMeasure
@@ -18,6 +19,9 @@ from service.schemas.results import (
     AllocationResult,
     AllocationRow,
     CandidateFigures,
+    ChangeByState,
+    ChangedPart,
+    ComparisonResult,
     Figure,
     GroupFigure,
     GroupRow,
@@ -77,6 +81,18 @@ class Notes:
         """Add the notes of others that are not made yet."""
         for key, note in others.made.items():
             self.made.setdefault(key, note)
+
+    def name(self, book: str) -> None:
+        """Say of all notes so far which of two books they are about."""
+        pointers = {key: note.pointer for key, note in self.made.items()}
+        self.made = {
+            (f"{book} {key[0]}", key[1]): Note(
+                note.code,
+                f"{book}: {note.detail}",
+                (pointers[key] or "").replace("/losses", f"/{book}", 1) or None,
+            )
+            for key, note in self.made.items()
+        }
 
     def listed(self) -> list[Note]:
         """Return the notes made, in the order of the measures."""
@@ -301,6 +317,23 @@ def candidate_figures(
             )
         ],
     )
+
+
+def change_result(name: str, totals: Sequence[Figure], change: Change, coverage: float) -> ComparisonResult:
+    """Return how one measure changed; `totals` are before and after."""
+    *changes, total = figure_list(change.changes, coverage)
+    pairs = [[None if value != value else value + 0.0 for value in pair] for pair in change.contributions.tolist()]  # noqa: PLR0124
+    parts = [
+        ChangedPart(one, state, before, after, figure)
+        for one, state, (before, after), figure in zip(change.ids, change.states, pairs, changes, strict=True)
+    ]
+    states: tuple[State, ...] = ("new", "gone", "changed")
+    by_state = [
+        ChangeByState(state, len(those), sum((part.change.value for part in those), 0.0))
+        for state in states
+        for those in [[part for part in parts if part.state == state]]
+    ]
+    return ComparisonResult(name, totals[0], totals[1], total, parts, by_state)
 
 
 def tail_level(measures: Sequence[RiskMeasure]) -> float:

@@ -6,8 +6,13 @@ from typing import Any
 
 from service.intake import Intake
 from service.risk.measures import RiskMeasure
-from service.schemas.losses import ScenarioLosses
-from service.schemas.requests import AllocationsRequest, IncrementsRequest, MeasuresRequest
+from service.schemas.losses import Losses, ScenarioLosses
+from service.schemas.requests import (
+    AllocationsRequest,
+    ComparisonsRequest,
+    IncrementsRequest,
+    MeasuresRequest,
+)
 from service.sources import Source
 
 
@@ -21,21 +26,11 @@ def canonical_request(intake: Intake, source: Source) -> dict[str, Any]:
         What its losses were resolved to.
     """
     request = intake.request
-    losses = request.losses
+    if isinstance(request, ComparisonsRequest):
+        raise TypeError("a comparison has two sources")
     document: dict[str, Any] = {
         "calculation": intake.calculation,
-        "losses": {
-            "digest": source.digest,
-            "sub_portfolios": [
-                {"attributes": one.attributes, "expected_profit": one.expected_profit, "id": one.id}
-                for one in source.sub_portfolios
-            ],
-            "scenarios_are": losses.scenarios_are if isinstance(losses, ScenarioLosses) else None,
-            "scenario_ids": None if source.table is None else source.table.scenario_ids,
-            "currency": losses.currency,
-            "valuation_date": losses.valuation_date,
-            "horizon": losses.horizon,
-        },
+        "losses": _losses(request.losses, source),
         "measures": _measures(request.measures),
         "interval_coverage": request.interval_coverage,
         "reference": request.reference,
@@ -55,6 +50,34 @@ def canonical_request(intake: Intake, source: Source) -> dict[str, Any]:
             "smoothing": request.smoothing,
         }
     return document
+
+
+def canonical_comparison(request: ComparisonsRequest, before: Source, after: Source) -> dict[str, Any]:
+    """Return the canonical form of a comparison of two sources."""
+    return {
+        "calculation": "comparisons",
+        "before": _losses(request.before, before),
+        "after": _losses(request.after, after),
+        "measures": _measures(request.measures),
+        "same_scenarios": request.same_scenarios,
+        "interval_coverage": request.interval_coverage,
+        "reference": request.reference,
+    }
+
+
+def _losses(losses: Losses, source: Source) -> dict[str, Any]:
+    return {
+        "digest": source.digest,
+        "sub_portfolios": [
+            {"attributes": one.attributes, "expected_profit": one.expected_profit, "id": one.id}
+            for one in source.sub_portfolios
+        ],
+        "scenarios_are": losses.scenarios_are if isinstance(losses, ScenarioLosses) else None,
+        "scenario_ids": None if source.table is None else source.table.scenario_ids,
+        "currency": losses.currency,
+        "valuation_date": losses.valuation_date,
+        "horizon": losses.horizon,
+    }
 
 
 def _measures(measures: Sequence[RiskMeasure]) -> list[Mapping[str, Any]]:

@@ -68,7 +68,7 @@ def _add_compute(commands: "argparse._SubParsersAction[argparse.ArgumentParser]"
     compute.add_argument("request", metavar="REQUEST.json", help="file with the request; - reads standard input")
     compute.add_argument(
         "--to",
-        choices=("measures", "allocations", "increments"),
+        choices=("measures", "allocations", "increments", "comparisons"),
         default="allocations",
         help="calculation (default allocations)",
     )

@@ -1,7 +1,7 @@
 """From the bytes of a request to its model and its table, whatever form they came in."""
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -11,8 +11,8 @@ from pydantic import TypeAdapter, ValidationError
 from service import payloads, query
 from service.errors import Fault, InvalidValue, UnsupportedMediaType, pointing
 from service.payloads import Sheet
-from service.schemas.losses import FactorLosses, HistoryLosses, Losses, ScenarioLosses
-from service.schemas.requests import AllocationsRequest, IncrementsRequest, MeasuresRequest
+from service.schemas.losses import FactorLosses, HistoryLosses, Losses, PackedTable, ScenarioLosses
+from service.schemas.requests import AllocationsRequest, ComparisonsRequest, IncrementsRequest, MeasuresRequest
 from service.settings import Settings
 from service.validation import refusal
 
@@ -21,12 +21,13 @@ MULTIPART = "multipart/form-data"
 BODY_PART = "body"
 TABLE_PART = "table"
 
-Request = MeasuresRequest | AllocationsRequest | IncrementsRequest
+Request = MeasuresRequest | AllocationsRequest | IncrementsRequest | ComparisonsRequest
 
 MODELS: Mapping[str, type[Request]] = {
     "measures": MeasuresRequest,
     "allocations": AllocationsRequest,
     "increments": IncrementsRequest,
+    "comparisons": ComparisonsRequest,
 }
 """The request model of each calculation, by the last word of its path."""
 ADAPTERS: Mapping[str, TypeAdapter[Any]] = {name: TypeAdapter(model) for name, model in MODELS.items()}
@@ -45,12 +46,15 @@ class Intake:
         The numbers as they were sent: bare, or with a header; None where the losses have no table apart.
     part : str or None
         Where a table with a header stands: `body` or `table`.
+    tables : mapping of str to ndarray
+        For a request with two sources: the bare table of each, by its name.
     """
 
     calculation: str
     request: Request
     table: NDArray[np.float64] | Sheet | None
     part: str | None = None
+    tables: Mapping[str, NDArray[np.float64]] = field(default_factory=dict)
 
 
 def read(
@@ -96,7 +100,27 @@ def read(
 def _json_body(calculation: str, body: bytes, settings: Settings) -> Intake:
     envelope = payloads.split_envelope(body, max_bytes=settings.max_envelope_bytes)
     request = _validated(calculation, envelope.document, envelope.text)
+    if isinstance(request, ComparisonsRequest):
+        books = {"before": request.before, "after": request.after}
+        tables = {name: _inner_table(losses, name, envelope.document, settings) for name, losses in books.items()}
+        return Intake(calculation, request, None, tables={name: one for name, one in tables.items() if one is not None})
     return Intake(calculation, request, _table(request.losses, envelope, settings))
+
+
+def _inner_table(losses: Losses, name: str, document: dict[str, Any], settings: Settings) -> NDArray[np.float64] | None:
+    """Return the table of one of two sources, which is part of the document like everything else."""
+    if isinstance(losses, FactorLosses):
+        return None
+    if losses.part is not None:
+        raise InvalidValue.at(f"/{name}/part", "a comparison holds both tables itself, as values or packed")
+    if losses.packed is not None:
+        with pointing(f"/{name}/packed"):
+            return _unpacked(losses.packed, losses.packed.data, settings)
+    if isinstance(losses, HistoryLosses):
+        return None
+    with pointing(f"/{name}/values"):
+        text = payloads.json_text(document[name]["values"])
+        return payloads.rows_from_json(memoryview(text), max_cells=settings.max_cells)
 
 
 def _table(losses: Losses, envelope: payloads.Envelope, settings: Settings) -> NDArray[np.float64] | None:
@@ -107,19 +131,18 @@ def _table(losses: Losses, envelope: payloads.Envelope, settings: Settings) -> N
         detail = "part says that the table is another part of a multipart request, but the body is JSON alone"
         raise InvalidValue.at("/losses/part", detail)
     if losses.packed is not None and envelope.packed is not None:
-        packed = losses.packed
         with pointing("/losses/packed"):
-            return payloads.unpack(
-                envelope.packed,
-                dtype=packed.dtype,
-                rows=packed.rows,
-                columns=packed.columns,
-                max_cells=settings.max_cells,
-            )
+            return _unpacked(losses.packed, envelope.packed, settings)
     if isinstance(losses, HistoryLosses):
         return None
     with pointing("/losses/values"):
         return payloads.rows_from_json(envelope.table or b"", max_cells=settings.max_cells)
+
+
+def _unpacked(packed: PackedTable, data: memoryview | str, settings: Settings) -> NDArray[np.float64]:
+    return payloads.unpack(
+        data, dtype=packed.dtype, rows=packed.rows, columns=packed.columns, max_cells=settings.max_cells
+    )
 
 
 def read_parts(
@@ -145,6 +168,8 @@ def read_parts(
     """
     envelope = payloads.split_envelope(request, max_bytes=settings.max_envelope_bytes)
     model = _validated(calculation, envelope.document, envelope.text)
+    if isinstance(model, ComparisonsRequest):
+        raise UnsupportedMediaType("a comparison is asked in JSON alone")
     if isinstance(model.losses, FactorLosses) or model.losses.part is None:
         detail = 'a request of two parts says "part": "table" where its losses are, and holds no other table'
         raise InvalidValue.at("/losses", detail)
@@ -165,7 +190,7 @@ def _table_body(
             replace(fault, pointer=None, parameter=query.parameter_at(fault.pointer or "")) for fault in error.faults
         )
         raise
-    if isinstance(request.losses, FactorLosses):
+    if isinstance(request, ComparisonsRequest) or isinstance(request.losses, FactorLosses):
         raise TypeError("a table body is a table of scenarios")
     return Intake(calculation, request, _sheet(request.losses, body, media_type, BODY_PART, settings), BODY_PART)
 

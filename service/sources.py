@@ -8,7 +8,6 @@ from scipy import special
 
 from service.errors import Fault, InvalidValue, Limit, LimitExceeded, pointing
 from service.executors import Work
-from service.intake import Intake
 from service.payloads import Sheet
 from service.provenance import document_digest, losses_digest
 from service.resolve import loss_table
@@ -25,6 +24,7 @@ from service.schemas.losses import (
     FactorSubPortfolio,
     HistoryLosses,
     HistorySubPortfolio,
+    Losses,
     ScenarioLosses,
 )
 from service.settings import Settings, variable
@@ -104,24 +104,39 @@ class Source:
         ]
 
 
-def source_of(intake: Intake, work: Work, settings: Settings) -> Source:
+Sent = Array | Sheet | None
+"""A table as it was sent: bare, with a header, or none."""
+
+
+def source_of(losses: Losses, table: Sent, *, part: str | None, work: Work, settings: Settings) -> Source:
     """Return the source of a request's losses; a factor model is checked and planned, not yet simulated.
+
+    Parameters
+    ----------
+    losses : Losses
+    table : ndarray, Sheet or None
+        As it was sent.
+    part : str or None
+        Where a table with a header stands.
+    work : Work
+    settings : Settings
 
     Raises
     ------
     CallerError
         Where it does not fit together; pointers are into the request.
     """
-    losses = intake.request.losses
     if isinstance(losses, ScenarioLosses):
-        if intake.table is None:
+        if table is None:
             raise InvalidValue.at("/losses", "there is no table")
-        table = loss_table(losses, intake.table, part=intake.part, settings=settings)
-        ids = [one.id for one in table.sub_portfolios]
-        digest = losses_digest(ids, table.losses, table.probabilities, work)
-        return Source(digest, GIVEN, table.sub_portfolios, table=table)
+        made = loss_table(losses, table, part=part, settings=settings)
+        ids = [one.id for one in made.sub_portfolios]
+        digest = losses_digest(ids, made.losses, made.probabilities, work)
+        return Source(digest, GIVEN, made.sub_portfolios, table=made)
     with pointing("/losses"):
-        return _simulated(losses, settings) if isinstance(losses, FactorLosses) else _observed(losses, intake, work)
+        if isinstance(losses, FactorLosses):
+            return _simulated(losses, settings)
+        return _observed(losses, table, work)
 
 
 def _described(columns: Sequence[FactorSubPortfolio] | Sequence[HistorySubPortfolio]) -> tuple[SubPortfolio, ...]:
@@ -159,9 +174,9 @@ def _simulated(losses: FactorLosses, settings: Settings) -> Source:
     )
 
 
-def _observed(losses: HistoryLosses, intake: Intake, work: Work) -> Source:
+def _observed(losses: HistoryLosses, sent: Sent, work: Work) -> Source:
     """Return observed changes as scenarios; pointers are into `losses`."""
-    changes = _changes(losses, intake)
+    changes = _changes(losses, sent)
     scaling = losses.horizon_scaling
     made = history_losses(
         losses.factors,
@@ -187,16 +202,16 @@ def _observed(losses: HistoryLosses, intake: Intake, work: Work) -> Source:
     return Source(digest, OBSERVED, columns, table=table, changes=made, factor_ids=factor_ids, notes=notes)
 
 
-def _changes(losses: HistoryLosses, intake: Intake) -> Array:
+def _changes(losses: HistoryLosses, sent: Sent) -> Array:
     """Return the changes (n, k) in the order of the factors."""
-    if isinstance(intake.table, Sheet):
-        names = list(intake.table.names)
+    if isinstance(sent, Sheet):
+        names = list(sent.names)
         if sorted(names) != sorted(losses.factors):
             detail = f"the table has the columns {', '.join(names[:20])}, not the factors"
             raise InvalidValue.at("/factors", detail, code="unknown_column")
-        return np.ascontiguousarray(intake.table.values[:, [names.index(name) for name in losses.factors]])
-    if intake.table is not None:
-        return intake.table
+        return np.ascontiguousarray(sent.values[:, [names.index(name) for name in losses.factors]])
+    if sent is not None:
+        return sent
     rows = losses.changes or []
     odd = next((number for number, row in enumerate(rows) if len(row) != len(losses.factors)), None)
     if odd is not None:

@@ -12,6 +12,8 @@ from service.schemas.results import (
     AllocationResult,
     AllocationRow,
     AllocationsAnswer,
+    ComparisonResult,
+    ComparisonsAnswer,
     Figure,
     GroupRow,
     IncrementsAnswer,
@@ -29,7 +31,7 @@ CAUTION = (
     "officer decide."
 )
 
-Answer = MeasuresAnswer | AllocationsAnswer | IncrementsAnswer
+Answer = MeasuresAnswer | AllocationsAnswer | IncrementsAnswer | ComparisonsAnswer
 
 
 def readable(answer: Answer) -> str:
@@ -39,6 +41,8 @@ def readable(answer: Answer) -> str:
         blocks += [_allocation(one) for one in answer.allocations]
     elif isinstance(answer, MeasuresAnswer):
         blocks += [_measure(one) for one in answer.measures]
+    elif isinstance(answer, ComparisonsAnswer):
+        blocks += [_comparison(one) for one in answer.comparisons]
     else:
         blocks += _increments(answer)
     blocks += [_wrapped(f"Note: {note.detail}.") for note in answer.notes]
@@ -55,7 +59,7 @@ def _heading(answer: Answer) -> Iterator[str]:
         yield ", ".join(known)
     unit = f" in {labels.currency}" if labels.currency else ""
     heading = f"{answer.provenance.scenarios:,} scenarios, amounts{unit}"
-    if isinstance(answer, IncrementsAnswer):
+    if isinstance(answer, IncrementsAnswer | ComparisonsAnswer):
         yield heading + "\n"
         return
     yield f"{heading}, expected loss {_short(answer.expected_loss.value)}"
@@ -145,6 +149,22 @@ def _increments(answer: IncrementsAnswer) -> Iterator[str]:
     for one in answer.candidates:
         if one.problem is not None:
             yield f"{one.id or 'a candidate without a name'} refused: {one.problem['detail']}\n"
+
+
+def _comparison(result: ComparisonResult) -> str:
+    """Return how one measure changed: by sub-portfolio, by state, and the total at the foot."""
+    rows: list[tuple[object, ...]] = [
+        (one.id, one.state, one.before, one.after, one.change.value, *_ends(one.change))
+        for one in result.sub_portfolios
+    ]
+    rows += [(f"all {one.state}", None, None, None, one.change, None, None) for one in result.by_state]
+    rows.append(("total", None, result.before.value, result.after.value, result.change.value, *_ends(result.change)))
+    columns = (
+        _text("sub-portfolio"),
+        _text("state"),
+        *(_number(name) for name in ("before", "after", "change", "lower", "upper")),
+    )
+    return f"{result.measure}\n{text_table(Table(columns, rows))}"
 
 
 def _verdict(passed: bool | None) -> str | None:  # noqa: FBT001  # a verdict is what it is

@@ -2,15 +2,16 @@
 
 from service.calculate.allocations import Allocations
 from service.calculate.calculation import Describe
+from service.calculate.comparisons import Comparisons
 from service.calculate.increments import Increments
 from service.calculate.measures import Measures
 from service.executors import Work
 from service.intake import Intake
-from service.schemas.requests import AllocationsRequest, IncrementsRequest
-from service.schemas.results import AllocationsAnswer, IncrementsAnswer, MeasuresAnswer
+from service.schemas.requests import AllocationsRequest, ComparisonsRequest, IncrementsRequest
+from service.schemas.results import AllocationsAnswer, ComparisonsAnswer, IncrementsAnswer, MeasuresAnswer
 from service.settings import Settings
 
-Answer = MeasuresAnswer | AllocationsAnswer | IncrementsAnswer
+Answer = MeasuresAnswer | AllocationsAnswer | IncrementsAnswer | ComparisonsAnswer
 
 
 def answer(intake: Intake, work: Work, settings: Settings, describe: Describe) -> Answer:
@@ -32,6 +33,8 @@ def answer(intake: Intake, work: Work, settings: Settings, describe: Describe) -
         Where a figure does not exist, a limit is passed, time is up or the caller has gone.
     """
     request = intake.request
+    if isinstance(request, ComparisonsRequest):
+        return Comparisons(intake, request, work, settings).answer()
     if isinstance(request, IncrementsRequest):
         return Increments(intake, request, work, settings, describe).answer()
     if isinstance(request, AllocationsRequest):

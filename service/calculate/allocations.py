@@ -25,7 +25,7 @@ class Allocations(Calculation):
     """`POST /v1/allocations`."""
 
     def __init__(self, intake: Intake, request: AllocationsRequest, work: Work, settings: Settings) -> None:
-        source = source_of(intake, work, settings)
+        source = source_of(request.losses, intake.table, part=intake.part, work=work, settings=settings)
         groups = groups_asked(request, source, settings)
         measures: list[RiskMeasure] = list(request.measures)
         if request.capital_measure is not None:

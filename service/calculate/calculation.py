@@ -17,7 +17,7 @@ from service.risk import figures
 from service.risk.loss_table import Group, groups_of
 from service.risk.measures import RangeValueAtRisk, RiskMeasure
 from service.schemas.losses import FactorLosses, ScenarioLosses
-from service.schemas.requests import MeasuresRequest
+from service.schemas.requests import ComparisonsRequest, MeasuresRequest
 from service.schemas.results import Figure, Labels, Provenance, Tail
 from service.settings import Settings, variable
 from service.sources import Source
@@ -55,6 +55,8 @@ def _placed(fault: Fault, intake: Intake) -> Fault:
     number = (fault.pointer or "").removeprefix("/")
     if not number.isdigit():
         return fault
+    if isinstance(intake.request, ComparisonsRequest):
+        return fault
     losses = intake.request.losses
     if isinstance(losses, ScenarioLosses):
         if intake.part is not None:
@@ -68,7 +70,10 @@ class Calculation:
     """What all calculations on a frame share."""
 
     def __init__(self, intake: Intake, source: Source, demand: Demand, work: Work, settings: Settings) -> None:
-        losses = intake.request.losses
+        if isinstance(intake.request, ComparisonsRequest):
+            raise TypeError("a comparison is made of two calculations")
+        self.asked = intake.request
+        losses = self.asked.losses
         stop = losses.simulation.stop_when if isinstance(losses, FactorLosses) else None
         with placed(intake):
             self.made = framed(source, demand, stop, work, settings)
@@ -96,7 +101,7 @@ class Calculation:
 
     def record(self) -> dict[str, Any]:
         """Return labels, notes and provenance, which every answer holds."""
-        request = self.intake.request
+        request = self.asked
         losses = request.losses
         return {
             "labels": Labels(losses.currency, losses.valuation_date, losses.horizon, request.reference),

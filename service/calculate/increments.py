@@ -28,7 +28,7 @@ class Increments(Calculation):
     def __init__(
         self, intake: Intake, request: IncrementsRequest, work: Work, settings: Settings, describe: Describe
     ) -> None:
-        source = source_of(intake, work, settings)
+        source = source_of(request.losses, intake.table, part=intake.part, work=work, settings=settings)
         if request.base_digest not in (None, source.digest):
             detail = f"the losses have the digest {source.digest}, not the one given"
             raise LossesChanged.at("/base_digest", detail)

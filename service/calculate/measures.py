@@ -16,7 +16,7 @@ class Measures(Calculation):
     """`POST /v1/measures`."""
 
     def __init__(self, intake: Intake, request: MeasuresRequest, work: Work, settings: Settings) -> None:
-        source = source_of(intake, work, settings)
+        source = source_of(request.losses, intake.table, part=intake.part, work=work, settings=settings)
         groups = groups_asked(request, source, settings)
         demand = Demand(request.measures, request.interval_coverage, groups, request.include_stand_alone)
         super().__init__(intake, source, demand, work, settings)

@@ -157,8 +157,8 @@ class _Report:
         labels = self.answer.labels
         distribution = self._figure(
             lambda look: distribution_chart(self.distribution, marks, labels, look),
-            "How probable losses of each size are. The worst ones are drawn dark, and once more beneath, wider and "
-            "with heights by the square root, so that single scenarios can be seen.",
+            "How probable losses of each size are. The worst ones have a colour of their own and are drawn once more "
+            "beneath, wider and with heights by the square root, so that single scenarios can be seen.",
         )
         exceedance = self._figure(
             lambda look: exceedance_chart(self.distribution, marks, labels, look),
@@ -329,9 +329,10 @@ def _amounts(parts: Iterable[Part]) -> Iterable[float | None]:
 
 
 def _sum_alone(result: Allocation) -> float | None:
+    """Return the sum of the stand-alone figures; None where there is one part only, or one has none."""
     figures = [one.stand_alone for one in result.sub_portfolios]
     known = [figure.value for figure in figures if figure is not None]
-    return sum(known) if len(known) == len(figures) else None
+    return sum(known) if 1 < len(known) == len(figures) else None
 
 
 def _part_cells(one: Part, amounts: Amounts) -> list[Cell]:

@@ -232,7 +232,7 @@ class FactorModel:
 
     def existence(self) -> tuple[list[Tails], Tails]:
         """Return which moments exist of each sub-portfolio's loss and of the total."""
-        return self.portfolio.tails(), self.portfolio.total_tails()
+        return self.portfolio.existence()
 
 
 def _table(factors: FactorSet, column: int, law: Law) -> ScoreTable:

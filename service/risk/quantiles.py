@@ -145,14 +145,20 @@ class Ordered:
         return np.diff(taken, axis=-1, prepend=0.0) / mass
 
     def effective_tail(self, share: Fraction) -> Array:
-        """Return the effective number of scenarios in the worst `share`: (sum p)^2 / sum p^2, shape (c,)."""
+        """Return the effective number of scenarios in the worst `share`: (sum p)^2 / sum p^2, shape (c,).
+
+        Scenarios at the quantile count for the part of their atom that belongs to the tail.
+        """
         if self.clusters is not None:
             parts = cluster_sums(np.broadcast_to(self.tail_weights(share), self.values.shape), self.clusters)
             return 1.0 / np.sum(parts * parts, axis=-1)
         if self.probabilities is None:
             return np.full(self.values.shape[0], self.mass(share))
-        part = self.tail_weights(share)
-        return 1.0 / np.sum(part * self.probabilities / float(share), axis=-1)
+        p, mass = self.probabilities, float(share)
+        q = self.at(self.position(share))[:, None]
+        beyond, at = np.where(self.values > q, p, 0.0), np.where(self.values == q, p, 0.0)
+        part = np.maximum(mass - beyond.sum(axis=-1), 0.0) / at.sum(axis=-1)
+        return mass * mass / (np.sum(beyond * beyond, axis=-1) + part * np.sum(at * at, axis=-1))
 
 
 @dataclass(frozen=True, slots=True)

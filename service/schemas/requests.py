@@ -140,3 +140,21 @@ class IncrementsRequest:
     """Nominal coverage of the intervals, without unit."""
     reference: Text | None = None
     """Label of this request; comes back unchanged."""
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class ComparisonsRequest:
+    """What is asked of `POST /v1/comparisons`."""
+
+    before: Losses
+    """The book as it was."""
+    after: Losses
+    """The book as it is."""
+    measures: Measures
+    """The risk measures to compare, 1 to 32, with distinct names."""
+    same_scenarios: bool | None = None
+    """Whether both books have the same scenarios in order; found from labels, seeds or changes if absent."""
+    interval_coverage: Coverage = 0.95
+    """Nominal coverage of the intervals, without unit."""
+    reference: Text | None = None
+    """Label of this request; comes back unchanged."""

@@ -8,7 +8,7 @@ from service.representations.charts.canvas import NARROW, WIDTH, Look, dark_styl
 from service.representations.charts.contributions import contributions_chart
 from service.representations.charts.distribution import distribution_chart
 from service.representations.charts.exceedance import exceedance_chart
-from service.representations.charts.marks import Mark, mark, marks_of
+from service.representations.charts.marks import Mark, mark, marks_of, places
 from service.representations.shapes import AllocationsAnswer, Distribution, MeasuresAnswer
 
 __all__ = [
@@ -25,6 +25,7 @@ __all__ = [
     "exceedance_chart",
     "mark",
     "marks_of",
+    "places",
 ]
 
 Chart = Literal["distribution", "exceedance", "contributions"]

@@ -5,7 +5,7 @@ from collections.abc import Sequence
 
 from service.representations.charts.axes import Scale, along, tick_writer
 from service.representations.charts.canvas import HEADING, SMALL, Canvas, Look, wrapped
-from service.representations.charts.marks import MOST, Flags, Mark, interval_words, left_out
+from service.representations.charts.marks import MOST, Flags, Mark, interval_words, left_out, places
 from service.representations.shapes import Distribution, Labels
 from service.representations.wording import Amounts, probability, sentence
 
@@ -79,7 +79,7 @@ def exceedance_chart(
 def _across(distribution: Distribution, marks: Sequence[Mark], left: float, right: float) -> Scale:
     """Return the scale of losses."""
     low = min(distribution.body_range[0], *(one.at for one in marks), distribution.highest)
-    high = max(distribution.highest, *(one.at for one in marks), low)
+    high = max(distribution.highest, *places(marks), low)
     median = _at(distribution, 0.5)
     if median > 0.0 and high > HEAVY * median and all(one.at > 0.0 for one in marks):
         low = min(START * median, *(one.at for one in marks), high)

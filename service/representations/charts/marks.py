@@ -83,6 +83,11 @@ def mark(name: str, figure: Figure, shift: float = 0.0) -> Mark:
     )
 
 
+def places(marks: Iterable[Mark]) -> list[float]:
+    """Return the losses that a picture of `marks` has to show: the figures and the ends of their intervals."""
+    return [loss for one in marks for loss in (one.at, one.lower, one.upper) if loss is not None]
+
+
 def left_out(marks: Sequence[Mark]) -> str | None:
     """Return a sentence on the marks that are too many to draw."""
     return None if len(marks) <= MOST else f"The first {MOST} of {len(marks)} measures are marked."
@@ -166,9 +171,17 @@ class Flags:
         for label in labels:
             one, y = label.mark, top + label.row * self.row
             if one.lower is not None and one.upper is not None:
-                canvas.span(self.scale(one.lower), self.scale(one.upper), y + 19)
+                self._span(canvas, one.lower, one.upper, y + 19)
             beside = BESIDE if label.side == "start" else -BESIDE
             canvas.text(label.x + beside, y + 12, label.words, anchor=label.side, full=one.words(self.amounts))
+
+    def _span(self, canvas: Canvas, lower: float, upper: float, y: float) -> None:
+        """Draw an interval; an end that lies outside the picture has no tick."""
+        scale = self.scale
+        canvas.line(scale(lower), y, scale(upper), y, tint="ink", thick=1.5)
+        for end in (lower, upper):
+            if scale.low <= end <= scale.high:
+                canvas.line(scale(end), y - 3.5, scale(end), y + 3.5, tint="ink", thick=1.5)
 
 
 def _overlap(one: _Label, other: _Label) -> bool:

@@ -292,14 +292,13 @@ class Portfolio:
             if self.amounts[row] != 0.0:
                 work[row] += self.amounts[row]
 
-    def tails(self) -> list[Tails]:
-        """Return which moments of each sub-portfolio's loss exist."""
-        return [self._judged([terms], terms.tails(self.factors), MOST_OF_ONE) for terms in self.sub_portfolios]
-
-    def total_tails(self) -> Tails:
-        """Return which moments of the total loss exist."""
-        parts = [(terms.used, terms.tails(self.factors)) for terms in self.sub_portfolios]
-        return self._judged(self.sub_portfolios, together(parts, self.factors), MOST_OF_ALL)
+    def existence(self) -> tuple[list[Tails], Tails]:
+        """Return which moments exist of each sub-portfolio's loss and of the total."""
+        each = [terms.tails(self.factors) for terms in self.sub_portfolios]
+        parts = [(terms.used, tails) for terms, tails in zip(self.sub_portfolios, each, strict=True)]
+        total = self._judged(self.sub_portfolios, together(parts, self.factors), MOST_OF_ALL)
+        pairs = zip(self.sub_portfolios, each, strict=True)
+        return [self._judged([terms], tails, MOST_OF_ONE) for terms, tails in pairs], total
 
     def _judged(self, terms: Sequence[SubPortfolioTerms], tails: Tails, most: int) -> Tails:
         """Return the tails with the exponential moment that a normal dependence allows, where that is known."""

@@ -23,6 +23,9 @@ from service.risk.correlation.spearman import student_correlations
 MOST_FACTORS = 2000  # of a whole matrix, whose root takes about n^3 operations
 ZERO = 1e-10  # an eigenvalue this little below 0 is 0 up to the rounding of the entries
 
+VALUES = "The matrix as rows, without unit: symmetric, with a diagonal of 1."
+REPAIR = "`nearest` puts the nearest correlation matrix in place of one that is not positive semi-definite."
+
 Rows = Annotated[list[Annotated[list[float], Field(min_length=1)]], Field(min_length=1)]
 
 
@@ -30,10 +33,8 @@ Rows = Annotated[list[Annotated[list[float], Field(min_length=1)]], Field(min_le
 class _Whole(CorrelationForm):
     """A symmetric matrix with unit diagonal; members say which correlations it stands for."""
 
-    values: Rows
-    """The matrix as rows, without unit: symmetric, with a diagonal of 1."""
-    repair: Literal["nearest"] | None = None
-    """`nearest` puts the nearest correlation matrix in place of one that is not positive semi-definite."""
+    values: Annotated[Rows, Field(description=VALUES)]
+    repair: Annotated[Literal["nearest"] | None, Field(description=REPAIR)] = None
 
     def correlations(self, values: Array, mixing: Mixing) -> Array:
         """Return the correlations that the entries stand for."""

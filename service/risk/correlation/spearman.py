@@ -48,7 +48,8 @@ def student_correlations(rhos: Array, df: float) -> Array:
     rise = correlations[place + 1] - correlations[place]
     start, end = width / slopes[place], width / slopes[place + 1]
     cubic = start + t * (3.0 * rise - 2.0 * start - end + t * (start + end - 2.0 * rise))  # Hermite
-    return np.asarray(np.copysign(np.minimum(correlations[place] + t * cubic, 1.0), rhos))
+    found = np.where(sizes == 1.0, 1.0, np.minimum(correlations[place] + t * cubic, 1.0))
+    return np.asarray(np.copysign(found, rhos))
 
 
 def spearman_rhos(correlations: Array, df: float) -> tuple[Array, Array]:

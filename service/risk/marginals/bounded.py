@@ -149,9 +149,9 @@ def beta_quantile(a: float, b: float, lower: Array, upper: Array) -> Array:
     y = np.array(np.where(lower < upper, special.betaincinv(a, b, lower), special.betainccinv(a, b, upper)))
     # P(Y <= y) = y^a / (a B(a, b)) × (1 + a (1 - b)/(a + 1) y + ...)
     power = np.exp((np.log(lower) + log_gamma_1p(a) - log_gamma_ratio(a + b, a)) / a)
-    power *= 1.0 + (b - 1.0) / (a + 1.0) * power
     leading = power * max(1.0, b) < POWER
-    y[leading] = np.where(power < SMALLEST_NORMAL, 0.0, power)[leading]
+    first = np.where(power < SMALLEST_NORMAL, 0.0, power)[leading]
+    y[leading] = first * (1.0 + (b - 1.0) / (a + 1.0) * first)
     far = (np.minimum(lower, upper) < TRUSTED) & (lower > 0.0) & (upper > 0.0) & ~leading
     if np.any(far):
         y[far] = _refined(a, b, lower[far], upper[far], y[far])

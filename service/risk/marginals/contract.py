@@ -8,7 +8,8 @@ from pydantic import AfterValidator, ConfigDict, Field, ValidationInfo, model_va
 from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
 
-from service.risk.marginals.moments import Array, deficit_moments, excess_moments
+from service.risk.marginals import moments
+from service.risk.marginals.moments import Array
 from service.risk.score_tables import WHOLE, Affine, Piece
 
 STRICT = ConfigDict(
@@ -19,6 +20,7 @@ LARGEST = 1e150  # size of an amount: its square is still a number
 SMALLEST = 1e-150  # size of a scale: likewise
 EXTREME_SHAPE = 1e12  # shapes lie between this and its reciprocal
 RARE = 1e-20  # probability on either side up to which no value may pass `LARGEST`; simulation never gets there
+FAR_LAYER = 0.01  # probability of reaching a layer below which the difference of two limited means loses digits
 FARTHEST_NUMBER = float(np.finfo(np.float64).max)
 OUT_OF_RANGE = "out_of_range"
 
@@ -176,19 +178,13 @@ class MarginalLaw:
             return float(self._limited_mean(float(limit)))
 
     def _limited_mean(self, limit: float) -> float:
-        return limit - self.deficit_moments(limit)[0]
+        return moments.limited_mean(self, limit)
 
     def layer_mean(self, start: float, stop: float) -> float:
-        """Return E min((X - start)+, stop - start), what a layer between two finite amounts is hit by."""
-        return self.limited_mean(stop) - self.limited_mean(start)
-
-    def excess_moments(self, limit: float) -> tuple[float, float]:
-        """Return E (X - limit)+ and E ((X - limit)+)²."""
-        return excess_moments(self, limit)
-
-    def deficit_moments(self, limit: float) -> tuple[float, float]:
-        """Return E (limit - X)+ and E ((limit - X)+)²."""
-        return deficit_moments(self, limit)
+        """Return E min((X - start)+, stop - start), what is paid by a layer between two finite amounts."""
+        if self.lower_tail_index > 1.0 and float(self.beyond(np.array(start))) > FAR_LAYER:
+            return self.limited_mean(stop) - self.limited_mean(start)
+        return moments.layer_mean(self, start, stop)
 
     @property
     def affine(self) -> Affine | None:
@@ -209,7 +205,7 @@ class MarginalLaw:
         ends = self.quantile(np.array([RARE, 1.0]), np.array([1.0, RARE]))
         if not np.all(np.abs(ends) <= LARGEST):
             context = {"most": f"{LARGEST:g}", "rare": f"{RARE:g}"}
-            detail = "these parameters give values beyond {most} with a probability of {rare}: too large to compute with"
+            detail = "these parameters give values beyond {most} with probability {rare}: too large to compute with"
             raise PydanticCustomError(OUT_OF_RANGE, detail, context)
         index = min(self.upper_tail_index, self.lower_tail_index)
         for order, name in ((1, "mean"), (2, "variance")):

@@ -64,13 +64,8 @@ class DiscreteMarginal(MarginalLaw):
         atoms = self.atoms
         return math.fsum(atoms.masses * np.minimum(atoms.values, limit))
 
-    def excess_moments(self, limit: float) -> tuple[float, float]:
-        excess = np.maximum(self.atoms.values - limit, 0.0)
-        return math.fsum(self.atoms.masses * excess), math.fsum(self.atoms.masses * excess * excess)
-
-    def deficit_moments(self, limit: float) -> tuple[float, float]:
-        deficit = np.maximum(limit - self.atoms.values, 0.0)
-        return math.fsum(self.atoms.masses * deficit), math.fsum(self.atoms.masses * deficit * deficit)
+    def layer_mean(self, start: float, stop: float) -> float:
+        return math.fsum(self.atoms.masses * np.clip(self.atoms.values - start, 0.0, stop - start))
 
     @property
     def pieces(self) -> tuple[Piece, ...]:

@@ -144,7 +144,7 @@ class GeneralizedExtremeValueMarginal(MarginalLaw):
 
     def _limited_mean(self, limit: float) -> float:
         """Return mean - (scale/shape)(γ(1 - shape, s) - (1 - exp(-s)) s^-shape), s = -ln P(X <= limit)."""
-        if not SMALL_SHAPE < abs(self.shape) or self.shape >= 1.0:
+        if abs(self.shape) <= SMALL_SHAPE or self.shape >= 1.0:
             return MarginalLaw._limited_mean(self, limit)  # noqa: SLF001  # the one without closed form
         s = float(self._rate(np.array(limit)))
         order = 1.0 - self.shape

@@ -56,7 +56,8 @@ class InverseGaussianMarginal(MarginalLaw):
         for _ in range(MOST_STEPS):
             y = np.exp(log_y)
             a, factor = self._factor(y, under)
-            step = (np.log(factor) - 0.5 * a * a - wanted) * factor * np.sqrt(2.0 * math.pi * y * self.mean / self.shape)
+            per_log = factor * np.sqrt(2.0 * math.pi * y * self.mean / self.shape)  # tail over y × density
+            step = (np.log(factor) - 0.5 * a * a - wanted) * per_log
             step = np.where(near > 0.0, np.where(under, -step, step), 0.0)
             log_y += step
             if np.all(np.abs(step) <= CONVERGED):

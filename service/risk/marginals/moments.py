@@ -12,6 +12,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import special
 
+from service.risk.score_tables import Piece
+
 Array = NDArray[np.float64]
 Flags = NDArray[np.bool_]
 
@@ -34,6 +36,10 @@ class Tailed(Protocol):
         """Return P(X > x)."""
 
     @property
+    def pieces(self) -> tuple[Piece, ...]:
+        """Where the quantile function is smooth, and where it is a step function."""
+
+    @property
     def upper_tail_index(self) -> float:
         """Order up to which the moments of the upper tail exist."""
 
@@ -43,7 +49,10 @@ class Tailed(Protocol):
 
 
 def excess_moments(law: Tailed, limit: float) -> tuple[float, float]:
-    """Return E (X - limit)+ and E ((X - limit)+)² of a continuous law; infinity where they do not exist."""
+    """Return E (X - limit)+ and E ((X - limit)+)² of a law in one piece; infinity where they do not exist."""
+    atoms = law.pieces[0].atoms
+    if atoms is not None:
+        return _sums(atoms.masses, np.maximum(atoms.values - limit, 0.0))
     at = np.array([limit])
     lower, upper = float(law.below(at)[0]), float(law.beyond(at)[0])
 
@@ -57,7 +66,10 @@ def excess_moments(law: Tailed, limit: float) -> tuple[float, float]:
 
 
 def deficit_moments(law: Tailed, limit: float) -> tuple[float, float]:
-    """Return E (limit - X)+ and E ((limit - X)+)² of a continuous law; infinity where they do not exist."""
+    """Return E (limit - X)+ and E ((limit - X)+)² of a law in one piece; infinity where they do not exist."""
+    atoms = law.pieces[0].atoms
+    if atoms is not None:
+        return _sums(atoms.masses, np.maximum(limit - atoms.values, 0.0))
     at = np.array([limit])
     lower, upper = float(law.below(at)[0]), float(law.beyond(at)[0])
 
@@ -68,6 +80,46 @@ def deficit_moments(law: Tailed, limit: float) -> tuple[float, float]:
         return np.maximum(limit - law.quantile(-np.expm1(-y), np.exp(-y)), 0.0)
 
     return _both_sides(under, above, (lower, upper), law.lower_tail_index)
+
+
+def limited_mean(law: Tailed, limit: float) -> float:
+    """Return E min(X, limit) of a continuous law with a lower tail of index above 1, without use of its mean."""
+    median = _median(law)
+    if limit <= median:
+        return limit - deficit_moments(law, limit)[0]
+    return median - deficit_moments(law, median)[0] + layer_mean(law, median, limit)
+
+
+def layer_mean(law: Tailed, start: float, stop: float) -> float:
+    """Return E min((X - start)+, stop - start) of a continuous law, whose mean need not exist."""
+    median, total = _median(law), 0.0
+    if stop > median:  # integral of (Q - low) exp(-y) to where Q is `stop`, the rest of the probability hits in full
+        low = max(start, median)
+        tails = law.beyond(np.array([low, stop]))
+        y, weights = _panels(*_logarithms(tails))
+        inside = np.clip(law.quantile(-np.expm1(-y), np.exp(-y)) - low, 0.0, stop - low)
+        total += float(weights @ (inside * np.exp(-y))) + (stop - low) * float(tails[1])
+    if start < median:  # what is not hit, likewise from the other side
+        high = min(stop, median)
+        tails = law.below(np.array([high, start]))
+        y, weights = _panels(*_logarithms(tails))
+        inside = np.clip(high - law.quantile(np.exp(-y), -np.expm1(-y)), 0.0, high - start)
+        total += (high - start) * (1.0 - float(tails[1])) - float(weights @ (inside * np.exp(-y)))
+    return total
+
+
+def _median(law: Tailed) -> float:
+    return float(law.quantile(np.array([0.5]), np.array([0.5]))[0])
+
+
+def _logarithms(tails: Array) -> tuple[float, float]:
+    """Return -ln of two probabilities, at most `FARTHEST`."""
+    first, second = np.minimum(-np.log(np.maximum(tails, math.exp(-FARTHEST))), FARTHEST).tolist()
+    return first, second
+
+
+def _sums(masses: Array, amounts: Array) -> tuple[float, float]:
+    return math.fsum(masses * amounts), math.fsum(masses * amounts * amounts)
 
 
 def _both_sides(

@@ -11,6 +11,7 @@ Array = NDArray[np.float64]
 NEAR_ONE = 0.05  # |x| up to which ln gamma(1 + x) is summed as a series; beyond it SciPy loses no digits
 TERMS = 24  # of the series; the last is below 0.1^24
 ZETA = special.zeta(np.arange(2.0, TERMS + 2.0))  # zeta(2), zeta(3), ...
+SHORT = 0.2  # |t| below which t - ln(1 + t) is summed as a series
 STIRLING_FROM = 30.0  # argument from which four terms of Stirling's series are exact to rounding
 HALF_LOG_TWO_PI = 0.5 * math.log(2.0 * math.pi)
 
@@ -56,7 +57,7 @@ def stirling_rest(a: float) -> float:
 
 def log_excess(ratio: Array) -> Array:
     """Return t - ln(1 + t), for t > -1, without loss near t = 0."""
-    small = np.abs(ratio) < 0.2
+    small = np.abs(ratio) < SHORT
     t = np.where(small, ratio, 0.0)
     # with s = t/(2 + t): ln(1 + t) = 2 (s + s^3/3 + s^5/5 + ...) and t - 2 s = t s
     s = t / (2.0 + t)

@@ -19,7 +19,7 @@ from service.risk.marginals.extremes import (
     GumbelMarginal,
 )
 from service.risk.marginals.inverse_gaussian import InverseGaussianMarginal
-from service.risk.marginals.moments import Array
+from service.risk.marginals.moments import Array, deficit_moments, excess_moments
 from service.risk.marginals.positive import (
     ExponentialMarginal,
     GammaMarginal,
@@ -59,8 +59,6 @@ SplicePart = TypeAliasType(
     ],
 )
 """Any marginal that is not spliced itself, told apart by `family`."""
-
-
 
 
 def _probability(value: float) -> float:
@@ -167,7 +165,7 @@ class SplicedMarginal(MarginalLaw):
         index = min(self.upper_tail_index, self.lower_tail_index)
         if index <= 1.0:
             return math.inf, math.inf
-        deficit, excess = self.body.deficit_moments(self.threshold), self.tail.excess_moments(self.threshold)
+        deficit, excess = deficit_moments(self.body, self.threshold), excess_moments(self.tail, self.threshold)
         below, beyond = self._body_probability / self._kept, self.tail_probability / self._left
         first = beyond * excess[0] - below * deficit[0]
         if index <= 2.0:  # noqa: PLR2004  # the second moment
@@ -175,11 +173,19 @@ class SplicedMarginal(MarginalLaw):
         return self.threshold + first, below * deficit[1] + beyond * excess[1] - first * first
 
     def _limited_mean(self, limit: float) -> float:
-        weight = self._body_probability / self._kept
-        if limit <= self.threshold:
-            return limit - weight * (limit - self.body.limited_mean(limit))
-        start = self.threshold - weight * (self.threshold - self.body.limited_mean(self.threshold))
-        return start + self.tail_probability / self._left * self.tail.layer_mean(self.threshold, limit)
+        at = min(limit, self.threshold)
+        mean = at - self._body_probability / self._kept * (at - self.body.limited_mean(at))
+        return mean if limit <= at else mean + self.layer_mean(at, limit)
+
+    def layer_mean(self, start: float, stop: float) -> float:
+        """Return the integral of P(X > x) over the layer, from both parts."""
+        total, low, high = 0.0, max(start, self.threshold), min(stop, self.threshold)
+        if start < high:
+            weight = self._body_probability / self._kept  # P(X <= x) is so many times that of the body
+            total += (high - start) * (1.0 - weight) + weight * self.body.layer_mean(start, high)
+        if stop > low:
+            total += self.tail_probability / self._left * self.tail.layer_mean(low, stop)
+        return total
 
     @property
     def upper_tail_index(self) -> float:

@@ -9,7 +9,7 @@ from scipy import special
 
 from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, Scale, Shape
 from service.risk.marginals.moments import Array
-from service.risk.marginals.special_functions import decayed, log_gamma_ratio
+from service.risk.marginals.special_functions import log_gamma_ratio
 from service.risk.score_tables import Affine
 from service.risk.scores import NormalScores, StudentScores, UniformScores
 
@@ -135,24 +135,14 @@ class StudentTMarginal(MarginalLaw):
         return 0.0
 
     def _limited_mean(self, limit: float) -> float:
-        t = (limit - self.location) / self.scale
-        tail = float(self._under(np.array(-abs(t))))
-        bend = math.log1p(t * t / self.df)
-        density = math.exp(-0.5 * (self.df + 1.0) * bend - 0.5 * math.log(self.df) - self._log_beta)
-        # E (T - |t|)+, the same on both sides
-        beyond = density * (self.df + t * t) / (self.df - 1.0) - abs(t) * tail
-        return (limit if t < 0.0 else self.location) - self.scale * beyond
-
-    def layer_mean(self, start: float, stop: float) -> float:
-        """Return the integral of P(X > x) over the layer by parts, which needs no mean."""
-        low, high = (start - self.location) / self.scale, (stop - self.location) / self.scale
-        bends = [math.log1p(t * t / self.df) for t in (low, high)]
-        # of t f(t) dt = sqrt(df)/(2 B) exp(-(df - 1)/2 s) ds with s = ln(1 + t²/df)
-        first, width = min(bends), max(bends) - min(bends)
-        rate = 0.5 * (self.df - 1.0)
-        inner = 0.5 * math.exp(0.5 * math.log(self.df) - self._log_beta - rate * first) * decayed(rate, width)
-        ends = [t * float(self._under(np.array(-t))) for t in (low, high)]
-        return self.scale * (ends[1] - ends[0] + math.copysign(inner, bends[1] - bends[0]))
+        t = abs(limit - self.location) / self.scale
+        tail = float(self._under(np.array(-t)))
+        root = t / math.sqrt(self.df)
+        bend = math.log1p(root * root) if root < 1.0 else 2.0 * math.log(math.hypot(1.0, root))
+        # E (T - t)+ = (df + t²)/(df - 1) × density - t P(T > t), on both sides
+        log_term = 0.5 * math.log(self.df) - self._log_beta - 0.5 * (self.df - 1.0) * bend
+        beyond = math.exp(log_term) / (self.df - 1.0) - t * tail
+        return min(limit, self.location) - self.scale * beyond
 
     @property
     def affine(self) -> Affine:

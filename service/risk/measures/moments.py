@@ -247,7 +247,8 @@ class Entropic(LocatedMeasure):
 
     def influence(self, ordered: Ordered, values: Array) -> Influence:
         """Return (exp(aversion (L - figure)) - 1) / aversion: delta method on the mean of exp."""
-        raised = np.minimum(self.aversion * (ordered.values - values[:, None]), UNDERFLOW - 40.0)
+        losses = np.stack([losses for losses, _ in self._each(ordered)])
+        raised = np.minimum(self.aversion * (losses - values[:, None]), UNDERFLOW - 40.0)
         return Influence(np.expm1(raised) / self.aversion, np.zeros(values.size))
 
     def contribution_influence(

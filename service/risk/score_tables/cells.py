@@ -127,7 +127,8 @@ def _fit(target: Target, degree: int, count: int, *, exponential: bool) -> tuple
     values = np.column_stack([inner, np.append(inner[1:, 0], last)])
     if exponential:
         values = np.where(values == 0.0, NO_LOGARITHM, np.log(values))
-    coefficients = values @ np.linalg.inv(np.vander(nodes, increasing=True)).T
+    powers = np.asarray(np.linalg.inv(np.vander(nodes, increasing=True)), dtype=np.float64)
+    coefficients = values @ powers.T
     found = coefficients @ np.vander(tests, degree + 1, increasing=True).T
     exact = target.function((lower[:, None] + width * (tests + 0.5)).ravel()).reshape(found.shape)
     error = np.abs((np.exp(found) if exponential else found) - exact)

@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from service.representations.charts import marks_of
+from service.representations.charts import marks_of, places
 from service.representations.page import BookHead
 from service.risk.distribution import distribution_of
 from tests.serving import running
@@ -45,8 +45,7 @@ def asked(losses, ids=None, *, calculation="allocations", attributes=None, measu
     results = answer.allocations if calculation == "allocations" else answer.measures
     wanted = [as_asked(measure) for measure in measures]
     marks = marks_of(wanted, results, answer.expected_loss)
-    shown = [one.at for one in marks]
-    return Asked(answer, wanted, distribution_of(losses.sum(axis=1), shown=shown), marks)
+    return Asked(answer, wanted, distribution_of(losses.sum(axis=1), shown=places(marks)), marks)
 
 
 def as_asked(measure):

@@ -193,6 +193,20 @@ def test_contributions_need_one_allocation(two_measures):
     parsed(draw("distribution", measures.answer, measures.distribution, measures.marks))
 
 
+def test_an_interval_that_leaves_the_picture_has_no_tick_there(two_measures):
+    mark = two_measures.marks[0]
+    inside = Scale(mark.lower - 1.0, mark.upper + 1.0, 60.0, 700.0)
+    outside = Scale(mark.at - 1e-3, mark.upper + 1.0, 60.0, 700.0)
+    drawn = []
+    canvas = SimpleNamespace(line=lambda *place, **_: drawn.append(place), text=lambda *_, **__: None)
+    counts = []
+    for scale in (inside, outside):
+        drawn.clear()
+        Flags([mark], scale, Amounts.of([1e3], None), Look()).draw(canvas, 0.0, lambda _: 100.0)
+        counts.append(len(drawn))
+    assert counts == [5, 4]
+
+
 def test_many_marks_are_cut_and_said_to_be():
     levels = [{"kind": "value_at_risk", "level": 0.5 + 0.03 * number} for number in range(15)]
     found = asked(storms(), measures=levels)

@@ -5,10 +5,10 @@ import pytest
 from scipy import special
 
 from service.risk.copulas.elliptical import inverse_root
-from service.risk.copulas.mixing import FARTHEST, LogGamma, log_gamma_quantile
+from service.risk.copulas.mixing import FARTHEST, LARGE_SHAPE, LogGamma, _log_ratio, log_gamma_quantile
 
 
-@pytest.mark.parametrize("shape", [0.25, 0.5, 1.0, 2.0, 50.0, 1e4, 5e5])
+@pytest.mark.parametrize("shape", [0.25, 0.5, 1.0, 2.0, 50.0, 1e4, 5e5, 1e12])
 def test_the_table_is_the_quantile(shape):
     scores = np.random.Generator(np.random.Philox(1)).uniform(-9.5, 9.5, 20_000)
     table, exact = LogGamma.of(shape)(scores), log_gamma_quantile(shape, scores)
@@ -23,10 +23,13 @@ def test_the_quantile_inverts_the_distribution_function_in_both_tails(shape):
     np.testing.assert_allclose(special.gammaincc(shape, quantiles)[2:], special.ndtr(-scores[2:]), rtol=1e-9)
 
 
-def test_the_cube_root_takes_over_smoothly():
-    scores = np.linspace(-8.0, 8.0, 9)
-    below, above = (log_gamma_quantile(shape, scores) - np.log(shape) for shape in (0.9999e8, 1.0001e8))
-    np.testing.assert_allclose(below, above, rtol=0.0, atol=2e-7)  # 1e-4 of the spread, which is 1e-4 × 8
+def test_the_inversion_for_large_shapes_takes_over_smoothly():
+    scores = np.linspace(-9.0, 9.0, 19)
+    large, slope = _log_ratio(LARGE_SHAPE, scores)
+    np.testing.assert_allclose(
+        large + np.log(LARGE_SHAPE), log_gamma_quantile(LARGE_SHAPE, scores), rtol=0.0, atol=1e-11
+    )
+    np.testing.assert_allclose(slope, np.full(19, LARGE_SHAPE**-0.5), rtol=0.02)
     assert np.all(np.isfinite(log_gamma_quantile(1e300, scores)))
 
 

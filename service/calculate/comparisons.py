@@ -1,0 +1,188 @@
+"""`POST /v1/comparisons`: why a measure moved between two books."""
+
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import asdict, dataclass, is_dataclass, replace
+from typing import Literal
+
+import numpy as np
+
+from service import __version__
+from service.answers import Notes, change_result
+from service.calculate.calculation import Calculation
+from service.canonical import canonical_comparison
+from service.errors import CallerError, Fault, InvalidValue, pointing
+from service.executors import Work
+from service.frames import Demand
+from service.intake import Intake
+from service.provenance import document_digest
+from service.risk.comparisons import compared, parts_of
+from service.risk.measures import RiskMeasure
+from service.schemas.losses import FactorLosses, HistoryLosses, Losses, ScenarioLosses
+from service.schemas.requests import ComparisonsRequest, MeasuresRequest
+from service.schemas.results import ComparedBook, ComparisonResult, ComparisonsAnswer, Labels, Provenance
+from service.settings import Settings
+from service.sources import source_of
+
+Which = Literal["before", "after"]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Book:
+    """One of the two books, framed."""
+
+    losses: Losses
+    calculation: Calculation
+
+    @property
+    def ids(self) -> list[str]:
+        """Of its sub-portfolios."""
+        return [one.id for one in self.calculation.source.sub_portfolios]
+
+
+class Comparisons:
+    """`POST /v1/comparisons`."""
+
+    def __init__(self, intake: Intake, request: ComparisonsRequest, work: Work, settings: Settings) -> None:
+        self.intake, self.request = intake, request
+        self.before = _book(intake, request, "before", work, settings)
+        self.after = _book(intake, request, "after", work, settings)
+        self.notes = Notes(self.after.calculation.frame.scenarios, pointed=True)
+        for book in (self.before, self.after):
+            self.notes.take(book.calculation.notes)
+        self.paired = self._paired()
+
+    def answer(self) -> ComparisonsAnswer:
+        """Return how each measure and each contribution changed."""
+        results = []
+        for number, measure in enumerate(self.request.measures):
+            with pointing(f"/measures/{number}"):
+                results.append(self._result(number, measure))
+        after = self.after.calculation
+        losses = self.request.after
+        return ComparisonsAnswer(
+            comparisons=results,
+            same_scenarios=self.paired,
+            before=_record(self.before),
+            after=_record(self.after),
+            labels=Labels(losses.currency, losses.valuation_date, losses.horizon, self.request.reference),
+            notes=self.notes.listed(),
+            provenance=Provenance(
+                service_version=__version__,
+                request_digest=document_digest(
+                    canonical_comparison(self.request, self.before.calculation.source, after.source)
+                ),
+                losses_digest=after.source.digest,
+                method=after.source.method,
+                seed=after.source.seed,
+                scenarios=after.frame.scenarios,
+            ),
+        )
+
+    def _result(self, number: int, measure: RiskMeasure) -> ComparisonResult:
+        coverage = self.request.interval_coverage
+        books = (self.before, self.after)
+        then, now = (
+            (one.calculation.frame, one.ids, parts_of(one.calculation.frame, measure, coverage)) for one in books
+        )
+        change = compared(measure, then, now, paired=self.paired, coverage=coverage)
+        pooled = [one.calculation.made.scramblings for one in books]
+        if any(pooled):
+            parts = [
+                compared(
+                    measure,
+                    (first, self.before.ids, parts_of(first, measure, coverage)),
+                    (second, self.after.ids, parts_of(second, measure, coverage)),
+                    paired=self.paired,
+                    coverage=coverage,
+                ).changes.values
+                for first, second in zip(*pooled, strict=True)
+            ]
+            change = replace(change, changes=self.after.calculation.made.combined(change.changes, parts))
+        self.notes.of_estimates(number, measure, change.changes)
+        totals = [one.calculation.total(number, measure) for one in books]
+        return change_result(measure.name, totals, change, coverage)
+
+    def _paired(self) -> bool:
+        """Return whether the scenarios of both books are the same."""
+        then, now = self.before.calculation, self.after.calculation
+        if bool(then.made.scramblings) != bool(now.made.scramblings):
+            detail = "one book is simulated with Sobol points and the other is not: their errors do not compare"
+            raise InvalidValue.at("/after", detail, code="not_allowed")
+        given = self.request.same_scenarios
+        found = _same(self.request.before, self.request.after)
+        if then.frame.table.sampled != now.frame.table.sampled:
+            detail = "one book is a sample and the other a population: their errors do not compare"
+            raise InvalidValue.at("/after", detail, code="not_allowed")
+        if given and not _same_weights(then, now):
+            detail = "the books do not have the same number of scenarios with the same probabilities"
+            raise InvalidValue.at("/same_scenarios", detail, code="not_allowed")
+        return (found if given is None else given) and _same_weights(then, now)
+
+
+def _same_weights(then: Calculation, now: Calculation) -> bool:
+    first, second = then.frame.table.probabilities, now.frame.table.probabilities
+    if then.frame.scenarios != now.frame.scenarios or (first is None) != (second is None):
+        return False
+    return first is None or second is None or bool(np.array_equal(first, second))
+
+
+def _same(before: Losses, after: Losses) -> bool:
+    """Return whether two sources say of themselves that they have the same scenarios."""
+    if isinstance(before, ScenarioLosses) and isinstance(after, ScenarioLosses):
+        return before.scenario_ids is not None and before.scenario_ids == after.scenario_ids
+    if isinstance(before, FactorLosses) and isinstance(after, FactorLosses):
+        parts = ("factors", "dependence", "simulation")
+        return all(_plain(getattr(before, name)) == _plain(getattr(after, name)) for name in parts)
+    if isinstance(before, HistoryLosses) and isinstance(after, HistoryLosses):
+        observed = ("factors", "changes", "packed", "decay", "horizon_scaling")
+        return all(_plain(getattr(before, name)) == _plain(getattr(after, name)) for name in observed)
+    return False
+
+
+def _plain(value: object) -> object:
+    """Return a value that compares by what it says."""
+    if isinstance(value, list):
+        return [_plain(one) for one in value]
+    return asdict(value) if is_dataclass(value) and not isinstance(value, type) else value
+
+
+def _book(intake: Intake, request: ComparisonsRequest, which: Which, work: Work, settings: Settings) -> _Book:
+    """Return one of the books; the pointers of what is wrong with it begin with its name."""
+    losses = request.before if which == "before" else request.after
+    asked = MeasuresRequest(
+        losses=losses,
+        measures=request.measures,
+        interval_coverage=request.interval_coverage,
+        include_stand_alone=False,
+    )
+    table = intake.tables.get(which)
+    with _named(which):
+        source = source_of(losses, table, part=None, work=work, settings=settings)
+        demand = Demand(request.measures, request.interval_coverage, stand_alone=False)
+        calculation = Calculation(Intake("measures", asked, table), source, demand, work, settings)
+    calculation.notes.name(which)
+    return _Book(losses, calculation)
+
+
+@contextmanager
+def _named(which: Which) -> Iterator[None]:
+    try:
+        yield
+    except CallerError as error:
+        error.faults = tuple(_under(fault, which) for fault in error.faults)
+        raise
+
+
+def _under(fault: Fault, which: Which) -> Fault:
+    """Point into the book instead of into `losses`."""
+    if fault.pointer is None or not fault.pointer.startswith("/losses"):
+        return fault
+    return replace(fault, pointer=f"/{which}" + fault.pointer.removeprefix("/losses"))
+
+
+def _record(book: _Book) -> ComparedBook:
+    calculation = book.calculation
+    return ComparedBook(
+        calculation.source.digest, calculation.frame.scenarios, book.losses.valuation_date, book.losses.horizon
+    )
