@@ -9,6 +9,7 @@ from starlette.middleware import Middleware
 
 from service import __version__, openapi, problems
 from service.desk import Desk
+from service.executors import keep_freed_memory
 from service.metrics import Metrics
 from service.middleware import Envelope
 from service.routes import calculations, operations
@@ -21,6 +22,7 @@ def create_app(settings: Settings) -> FastAPI:
     Its API page and document are doors of ours: the bodies of calculations are read in a thread and not by
     the framework, which therefore cannot describe them.
     """
+    keep_freed_memory()
     metrics = Metrics()
     desk = Desk(settings)
     metrics.watch(computing=lambda: desk.computing, waiting=lambda: desk.waiting)

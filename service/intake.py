@@ -1,6 +1,7 @@
 """From the bytes of a request to its model and its table, whatever form they came in."""
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
 from typing import Any
 
@@ -9,11 +10,12 @@ from numpy.typing import NDArray
 from pydantic import TypeAdapter, ValidationError
 
 from service import payloads, query
-from service.errors import Fault, InvalidValue, UnsupportedMediaType, pointing
+from service.errors import CallerError, Fault, InvalidValue, UnsupportedMediaType, pointing
 from service.payloads import Sheet
-from service.schemas.losses import FactorLosses, HistoryLosses, Losses, PackedTable, ScenarioLosses
+from service.schemas.losses import BookLosses, FactorLosses, HistoryLosses, Losses, PackedTable, ScenarioLosses
 from service.schemas.requests import AllocationsRequest, ComparisonsRequest, IncrementsRequest, MeasuresRequest
 from service.settings import Settings
+from service.sources import Source
 from service.validation import refusal
 
 JSON = "application/json"
@@ -48,6 +50,10 @@ class Intake:
         Where a table with a header stands: `body` or `table`.
     tables : mapping of str to ndarray
         For a request with two sources: the bare table of each, by its name.
+    sources : mapping of str to Source
+        What is resolved already, being a book: by `losses`, `before` or `after`.
+    by_query : bool
+        Whether the request was made of query parameters alone.
     """
 
     calculation: str
@@ -55,6 +61,13 @@ class Intake:
     table: NDArray[np.float64] | Sheet | None
     part: str | None = None
     tables: Mapping[str, NDArray[np.float64]] = field(default_factory=dict)
+    sources: Mapping[str, Source] = field(default_factory=dict)
+    by_query: bool = False
+
+    @property
+    def pointed(self) -> bool:
+        """Whether the caller sent a document that can be pointed into."""
+        return self.part != BODY_PART and not self.by_query
 
 
 def read(
@@ -109,7 +122,7 @@ def _json_body(calculation: str, body: bytes, settings: Settings) -> Intake:
 
 def _inner_table(losses: Losses, name: str, document: dict[str, Any], settings: Settings) -> NDArray[np.float64] | None:
     """Return the table of one of two sources, which is part of the document like everything else."""
-    if isinstance(losses, FactorLosses):
+    if isinstance(losses, FactorLosses | BookLosses):
         return None
     if losses.part is not None:
         raise InvalidValue.at(f"/{name}/part", "a comparison holds both tables itself, as values or packed")
@@ -125,7 +138,7 @@ def _inner_table(losses: Losses, name: str, document: dict[str, Any], settings: 
 
 def _table(losses: Losses, envelope: payloads.Envelope, settings: Settings) -> NDArray[np.float64] | None:
     """Return the table that stands in the JSON itself; None where there is none to be decoded."""
-    if isinstance(losses, FactorLosses):
+    if isinstance(losses, FactorLosses | BookLosses):
         return None
     if losses.part is not None:
         detail = "part says that the table is another part of a multipart request, but the body is JSON alone"
@@ -170,7 +183,7 @@ def read_parts(
     model = _validated(calculation, envelope.document, envelope.text)
     if isinstance(model, ComparisonsRequest):
         raise UnsupportedMediaType("a comparison is asked in JSON alone")
-    if isinstance(model.losses, FactorLosses) or model.losses.part is None:
+    if isinstance(model.losses, FactorLosses | BookLosses) or model.losses.part is None:
         detail = 'a request of two parts says "part": "table" where its losses are, and holds no other table'
         raise InvalidValue.at("/losses", detail)
     return Intake(calculation, model, _sheet(model.losses, table, media_type, TABLE_PART, settings), TABLE_PART)
@@ -190,9 +203,40 @@ def _table_body(
             replace(fault, pointer=None, parameter=query.parameter_at(fault.pointer or "")) for fault in error.faults
         )
         raise
-    if isinstance(request, ComparisonsRequest) or isinstance(request.losses, FactorLosses):
+    if isinstance(request, ComparisonsRequest) or isinstance(request.losses, FactorLosses | BookLosses):
         raise TypeError("a table body is a table of scenarios")
     return Intake(calculation, request, _sheet(request.losses, body, media_type, BODY_PART, settings), BODY_PART)
+
+
+def read_query(calculation: str, document: dict[str, Any]) -> Intake:
+    """Read a request on a book that was made of query parameters.
+
+    Raises
+    ------
+    InvalidValue
+        Naming the parameters.
+    """
+    with in_parameters():
+        return Intake(
+            calculation, _validated(calculation, document, payloads.json_text(document)), None, by_query=True
+        )
+
+
+@contextmanager
+def in_parameters() -> Iterator[None]:
+    """Name the query parameter that made what a fault points at, or nothing where none did."""
+    try:
+        yield
+    except CallerError as error:
+        error.faults = tuple(_parameter_of(fault) for fault in error.faults)
+        raise
+
+
+def _parameter_of(fault: Fault) -> Fault:
+    if fault.pointer is None:
+        return fault
+    inside_book = fault.pointer.startswith("/losses")
+    return replace(fault, pointer=None, parameter=None if inside_book else query.parameter_at(fault.pointer))
 
 
 def _sheet(

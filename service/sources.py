@@ -6,7 +6,7 @@ from dataclasses import asdict, dataclass
 import numpy as np
 from scipy import special
 
-from service.errors import Fault, InvalidValue, Limit, LimitExceeded, pointing
+from service.errors import Fault, InvalidValue, Limit, LimitExceeded, NotFound, pointing
 from service.executors import Work
 from service.payloads import Sheet
 from service.provenance import document_digest, losses_digest
@@ -20,6 +20,7 @@ from service.risk.loss_table import LossTable, SubPortfolio
 from service.risk.quantiles import Array, Indices
 from service.risk.simulation import Plan
 from service.schemas.losses import (
+    BookLosses,
     FactorLosses,
     FactorSubPortfolio,
     HistoryLosses,
@@ -133,6 +134,8 @@ def source_of(losses: Losses, table: Sent, *, part: str | None, work: Work, sett
         ids = [one.id for one in made.sub_portfolios]
         digest = losses_digest(ids, made.losses, made.probabilities, work)
         return Source(digest, GIVEN, made.sub_portfolios, table=made)
+    if isinstance(losses, BookLosses):
+        raise NotFound.at("/losses/name", f"there is no book {losses.name!r} here")
     with pointing("/losses"):
         if isinstance(losses, FactorLosses):
             return _simulated(losses, settings)

@@ -2,7 +2,7 @@
 
 from service import answers
 from service.answers import figure_list
-from service.calculate.calculation import Calculation, groups_asked
+from service.calculate.calculation import Calculation, groups_asked, source_asked
 from service.errors import pointing
 from service.executors import Work
 from service.frames import Demand
@@ -16,7 +16,6 @@ from service.risk.uncertainty import Estimates
 from service.schemas.requests import AllocationsRequest
 from service.schemas.results import AllocationResult, AllocationsAnswer, Figure
 from service.settings import Settings
-from service.sources import source_of
 
 SEED_DIGITS = 13  # hexadecimal digits of the losses digest that seed what is drawn: 52 bits
 
@@ -25,7 +24,7 @@ class Allocations(Calculation):
     """`POST /v1/allocations`."""
 
     def __init__(self, intake: Intake, request: AllocationsRequest, work: Work, settings: Settings) -> None:
-        source = source_of(request.losses, intake.table, part=intake.part, work=work, settings=settings)
+        source = source_asked(intake, request.losses, work, settings)
         groups = groups_asked(request, source, settings)
         measures: list[RiskMeasure] = list(request.measures)
         if request.capital_measure is not None:

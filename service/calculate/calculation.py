@@ -16,17 +16,23 @@ from service.provenance import document_digest
 from service.risk import figures
 from service.risk.loss_table import Group, groups_of
 from service.risk.measures import RangeValueAtRisk, RiskMeasure
-from service.schemas.losses import FactorLosses, ScenarioLosses
+from service.schemas.losses import FactorLosses, Losses, ScenarioLosses
 from service.schemas.requests import ComparisonsRequest, MeasuresRequest
 from service.schemas.results import Figure, Labels, Provenance, Tail
 from service.settings import Settings, variable
-from service.sources import Source
+from service.sources import Source, source_of
 
 Describe = Callable[[TailraceError], dict[str, Any]]
 """Makes the problem document of an error, for what is refused inside an answer."""
 
 MEAN = RangeValueAtRisk(kind="range_value_at_risk", lower_level=0.0, upper_level=1.0)
 """The expected loss as a measure, for what its error needs."""
+
+
+def source_asked(intake: Intake, losses: Losses, work: Work, settings: Settings) -> Source:
+    """Return the source of a request's losses, which is there already if it is a book."""
+    known = intake.sources.get("losses")
+    return known or source_of(losses, intake.table, part=intake.part, work=work, settings=settings)
 
 
 def groups_asked(request: MeasuresRequest, source: Source, settings: Settings) -> tuple[Group, ...]:
@@ -58,7 +64,7 @@ def _placed(fault: Fault, intake: Intake) -> Fault:
     if isinstance(intake.request, ComparisonsRequest):
         return fault
     losses = intake.request.losses
-    if isinstance(losses, ScenarioLosses):
+    if isinstance(losses, ScenarioLosses) and not intake.sources:
         if intake.part is not None:
             return replace(fault, pointer=None, part=intake.part, row=int(number) + 1)
         if losses.values is not None and losses.layout == "by_scenario":
@@ -79,7 +85,7 @@ class Calculation:
             self.made = framed(source, demand, stop, work, settings)
         self.intake, self.source, self.frame = intake, source, self.made.frame
         self.coverage = demand.coverage
-        self.notes = Notes(self.frame.scenarios, pointed=intake.part != "body")
+        self.notes = Notes(self.frame.scenarios, pointed=intake.pointed)
         for code, detail, pointer in self.made.notes:
             self.notes.say(code, detail, pointer)
         if source.table is not None and not source.table.sampled:

@@ -22,7 +22,7 @@ from service.risk.loss_table import check_magnitude
 from service.risk.measures import RiskMeasure
 from service.risk.quantiles import Array
 from service.risk.simulation import Plan, simulated
-from service.schemas.requests import Candidate
+from service.schemas.requests import Candidate, ScaledCopy
 from service.sources import Source
 from service.validation import echo, refusal
 
@@ -97,6 +97,9 @@ class Reader:
                 if candidate.values is not None:
                     with pointing("/values"):
                         loss = self._values(document["values"])
+                elif candidate.scaled is not None:
+                    with pointing("/scaled/sub_portfolio"):
+                        candidate, loss = self._scaled(candidate, candidate.scaled)
                 else:
                     self._check(candidate, document)
         except TooLong:
@@ -133,6 +136,19 @@ class Reader:
             raise InvalidValue.at(f"/{wrong}", f"{echo(values[wrong])} is not a finite number", code="wrong_type")
         check_magnitude(self.frame.totals + loss)
         return loss
+
+    def _scaled(self, candidate: Candidate, copy: ScaledCopy) -> tuple[Candidate, Array]:
+        """Return a candidate that is a part of a sub-portfolio with its losses (n,), and its profit if not given."""
+        names = [one.id for one in self.source.sub_portfolios]
+        if copy.sub_portfolio not in names:
+            raise InvalidValue.at("", f"the book has no sub-portfolio {echo(copy.sub_portfolio)}", code="not_allowed")
+        column = names.index(copy.sub_portfolio)
+        loss = copy.step * np.asarray(self.frame.table.losses[:, column]) + 0.0
+        check_magnitude(self.frame.totals + loss)
+        profit = self.source.sub_portfolios[column].expected_profit
+        if candidate.expected_profit is None and profit is not None:
+            candidate = replace(candidate, expected_profit=copy.step * profit + 0.0)
+        return candidate, loss
 
     def _check(self, candidate: Candidate, document: Any) -> None:
         """Refuse components that do not fit the base, or whose loss does not have the measures asked for."""

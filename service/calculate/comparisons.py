@@ -110,7 +110,7 @@ class Comparisons:
             detail = "one book is simulated with Sobol points and the other is not: their errors do not compare"
             raise InvalidValue.at("/after", detail, code="not_allowed")
         given = self.request.same_scenarios
-        found = _same(self.request.before, self.request.after)
+        found = _same(self.request.before, self.request.after, then, now)
         if then.frame.table.sampled != now.frame.table.sampled:
             detail = "one book is a sample and the other a population: their errors do not compare"
             raise InvalidValue.at("/after", detail, code="not_allowed")
@@ -127,16 +127,19 @@ def _same_weights(then: Calculation, now: Calculation) -> bool:
     return first is None or second is None or bool(np.array_equal(first, second))
 
 
-def _same(before: Losses, after: Losses) -> bool:
+def _same(before: Losses, after: Losses, then: Calculation, now: Calculation) -> bool:
     """Return whether two sources say of themselves that they have the same scenarios."""
     if isinstance(before, ScenarioLosses) and isinstance(after, ScenarioLosses):
-        return before.scenario_ids is not None and before.scenario_ids == after.scenario_ids
+        labels = then.frame.table.scenario_ids
+        return labels is not None and labels == now.frame.table.scenario_ids
     if isinstance(before, FactorLosses) and isinstance(after, FactorLosses):
         parts = ("factors", "dependence", "simulation")
         return all(_plain(getattr(before, name)) == _plain(getattr(after, name)) for name in parts)
     if isinstance(before, HistoryLosses) and isinstance(after, HistoryLosses):
-        observed = ("factors", "changes", "packed", "decay", "horizon_scaling")
-        return all(_plain(getattr(before, name)) == _plain(getattr(after, name)) for name in observed)
+        observed = ("factors", "decay", "horizon_scaling")
+        first, second = then.source.changes, now.source.changes
+        same = first is not None and second is not None and np.array_equal(first.values, second.values)
+        return same and all(_plain(getattr(before, name)) == _plain(getattr(after, name)) for name in observed)
     return False
 
 
@@ -158,9 +161,11 @@ def _book(intake: Intake, request: ComparisonsRequest, which: Which, work: Work,
     )
     table = intake.tables.get(which)
     with _named(which):
-        source = source_of(losses, table, part=None, work=work, settings=settings)
+        known = intake.sources.get(which)
+        source = known or source_of(losses, table, part=None, work=work, settings=settings)
         demand = Demand(request.measures, request.interval_coverage, stand_alone=False)
-        calculation = Calculation(Intake("measures", asked, table), source, demand, work, settings)
+        inner = Intake("measures", asked, table, sources={} if known is None else {"losses": known})
+        calculation = Calculation(inner, source, demand, work, settings)
     calculation.notes.name(which)
     return _Book(losses, calculation)
 

@@ -5,7 +5,7 @@ from dataclasses import replace
 
 from service import answers
 from service.answers import Notes
-from service.calculate.calculation import Calculation, Describe
+from service.calculate.calculation import Calculation, Describe, source_asked
 from service.calculate.candidates import Read, Reader
 from service.errors import CallerError, LossesChanged, TooLong, pointing
 from service.executors import Work
@@ -17,7 +17,6 @@ from service.risk.uncertainty import Estimates
 from service.schemas.requests import Candidate, IncrementsRequest
 from service.schemas.results import BaseFigure, CandidateFigures, CandidateResult, IncrementsAnswer
 from service.settings import Settings
-from service.sources import source_of
 
 BATCH_BYTES = 1 << 28  # of losses of candidates held at a time
 
@@ -28,7 +27,7 @@ class Increments(Calculation):
     def __init__(
         self, intake: Intake, request: IncrementsRequest, work: Work, settings: Settings, describe: Describe
     ) -> None:
-        source = source_of(request.losses, intake.table, part=intake.part, work=work, settings=settings)
+        source = source_asked(intake, request.losses, work, settings)
         if request.base_digest not in (None, source.digest):
             detail = f"the losses have the digest {source.digest}, not the one given"
             raise LossesChanged.at("/base_digest", detail)

@@ -1,7 +1,7 @@
 """`POST /v1/measures`: risk measures of the whole book, and of each part alone."""
 
 from service import answers
-from service.calculate.calculation import Calculation, groups_asked
+from service.calculate.calculation import Calculation, groups_asked, source_asked
 from service.errors import pointing
 from service.executors import Work
 from service.frames import Demand
@@ -9,14 +9,13 @@ from service.intake import Intake
 from service.schemas.requests import MeasuresRequest
 from service.schemas.results import MeasuresAnswer
 from service.settings import Settings
-from service.sources import source_of
 
 
 class Measures(Calculation):
     """`POST /v1/measures`."""
 
     def __init__(self, intake: Intake, request: MeasuresRequest, work: Work, settings: Settings) -> None:
-        source = source_of(request.losses, intake.table, part=intake.part, work=work, settings=settings)
+        source = source_asked(intake, request.losses, work, settings)
         groups = groups_asked(request, source, settings)
         demand = Demand(request.measures, request.interval_coverage, groups, request.include_stand_alone)
         super().__init__(intake, source, demand, work, settings)

@@ -8,8 +8,14 @@ from service.openapi.examples import Examples, Shown
 from service.openapi.parts import BOM, COMPONENTS, HEADERS, REFRESH, REQUEST_ID, Json, parameter, reference, refusals
 from service.payloads import TABLE_READERS
 from service.representations.formats import FORMATS
-from service.schemas.requests import AllocationsRequest, Candidate, IncrementsRequest, MeasuresRequest
-from service.schemas.results import AllocationsAnswer, IncrementsAnswer, MeasuresAnswer
+from service.schemas.requests import (
+    AllocationsRequest,
+    Candidate,
+    ComparisonsRequest,
+    IncrementsRequest,
+    MeasuresRequest,
+)
+from service.schemas.results import AllocationsAnswer, ComparisonsAnswer, IncrementsAnswer, MeasuresAnswer
 
 CALCULATIONS: Mapping[str, Json] = {
     "measures": {
@@ -38,7 +44,18 @@ CALCULATIONS: Mapping[str, Json] = {
         "the error of the difference, and whether it earns its cost and keeps within a limit. Each candidate is "
         "judged alone: one that is refused has its problem in its own entry and does not spoil the others.",
     },
+    "comparisons": {
+        "request": ComparisonsRequest,
+        "answer": ComparisonsAnswer,
+        "operationId": "computeComparisons",
+        "summary": "Why the capital moved between two books",
+        "description": "Computes how each risk measure and each contribution changed between two books, split into "
+        "new, gone and changed sub-portfolios. Where both books have the same scenarios the errors are those of the "
+        "differences scenario by scenario.",
+    },
 }
+IN_ONE_PIECE = ("comparisons",)
+"""Calculations whose body is JSON alone."""
 PARTS: tuple[Any, ...] = (Candidate,)
 """Models that are validated apart from the request that they stand in."""
 
@@ -85,7 +102,14 @@ def operation(name: str, schemas: Json, examples: Examples) -> Json:
             if tables
             else "The request.",
             "required": True,
-            "content": dict(_asked(reference(said["request"].__name__), examples.requests, tables=tables)),
+            "content": dict(
+                _asked(
+                    reference(said["request"].__name__),
+                    examples.requests,
+                    tables=tables,
+                    parts=name not in IN_ONE_PIECE,
+                )
+            ),
         },
         "responses": {
             "200": {
@@ -99,14 +123,16 @@ def operation(name: str, schemas: Json, examples: Examples) -> Json:
                 },
                 "content": dict(_answered(reference(said["answer"].__name__), examples.answers)),
             },
-            **refusals(*REFUSALS, *(() if tables else (OF_A_NAMED_BOOK,))),
+            **refusals(*REFUSALS, *((OF_A_NAMED_BOOK,) if name == "increments" else ())),
         },
     }
 
 
-def _asked(request: Json, examples: Shown, *, tables: bool) -> Iterator[tuple[str, Json]]:
+def _asked(request: Json, examples: Shown, *, tables: bool, parts: bool) -> Iterator[tuple[str, Json]]:
     """Yield the media types of a body."""
     yield "application/json", _content(request, examples, "application/json")
+    if not parts:
+        return
     yield "multipart/form-data", {**_multipart(request), **_content({}, examples, "multipart/form-data")}
     for media_type in TABLE_READERS if tables else ():
         yield media_type, _content(_table(media_type), examples, media_type)

@@ -15,7 +15,7 @@ from service.risk.frame import Frame
 from service.risk.measures import RiskMeasure, Smoothing
 from service.risk.quantiles import Array
 from service.risk.shapley import shapley_values
-from service.risk.uncertainty import Estimates, Influence, Sampling, lean_of_parts, leaning_estimates, spread
+from service.risk.uncertainty import Estimates, Influence, Sampling, Spread, lean_of_parts, leaning_estimates, spread
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -41,54 +41,35 @@ class Case:
     smoothing: Smoothing = "auto"
     seed: int = 1
 
-    def estimates(  # as many facts make an error
-        self,
-        values: Array,
-        influence: Influence,
-        *,
-        total: Influence,
-        lean: float,
-        sampling: Sampling,
-        extra: Array | None = None,
-    ) -> Estimates:
+    def estimates(self, values: Array, of: Spread, lean: float) -> Estimates:
         """Return contributions with their errors.
 
         Parameters
         ----------
         values : ndarray of shape (c,)
-        influence : Influence
-            Of c contributions, in any one order of the scenarios.
-        total : Influence
-            Of the measure of the total, in the same order.
+        of : Spread
+            Of their influence values, with the correlation with those of the total.
         lean : float
             Of the total's interval.
-        sampling : Sampling
-            Of the scenarios in that order.
-        extra : ndarray of shape (c,), optional
-            Variances that come on top, such as that of drawn orders.
         """
-        of = spread(influence, sampling, beside=total)
-        if extra is not None:
-            of = replace(of, errors=np.sqrt(of.errors**2 + extra))
         tail = self.measure.tail_of(self.frame.ranking(self.measure).ordered)
         counts = of.effective if tail is None else np.broadcast_to(tail, values.shape)
         leans = lean_of_parts(of, lean)
-        return leaning_estimates(values, of, leans, coverage=self.coverage, tail_scenarios=counts)
+        figures = leaning_estimates(values, of, leans, coverage=self.coverage, tail_scenarios=counts)
+        return judged(self.measure, figures)
 
     def in_scenario_order(self, values: Array, influence: Array, total: Array, extra: Array | None = None) -> Estimates:
-        """Return contributions with their errors from influence values (c, n), those of the total (n,)."""
+        """Return contributions with their errors from influence values (c, n), those of the total (n,).
+
+        `extra` (c,) are variances that come on top, such as those of drawn orders.
+        """
         if not self.frame.table.sampled:
             return Estimates.exact(values)
         lean, _ = lean_of_total(self.frame, self.measure)
-        parts = self.estimates(
-            values,
-            _free(influence),
-            total=_free(total[None, :]),
-            lean=lean,
-            sampling=self.frame.sampling,
-            extra=extra,
-        )
-        return judged(self.measure, parts)
+        of = spread(_free(influence), self.frame.sampling, beside=_free(total[None, :]))
+        if extra is not None:
+            of = replace(of, errors=np.sqrt(of.errors**2 + extra))
+        return self.estimates(values, of, lean)
 
     def with_groups(self, per_sub_portfolio: Array) -> Array:
         """Return values (d, ...) followed by their sums over each group, shape (d + G, ...)."""
@@ -126,19 +107,21 @@ def euler(case: Case) -> Contributions:
     weights = measure.contribution_weights(ordered, ties, case.smoothing)
     lean, total = lean_of_total(frame, measure) if ordered.sampled else (0.0, None)
 
-    def part(rows: Array) -> Estimates:
+    def part(rows: Array) -> tuple[Array, Spread | None]:
         values = weights.values @ rows
         if measure.above == "mean":
             values = values - ties.p @ rows
         if total is None:
-            return Estimates.exact(values)
+            return values, None
         influence = measure.contribution_influence(ordered, ties, rows, weights)
         if measure.above == "mean":
             influence = Influence(influence.values - rows.T, influence.rest)
-        return case.estimates(values, influence, total=total, lean=lean, sampling=Sampling.of(ordered))
+        return values, spread(influence, Sampling.of(ordered), beside=total)
 
-    figures = Estimates.joined(frame.effort.map(part, frame.rows(ranking)))
-    figures = judged(measure, figures) if ordered.sampled else figures
+    parts = frame.effort.map(part, frame.rows(ranking))
+    values = np.concatenate([part for part, _ in parts])
+    spreads = [of for _, of in parts if of is not None]
+    figures = case.estimates(values, Spread.joined(spreads), lean) if spreads else Estimates.exact(values)
     return Contributions(figures.remarked("smoothed_quantile") if weights.window else figures, weights.window)
 
 

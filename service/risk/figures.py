@@ -33,13 +33,12 @@ def estimates(measure: RiskMeasure, ordered: Ordered, coverage: float) -> Estima
     values = full_values(measure, ordered)
     if not ordered.sampled:
         return Estimates.exact(values)
-    influence = full_influence(measure, ordered)
     tail = measure.tail_of(ordered)
     if measure.above == "zero":
         interval, own = measure.interval(ordered, coverage), measure.errors(ordered)
         if interval is not None and own is not None and tail is not None:
             return without_gaps(Estimates(values, own, interval.lower, interval.upper, tail, "order_statistics"))
-    of = spread(influence, Sampling.of(ordered))
+    of = spread(full_influence(measure, ordered), Sampling.of(ordered))
     counts = of.effective if tail is None else tail
     lean = measure.lean(ordered, values, of)
     if lean is None:

@@ -16,6 +16,9 @@ from service.risk.uncertainty import Sampling
 
 CHUNK_BYTES = 1 << 25  # of sorted columns held at a time
 KEPT_BYTES = 1 << 28  # of the tail's rows held between measures
+PIECE_BYTES = 1 << 20  # of columns worked on at a time: they and what is made of them stay in the cache
+LEAST_COLUMNS = 16  # of a piece: what is made of the total alone is made once for each piece
+TURNED_ROWS = 64  # turned into columns at a time
 
 
 def depth_of(measure: RiskMeasure, scenarios: int, *, contributions: bool) -> float:
@@ -102,9 +105,9 @@ class Frame:
         """Return how deep `measure` looks; 1 where everything has to be ordered."""
         return depth_of(measure, self.scenarios, contributions=contributions) if self.table.plain else 1.0
 
-    def hold(self, rows: list[Array]) -> None:
-        """Keep the rows of the deepest ranking, in chunks of shape (m, c)."""
-        self._rows = rows
+    def hold(self, rows: Array) -> None:
+        """Keep the rows (m, d + G) of the deepest ranking."""
+        self._rows = list(self._cut(self._turned(rows, np.arange(len(rows)))))
 
     @property
     def scenarios(self) -> int:
@@ -137,17 +140,20 @@ class Frame:
         return self._whole
 
     def rows(self, ranking: Ranking) -> Iterator[Array]:
-        """Yield the losses of all columns in the order of `ranking`, in chunks of shape (m, c)."""
+        """Yield the losses of all columns in the order of `ranking`, in pieces of shape (m, c).
+
+        The losses of one column lie one after the other.
+        """
         held = self._ranking.order.size
         keep = 8 * held * self.expected.size <= KEPT_BYTES
         if (self._rows or keep) and ranking.order.size <= held and not ranking.ordered.complete:
             if not self._rows:
-                self.hold(list(self._chunks(self._ranking.order)))
+                self._rows = list(self._pieces(self._ranking.order))
             for rows in self._rows:
                 self.effort.checkpoint()
                 yield rows[: ranking.order.size]
         else:
-            yield from self._chunks(ranking.order)
+            yield from self._pieces(ranking.order)
 
     def chunks(self) -> Iterator[Array]:
         """Yield the losses of all columns in scenario order, in chunks of shape (n, c)."""
@@ -157,23 +163,37 @@ class Frame:
                 self.effort.checkpoint()
                 yield table[:, start : start + width]
 
-    def _chunks(self, order: Indices) -> Iterator[Array]:
-        width = max(1, CHUNK_BYTES // (8 * order.size))
+    def _pieces(self, order: Indices) -> Iterator[Array]:
+        """Yield the losses of all columns in the order of `order`, in pieces of shape (m, c)."""
+        width = max(LEAST_COLUMNS, CHUNK_BYTES // (8 * order.size))
         for table in self._held():
-            if table.shape[1] and width >= table.shape[1]:
-                self.effort.checkpoint()
-                yield table.take(order, axis=0)
-                continue
             for start in range(0, table.shape[1], width):
-                self.effort.checkpoint()
-                yield table[:, start : start + width][order]
+                yield from self._cut(self._turned(table[:, start : start + width], order))
+
+    def _cut(self, columns: Array) -> Iterator[Array]:
+        """Yield `columns` (c, m) in pieces, each as rows."""
+        width = max(LEAST_COLUMNS, PIECE_BYTES // (8 * columns.shape[1]))
+        for start in range(0, len(columns), width):
+            self.effort.checkpoint()
+            yield columns[start : start + width].T
+
+    def _turned(self, columns: Array, order: Indices) -> Array:
+        """Return the rows `order` of `columns` (n, c) as an array of shape (c, m)."""
+        turned = np.empty((columns.shape[1], order.size))
+
+        def turn(start: int) -> None:
+            part = slice(start, start + TURNED_ROWS)
+            turned[:, part] = columns[order[part]].T
+
+        self.effort.map(turn, range(0, order.size, TURNED_ROWS))
+        return turned
 
     def alone(self, measure: RiskMeasure) -> Iterator[Ordered]:
         """Yield the columns as ordered distributions, as deep as `measure` looks, a few at a time."""
         if self._tails is not None and self._depth(measure, contributions=False) < 1.0:
             depth = measure.depth(self.scenarios, contributions=False)
             kept = min(self._tails.shape[1], int(np.ceil(depth * self.scenarios)) + 1)
-            width = max(1, CHUNK_BYTES // (32 * kept))
+            width = max(LEAST_COLUMNS, PIECE_BYTES // (8 * kept))
             for start in range(0, self._tails.shape[0], width):
                 self.effort.checkpoint()
                 yield self._ordered(self._tails[start : start + width, :kept], None)

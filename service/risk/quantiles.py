@@ -22,6 +22,7 @@ ERROR_COVERAGE = 0.95  # of the interval from whose width the standard error of 
 MASS_SLACK = 1e-12  # probabilities given by the caller: F(q) >= level is judged with this much slack
 
 
+@lru_cache(maxsize=1024)
 def decimal(number: float) -> Fraction:
     """Return the decimal that the caller wrote, e.g. 0.995 as 199/200, from its binary64 neighbour."""
     return Fraction(f"{number:.{SIGNIFICANT_DIGITS}g}")

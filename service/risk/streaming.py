@@ -169,7 +169,7 @@ def streamed(
         tails = completed_tails(thresholds, sieves, tail, effort, _Again(plan, groups, effort))
     ranking = ranked(totals, table, depth=depth)
     frame = Frame(table, groups, effort, None, totals, sums.sum(axis=0) / scenarios, tails, ranking)
-    frame.hold([_extended(table.losses.take(ranking.order), groups)])
+    frame.hold(_extended(table.losses.take(ranking.order), groups))
     return frame
 
 

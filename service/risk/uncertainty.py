@@ -6,6 +6,7 @@ from n draws is the mean square of the centred influence values over n; with imp
 is sum p^2 IF^2. Figures, contributions, groups and differences follow by the chain rule.
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from typing import Self
 
@@ -69,7 +70,7 @@ class Estimates:
         return cls(values, unknown, unknown, unknown, unknown, "none")
 
     @classmethod
-    def joined(cls, parts: "list[Self]") -> Self:
+    def joined(cls, parts: Sequence[Self]) -> Self:
         """Return the figures of several parts in one, in order."""
         if len(parts) == 1:
             return parts[0]
@@ -98,8 +99,8 @@ class Spread:
     ----------
     errors : ndarray of shape (c,)
         Standard errors, sqrt(sum v^2).
-    skewness : ndarray of shape (c,)
-        Of the estimates: sum v^3 / (sum v^2)^1.5.
+    skewness : ndarray of shape (c,) or None
+        Of the estimates: sum v^3 / (sum v^2)^1.5; None where the correlation is asked for instead.
     effective : ndarray of shape (c,)
         Effective number of scenarios that carry the error: (sum v^2)^2 / sum v^4, which is n over the kurtosis
         (Kish, Survey Sampling, 1965, section 11.7, with squared influence values as weights).
@@ -108,9 +109,17 @@ class Spread:
     """
 
     errors: Array
-    skewness: Array
+    skewness: Array | None
     effective: Array
     correlation: Array | None = None
+
+    @classmethod
+    def joined(cls, parts: Sequence[Self]) -> Self:
+        """Return the spread of the figures of several parts in one, in order."""
+        if len(parts) == 1:
+            return parts[0]
+        found = zip(*((one.errors, one.skewness, one.effective, one.correlation) for one in parts), strict=True)
+        return cls(*(None if arrays[0] is None else np.concatenate(arrays) for arrays in found))
 
 
 @dataclass(frozen=True, slots=True)
@@ -150,19 +159,20 @@ def spread(influence: Influence, sampling: Sampling, *, beside: Influence | None
         Of one more figure over the same scenarios, to correlate with.
     """
     v, rest, left_out = _standardised(influence, sampling)
-    errors = np.sqrt(np.einsum("ij,ij->i", v, v) + left_out * rest * rest)
+    errors = np.sqrt(np.vecdot(v, v) + left_out * rest * rest)
     scale = np.where(errors > 0.0, errors, 1.0)
     v /= scale[:, None]
     rest = rest / scale
-    correlation = None
-    if beside is not None:
+    skewness = correlation = None
+    if beside is None:
+        skewness = np.vecdot(np.square(v), v) + left_out * rest**3
+    else:
         other, other_rest, _ = _standardised(beside, sampling)
-        other_error = np.sqrt(np.einsum("ij,ij->i", other, other) + left_out * other_rest * other_rest)[0]
+        other_error = np.sqrt(np.vecdot(other, other) + left_out * other_rest * other_rest)[0]
         together = v @ other[0] + left_out * rest * other_rest
         correlation = together / other_error if other_error > 0.0 else np.zeros_like(errors)
-    squares = np.square(v)
-    skewness = np.einsum("ij,ij->i", squares, v) + left_out * rest**3
-    fourth = np.einsum("ij,ij->i", squares, squares) + left_out * rest**4
+    np.square(v, out=v)
+    fourth = np.vecdot(v, v) + left_out * rest**4
     effective = np.divide(1.0, fourth, out=np.full(errors.shape, float(sampling.scenarios)), where=fourth > 0.0)
     return Spread(errors, skewness, effective, correlation)
 
@@ -173,7 +183,8 @@ def _standardised(influence: Influence, sampling: Sampling) -> tuple[Array, Arra
     left_out = scenarios - values.shape[-1]
     if sampling.p is None:
         centre = (values.sum(axis=-1) + left_out * rest) / scenarios
-        v, rest = (values - centre[:, None]) / scenarios, (rest - centre) / scenarios
+        v, rest = values - centre[:, None], (rest - centre) / scenarios
+        v /= scenarios
     else:
         v, rest = sampling.p * (values - np.sum(sampling.p * values, axis=-1, keepdims=True)), np.zeros_like(rest)
     if sampling.clusters is not None:
@@ -211,7 +222,7 @@ def leaning_estimates(  # each is a property of the figures
 
 def usual_lean(of: Spread) -> Array:
     """Return the lean that the skewness of the estimates asks for, shape (c,)."""
-    return USUAL_LEAN * of.skewness
+    return np.zeros_like(of.errors) if of.skewness is None else USUAL_LEAN * of.skewness
 
 
 def lean_of_parts(of: Spread, lean_of_total: float) -> Array:

@@ -291,5 +291,26 @@ class HistoryLosses:
         return self
 
 
-Losses = TypeAliasType("Losses", Annotated[ScenarioLosses | FactorLosses | HistoryLosses, Discriminator("kind")])
+BookName = Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9_-]{0,63}$")]
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class BookLosses:
+    """A book that the server keeps: losses under a name. `GET /v1/books` lists them."""
+
+    kind: Literal["book"]
+    """Tag of this source."""
+    name: BookName
+    """Name of the book."""
+    currency: Text | None = None
+    """Currency of all amounts, a label; that of the book if absent."""
+    valuation_date: Date | None = None
+    """Valuation date, YYYY-MM-DD, a label; that of the book if absent."""
+    horizon: Text | None = None
+    """Horizon of the losses, a label; that of the book if absent."""
+
+
+Losses = TypeAliasType(
+    "Losses", Annotated[ScenarioLosses | FactorLosses | HistoryLosses | BookLosses, Discriminator("kind")]
+)
 """Any source of losses, told apart by `kind`."""

@@ -1,6 +1,7 @@
 """One request model per calculation."""
 
 from collections.abc import Sequence
+from decimal import Decimal
 from typing import Annotated, Any, Literal, Self
 
 from pydantic import AfterValidator, Field, GetCoreSchemaHandler, GetPydanticSchema, model_validator
@@ -83,15 +84,32 @@ MOST_CANDIDATES = 1000
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
+class ScaledCopy:
+    """So much more, or less, of a sub-portfolio that is in the book: its losses times `scale` less 1."""
+
+    sub_portfolio: Text
+    """The sub-portfolio."""
+    scale: Annotated[Number, Field(ge=0.0)]
+    """Its size afterwards as a multiple of its size now, without unit: 1.1 is ten per cent more, 0 is none."""
+
+    @property
+    def step(self) -> float:
+        """What is added, as a multiple; exact in decimals, so that 1.1 adds 0.1."""
+        return float(Decimal(repr(float(self.scale))) - 1)
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
 class Candidate:
     """One deal that might be added to the book, or taken from it with the opposite sign."""
 
     id: Text
     """Its name, unique in the request and not that of a sub-portfolio."""
     values: Annotated[list[Number] | None, Field(min_length=1)] = None
-    """Its loss in each scenario, in the order of the base's scenarios, in currency; or else `components`."""
+    """Its loss in each scenario, in the order of the base's scenarios, in currency; or else `components` or `scaled`."""
     components: Annotated[list[AnyComponent] | None, Field(min_length=1)] = None
     """What its loss is made of, on the factors of the base; the parts are added."""
+    scaled: ScaledCopy | None = None
+    """A part of a sub-portfolio of the book is its loss; its expected profit is that part too unless given."""
     sign: Literal["loss", "profit"] = "loss"
     """`profit` negates the sum of the components."""
     cover: list[Cover] = Field(default_factory=list)
@@ -103,9 +121,9 @@ class Candidate:
 
     @model_validator(mode="after")
     def _one_loss(self) -> Self:
-        if (self.values is None) == (self.components is None):
-            raise PydanticCustomError("candidate", "exactly one of values and components says what it loses")
-        if self.values is not None and (self.cover or self.sign != "loss"):
+        if [self.values, self.components, self.scaled].count(None) != 2:  # noqa: PLR2004  # all but one
+            raise PydanticCustomError("candidate", "exactly one of values, components and scaled says what it loses")
+        if self.components is None and (self.cover or self.sign != "loss"):
             raise PydanticCustomError("candidate", "sign and cover go with components")
         return self
 

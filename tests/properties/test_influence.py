@@ -16,7 +16,7 @@ from service.risk.measures import full_influence, full_values
 from service.risk.ranking import ranked
 from service.risk.uncertainty import Influence
 from tests.properties.tables import MEASURES, QUANTILES, bounded, ids, of_kind, scale, weighted_tables
-from tests.unit.risk.arithmetic import es, loss_table, ordered, split, total
+from tests.unit.risk.arithmetic import es, loss_table, ordered, split, total, value
 
 STEP = 1e-6
 
@@ -76,9 +76,9 @@ def _at_a_kink(one, losses, p):
 of_contributions = [one for one in smooth if one.kind not in ("expectile", "expected_shortfall", "range_value_at_risk")]
 
 
-def _contribution_influence(one, losses, p):
+def _contribution_influence(one, losses, p, smoothing="none"):
     ranking = ranked(losses.sum(axis=1), loss_table(losses, p), depth=1.0)
-    weights = one.contribution_weights(ranking.ordered, ranking.ties, "none")
+    weights = one.contribution_weights(ranking.ordered, ranking.ties, smoothing)
     rows = losses[ranking.order]
     influence = one.contribution_influence(ranking.ordered, ranking.ties, rows, weights)
     if one.above == "mean":
@@ -129,19 +129,25 @@ def test_influence_values_of_contributions_add_up_to_that_of_the_total(one, tabl
     totals = losses.sum(axis=1)
     if np.ptp(totals) < 1e-6:
         return
+    if one.kind == "expectile" and _stands_on(value(one, totals, p), totals):
+        return  # two derivatives exist: the figure's error takes one, its contributions the mean of both
     weights = np.full(totals.size, 1.0 / totals.size) if p is None else p
-    summed = _centred(_contribution_influence(one, losses, p).sum(axis=0), weights)
+    # without smoothing the few scenarios at a quantile have no residuals, and their neighbours' stand in for them
+    summed = _centred(_contribution_influence(one, losses, p, "auto").sum(axis=0), weights)
     whole = _centred(_influence(one, totals, p), weights)
-    if one.kind in QUANTILES:  # the regression through the quantile leaves the total no residual
-        if not np.isfinite(whole).all():
-            assert not np.isfinite(summed).any()
-            return
+    if not np.isfinite(whole).all():  # no interval of the quantile, hence no density at it
+        assert one.kind in QUANTILES
+        return
     if one.of_tail and not _exact_tail(one, totals):
         # the atom at the quantile is shared: each member bears the mean of what its positions bear
         summed, whole = (_by_atom(values, totals, weights) for values in (summed, whole))
     counted = weights > 0.0
     size = scale(losses) * max(1.0, np.max(np.abs(whole[counted])) / scale(losses))
     assert summed[counted] == pytest.approx(whole[counted], abs=1e-9 * size)
+
+
+def _stands_on(figure, totals):
+    return np.min(np.abs(totals - figure)) < 1e-9 * np.max(np.abs(totals))
 
 
 def _exact_tail(one, totals):

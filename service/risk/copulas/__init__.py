@@ -16,6 +16,7 @@ from service.risk.copulas.contract import CopulaFamily, Sampler
 from service.risk.copulas.elliptical import (
     ComonotonicCopula,
     GaussianCopula,
+    GaussianSampler,
     GroupedStudentTCopula,
     IndependentCopula,
     StudentTCopula,
@@ -77,6 +78,7 @@ __all__ = [
     "CopulaFamily",
     "FrankCopula",
     "GaussianCopula",
+    "GaussianSampler",
     "GroupedStudentTCopula",
     "GumbelCopula",
     "IndependentCopula",

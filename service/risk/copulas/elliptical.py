@@ -161,7 +161,7 @@ class ComonotonicSampler:
     dimensions: int = 1
 
     def correlations(self, factors: Indices) -> Array | None:  # noqa: ARG002  # as the contract
-        """Return None: the scores are normal together, but what is built on it asks for a density."""
+        """Return None: all correlations would be 1, and no index can be built on that."""
         return None
 
     def scores(self, draw: Draw) -> Scores:

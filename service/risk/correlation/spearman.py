@@ -19,7 +19,7 @@ from scipy import special
 
 Array = NDArray[np.float64]
 
-SPACING = 0.4  # of the trapezoidal rule on logits, in units of their spread and at most this
+SPACING = 0.5  # of the trapezoidal rule on logits, in units of their spread and at most this
 NEGLIGIBLE = 1e-14  # relative density at which the rule ends
 NODES = 256  # of the table between correlation 0 and 1
 PIECE = 1 << 20  # numbers at a time

@@ -12,6 +12,7 @@ from service.risk.marginals.moments import Array
 from service.risk.marginals.special_functions import decayed, log_gamma_1p, log_gamma_bend, log_gamma_ratio, log_upper
 
 BENT = 0.05  # part of the radius of convergence of a series within which its terms are used
+UNDERFLOW = 600.0  # ln of a number whose reciprocal is still well above the smallest one
 BEND_ORDERS = np.arange(2, 22)
 
 
@@ -177,11 +178,14 @@ class BurrXIIMarginal(MarginalLaw):
         x = 1.0 / self.c
         if not self.d > x:
             return MarginalLaw._limited_mean(self, limit)  # noqa: SLF001  # the one that needs no mean
-        log_y = self.c * math.log(limit / self.scale)
-        if log_y > 0.0:
-            part = float(special.betaincc(self.d - x, 1.0 + x, special.expit(-log_y)))
+        log_y, rest = self.c * math.log(limit / self.scale), self.d - x
+        if log_y > UNDERFLOW:  # then the incomplete beta function is its leading power
+            log_term = log_gamma_1p(rest) + log_gamma_1p(x) - log_gamma_1p(self.d)
+            part = -math.expm1(-rest * log_y - log_term)
+        elif log_y > 0.0:
+            part = float(special.betaincc(rest, 1.0 + x, special.expit(-log_y)))
         else:
-            part = float(special.betainc(1.0 + x, self.d - x, special.expit(log_y)))
+            part = float(special.betainc(1.0 + x, rest, special.expit(log_y)))
         return self.mean * part + limit * float(self._beyond(np.array(limit)))
 
 

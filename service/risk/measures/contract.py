@@ -14,6 +14,7 @@ from pydantic import AfterValidator, ConfigDict, Field
 from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
 
+from service.risk.measures.local_line import LocalLine
 from service.risk.quantiles import Array, Ordered, QuantileInterval, Ties, decimal
 from service.risk.uncertainty import Influence, Spread
 
@@ -100,10 +101,16 @@ class ContributionWeights:
         One per position, equal totals sharing theirs in proportion to probability.
     window : tuple of (float, float, int) or None
         Lowest and highest total, and number of scenarios, over which a quantile's were smoothed.
+    lines : tuple of LocalLine
+        At the quantiles that the errors of the contributions refer to.
+    place : Influence or None
+        Of the quantile at which the contributions are read, if they are read at one.
     """
 
     values: Array
     window: tuple[float, float, int] | None = None
+    lines: tuple[LocalLine, ...] = ()
+    place: Influence | None = None
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)

@@ -31,6 +31,10 @@ class LocalLine:
         How many of them have a positive probability.
     window : tuple of (float, float, int)
         Lowest and highest total and the number of scenarios with a weight.
+    steepness : ndarray of shape (m,)
+        steepness @ column is the slope in the total; 0 for a single atom.
+    inside : slice
+        Positions outside of which weights and steepness are 0.
     """
 
     weights: Array
@@ -39,16 +43,16 @@ class LocalLine:
     centre: NDArray[np.bool_]
     at_centre: int
     window: tuple[float, float, int]
+    steepness: Array
+    inside: slice
+
+    def fitted(self, rows: Array) -> Array:
+        """Return the fitted value at q of each column of `rows` (m, c), shape (c,)."""
+        return np.asarray(self.weights[self.inside] @ rows[self.inside])
 
     def slopes(self, rows: Array) -> Array:
-        """Return the slope of each column of `rows` (m, c) in the total, shape (c,); 0 for a single atom."""
-        mass = self.kernel.sum()
-        deviation = self.kernel * (self.excess - self.kernel @ self.excess / mass)
-        spread = float(deviation @ self.excess)
-        if spread <= 0.0:
-            return np.zeros(rows.shape[1])
-        inside = slice(*_extent(self.kernel))
-        return np.asarray(deviation[inside] @ rows[inside] / spread)
+        """Return the slope of each column of `rows` (m, c) in the total, shape (c,)."""
+        return np.asarray(self.steepness[self.inside] @ rows[self.inside])
 
 
 def local_line(ordered: Ordered, ties: Ties, position: int, half_width: float) -> LocalLine:
@@ -77,24 +81,29 @@ def local_line(ordered: Ordered, ties: Ties, position: int, half_width: float) -
     centre = ties.atom == atom
     if kernel.sum() <= 0.0:
         kernel = np.where(centre, ties.p, 0.0)
-    first, last = _extent(kernel)
+    positions = np.flatnonzero(kernel)
+    first, last = int(positions[0]), int(positions[-1]) + 1
     inside = slice(first, last)
-    weights = np.zeros_like(kernel)
+    weights, steepness = np.zeros_like(kernel), np.zeros_like(kernel)
     weights[inside] = _fitted_at_zero(kernel[inside], excess[inside])
+    steepness[inside] = _steepness(kernel[inside], excess[inside])
     return LocalLine(
         weights=weights,
         kernel=kernel,
         excess=excess,
         centre=centre,
         at_centre=int(np.count_nonzero(ties.p[centre] > 0.0)),
-        window=(float(values[last - 1]), float(values[first]), int(np.count_nonzero(kernel))),
+        window=(float(values[last - 1]), float(values[first]), positions.size),
+        steepness=steepness,
+        inside=inside,
     )
 
 
-def _extent(kernel: Array) -> tuple[int, int]:
-    """Return the first position with a weight and the one after the last."""
-    inside = np.flatnonzero(kernel)
-    return int(inside[0]), int(inside[-1]) + 1
+def _steepness(kernel: Array, excess: Array) -> Array:
+    """Return weights of the slope; 0 where all excesses are alike."""
+    deviation = kernel * (excess - kernel @ excess / kernel.sum())
+    spread = float(deviation @ excess)
+    return np.asarray(deviation / spread) if spread > 0.0 else np.zeros_like(kernel)
 
 
 def _fitted_at_zero(kernel: Array, excess: Array) -> Array:

@@ -1,6 +1,8 @@
 """Measures of the tail beyond a quantile: value at risk, return level, expected shortfall, range value at risk."""
 
+from dataclasses import replace
 from fractions import Fraction
+from functools import lru_cache
 from typing import Annotated, Literal, Self
 
 import numpy as np
@@ -33,6 +35,12 @@ WINDOW = Fraction(9, 10)  # half width of the smoothing window as a part of the 
 LEAST_RANKS = 10  # of the smoothing window on each side
 ATOM_OF_ITS_OWN = 10  # scenarios at the quantile from which their own mean needs no smoothing
 RANK_SPREADS = 7.0  # how many binomial standard deviations below the quantile its interval may reach
+
+
+@lru_cache(maxsize=1024)
+def beyond(level: float) -> Fraction:
+    """Return the mass beyond a level, on the caller's decimal."""
+    return 1 - decimal(level)
 
 
 def quantile_influence(ordered: Ordered, share: Fraction) -> Influence:
@@ -121,11 +129,12 @@ class _Quantile(LocatedMeasure):
         with too few for a window, or without smoothing: the mean over those scenarios.
         """
         line = line_at_quantile(ordered, ties, self.share)
+        place = quantile_influence(ordered, self.share)
         few = ordered.scenarios <= 2 * LEAST_RANKS
         if smoothing == "none" or few or line.at_centre >= ATOM_OF_ITS_OWN:
             weights = np.where(line.centre, ties.p, 0.0)
-            return ContributionWeights(weights / weights.sum())
-        return ContributionWeights(line.weights, line.window)
+            return ContributionWeights(weights / weights.sum(), None, (line,), place)
+        return ContributionWeights(line.weights, line.window, (line,), place)
 
     def contribution_influence(
         self,
@@ -139,30 +148,29 @@ class _Quantile(LocatedMeasure):
         The first part is the error of the regression, the second that of the place where it is read;
         se^2 = sum w^2 (X_i - fit)^2 + (slope se(q))^2 up to their small covariance.
         """
-        line = line_at_quantile(ordered, ties, self.share)
-        contributions = weights.values @ rows
-        slopes = line.slopes(rows)
-        q = float(self.values(ordered)[0])
-        excess = (ordered.values[0] - q)[:, None]
-        residuals = rows - contributions - excess * slopes
-        p = ties.p[:, None]
-        per_scenario = np.divide(weights.values[:, None], p, out=np.zeros_like(p), where=p > 0.0) * residuals
+        (line,) = weights.lines
+        place = weights.place or quantile_influence(ordered, self.share)
+        slopes = line.slopes(rows)[:, None]
+        values = rows.T - (weights.values @ rows)[:, None]
+        values -= slopes * line.excess
         if weights.window is None and line.at_centre < ATOM_OF_ITS_OWN:
-            per_scenario = _spread_residuals(line, ties, residuals, weights)
-        place = quantile_influence(ordered, self.share)
-        return Influence((per_scenario + place.values[0][:, None] * slopes).T, place.rest[0] * slopes)
+            values = _spread_residuals(line, ties, values, weights)
+        else:
+            values *= np.divide(weights.values, ties.p, out=np.zeros_like(ties.p), where=ties.p > 0.0)
+        values += slopes * place.values
+        return Influence(values, place.rest * slopes[:, 0])
 
 
 def _spread_residuals(line: LocalLine, ties: Ties, residuals: Array, weights: ContributionWeights) -> Array:
-    """Return influence values of a mean over the few scenarios at the quantile, by their neighbours' residuals.
+    """Return influence values (c, m) of a mean over the few scenarios at the quantile, by their neighbours' residuals.
 
     A single scenario has no residual of its own; the variance around the local line stands in for it.
     """
     kernel = line.kernel / line.kernel.sum()
-    variance = kernel @ residuals**2 * float(np.sum(weights.values**2))
-    spread = (ties.p[:, None] * residuals * (kernel > 0.0)[:, None]) ** 2
-    scale = np.sqrt(np.divide(variance, spread.sum(axis=0), out=np.zeros_like(variance), where=variance > 0.0))
-    return np.where((kernel > 0.0)[:, None], residuals, 0.0) * scale
+    variance = residuals**2 @ kernel * float(np.sum(weights.values**2))
+    near = np.where(kernel > 0.0, residuals, 0.0)
+    spread = np.sum((ties.p * near) ** 2, axis=1)
+    return near * np.sqrt(np.divide(variance, spread, out=np.zeros_like(variance), where=variance > 0.0))[:, None]
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
@@ -180,7 +188,7 @@ class ValueAtRisk(_Quantile):
 
     @property
     def share(self) -> Fraction:
-        return 1 - decimal(self.level)
+        return beyond(self.level)
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
@@ -231,7 +239,7 @@ class ExpectedShortfall(LocatedMeasure):
     @property
     def share(self) -> Fraction:
         """Mass of the tail."""
-        return 1 - decimal(self.level)
+        return beyond(self.level)
 
     @property
     def tail_share(self) -> float:
@@ -257,15 +265,19 @@ class ExpectedShortfall(LocatedMeasure):
     def tail_of(self, ordered: Ordered) -> Array:
         return ordered.effective_tail(self.share)
 
+    def contribution_weights(self, ordered: Ordered, ties: Ties, smoothing: Smoothing) -> ContributionWeights:
+        weights = LocatedMeasure.contribution_weights(self, ordered, ties, smoothing)
+        return replace(weights, lines=(line_at_quantile(ordered, ties, self.share),))
+
     def contribution_influence(
         self,
-        ordered: Ordered,
+        ordered: Ordered,  # noqa: ARG002  # as the contract
         ties: Ties,
         rows: Array,
         weights: ContributionWeights,
     ) -> Influence:
         """Return t (L_i - m_i) / (1 - level), t the scenario's part in the tail, m_i = E[L_i given L = q]."""
-        return _shortfall_contribution_influence(ordered, ties, rows, weights.values, self.share)
+        return _shortfall_contribution_influence(weights.lines[0], ties, rows, weights.values)
 
 
 def _shortfall_influence(ordered: Ordered, share: Fraction) -> Influence:
@@ -276,19 +288,16 @@ def _shortfall_influence(ordered: Ordered, share: Fraction) -> Influence:
     return Influence(beyond, np.zeros(q.size))
 
 
-def _shortfall_contribution_influence(
-    ordered: Ordered, ties: Ties, rows: Array, weights: Array, share: Fraction
-) -> Influence:
+def _shortfall_contribution_influence(line: LocalLine, ties: Ties, rows: Array, weights: Array) -> Influence:
     """Return (w/p) (L_i - m_i), m_i read off the local line at the quantile; zero outside the tail."""
-    line = line_at_quantile(ordered, ties, share)
-    at_quantile = line.weights @ rows
+    at_quantile = line.fitted(rows)
     if line.at_centre >= ATOM_OF_ITS_OWN:
         centre = np.where(line.centre, ties.p, 0.0)
         at_quantile = (centre / centre.sum()) @ rows
     inside = int(np.flatnonzero(weights)[-1]) + 1
-    per_scenario = np.divide(weights, ties.p, out=np.zeros_like(weights), where=ties.p > 0.0)
     values = np.zeros((rows.shape[1], rows.shape[0]))
-    values[:, :inside] = (per_scenario[:inside, None] * (rows[:inside] - at_quantile)).T
+    np.subtract(rows[:inside].T, at_quantile[:, None], out=values[:, :inside])
+    values[:, :inside] *= np.divide(weights, ties.p, out=np.zeros_like(weights), where=ties.p > 0.0)[:inside]
     return Influence(values, np.zeros(rows.shape[1]))
 
 
@@ -328,7 +337,7 @@ class RangeValueAtRisk(LocatedMeasure):
     @property
     def shares(self) -> tuple[Fraction, Fraction]:
         """Mass above the lower and above the upper level."""
-        return 1 - decimal(self.lower_level), 1 - decimal(self.upper_level)
+        return beyond(self.lower_level), beyond(self.upper_level)
 
     @property
     def tail_share(self) -> float:
@@ -361,23 +370,28 @@ class RangeValueAtRisk(LocatedMeasure):
         fewest = inner if inner > 0 else outer
         return ordered.effective_tail(fewest)
 
+    def contribution_weights(self, ordered: Ordered, ties: Ties, smoothing: Smoothing) -> ContributionWeights:
+        weights = LocatedMeasure.contribution_weights(self, ordered, ties, smoothing)
+        lines = tuple(line_at_quantile(ordered, ties, share) for share in self.shares if 0 < share < 1)
+        return replace(weights, lines=lines)
+
     def contribution_influence(
         self,
         ordered: Ordered,
         ties: Ties,
         rows: Array,
-        weights: ContributionWeights,  # noqa: ARG002  # as the contract
+        weights: ContributionWeights,
     ) -> Influence:
+        """Return that of the two shortfalls whose difference it is."""
         outer, inner = self.shares
-        whole = self._part(ordered, ties, rows, outer)
+        lines = list(weights.lines)
+        whole = rows.T if outer == 1 else self._part(ordered, ties, rows, lines.pop(0), outer)
         if inner > 0:
-            whole = whole - self._part(ordered, ties, rows, inner)
+            whole = whole - self._part(ordered, ties, rows, lines.pop(0), inner)
         return Influence(whole / float(outer - inner), np.zeros(rows.shape[1]))
 
     @staticmethod
-    def _part(ordered: Ordered, ties: Ties, rows: Array, share: Fraction) -> Array:
+    def _part(ordered: Ordered, ties: Ties, rows: Array, line: LocalLine, share: Fraction) -> Array:
         """Return share times the influence of the shortfall contributions beyond `share`."""
-        if share == 1:
-            return rows.T
         weights = ties.shared(ordered.tail_weights(share)[0])
-        return float(share) * _shortfall_contribution_influence(ordered, ties, rows, weights, share).values
+        return float(share) * _shortfall_contribution_influence(line, ties, rows, weights).values

@@ -121,7 +121,7 @@ def _fit(target: Target, degree: int, count: int, *, exponential: bool) -> tuple
     """Return the fit with `count` cells, its error over the allowed one by cell, and the probability of each."""
     start, width, count = _divided(target, count)
     nodes, tests = _places(degree)
-    lower = start + width * np.arange(count)
+    lower = start + width * np.arange(float(count))
     inner = target.function((lower[:, None] + width * (nodes[:-1] + 0.5)).ravel()).reshape(count, degree)
     last = target.function(np.array([start + width * count]))
     values = np.column_stack([inner, np.append(inner[1:, 0], last)])
@@ -135,7 +135,7 @@ def _fit(target: Target, degree: int, count: int, *, exponential: bool) -> tuple
     ratios = np.where(error == 0.0, 0.0, error / target.allowed(exact)).max(axis=1)  # NaN stays NaN
     table = np.full((degree + 1, count + 2), np.nan)
     table[:, 1:-1] = coefficients.T
-    edges = start + width * np.arange(count + 1)
+    edges = start + width * np.arange(count + 1.0)
     return Cells(start, width, table, exponential), ratios, target.probability(edges)
 
 

@@ -254,7 +254,7 @@ def test_numbers_that_are_not_finite_never_leave(client, monkeypatch):
 
 
 def endless(started=None):
-    def work_on(_intake, work, _settings):
+    def work_on(_intake, work, *_):
         if started is not None:
             started.set()
         while True:
