@@ -20,9 +20,11 @@ with socket.create_server(("127.0.0.1", 0)) as listener:
             sleep(0.01)
         with httpx.Client(base_url=f"http://127.0.0.1:{listener.getsockname()[1]}", timeout=60) as client:
             for example in examples():
-                answer = example.send(client).raise_for_status().content
-                (FOLDER / example.response).write_bytes(answer)
-                print(f"{example.response}: {len(answer):,} bytes")
+                response = example.send(client)
+                if response.is_error:
+                    raise SystemExit(f"{example.name}: {response.text}")
+                (FOLDER / example.response).write_bytes(response.content)
+                print(f"{example.response}: {len(response.content):,} bytes")
     finally:
         server.should_exit = True
         thread.join()

@@ -6,14 +6,29 @@ from os import environ
 
 from fastapi import FastAPI
 from starlette.middleware import Middleware
+from starlette.middleware.cors import CORSMiddleware
 
 from service import __version__, openapi, problems
+from service.books import Books
 from service.desk import Desk
 from service.executors import keep_freed_memory
 from service.metrics import Metrics
 from service.middleware import Envelope
-from service.routes import calculations, operations
+from service.routes import books, calculations, operations
 from service.settings import Settings
+
+
+ASKED_HEADERS = (
+    "Authorization",
+    "Content-Digest",
+    "Content-Type",
+    "If-None-Match",
+    "Prefer",
+    "X-API-Key",
+    "X-Request-ID",
+    "traceparent",
+)
+TOLD_HEADERS = ("ETag", "Retry-After", "Server-Timing", "X-Request-ID")
 
 
 def create_app(settings: Settings) -> FastAPI:
@@ -25,6 +40,7 @@ def create_app(settings: Settings) -> FastAPI:
     keep_freed_memory()
     metrics = Metrics()
     desk = Desk(settings)
+    shelf = Books(settings)
     metrics.watch(computing=lambda: desk.computing, waiting=lambda: desk.waiting)
     document = openapi.committed()
 
@@ -40,14 +56,31 @@ def create_app(settings: Settings) -> FastAPI:
         openapi_url=None,
         redirect_slashes=False,
         telemetry={"metrics": False, "logs": False},  # both are the middleware's; traces are the framework's
-        middleware=[Middleware(Envelope, metrics=metrics, refuse=problems.refuse)],
+        middleware=[*_shared_with(settings), Middleware(Envelope, metrics=metrics, refuse=problems.refuse)],
     )
     problems.install(app)
-    app.router.routes += calculations.routes(settings=settings, desk=desk, metrics=metrics)
+    app.router.routes += calculations.routes(settings=settings, books=shelf, desk=desk, metrics=metrics)
+    app.router.routes += books.routes(settings=settings, books=shelf, desk=desk, metrics=metrics)
     app.router.routes += operations.routes(
         settings=settings, desk=desk, metrics=metrics, statuses=problems.STATUSES, document=document
     )
     return app
+
+
+def _shared_with(settings: Settings) -> list[Middleware]:
+    """Return what lets pages of the origins that are set read the answers; outermost, so that errors have it too."""
+    origins = [origin for part in settings.cors_origins.split(",") if (origin := part.strip())]
+    if not origins:
+        return []
+    return [
+        Middleware(
+            CORSMiddleware,
+            allow_origins=origins,
+            allow_methods=["GET", "HEAD", "OPTIONS", "POST", "QUERY"],
+            allow_headers=ASKED_HEADERS,
+            expose_headers=TOLD_HEADERS,
+        )
+    ]
 
 
 def from_environment() -> FastAPI:

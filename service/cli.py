@@ -25,6 +25,7 @@ PORTS = 65535
 
 def main(arguments: Sequence[str] | None = None) -> int:
     """Run the command that `arguments` name (those of the process if None) and return its exit code."""
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")  # NumPy reads it when it is imported: the threads are ours
     options = _parser().parse_args(arguments)
     try:
         code: int = options.run(options)
@@ -153,9 +154,16 @@ def _add_serve(commands: "argparse._SubParsersAction[argparse.ArgumentParser]") 
     ):
         _add_option(serve, name, default, meaning)
     for spec in fields(Settings):
-        unit = spec.metadata["unit"]
-        default = "" if spec.default is MISSING else f"{spec.default}"
-        _add_option(serve, spec.name, default, f"{spec.metadata['meaning']}, in {unit}")
+        meaning, unit = spec.metadata["meaning"], spec.metadata["unit"]
+        if spec.type is bool:
+            serve.add_argument(
+                "--" + spec.name, action="store_const", const="true", help=f"{meaning} ({variable(spec.name)})"
+            )
+        elif spec.type is str:
+            _add_option(serve, spec.name, "none", meaning)
+        else:
+            default = "" if spec.default is MISSING else f"{spec.default}"
+            _add_option(serve, spec.name, default, f"{meaning}, in {unit}")
 
 
 def _add_option(parser: argparse.ArgumentParser, name: str, default: str, meaning: str) -> None:

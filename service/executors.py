@@ -6,6 +6,7 @@ from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from functools import cache
 from itertools import chain, islice
+from threading import Lock
 from typing import Protocol, TypeVar
 
 import numpy as np
@@ -45,6 +46,23 @@ class Work:
     """Threads that may compute at the same time."""
     checkpoint: Checkpoint = keep_going
     """Called with the fraction done; raises `TooLong` after the deadline, `Cancelled` when the caller left."""
+
+    def part(self, start: float, stop: float) -> "Work":
+        """Return the same work whose fractions are those of the part from `start` to `stop` of the whole.
+
+        Fractions go up only, whatever order pieces are done in; 0 says nothing of them.
+        """
+        told = self.checkpoint
+        highest, alone = start, Lock()
+
+        def checkpoint(fraction: float = 0.0, /) -> None:
+            nonlocal highest
+            with alone:
+                highest = max(highest, start + (stop - start) * min(fraction, 1.0))
+                reached = highest
+            told(reached)
+
+        return Work(self.threads, checkpoint)
 
     def map(self, function: Callable[[Piece], Result], pieces: Iterable[Piece]) -> list[Result]:
         """Return ``function(piece)`` for each piece, in the order of the pieces, worked on by `threads` threads.

@@ -30,6 +30,7 @@ TAIL_OF_FIRST_LOOK = 1_000  # tail scenarios before it
 LOOKS_IN_A_ROW = 2  # that must meet the target
 CELL_BYTES = 8
 PART_HELD = 2  # a table may take one part in so many of the memory; sorted copies of it take the rest
+SIMULATED = 0.9  # of the progress of making a frame, where its scenarios have to be simulated
 
 Note = tuple[str, str, str | None]
 
@@ -146,15 +147,21 @@ def framed(source: Source, demand: Demand, stop: StopWhen | None, work: Work, se
     return replace(made, columns=columns, total=total, notes=source.notes + made.notes)
 
 
-def _carried_out(source: Source, plan: Plan, demand: Demand, work: Work, settings: Settings) -> Framed:
-    """Return the frame of one plan."""
+def _carried_out(
+    source: Source, plan: Plan, demand: Demand, work: Work, settings: Settings, *, before: Array | None = None
+) -> Framed:
+    """Return the frame of one plan; `before` are the first scenarios where a shorter one gave them."""
     size = CELL_BYTES * plan.scenarios * plan.columns
     if size <= settings.max_memory_bytes // PART_HELD:
-        return _held(source, plan, demand, work, simulated(plan, work))
+        losses = simulated(plan, work.part(0.0, SIMULATED), before=before)
+        return _held(source, plan, demand, work.part(SIMULATED, 1.0), losses)
     partial = all(depth_of(measure, plan.scenarios, contributions=True) < 1.0 for measure in demand.measures)
     if plan.sobol or demand.all_losses or not partial:
         raise _too_large(size, settings)
-    frame = streamed(plan, source.sub_portfolios, demand.groups, demand.measures, work, stand_alone=demand.stand_alone)
+    effort = work.part(0.0, SIMULATED)
+    frame = streamed(
+        plan, source.sub_portfolios, demand.groups, demand.measures, effort, stand_alone=demand.stand_alone
+    )
     return Framed(frame, demand.coverage, plan=plan)
 
 
@@ -177,11 +184,14 @@ def _until(source: Source, plan: Plan, demand: Demand, stop: StopWhen, work: Wor
     shares = [share for one in demand.measures if (share := one.tail_share) is not None]
     first = max(FIRST_LOOK, ceil(TAIL_OF_FIRST_LOOK / min(shares))) if shares else FIRST_LOOK
     scenarios = min(-(-first // BLOCK) * BLOCK, stop.max_scenarios)
-    met = 0
+    met, done, before = 0, 0, None
     while True:
         longer = plan.of_size(scenarios)
-        worst = max(_relative_errors(_carried_out(source, longer, light, work, settings), demand))
+        looking = work.part(done / stop.max_scenarios, scenarios / stop.max_scenarios)
+        made = _carried_out(source, longer, light, looking, settings, before=before)
+        worst = max(_relative_errors(made, demand))
         met = met + 1 if worst <= stop.relative_standard_error else 0
+        done, before = longer.scenarios, _first_of_more(made)
         if met == LOOKS_IN_A_ROW or scenarios >= stop.max_scenarios:
             break
         scenarios = min(2 * scenarios, stop.max_scenarios)
@@ -190,8 +200,16 @@ def _until(source: Source, plan: Plan, demand: Demand, stop: StopWhen, work: Wor
         note = f"stopped at the most scenarios allowed, {longer.scenarios}: {reached}"
     else:
         note = f"stopped after {longer.scenarios} scenarios: {reached}; intervals are not corrected for stopping"
-    made = _carried_out(source, longer, demand, work, settings)
+    looking = work.part(min(done / stop.max_scenarios, 1.0), 1.0)
+    made = _carried_out(source, longer, demand, looking, settings, before=before)
     return replace(made, notes=(*made.notes, ("stopped", note, "/losses/simulation/stop_when")))
+
+
+def _first_of_more(made: Framed) -> Array | None:
+    """Return the losses that a longer simulation begins with; None where they are not held, or with Sobol points."""
+    if made.scramblings or made.frame.columns is None:
+        return None
+    return made.frame.columns[0]
 
 
 def _relative_errors(made: Framed, demand: Demand) -> list[float]:

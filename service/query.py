@@ -9,6 +9,8 @@ from service.errors import Fault, InvalidValue
 
 NUMBER = re.compile(r"-?(0|[1-9]\d*)(\.\d+)?([eE][-+]?\d+)?")
 
+LONGEST_NAME = 170  # characters of a sub-portfolio in the name of a candidate made of it
+
 Pairs = Sequence[tuple[str, str]]
 
 
@@ -83,12 +85,34 @@ LOSSES: Mapping[str, Parameter] = {
     "valuation_date": Parameter("valuation_date"),
     "horizon": Parameter("horizon"),
 }
+INCREMENTS: Mapping[str, Parameter] = {
+    "interval_coverage": REQUEST["interval_coverage"],
+    "reference": REQUEST["reference"],
+    "hurdle_rate": Parameter("hurdle_rate", _number),
+    "cost_of_capital": Parameter("cost_of_capital", _number),
+    "capital_limit": Parameter("capital_limit", _number),
+}
+COPY: Mapping[str, Parameter] = {"sub_portfolio": Parameter("sub_portfolio"), "scale": Parameter("scale", _number)}
+VALUE: Mapping[str, Parameter] = {
+    "rule": ALLOCATIONS["rule"],
+    "smoothing": ALLOCATIONS["smoothing"],
+    "interval_coverage": REQUEST["interval_coverage"],
+}
+BOOKS: Mapping[str, Mapping[str, Parameter]] = {
+    "measures": REQUEST,
+    "allocations": {**REQUEST, **ALLOCATIONS},
+    "report": {**REQUEST, **ALLOCATIONS},
+    "increments": INCREMENTS,
+    "value": VALUE,
+}
+"""The parameters of each question that GET asks a book, besides those of measures."""
 CALCULATIONS = ("measures", "allocations")
 MEASURE = ("measure", "level", "above", *MEASURE_NUMBERS)
 WITHOUT_MEANING = (
     "refresh",
     "bom",
-)  # a spreadsheet forces a new pull with the first; the second is of the form
+    "chart",
+)  # a spreadsheet forces a new pull with the first; the others are of the form
 
 
 def allowed(calculation: str) -> tuple[str, ...]:
@@ -112,6 +136,56 @@ def table_request(pairs: Pairs, calculation: str) -> dict[str, Any]:
     document["losses"] = {"kind": "scenarios", "part": "table", **_members(pairs, LOSSES)}
     document["measures"] = measures(pairs)
     return document
+
+
+def book_request(pairs: Pairs, asked: str, name: str, defaults: Mapping[str, Any]) -> dict[str, Any]:
+    """Return the request document that GET makes of query parameters and of what a book asks for by itself.
+
+    Parameters
+    ----------
+    pairs : sequence of (str, str)
+        Only those of the request.
+    asked : str
+        A key of `BOOKS`.
+    name : str
+        Of the book.
+    defaults : mapping
+        Members of its allocation request.
+
+    Raises
+    ------
+    InvalidValue
+        For a repeated parameter, or one that is no number.
+    """
+    fields = {"measures", "reference", *(parameter.field for parameter in BOOKS[asked].values())}
+    if "capital" in fields:
+        fields.add("capital_measure")
+    document = {key: value for key, value in defaults.items() if key in fields}
+    given = _members(pairs, BOOKS[asked])
+    if "group_by" in given:
+        given["group_by"] = [attribute for attribute in given["group_by"] if attribute]
+    if "capital" in given:
+        document.pop("capital_measure", None)
+    document |= given
+    if any(key in MEASURE for key, _ in pairs):
+        document["measures"] = measures(pairs)
+    return {**document, "losses": {"kind": "book", "name": name}}
+
+
+def scaled_copy(pairs: Pairs) -> dict[str, Any]:
+    """Return the candidate that `sub_portfolio` and `scale` make.
+
+    Raises
+    ------
+    InvalidValue
+    """
+    copy = _members(pairs, COPY)
+    for name, example in (("sub_portfolio", "sub_portfolio=hull"), ("scale", "scale=1.1")):
+        if name not in copy:
+            raise _fault(name, f"{name} is needed, e.g. {example}", "missing")
+    if copy["scale"] < 0:
+        raise _fault("scale", f"scale is {copy['scale']:.15g}; it is at least 0, and 1 is the size now", "out_of_range")
+    return {"id": f"{copy['sub_portfolio'][:LONGEST_NAME]} x {copy['scale']:.15g}", "scaled": copy}
 
 
 def measures(pairs: Pairs) -> list[dict[str, Any]]:
@@ -161,4 +235,6 @@ def parameter_at(pointer: str) -> str:
         return "measure" if named in ("kind", "measure") else named
     if steps[0] == "losses":
         return steps[1] if len(steps) > 1 else "measure"
+    if steps[0] == "candidates":
+        return "scale" if steps[-1] == "scale" else "sub_portfolio"
     return "rule" if steps[0] == "rules" else steps[0]

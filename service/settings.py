@@ -78,7 +78,8 @@ class Settings:
         if unknown:
             msg = f"unknown setting {unknown[0]}; the settings are {', '.join(known)}"
             raise ValueError(msg)
-        return cls(**{known[name].name: _read(name, text, known[name]) for name, text in given.items()})
+        values: dict[str, Any] = {known[name].name: _read(name, text, known[name]) for name, text in given.items()}
+        return cls(**values)
 
 
 def _read(name: str, text: str, spec: Field[Any]) -> float | str | bool:

@@ -42,11 +42,16 @@ class Allocations(Calculation):
     def answer(self) -> AllocationsAnswer:
         of = answers.shared(self.frame, self._capital())
         results = []
+        stages = 1 + len(self.request.rules)  # of each measure: its figures, and each rule
+        count = stages * len(self.request.measures)
         for number, measure in enumerate(self.request.measures):
+            self.stage(number * stages, count)
             with pointing(f"/measures/{number}"):
                 total = self.total(number, measure)
                 alone = self.alone(number, measure) if self.request.include_stand_alone else None
-                results += [self._split(number, measure, rule, total, alone, of) for rule in self.request.rules]
+                for place, rule in enumerate(self.request.rules, start=1):
+                    self.stage(number * stages + place, count)
+                    results.append(self._split(number, measure, rule, total, alone, of))
         return AllocationsAnswer(allocations=results, **self.shared(self.request))
 
     def _split(  # each is made once for all rules

@@ -22,6 +22,9 @@ from service.schemas.results import Figure, Labels, Provenance, Tail
 from service.settings import Settings, variable
 from service.sources import Source, source_of
 
+FRAMED = 0.8  # of the progress of a calculation, where figures look at tails alone
+FRAMED_FOR_ALL = 0.4  # where rules or candidates look at all losses
+
 Describe = Callable[[TailraceError], dict[str, Any]]
 """Makes the problem document of an error, for what is refused inside an answer."""
 
@@ -82,7 +85,9 @@ class Calculation:
         losses = self.asked.losses
         stop = losses.simulation.stop_when if isinstance(losses, FactorLosses) else None
         with placed(intake):
-            self.made = framed(source, demand, stop, work, settings)
+            self._framed_at = FRAMED_FOR_ALL if demand.all_losses else FRAMED
+            self.made = framed(source, demand, stop, work.part(0.0, self._framed_at), settings)
+        self.work = work
         self.intake, self.source, self.frame = intake, source, self.made.frame
         self.coverage = demand.coverage
         self.notes = Notes(self.frame.scenarios, pointed=intake.pointed)
@@ -90,6 +95,15 @@ class Calculation:
             self.notes.say(code, detail, pointer)
         if source.table is not None and not source.table.sampled:
             self.notes.add("population", "the scenarios are the whole distribution: no figure has a sampling error")
+
+    def stage(self, number: int, count: int) -> None:
+        """Let what follows be one of the `count` stages of the work on the frame, counted from 0."""
+        width = (1.0 - self._framed_at) / count
+        start = self._framed_at + number * width
+        effort = self.work.part(start, start + width)
+        effort.checkpoint()
+        for frame in (self.frame, *self.made.scramblings):
+            frame.effort = effort
 
     def total(self, number: int, measure: RiskMeasure) -> Figure:
         """Return the figure of the total, with its notes."""
@@ -109,6 +123,7 @@ class Calculation:
         """Return labels, notes and provenance, which every answer holds."""
         request = self.asked
         losses = request.losses
+        self.stage(1, 1)  # all are done
         return {
             "labels": Labels(losses.currency, losses.valuation_date, losses.horizon, request.reference),
             "notes": self.notes.listed(),

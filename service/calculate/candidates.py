@@ -10,7 +10,6 @@ import numpy as np
 from pydantic import TypeAdapter, ValidationError
 
 from service.errors import CallerError, InvalidValue, TooLong, pointing
-from service.executors import Work
 from service.frames import missing
 from service.payloads import json_text
 from service.risk.components import ObservedComponent
@@ -67,14 +66,12 @@ class Reader:
         That are asked of each candidate.
     documents : sequence
         All candidates as sent.
-    work : Work
     """
 
     source: Source
     frame: Frame
     measures: Sequence[RiskMeasure]
     documents: Sequence[Any]
-    work: Work
 
     def read(self, numbers: Sequence[int]) -> list[Read]:
         """Return some candidates, those made of components simulated together."""
@@ -174,7 +171,7 @@ class Reader:
     def _losses(self, terms: Sequence[SubPortfolioTerms]) -> Array:
         """Return the losses of candidates made of components, shape (n, c)."""
         if self.source.plan is not None:
-            return simulated(replace(self.source.plan, model=self._model(terms)), self.work)
+            return simulated(replace(self.source.plan, model=self._model(terms)), self.frame.effort)
         return self._observed(terms) + 0.0
 
     def _model(self, terms: Sequence[SubPortfolioTerms]) -> FactorModel:

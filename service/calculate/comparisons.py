@@ -45,8 +45,8 @@ class Comparisons:
 
     def __init__(self, intake: Intake, request: ComparisonsRequest, work: Work, settings: Settings) -> None:
         self.intake, self.request = intake, request
-        self.before = _book(intake, request, "before", work, settings)
-        self.after = _book(intake, request, "after", work, settings)
+        self.before = _book(intake, request, "before", work.part(0.0, 0.5), settings)
+        self.after = _book(intake, request, "after", work.part(0.5, 1.0), settings)
         self.notes = Notes(self.after.calculation.frame.scenarios, pointed=True)
         for book in (self.before, self.after):
             self.notes.take(book.calculation.notes)
@@ -56,9 +56,12 @@ class Comparisons:
         """Return how each measure and each contribution changed."""
         results = []
         for number, measure in enumerate(self.request.measures):
+            for book in (self.before, self.after):
+                book.calculation.stage(number, len(self.request.measures))
             with pointing(f"/measures/{number}"):
                 results.append(self._result(number, measure))
         after = self.after.calculation
+        after.stage(1, 1)  # all are done
         losses = self.request.after
         return ComparisonsAnswer(
             comparisons=results,
@@ -128,7 +131,9 @@ def _same_weights(then: Calculation, now: Calculation) -> bool:
 
 
 def _same(before: Losses, after: Losses, then: Calculation, now: Calculation) -> bool:
-    """Return whether two sources say of themselves that they have the same scenarios."""
+    """Return whether two sources have the same losses, or say of themselves that they have the same scenarios."""
+    if then.source.digest == now.source.digest:
+        return True
     if isinstance(before, ScenarioLosses) and isinstance(after, ScenarioLosses):
         labels = then.frame.table.scenario_ids
         return labels is not None and labels == now.frame.table.scenario_ids

@@ -33,7 +33,7 @@ class Increments(Calculation):
             raise LossesChanged.at("/base_digest", detail)
         demand = Demand(request.measures, request.interval_coverage, stand_alone=False, all_losses=True)
         super().__init__(intake, source, demand, work, settings)
-        self.request, self.describe, self.work = request, describe, work
+        self.request, self.describe = request, describe
         self.ids = [one.id for one in source.sub_portfolios]
 
     def answer(self) -> IncrementsAnswer:
@@ -45,22 +45,26 @@ class Increments(Calculation):
         bases = [[base_of(frame, measure) for frame in frames] for measure in self.request.measures]
         candidates = self.request.candidates
         plan = replace(self.source, plan=self.made.plan)
-        reader = Reader(plan, self.frame, self.request.measures, candidates, self.work)
+        reader = Reader(plan, self.frame, self.request.measures, candidates)
         batch = max(1, BATCH_BYTES // (8 * self.frame.scenarios))
         results: list[CandidateResult] = []
-        for start in range(0, len(candidates), batch):
+        starts = range(0, len(candidates), batch)
+        for place, start in enumerate(starts):
+            self.stage(2 * place, 2 * len(starts))
             read = reader.read(range(start, min(start + batch, len(candidates))))
-            judged = self.frame.effort.map(lambda one: self._judged(one, bases), read)
+            self.stage(2 * place + 1, 2 * len(starts))
+            pairs = [(one, done / len(read)) for done, one in enumerate(read)]
+            judged = self.frame.effort.map(lambda pair: self._judged(*pair, bases), pairs)
             for result, notes in judged:  # in the order of the candidates, whichever was ready first
                 results.append(result)
                 self.notes.take(notes)
         refused = sum(one.status == "refused" for one in results)
         return IncrementsAnswer(base=totals, candidates=results, refused=refused, **self.record())
 
-    def _judged(self, read: Read, bases: list[list[Base]]) -> tuple[CandidateResult, Notes]:
+    def _judged(self, read: Read, fraction: float, bases: list[list[Base]]) -> tuple[CandidateResult, Notes]:
         """Return what one candidate changes, or its problem; several are judged at the same time."""
         notes = Notes(self.frame.scenarios, pointed=self.notes.pointed)
-        self.frame.effort.checkpoint(read.number / len(self.request.candidates))
+        self.frame.effort.checkpoint(fraction)
         if read.candidate is None or read.loss is None or read.error is not None:
             return CandidateResult(read.name, "refused", [], self._problem(read.error)), notes
         try:

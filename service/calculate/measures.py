@@ -23,9 +23,12 @@ class Measures(Calculation):
 
     def answer(self) -> MeasuresAnswer:
         results = []
+        count = 2 * len(self.request.measures)
         for number, measure in enumerate(self.request.measures):
             with pointing(f"/measures/{number}"):
+                self.stage(2 * number, count)
                 total = self.total(number, measure)
+                self.stage(2 * number + 1, count)
                 alone = self.alone(number, measure) if self.request.include_stand_alone else None
             results.append(answers.measure_result(measure.name, number, total, alone, self.frame, self.notes))
         return MeasuresAnswer(measures=results, **self.shared(self.request))

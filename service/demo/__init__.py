@@ -1,8 +1,9 @@
 """The demonstration: Ternholm Mutual, a harbour town's insurer, all of it invented."""
 
-from importlib.resources import files
+from pathlib import Path
 
-FOLDER = files("service.demo")
+FOLDER = Path(__file__).parent
+"""Also a folder of books."""
 REQUEST = "ternholm.json"
 TABLE = "ternholm.csv"
 
@@ -10,14 +11,14 @@ TABLE = "ternholm.csv"
 NEXT_STEPS = """
 The same over HTTP: start the service and open its page.
 
-  tailrace serve
+  tailrace serve --demo
   http://127.0.0.1:8000/
 """
 
 
 def request() -> bytes:
     """Return the allocation request of the demonstration, whose table stands in the part `table`."""
-    return FOLDER.joinpath(REQUEST).read_bytes()
+    return FOLDER.joinpath(REQUEST).read_bytes().replace(f'"file": "{TABLE}"'.encode(), b'"part": "table"')
 
 
 def table() -> bytes:

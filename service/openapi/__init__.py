@@ -6,9 +6,11 @@
 import json
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Any
+from typing import Any, get_args, get_type_hints
 
 from pydantic import TypeAdapter
+from pydantic.dataclasses import is_pydantic_dataclass
+from typing_extensions import TypeAliasType
 
 from service import __version__
 from service.openapi import calculations
@@ -24,9 +26,9 @@ INFO: Json = {
     "title": "tailrace",
     "version": __version__,
     "summary": "Loss scenarios in, risk measures and capital allocations out.",
-    "description": "Post a table of loss scenarios; get risk measures, the contribution of each "
-    "sub-portfolio and how sure each figure is. A loss is positive. Amounts are in one currency per "
-    "request. Levels are in the open interval from 0 to 1: 0.995, not 99.5. Unknown fields and parameters "
+    "description": "Post a table of loss scenarios, a factor model or observed changes; get risk measures, the "
+    "contribution of each sub-portfolio and how sure each figure is. A loss is positive. Amounts are in one currency "
+    "per request. Levels are in the open interval from 0 to 1: 0.995, not 99.5. Unknown fields and parameters "
     "are refused. No figure is rounded.",
     "contact": {"name": "The tailrace project"},
     "license": {"name": "Apache 2.0", "identifier": "Apache-2.0"},
@@ -57,7 +59,7 @@ def build(examples: Path = EXAMPLES) -> Json:
         f"/v1/{name}": {"post": calculations.operation(name, schemas, read_examples(examples, name))}
         for name in CALCULATIONS
     }
-    statuses = {*calculations.REFUSALS, calculations.OF_A_NAMED_BOOK, 404}
+    statuses = {*calculations.REFUSALS, 404}.union(*calculations.MORE_REFUSALS.values())
     return {
         "openapi": "3.1.0",
         "info": INFO,
@@ -93,17 +95,36 @@ def _schemas() -> Json:
     adapters += [(part.__name__, "validation", TypeAdapter(part)) for part in calculations.PARTS]
     _, found = TypeAdapter.json_schemas(adapters, ref_template=COMPONENTS + "{model}")
     schemas = {name: _tidy(schema) for name, schema in found["$defs"].items()} | SCHEMAS
-    _inherit_descriptions(schemas["AllocationsRequest"], schemas["MeasuresRequest"])
+    for model in _models(*(calculation["request"] for calculation in CALCULATIONS.values())):
+        _inherit_descriptions(schemas[model.__name__], model)
     problem = schemas["CandidateResult"]["properties"]["problem"]
     problem["anyOf"] = [reference("CandidateProblem"), {"type": "null"}]
     return schemas
 
 
-def _inherit_descriptions(heir: Json, parent: Json) -> None:
-    """Describe the fields of `heir` that it has from `parent`, where the generator lost them."""
-    for name, field in parent["properties"].items():
-        if "description" in field:
-            heir["properties"][name].setdefault("description", field["description"])
+def _models(*roots: Any) -> set[type]:
+    """Return every model with fields that the types `roots` are made of."""
+    found: set[type] = set()
+    waiting = list(roots)
+    while waiting:
+        kind = waiting.pop()
+        if isinstance(kind, TypeAliasType):
+            waiting.append(kind.__value__)
+        elif not is_pydantic_dataclass(kind):
+            waiting += get_args(kind)
+        elif kind not in found:
+            found.add(kind)
+            waiting += get_type_hints(kind, include_extras=True).values()
+    return found
+
+
+def _inherit_descriptions(schema: Json, model: type) -> None:
+    """Describe the fields of `model` that it has from a base, where the generator lost them."""
+    for name, field in schema["properties"].items():
+        told = (base.__dict__.get("__pydantic_fields__", {}).get(name) for base in model.__mro__)
+        description = next((one.description for one in told if one is not None and one.description), None)
+        if description is not None and "$ref" not in field:
+            field.setdefault("description", description)
 
 
 def _tidy(schema: Any) -> Any:

@@ -4,9 +4,9 @@ from collections.abc import Iterator, Mapping
 from typing import Any
 
 from service import query
-from service.openapi.examples import Examples, Shown
+from service.openapi.examples import JSON, MULTIPART, Examples, Shown
 from service.openapi.parts import BOM, COMPONENTS, HEADERS, REFRESH, REQUEST_ID, Json, parameter, reference, refusals
-from service.payloads import TABLE_READERS
+from service.payloads import CSV, TABLE_READERS
 from service.representations.formats import FORMATS
 from service.schemas.requests import (
     AllocationsRequest,
@@ -54,8 +54,12 @@ CALCULATIONS: Mapping[str, Json] = {
         "differences scenario by scenario.",
     },
 }
-IN_ONE_PIECE = ("comparisons",)
-"""Calculations whose body is JSON alone."""
+BODIES: Mapping[str, tuple[str, ...]] = {
+    **dict.fromkeys(query.CALCULATIONS, (JSON, MULTIPART, *TABLE_READERS)),
+    "increments": (JSON, MULTIPART),
+    "comparisons": (JSON,),
+}
+"""Calculation to the media types of its body."""
 PARTS: tuple[Any, ...] = (Candidate,)
 """Models that are validated apart from the request that they stand in."""
 
@@ -74,7 +78,7 @@ FORMS = (
     "milliseconds, is in the header `Server-Timing`."
 )
 REFUSALS = (400, 406, 413, 415, 422, 500, 503)
-OF_A_NAMED_BOOK = 409
+MORE_REFUSALS: Mapping[str, tuple[int, ...]] = {"increments": (409,)}
 EVENTS = "text/event-stream"
 
 
@@ -90,7 +94,7 @@ def operation(name: str, schemas: Json, examples: Examples) -> Json:
         Of this calculation.
     """
     said = CALCULATIONS[name]
-    tables = name in query.CALCULATIONS
+    tables = CSV in BODIES[name]
     return {
         "operationId": said["operationId"],
         "tags": ["calculations"],
@@ -102,14 +106,7 @@ def operation(name: str, schemas: Json, examples: Examples) -> Json:
             if tables
             else "The request.",
             "required": True,
-            "content": dict(
-                _asked(
-                    reference(said["request"].__name__),
-                    examples.requests,
-                    tables=tables,
-                    parts=name not in IN_ONE_PIECE,
-                )
-            ),
+            "content": dict(_asked(name, reference(said["request"].__name__), examples.requests)),
         },
         "responses": {
             "200": {
@@ -123,26 +120,27 @@ def operation(name: str, schemas: Json, examples: Examples) -> Json:
                 },
                 "content": dict(_answered(reference(said["answer"].__name__), examples.answers)),
             },
-            **refusals(*REFUSALS, *((OF_A_NAMED_BOOK,) if name == "increments" else ())),
+            **refusals(*REFUSALS, *MORE_REFUSALS.get(name, ())),
         },
     }
 
 
-def _asked(request: Json, examples: Shown, *, tables: bool, parts: bool) -> Iterator[tuple[str, Json]]:
+def _asked(name: str, request: Json, examples: Shown) -> Iterator[tuple[str, Json]]:
     """Yield the media types of a body."""
-    yield "application/json", _content(request, examples, "application/json")
-    if not parts:
-        return
-    yield "multipart/form-data", {**_multipart(request), **_content({}, examples, "multipart/form-data")}
-    for media_type in TABLE_READERS if tables else ():
-        yield media_type, _content(_table(media_type), examples, media_type)
+    for media_type in BODIES[name]:
+        content = {
+            JSON: {"schema": request},
+            MULTIPART: _multipart(request),
+        }.get(media_type) or {"schema": _table(media_type)}
+        yield media_type, content | _shown(examples, media_type)
 
 
 def _answered(answer: Json, examples: Shown) -> Iterator[tuple[str, Json]]:
     """Yield the media types of an answer."""
     for form in FORMATS.values():
         table = {"type": "string", "description": "RFC 4180 with a header line."}
-        yield form.media_type, _content(answer if form.suffix == "json" else table, examples, form.media_type)
+        schema = answer if form.media_type == JSON else table
+        yield form.media_type, {"schema": schema} | _shown(examples, form.media_type)
     events = {"oneOf": [reference("Progress"), answer, reference("Problem")], "description": "Data of one event."}
     words = "Events `progress`, then one `result` or `problem`; the data of each are JSON on one line."
     yield (
@@ -151,9 +149,9 @@ def _answered(answer: Json, examples: Shown) -> Iterator[tuple[str, Json]]:
     )
 
 
-def _content(schema: Json, examples: Shown, media_type: str) -> Json:
+def _shown(examples: Shown, media_type: str) -> Json:
     shown = examples.get(media_type)
-    return ({"schema": schema} if schema else {}) | ({"examples": shown} if shown else {})
+    return {"examples": shown} if shown else {}
 
 
 def _table_parameters(name: str, schemas: Json) -> list[Json]:
@@ -218,7 +216,7 @@ def _multipart(asked: Json) -> Json:
             },
         },
         "encoding": {
-            "request": {"contentType": "application/json"},
+            "request": {"contentType": JSON},
             "table": {"contentType": ", ".join(TABLE_READERS)},
         },
     }

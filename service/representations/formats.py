@@ -1,7 +1,7 @@
 """The forms of an answer, what writes each, and which one a caller gets."""
 
 import re
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, is_dataclass
 from functools import cache, lru_cache
 from math import isfinite
@@ -11,7 +11,10 @@ from typing import Any, Protocol, get_args, get_type_hints
 import orjson
 
 from service.errors import Fault, NotAcceptable, NotFound
+from service.representations.arrow import arrow_bytes
+from service.representations.png import png
 from service.representations.table import Column, Table
+from service.representations.xml import xml_bytes
 
 BYTE_ORDER_MARK = b"\xef\xbb\xbf"
 LINE_END = "\r\n"
@@ -38,12 +41,14 @@ class Form:
     content_type: str
     """The media type with its parameters, as sent."""
     write: Callable[[Any], bytes]
-    """From an answer to its bytes."""
+    """From an answer (a picture's SVG, a page's HTML, or a number) to its bytes."""
+    drawn: bool = False
+    """Whether it is a picture."""
 
 
-def write(answer: Tabular, form: Form, *, mark: bool = False) -> bytes:
-    """Return `answer` in `form`; with `mark` a CSV begins with the byte order mark."""
-    data = form.write(answer)
+def write(content: Any, form: Form, *, mark: bool = False) -> bytes:
+    """Return an answer (or what `form` is made of) in `form`; with `mark` a CSV begins with the byte order mark."""
+    data = form.write(content)
     return BYTE_ORDER_MARK + data if mark and form.suffix == "csv" else data
 
 
@@ -186,6 +191,11 @@ def _number(value: float | None) -> str:
     return repr(number + 0.0)
 
 
+def _text(value: float) -> bytes:
+    """Return one number as text: the shortest decimal that reads back as the same, with nothing after it."""
+    return _number(value).encode()
+
+
 FORMATS = {
     form.suffix: form
     for form in (
@@ -198,4 +208,36 @@ FORMATS = {
         ),
     )
 }
-"""Suffix to form, in the order that decides between forms that the caller weighs alike."""
+"""Suffix to form of what every calculation answers, in the order that decides between forms weighed alike."""
+
+XML = Form(suffix="xml", media_type="application/xml", content_type="application/xml; charset=utf-8", write=xml_bytes)
+ARROW = Form(
+    suffix="arrow",
+    media_type="application/vnd.apache.arrow.stream",
+    content_type="application/vnd.apache.arrow.stream",
+    write=arrow_bytes,
+)
+SVG = Form(suffix="svg", media_type="image/svg+xml", content_type="image/svg+xml", write=str.encode, drawn=True)
+PNG = Form(suffix="png", media_type="image/png", content_type="image/png", write=png, drawn=True)
+TXT = Form(suffix="txt", media_type="text/plain", content_type="text/plain; charset=utf-8", write=_text)
+HTML = Form(suffix="html", media_type="text/html", content_type="text/html; charset=utf-8", write=str.encode)
+
+FLAT = tuple(FORMATS.values())
+FIGURES = (*FLAT, XML, ARROW, SVG, PNG)
+FORMS: Mapping[str, tuple[Form, ...]] = {
+    "measures": FIGURES,
+    "allocations": FIGURES,
+    "increments": FLAT,
+    "comparisons": FLAT,
+}
+"""The forms of the answer of each calculation."""
+FORMS_OF_BOOKS: Mapping[str, tuple[Form, ...]] = {
+    "books": FLAT,
+    "book": FLAT,
+    "measures": FIGURES,
+    "allocations": FIGURES,
+    "increments": (*FLAT, TXT),
+    "value": (FORMATS["json"], TXT),
+    "report": (HTML,),
+}
+"""Likewise of what GET asks of books."""

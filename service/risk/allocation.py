@@ -14,6 +14,7 @@ from service.risk.figures import figure_of, judged, lean_of_total
 from service.risk.frame import Frame
 from service.risk.measures import RiskMeasure, Smoothing
 from service.risk.quantiles import Array
+from service.risk.ranking import tie_tolerance
 from service.risk.shapley import shapley_values
 from service.risk.uncertainty import Estimates, Influence, Sampling, Spread, lean_of_parts, leaning_estimates, spread
 
@@ -171,7 +172,7 @@ def covariance(case: Case) -> Contributions:
     mean = float(weight @ frame.totals)
     deviation = frame.totals - mean
     variance = float(weight @ (deviation * deviation))
-    if not variance > 0.0:
+    if not (variance > 0.0 and np.ptp(frame.totals) > tie_tolerance(frame.table.losses).max()):
         detail = "the total does not vary: nothing can be split by covariance with it"
         raise NotDefined(detail)
     located = case.measure.above == "mean"

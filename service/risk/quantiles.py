@@ -289,12 +289,12 @@ class Ties:
     p: Array
 
     @classmethod
-    def of(cls, ordered: Ordered, *, tolerance: float) -> "Ties":
-        """Group neighbours of the single distribution in `ordered` that differ by at most `tolerance`."""
+    def of(cls, ordered: Ordered, *, tolerance: Array) -> "Ties":
+        """Group neighbours of the single distribution in `ordered` that differ by at most a `tolerance` (m,) of theirs."""
         values = ordered.values[0]
         new = np.empty(values.size, dtype=bool)
         new[:1] = True
-        np.greater(values[:-1] - values[1:], tolerance, out=new[1:])
+        np.greater(values[:-1] - values[1:], np.maximum(tolerance[:-1], tolerance[1:]), out=new[1:])
         starts = np.flatnonzero(new)
         p = np.broadcast_to(np.asarray(ordered.p, dtype=np.float64).reshape(-1), values.shape)
         return cls(starts, np.cumsum(new) - 1, p)

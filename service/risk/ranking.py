@@ -1,6 +1,6 @@
 """The scenarios in the order of their total, worst first, tied scenarios known."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -22,14 +22,14 @@ class Ranking:
     order : ndarray of int of shape (m,)
         Scenario number of each position.
     ties : Ties
-    tolerance : float
-        Difference up to which neighbours are tied.
+    tolerance : ndarray of shape (m,)
+        Difference up to which each position and the next are tied.
     """
 
     ordered: Ordered
     order: Indices
     ties: Ties
-    tolerance: float
+    tolerance: Array
 
     def cut(self, depth: float) -> "Ranking":
         """Return the ranking of at least the worst `depth` of all scenarios, no atom cut in two."""
@@ -47,7 +47,8 @@ class Ranking:
             probabilities=None,
             sampled=self.ordered.sampled,
         )
-        return Ranking(ordered, self.order[:size], Ties.of(ordered, tolerance=self.tolerance), self.tolerance)
+        tolerance = self.tolerance[:size]
+        return Ranking(ordered, self.order[:size], Ties.of(ordered, tolerance=tolerance), tolerance)
 
 
 def _worst_first(values: Array, least: float) -> Indices:
@@ -64,18 +65,22 @@ def worst(values: Array, depth: float) -> Indices:
     return _worst_first(values, np.partition(values, values.size - count)[values.size - count])
 
 
-def tie_tolerance(rows: Array) -> float:
-    """Return the difference below which the sums of two `rows` (m, d) are one atom.
+def tie_tolerance(rows: Array) -> Array:
+    """Return how far the sum of each of the `rows` (m, d) may be from another's and still be one atom with it.
 
-    Sums of d floats that differ by their rounding alone differ by at most d 2^-52 times the largest sum of
-    absolute losses; a single column has no rounding.
+    Sums of d floats that differ by their rounding alone differ by at most d 2^-52 times the larger sum of
+    absolute losses; a single column has no rounding. A bound for all rows in one would let a few huge losses tie
+    all others.
     """
     count, columns = rows.shape
     if columns == 1:
-        return 0.0
+        return np.zeros(count)
     height = max(1, BLOCK_CELLS // columns)
-    blocks = (rows[start : start + height] for start in range(0, count, height))
-    return columns * 2.0**-52 * max(float(np.add.reduce(np.abs(block), axis=1).max()) for block in blocks)
+    sizes = np.empty(count)
+    for start in range(0, count, height):
+        part = slice(start, start + height)
+        np.add.reduce(np.abs(rows[part]), axis=1, out=sizes[part])
+    return columns * 2.0**-52 * sizes
 
 
 def ranked(totals: Array, table: Scenarios, *, depth: float) -> Ranking:
@@ -93,7 +98,7 @@ def ranked(totals: Array, table: Scenarios, *, depth: float) -> Ranking:
     while True:
         rows = table.losses if order.size == totals.size else table.losses.take(order, axis=0)
         tolerance = tie_tolerance(rows)
-        edge = totals[order[-1]] - tolerance
+        edge = totals[order[-1]] - tolerance.max()
         if order.size == totals.size or np.count_nonzero(totals >= edge) == order.size:
             return ranking_of(totals[order], order, table, tolerance)
         order = _worst_first(totals, edge)
@@ -124,17 +129,17 @@ def ranked_with(totals: Array, table: Scenarios, loss: Array, *, depth: float) -
     while True:
         rows = np.column_stack([table.losses.take(order, axis=0), loss[order]])
         tolerance = tie_tolerance(rows)
-        edge = together[order[-1]] - tolerance
+        edge = together[order[-1]] - tolerance.max()
         if order.size == together.size or np.count_nonzero(together >= edge) == order.size:
             break
         order = _worst_first(together, edge)
     exact = np.add.reduce(rows, axis=1)
     again = np.argsort(-exact, kind="stable")
-    return ranking_of(exact[again], order[again], table, tolerance), rows[again]
+    return ranking_of(exact[again], order[again], table, tolerance[again]), rows[again]
 
 
-def ranking_of(values: Array, order: Indices, table: Scenarios, tolerance: float) -> Ranking:
-    """Return the ranking of scenarios that are in order already."""
+def ranking_of(values: Array, order: Indices, table: Scenarios, tolerance: Array) -> Ranking:
+    """Return the ranking of scenarios that are in order already; tied ones get one value, that of their middle."""
     ordered = Ordered.of(
         values[None, :],
         scenarios=table.scenarios,
@@ -142,4 +147,8 @@ def ranking_of(values: Array, order: Indices, table: Scenarios, tolerance: float
         sampled=table.sampled,
         clusters=None if table.clusters is None else table.clusters[order][None, :],
     )
-    return Ranking(ordered, order, Ties.of(ordered, tolerance=tolerance), tolerance)
+    ties = Ties.of(ordered, tolerance=tolerance)
+    if not ties.none:
+        ends = np.append(ties.starts[1:], values.size)
+        ordered = replace(ordered, values=ties.spread(values[(ties.starts + ends) // 2])[None, :])
+    return Ranking(ordered, order, ties, tolerance)

@@ -99,8 +99,8 @@ class Spread:
     ----------
     errors : ndarray of shape (c,)
         Standard errors, sqrt(sum v^2).
-    skewness : ndarray of shape (c,) or None
-        Of the estimates: sum v^3 / (sum v^2)^1.5; None where the correlation is asked for instead.
+    skewness : ndarray of shape (c,)
+        Of the estimates: sum v^3 / (sum v^2)^1.5.
     effective : ndarray of shape (c,)
         Effective number of scenarios that carry the error: (sum v^2)^2 / sum v^4, which is n over the kurtosis
         (Kish, Survey Sampling, 1965, section 11.7, with squared influence values as weights).
@@ -109,7 +109,7 @@ class Spread:
     """
 
     errors: Array
-    skewness: Array | None
+    skewness: Array
     effective: Array
     correlation: Array | None = None
 
@@ -118,8 +118,13 @@ class Spread:
         """Return the spread of the figures of several parts in one, in order."""
         if len(parts) == 1:
             return parts[0]
-        found = zip(*((one.errors, one.skewness, one.effective, one.correlation) for one in parts), strict=True)
-        return cls(*(None if arrays[0] is None else np.concatenate(arrays) for arrays in found))
+        correlations = [one.correlation for one in parts if one.correlation is not None]
+        return cls(
+            np.concatenate([one.errors for one in parts]),
+            np.concatenate([one.skewness for one in parts]),
+            np.concatenate([one.effective for one in parts]),
+            np.concatenate(correlations) if correlations else None,
+        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -163,16 +168,15 @@ def spread(influence: Influence, sampling: Sampling, *, beside: Influence | None
     scale = np.where(errors > 0.0, errors, 1.0)
     v /= scale[:, None]
     rest = rest / scale
-    skewness = correlation = None
-    if beside is None:
-        skewness = np.vecdot(np.square(v), v) + left_out * rest**3
-    else:
+    correlation = None
+    if beside is not None:
         other, other_rest, _ = _standardised(beside, sampling)
         other_error = np.sqrt(np.vecdot(other, other) + left_out * other_rest * other_rest)[0]
         together = v @ other[0] + left_out * rest * other_rest
         correlation = together / other_error if other_error > 0.0 else np.zeros_like(errors)
-    np.square(v, out=v)
-    fourth = np.vecdot(v, v) + left_out * rest**4
+    squares = np.square(v)
+    skewness = np.vecdot(squares, v) + left_out * rest**3
+    fourth = np.vecdot(squares, squares) + left_out * rest**4
     effective = np.divide(1.0, fourth, out=np.full(errors.shape, float(sampling.scenarios)), where=fourth > 0.0)
     return Spread(errors, skewness, effective, correlation)
 
@@ -222,7 +226,7 @@ def leaning_estimates(  # each is a property of the figures
 
 def usual_lean(of: Spread) -> Array:
     """Return the lean that the skewness of the estimates asks for, shape (c,)."""
-    return np.zeros_like(of.errors) if of.skewness is None else USUAL_LEAN * of.skewness
+    return USUAL_LEAN * of.skewness
 
 
 def lean_of_parts(of: Spread, lean_of_total: float) -> Array:

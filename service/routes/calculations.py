@@ -2,8 +2,6 @@
 
 import asyncio
 import re
-from collections.abc import AsyncIterator
-from contextlib import asynccontextmanager
 from dataclasses import dataclass
 from time import perf_counter
 
@@ -12,16 +10,19 @@ from starlette.responses import Response
 from starlette.routing import Route
 
 from service import calculate, intake, problems
+from service.books import Books
 from service.desk import Desk
-from service.errors import Fault, InvalidValue
 from service.executors import Work
 from service.intake import Intake
 from service.metrics import Metrics
 from service.payloads import TABLE_READERS
 from service.representations import formats
-from service.representations.formats import FORMATS, Form
+from service.representations.formats import FORMS, Form
 from service.routes.bodies import check_coding, check_digest, read_body
+from service.routes.callers import watched
 from service.routes.doors import Handler, door
+from service.routes.forms import POLICIES, chart_asked, picture, wants_mark
+from service.schemas.losses import BookLosses
 from service.settings import Settings
 
 CALCULATIONS = tuple(intake.MODELS)
@@ -35,13 +36,13 @@ WAIT = re.compile(r'(?:^|[,;\s])wait\s*=\s*"?(\d{1,9})"?\s*(?:$|[,;])', re.IGNOR
 BODY_TYPES = ", ".join(("application/json", "multipart/form-data", *TABLE_READERS))
 
 
-def routes(*, settings: Settings, desk: Desk, metrics: Metrics) -> list[Route]:
+def routes(*, settings: Settings, books: Books, desk: Desk, metrics: Metrics) -> list[Route]:
     """Return the doors of each calculation: one that goes by Accept, and one per suffix."""
     made = []
     for name in CALCULATIONS:
-        for suffix in (None, *FORMATS):
+        for suffix in (None, *(form.suffix for form in FORMS[name])):
             path = f"/v1/{name}" if suffix is None else f"/v1/{name}.{suffix}"
-            made.append(_door(path, Calculation(name, suffix, settings, desk, metrics).handle))
+            made.append(_door(path, Calculation(name, suffix, settings, books, desk, metrics).handle))
     return made
 
 
@@ -56,13 +57,14 @@ class Calculation:
     name: str
     suffix: str | None
     settings: Settings
+    books: Books
     desk: Desk
     metrics: Metrics
 
     async def handle(self, request: Request) -> Response:
         """Answer one request; what cannot be answered is refused before it is read."""
         accept = ", ".join(request.headers.getlist("accept"))
-        form = formats.choose(self.suffix, accept, tuple(FORMATS.values()))
+        form = formats.choose(self.suffix, accept, FORMS[self.name])
         check_coding(request)
         self.desk.check()
         seconds = _preferred_seconds(request)
@@ -73,6 +75,8 @@ class Calculation:
         data = await self._compute(task, seconds)
         self.metrics.computed(task.scenarios)
         headers = {"content-type": form.content_type, "vary": "Accept", "server-timing": clock.told()}
+        if form.suffix in POLICIES:
+            headers["content-security-policy"] = POLICIES[form.suffix]
         if seconds is not None:
             headers["preference-applied"] = f"wait={seconds:.0f}"
         return Response(data, headers=headers)
@@ -83,7 +87,7 @@ class Calculation:
             task.decode()
             if task.is_short() and self.desk.has_place:
                 return await self.desk.run(task.run, seconds=seconds, gone=asyncio.Event(), short=True)
-        async with _watched(task.request) as gone:
+        async with watched(task.request) as gone:
             return await self.desk.run(task.run, seconds=seconds, gone=gone)
 
 
@@ -140,6 +144,8 @@ class _Task:
         if self._taken is None:
             return False
         request = self._taken.request
+        if self._form.drawn or any(isinstance(one, BookLosses) for one in vars(request).values()):
+            return False
         rules = getattr(request, "rules", ("none",))
         times = len(rules) * len(getattr(request, "candidates", ("none",)))
         return len(request.measures) * times <= SHORT_WORK and "shapley" not in rules
@@ -147,11 +153,14 @@ class _Task:
     def run(self, work: Work) -> bytes:
         """Return the answer's bytes."""
         self._clock.mark("wait")
-        mark = _wants_mark(self._parameters())
-        answer = calculate.answer(self._taken or self.decode(), work, self._calculation.settings, problems.describe)
+        mark, chart = wants_mark(self._parameters()), chart_asked(self._parameters(), self._form)
+        of, settings = self._calculation, self._calculation.settings
+        taken = of.books.resolved(self._taken or self.decode(), work)
+        drawing = calculate.drawing(taken, work, settings) if self._form.drawn else None
+        answer = drawing.answer if drawing else calculate.answer(taken, work, settings, problems.describe)
         self.scenarios = answer.provenance.scenarios
         self._clock.mark("compute")
-        data = formats.write(answer, self._form, mark=mark)
+        data = formats.write(picture(drawing, chart) if drawing else answer, self._form, mark=mark)
         self._clock.mark("write")
         return data
 
@@ -159,35 +168,7 @@ class _Task:
         return self.request.query_params.multi_items() if self.request.scope["query_string"] else []
 
 
-@asynccontextmanager
-async def _watched(request: Request) -> AsyncIterator[asyncio.Event]:
-    """Give an event that is set when the caller leaves."""
-    gone = asyncio.Event()
-
-    async def watch() -> None:
-        while (await request.receive())["type"] != "http.disconnect":
-            pass
-        gone.set()
-
-    watching = asyncio.create_task(watch())
-    try:
-        yield gone
-    finally:
-        watching.cancel()
-
-
 def _preferred_seconds(request: Request) -> float | None:
     """Return the seconds of ``Prefer: wait=…``; a preference that cannot be read is none (RFC 7240, 2)."""
     found = WAIT.search(", ".join(request.headers.getlist("prefer")))
     return float(found[1]) if found else None
-
-
-def _wants_mark(parameters: list[tuple[str, str]]) -> bool:
-    """Return whether a CSV answer begins with the byte order mark."""
-    values = [value for name, value in parameters if name == "bom"]
-    if values in ([], ["0"]):
-        return False
-    if values == ["1"]:
-        return True
-    detail = "bom is 0 or 1, once"
-    raise InvalidValue(detail, faults=[Fault(detail=detail, code="not_allowed", parameter="bom")])

@@ -10,12 +10,10 @@ from starlette.requests import Request
 from starlette.responses import FileResponse, Response
 from starlette.routing import Route
 
-from service import __version__
 from service.desk import Desk
 from service.errors import NotFound
 from service.metrics import Metrics
 from service.pages import docs, html
-from service.pages.front import front_page
 from service.pages.problems import problem_index, problem_page, problem_record
 from service.representations.formats import best
 from service.routes.doors import Handler, door
@@ -42,12 +40,9 @@ def routes(
     document : bytes
         The OpenAPI document.
     """
-    about_links = '</openapi.json>; rel="service-desc", </docs>; rel="service-doc"'
-    front = _said(front_page(__version__), HTML, policy=html.POLICY, link=about_links)
     start = _said(docs.START, "text/javascript; charset=utf-8")
     limits = _said(json.dumps(limits_of(settings)), JSON)
     return [
-        door("/", {"GET": front}),
         door("/healthz", {"GET": _said('{"status":"alive"}', JSON, cache_control="no-store")}),
         door("/readyz", {"GET": partial(_ready, desk)}),
         door("/metrics", {"GET": partial(_metrics, metrics)}),

@@ -105,7 +105,7 @@ class Candidate:
     id: Text
     """Its name, unique in the request and not that of a sub-portfolio."""
     values: Annotated[list[Number] | None, Field(min_length=1)] = None
-    """Its loss in each scenario, in the order of the base's scenarios, in currency; or else `components` or `scaled`."""
+    """Its loss in each scenario, in the order of the base's scenarios, in currency; or `components`, or `scaled`."""
     components: Annotated[list[AnyComponent] | None, Field(min_length=1)] = None
     """What its loss is made of, on the factors of the base; the parts are added."""
     scaled: ScaledCopy | None = None

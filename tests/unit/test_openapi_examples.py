@@ -18,8 +18,8 @@ from tests.serving import running
 EXAMPLES = {example.name: example for example in examples()}
 MOST_BYTES = 400_000
 ELSEWHERE = 1e-12  # relative difference that other processors may make
-ANSWERS = {"measures": "MeasuresAnswer", "allocations": "AllocationsAnswer", "increments": "IncrementsAnswer"}
-ASKED = {"measures": "MeasuresRequest", "allocations": "AllocationsRequest", "increments": "IncrementsRequest"}
+ANSWERS = {name: said["answer"].__name__ for name, said in openapi.CALCULATIONS.items()}
+ASKED = {name: said["request"].__name__ for name, said in openapi.CALCULATIONS.items()}
 KINDS = set(json.loads(openapi.committed())["components"]["schemas"]["Measure"]["discriminator"]["mapping"])
 
 

@@ -24,6 +24,7 @@ from service.risk.quantiles import Array, Ordered, Ties, decimal
 from service.risk.uncertainty import Influence
 
 EXPECTILE_WINDOW = 0.9  # half width of the window for the density at an expectile, as a part of the smaller side
+AT_EXPECTILE = 1e-12  # of the largest loss: an atom so near is at the expectile, whose own rounding is of this order
 NODES = 16  # Gauss-Legendre nodes of each panel of the Aumann-Shapley integral
 MOST_PANELS = 64  # aversion times range up to 2^64; beyond it the measure is the largest loss in all but name
 UNDERFLOW = 746.0  # exp(-746) is 0 in binary64
@@ -70,7 +71,7 @@ class StandardDeviation(RiskMeasure):
         return Influence(values, np.zeros(sd.size))
 
     def contribution_weights(self, ordered: Ordered, ties: Ties, smoothing: Smoothing) -> ContributionWeights:
-        if not self.values(ordered)[0] > 0.0:
+        if ties.starts.size == 1 or not self.values(ordered)[0] > 0.0:
             detail = "the total does not vary: its standard deviation has no derivative, so no Euler contributions"
             raise NotDefined(detail)
         return RiskMeasure.contribution_weights(self, ordered, ties, smoothing)
@@ -143,7 +144,7 @@ class Expectile(LocatedMeasure):
         e = float(self.values(ordered)[0])
         level = float(decimal(self.level))
         values = ties.spread(ties.means(ordered.values[0][:, None]))[:, 0]
-        near = np.abs(values - e) <= 4.0 * np.spacing(np.max(np.abs(values)))
+        near = np.abs(values - e) <= AT_EXPECTILE * np.max(np.abs(values))
         a = np.where(near, 0.5, np.where(values > e, level, 1.0 - level))
         weighted = a * ties.p
         return ContributionWeights(ties.shared(weighted / weighted.sum()))

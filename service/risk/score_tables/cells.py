@@ -16,7 +16,7 @@ TRIES = 6  # numbers of cells looked at
 GROWTH = (1.25, 8.0)  # least and most from one number of cells to the next
 MARGIN = 1.1  # more cells than the error would need by its order
 NEGLIGIBLE = 1e-7  # probability of cells that may fail the check, which are then left out of the table
-SLACK = 1e-12  # of a whole number of cells
+SLACK = 1e-12  # relative error of a number of cells
 NO_LOGARITHM = -1e4  # stands for ln 0: its exponential is 0
 
 
@@ -74,9 +74,10 @@ class Cells:
     def at(self, marks: Array) -> Array:
         """Return the values at marks (n,), NaN where there are none; for making tables, not for using them."""
         position = (marks - self.start) / self.width
-        cell = np.clip(np.floor(position), -1.0, self.count)
+        inside = (position > -SLACK * self.count) & (position < (1.0 + SLACK) * self.count)
+        cell = np.clip(np.floor(position), 0.0, self.count - 1.0)
         place = position - cell - 0.5
-        chosen = self.coefficients[:, (cell + 1.0).astype(np.intp)]
+        chosen = self.coefficients[:, np.where(inside, cell + 1.0, 0.0).astype(np.intp)]
         values = chosen[-1].copy()
         for row in chosen[-2::-1]:
             values = values * place + row
@@ -96,16 +97,16 @@ def fitted(target: Target, degree: int, *, exponential: bool) -> tuple[Cells, fl
     """
     count = FEWEST_CELLS
     for attempt in range(1, TRIES + 1):
-        cells, ratios, probability = _fit(target, degree, count, exponential=exponential)
-        failed = ~(ratios <= 1.0)
-        missing = float(probability[failed].sum())
+        with np.errstate(all="ignore"):
+            cells, ratios, probability = _fit(target, degree, count, exponential=exponential)
         worst = _worst(ratios, probability)
         if worst <= 1.0 or attempt == TRIES or count == MOST_CELLS:
             break
         growth = MARGIN * worst ** (1.0 / (degree + 1)) if math.isfinite(worst) else GROWTH[1]
         count = min(math.ceil(count * min(max(growth, GROWTH[0]), GROWTH[1])), MOST_CELLS)
+    failed = ~(ratios <= 1.0)
     cells.coefficients[:, 1:-1][:, failed] = np.nan
-    return cells, missing
+    return cells, float(probability[failed].sum())
 
 
 def _worst(ratios: Array, probability: Array) -> float:

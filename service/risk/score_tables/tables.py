@@ -15,7 +15,7 @@ from service.risk.scores import Law, NormalScores, StudentScores
 Exact = Callable[[Array], Array]
 
 CACHED = 256  # tables kept; each takes at most 200 kB unless it is of a large empirical law
-CHUNK = 4096  # scores at a time, so that the scratch stays in the cache
+CHUNK = 8192  # scores at a time, so that the scratch stays in the cache
 TOLERANCE = 1e-10  # see `ScoreTable.of`
 FIRST_SHARE, SECOND_SHARE = 0.3, 0.5  # of the tolerance, in the two stages in which a table is made
 ROUNDING = 64.0 * float(np.finfo(np.float64).eps)  # relative error that no table can avoid
@@ -23,7 +23,8 @@ WIDE = 100.0  # ratio of the largest to the smallest value from which on logarit
 FARTHEST_SCORE = 8.4  # normal scores beyond have a probability of 5e-17
 FARTHEST_LOGIT = 38.0
 FARTHEST_STUDENT = 1e-9  # probability beyond which t scores are left to the exact function
-STUDENT_RADIUS = 4.0  # t score at half of the way to infinity, over the square root of the degrees of freedom
+STUDENT_RADIUS = 8.0  # t score half of the way to infinity, over the square root of the degrees of freedom
+HEAVY_DF, HEAVY_RADIUS = 2.5, 64.0  # up to these degrees of freedom it is this, for its tails reach so far
 STUDENT_REACH = 1.0 - 1e-4  # the way to infinity is tabulated at most so far
 FARTHEST_MARK = 1.0 - 1e-9
 FARTHEST = 1e100  # size of a score
@@ -138,7 +139,7 @@ class _Axis:
     def of(cls, law: Law) -> "_Axis":
         """Return the axis for scores of this law."""
         if isinstance(law, StudentScores):
-            radius = STUDENT_RADIUS * math.sqrt(law.df)
+            radius = STUDENT_RADIUS * math.sqrt(law.df) if law.df > HEAVY_DF else HEAVY_RADIUS
             farthest = abs(float(special.stdtrit(law.df, FARTHEST_STUDENT)))
             return cls(radius, min(1.0 - radius / (radius + farthest), STUDENT_REACH))
         return cls(0.0, FARTHEST_SCORE if isinstance(law, NormalScores) else FARTHEST_LOGIT)
@@ -335,7 +336,7 @@ def _allowed(marginal: Tabulated, share: float) -> Exact:
     def allowed(values: Array) -> Array:
         size = np.abs(values)
         unit = np.abs(values - median) + (high - low)
-        return share * (np.minimum(unit, size) if positive else unit) + ROUNDING * size
+        return share * (np.minimum(unit, size) if positive else unit) + ROUNDING * size + SMALLEST
 
     return allowed
 

@@ -11,7 +11,7 @@ from service.risk.effort import Alone
 from service.risk.frame import Frame
 from service.risk.loss_table import LossTable, SubPortfolio, groups_of
 from service.risk.measures import Measure
-from service.risk.quantiles import Ordered, Ties
+from service.risk.quantiles import Ordered
 
 MEASURE = TypeAdapter(Measure)
 
@@ -78,6 +78,3 @@ def ordered(values, p=None, *, sampled=True):
     p = None if p is None else np.asarray(p, dtype=np.float64)[order][None, :]
     return Ordered.of(values[order][None, :], scenarios=values.size, probabilities=p, sampled=sampled), order
 
-
-def ties(of, tolerance=0.0):
-    return Ties.of(of, tolerance=tolerance)

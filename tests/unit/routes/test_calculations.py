@@ -95,7 +95,7 @@ def test_scenarios_are_counted(client):
 def test_not_acceptable_comes_before_reading(client, accept):
     response = client.post("/v1/measures", content=b"{", headers={**JSON, "accept": accept})
     problem = assert_problem(response, "not_acceptable", header="Accept")
-    assert "application/json or text/csv" in problem["detail"]
+    assert "application/json, text/csv" in problem["detail"]
 
 
 def test_unknown_suffix_is_not_found(client):

@@ -87,7 +87,7 @@ def test_below_and_beyond_add_up(law):
 
 
 def quadrature(law, function, *cuts):
-    """Return E f(X) from panels over the normal score, parted at `cuts` and where the quantile function bends or steps."""
+    """Return E f(X) from panels over the normal score, parted at `cuts` and where the quantile function bends."""
     kinks = [special.ndtri(piece.lower) for piece in law.pieces[:-1]]
     if law.pieces[0].atoms is not None:
         kinks = special.ndtri(law.pieces[0].atoms.lower[:-1]).tolist()
@@ -219,17 +219,18 @@ def test_extreme_parameters_give_finite_values_or_a_reason(family):
     names = [name for name in TypeAdapter(model).json_schema()["properties"] if name != "family"]
     if family == "beta":
         names = ["a", "b"]
-    accepted = 0
+    accepted, reasons = 0, []
     for values in itertools.product(*EXTREME[family]):
         document = {"family": family, **dict(zip(names, values, strict=True))}
         try:
             law = ADAPTER.validate_json(json.dumps(document))
         except ValidationError as refused:
-            assert all(word not in str(refused).lower() for word in ("nan", "traceback")), document
+            reasons.append(str(refused).lower())
             continue
         accepted += 1
         assert_sound(law, document)
     assert accepted
+    assert not any("nan" in reason for reason in reasons)
 
 
 def assert_sound(law, document):
