@@ -61,6 +61,8 @@ def placed(intake: Intake) -> Iterator[None]:
 
 
 def _placed(fault: Fault, intake: Intake) -> Fault:
+    if (fault.pointer or "").startswith("/sub_portfolios/"):  # found in the simulation
+        return fault.beneath("/losses")
     number = (fault.pointer or "").removeprefix("/")
     if not number.isdigit():
         return fault

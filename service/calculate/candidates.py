@@ -79,9 +79,31 @@ class Reader:
         made = [one for one in read if one.error is None and one.loss is None and one.candidate is not None]
         if not made:
             return read
+        try:
+            done = dict(zip([one.number for one in made], self._together(made), strict=True))
+        except TooLong:
+            raise
+        except CallerError:  # of one of them
+            done = {one.number: self._apart(one) for one in made}
+        return [done.get(one.number, one) for one in read]
+
+    def _together(self, made: Sequence[Read]) -> list[Read]:
+        """Return candidates made of components, with their losses."""
         terms = [_terms(one.candidate) for one in made if one.candidate is not None]
-        losses = dict(zip([one.number for one in made], self._losses(terms).T, strict=True))
-        return [replace(one, loss=losses[one.number]) if one.number in losses else one for one in read]
+        losses = np.ascontiguousarray(self._losses(terms).T)
+        for loss in losses:
+            check_magnitude(self.frame.totals + loss)
+        return [replace(one, loss=loss) for one, loss in zip(made, losses, strict=True)]
+
+    def _apart(self, one: Read) -> Read:
+        """Return a candidate made of components, with its loss or the reason why it has none."""
+        try:
+            with pointing(f"/candidates/{one.number}"), _here():
+                return self._together([one])[0]
+        except TooLong:
+            raise
+        except CallerError as error:
+            return replace(one, error=error)
 
     def _one(self, number: int) -> Read:
         document = self.documents[number]

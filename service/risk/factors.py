@@ -1,6 +1,6 @@
 """FactorModel: marginals, copula, components and covers together give the losses of one block of scenarios."""
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -10,7 +10,7 @@ from numpy.random import Generator
 from service.errors import Fault, InvalidValue, pointing
 from service.risk.components.claims import CompoundComponent
 from service.risk.components.contract import Array, FactorSet, Indices
-from service.risk.components.portfolio import BlockScratch, FactorRows, Portfolio, SubPortfolioTerms
+from service.risk.components.portfolio import BlockScratch, FactorRows, Portfolio, SubPortfolioTerms, go_on
 from service.risk.copulas import CopulaFamily, Sampler
 from service.risk.covers import Tails
 from service.risk.marginals import MarginalLaw
@@ -133,6 +133,7 @@ class FactorModel:
         scenarios: int = BLOCK,
         scratch: ModelScratch | None = None,
         out: Array | None = None,
+        pause: Callable[[], None] = go_on,
     ) -> Array:
         """Return the losses of a block, shape (n, d), C order, in currency.
 
@@ -149,6 +150,8 @@ class FactorModel:
             Of the thread; without one all arrays are fresh.
         out : ndarray of shape (n, d), optional
             Written into and returned.
+        pause : callable
+            Called between pieces of long draws; may raise to stop them.
 
         Notes
         -----
@@ -163,7 +166,7 @@ class FactorModel:
         def streams(owner: str) -> Generator:
             return stream(seed, owner, number)
 
-        return self.portfolio.losses(self._rows(draw, scratch), streams, scratch=scratch, out=out)
+        return self.portfolio.losses(self._rows(draw, scratch), streams, scratch=scratch, out=out, pause=pause)
 
     def random_draw(
         self, number: int, seed: int, scenarios: int = BLOCK, scratch: ModelScratch | None = None

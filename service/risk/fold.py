@@ -6,6 +6,7 @@ result is the same bytes for any number of threads.
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import chain
 from typing import Protocol
 
 import numpy as np
@@ -18,6 +19,7 @@ BLOCK_BYTES = 1 << 19  # of one block of rows: half of a usual second-level cach
 SAMPLE = 4096  # rows whose quantile foretells the threshold of a column's tail
 SAMPLE_SPREADS = 4.0  # binomial standard deviations of slack on that threshold
 LEAST_ROWS = 16  # of a block
+BATCH = 1 << 16  # losses that are brought into the order of their columns at a time: they stay in the cache
 
 
 @dataclass(frozen=True, slots=True)
@@ -44,9 +46,16 @@ class Fold:
 
 @dataclass(frozen=True, slots=True)
 class Survivors:
-    """Losses above their column's threshold, from one worker's blocks."""
+    """Losses above their column's threshold, from some blocks.
 
-    columns: Indices
+    Attributes
+    ----------
+    starts : list of int, length d + 1
+        Where the losses of each column begin, and where those of the last one end.
+    losses : ndarray of shape (k,)
+    """
+
+    starts: list[int]
     losses: Array
 
 
@@ -82,7 +91,7 @@ def fold(
     crossed = np.empty((len(edges), count)) if products else None
     workers = min(effort.threads, len(edges))
 
-    def work(worker: int) -> Survivors | None:
+    def work(worker: int) -> list[Survivors]:
         sieve = None if thresholds is None else Sieve(thresholds, rows)
         for number in range(worker, len(edges), workers):
             effort.checkpoint(number / len(edges))
@@ -97,12 +106,12 @@ def fold(
                 np.matmul(total, block, out=crossed[number])
             if sieve is not None:
                 sieve.add(block)
-        return None if sieve is None else sieve.survivors()
+        return [] if sieve is None else sieve.survivors()
 
     parts = effort.map(work, range(workers))
     tails = None
     if tail is not None and thresholds is not None:
-        survivors = [part for part in parts if part is not None]
+        survivors = list(chain.from_iterable(parts))
         tails = completed_tails(thresholds, survivors, tail, effort, HeldColumns(losses))
     return Fold(totals, sums.sum(axis=0), None if crossed is None else crossed.sum(axis=0), tails)
 
@@ -157,11 +166,14 @@ class Sieve:
 
     def __init__(self, thresholds: Array, rows: int) -> None:
         self._wall = np.tile(thresholds, (rows, 1))
-        self._column = np.tile(np.arange(thresholds.size, dtype=np.uint16), rows)
+        numbers = np.arange(thresholds.size, dtype=np.min_scalar_type(thresholds.size))  # small ones are faster
+        self._column = np.tile(numbers, rows)
         self._above = np.empty(self._wall.shape, dtype=bool)
         self._columns: list[NDArray[np.uint16]] = []
         self._losses: list[Array] = []
+        self._waiting = 0
         self._count = thresholds.size
+        self._survivors: list[Survivors] = []
 
     def add(self, block: Array) -> None:
         """Take what exceeds the thresholds."""
@@ -170,13 +182,25 @@ class Sieve:
         found = np.flatnonzero(self._above[:rows])
         self._columns.append(self._column.take(found))
         self._losses.append(block.reshape(-1).take(found))
+        self._waiting += found.size
+        if self._waiting >= BATCH:
+            self._arrange()
 
-    def survivors(self) -> Survivors:
-        """Return them column by column."""
+    def survivors(self) -> list[Survivors]:
+        """Return them, in batches."""
+        if self._waiting or not self._survivors:
+            self._arrange()
+        return self._survivors
+
+    def _arrange(self) -> None:
+        """Bring what waits into the order of its columns."""
         columns = np.concatenate(self._columns)
         order = np.argsort(columns, kind="stable")
-        starts = np.concatenate([[0], np.cumsum(np.bincount(columns, minlength=self._count))])
-        return Survivors(starts, np.concatenate(self._losses).take(order))
+        starts = np.cumsum(np.bincount(columns, minlength=self._count)).tolist()
+        self._survivors.append(Survivors([0, *starts], np.concatenate(self._losses).take(order)))
+        self._columns.clear()
+        self._losses.clear()
+        self._waiting = 0
 
 
 def completed_tails(
@@ -188,7 +212,7 @@ def completed_tails(
     itself is common enough it is what is missing (columns that are mostly zero), else the column is partitioned.
     """
     count = thresholds.size
-    sizes = np.sum([np.diff(part.columns) for part in parts], axis=0)
+    sizes = np.sum([np.diff(part.starts) for part in parts], axis=0)
     short = np.flatnonzero(sizes < tail)
     common = dict(zip(short.tolist(), columns.equal(short, thresholds[short]) if short.size else (), strict=True))
     partitioned = {
@@ -201,7 +225,7 @@ def completed_tails(
         for j in piece.tolist():
             found = partitioned.get(j)
             if found is None:
-                found = np.concatenate([part.losses[part.columns[j] : part.columns[j + 1]] for part in parts])
+                found = np.concatenate([part.losses[part.starts[j] : part.starts[j + 1]] for part in parts])
             if found.size < tail:
                 found = np.concatenate([found, np.full(tail - found.size, thresholds[j])])
             found.sort()

@@ -96,8 +96,10 @@ def ranked(totals: Array, table: Scenarios, *, depth: float) -> Ranking:
     """
     order = worst(totals, depth if table.plain else 1.0)
     while True:
-        rows = table.losses if order.size == totals.size else table.losses.take(order, axis=0)
-        tolerance = tie_tolerance(rows)
+        if order.size == totals.size:
+            tolerance = tie_tolerance(table.losses)[order]
+        else:
+            tolerance = tie_tolerance(table.losses.take(order, axis=0))
         edge = totals[order[-1]] - tolerance.max()
         if order.size == totals.size or np.count_nonzero(totals >= edge) == order.size:
             return ranking_of(totals[order], order, table, tolerance)

@@ -1,11 +1,13 @@
 """Simulation of a factor model: blocks that anybody may compute in any order, put together in theirs."""
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from math import ceil, log2
 from threading import local
 
 import numpy as np
 
+from service.risk.components.portfolio import go_on
 from service.risk.effort import Effort
 from service.risk.factors import FACTORS, FactorDraws, FactorModel, ModelScratch
 from service.risk.quantiles import Array, Indices
@@ -78,12 +80,14 @@ class Plan:
         start = number * self.block_size
         return slice(start, min(start + self.block_size, self.scenarios))
 
-    def losses(self, number: int, scratch: ModelScratch, out: Array | None = None) -> Array:
-        """Return the losses of a block, shape (scenarios of the block, d)."""
+    def losses(
+        self, number: int, scratch: ModelScratch, *, out: Array | None = None, pause: Callable[[], None] = go_on
+    ) -> Array:
+        """Return the losses of a block, shape (scenarios of the block, d); `pause` as for the model."""
         part = self.part(number)
         draw = self._draw(number, scratch) if self.sobol else None
         size = part.stop - part.start
-        return self.model.block(number, self.seed, draw=draw, scenarios=size, scratch=scratch, out=out)
+        return self.model.block(number, self.seed, draw=draw, scenarios=size, scratch=scratch, out=out, pause=pause)
 
     def _draw(self, number: int, scratch: ModelScratch) -> Draw:
         scrambling, block = divmod(number, self.sobol[0].blocks)
@@ -146,7 +150,7 @@ def simulated(plan: Plan, effort: Effort, *, before: Array | None = None) -> Arr
 
     def work(number: int) -> None:
         effort.checkpoint((number - first) / (plan.blocks - first))
-        plan.losses(number, bench.scratch, out=losses[plan.part(number)])
+        plan.losses(number, bench.scratch, out=losses[plan.part(number)], pause=effort.checkpoint)
 
     effort.map(work, range(first, plan.blocks))
     losses += 0.0  # no negative zero

@@ -62,7 +62,7 @@ class StreamedLosses:
 
         def work(block: int) -> None:
             self.effort.checkpoint()
-            losses = self.plan.losses(block, bench.scratch)
+            losses = self.plan.losses(block, bench.scratch, pause=self.effort.checkpoint)
             inside = np.flatnonzero(blocks == block)
             out[inside] = losses[numbers[inside] - self.plan.part(block).start] + 0.0
 
@@ -132,7 +132,7 @@ def streamed(
     depth = deepest(measures, scenarios, contributions=True)
     tail = column_tail(measures, scenarios) if stand_alone else None
     bench = Workbench()
-    first = _extended(plan.losses(0, bench.scratch), groups)
+    first = _extended(plan.losses(0, bench.scratch, pause=effort.checkpoint), groups)
     least = sample_thresholds(first[:, : plan.columns].sum(axis=1)[:, None], int(depth * scenarios) + 1, scenarios)[0]
     thresholds = None if tail is None else sample_thresholds(first, tail, scenarios)
     totals = np.empty(scenarios)
@@ -144,7 +144,7 @@ def streamed(
         for number in range(worker, plan.blocks, workers):
             effort.checkpoint(number / plan.blocks)
             part = plan.part(number)
-            block = _extended(plan.losses(number, bench.scratch), groups)
+            block = _extended(plan.losses(number, bench.scratch, pause=effort.checkpoint), groups)
             total = np.add.reduce(block[:, : plan.columns], axis=1, out=totals[part])
             np.add.reduce(block, axis=0, out=sums[number])
             chosen = np.flatnonzero(total > least)
@@ -165,8 +165,8 @@ def streamed(
     table = StreamedTable(losses, sub_portfolios)
     tails = None
     if tail is not None and thresholds is not None:
-        sieves = [part.sieve.survivors() for part in parts if part.sieve is not None]
-        tails = completed_tails(thresholds, sieves, tail, effort, _Again(plan, groups, effort))
+        found = [one for part in parts if part.sieve is not None for one in part.sieve.survivors()]
+        tails = completed_tails(thresholds, found, tail, effort, _Again(plan, groups, effort))
     ranking = ranked(totals, table, depth=depth)
     frame = Frame(table, groups, effort, None, totals, sums.sum(axis=0) / scenarios, tails, ranking)
     frame.hold(_extended(table.losses.take(ranking.order), groups))
@@ -206,6 +206,7 @@ class _Again:
 
         def work(number: int) -> Any:
             self.effort.checkpoint()
-            return function(_extended(self.plan.losses(number, bench.scratch), self.groups))
+            losses = self.plan.losses(number, bench.scratch, pause=self.effort.checkpoint)
+            return function(_extended(losses, self.groups))
 
         return self.effort.map(work, range(self.plan.blocks))

@@ -248,6 +248,7 @@ class _Drawn:
         claims = int(ends[-1]) if ends.size else 0
         held, scratch = np.empty(min(PIECE, claims)), Scratch()
         for start in range(0, claims, PIECE):
+            block.pause()
             piece = held[: min(PIECE, claims - start)]
             generator.standard_normal(out=piece)
             self.table.values(piece, out=piece, scratch=scratch)

@@ -123,6 +123,10 @@ class Block(Protocol):
         """The stream of this component in this block; the same object each time."""
         ...
 
+    def pause(self) -> None:
+        """Called between pieces of a long draw; may raise to stop it."""
+        ...
+
 
 class PreparedComponent(Protocol):
     """A component bound to its factors."""

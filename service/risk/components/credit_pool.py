@@ -320,4 +320,5 @@ class _Pool:
     def losses(self, block: Block, out: Array) -> None:
         out.fill(0.0)
         for bucket in self.buckets:
+            block.pause()
             bucket.add(block.normal_scores(bucket.columns), block.generator, out)

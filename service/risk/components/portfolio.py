@@ -75,6 +75,10 @@ def together(parts: Sequence[tuple[frozenset[str], Tails]], factors: FactorSet) 
     return total
 
 
+def go_on() -> None:
+    """Let a draw go on."""
+
+
 class BlockScratch:
     """Arrays of one thread that each block fills anew."""
 
@@ -132,11 +136,14 @@ def taken(rows: Array, places: Indices) -> Array:
 class _OwnBlock:
     """A block as one component sees it: the factors, and its own stream when it asks for it."""
 
-    __slots__ = ("_factors", "_generator", "_owner", "_streams")
+    __slots__ = ("_factors", "_generator", "_owner", "_streams", "pause")
 
-    def __init__(self, factors: FactorRows, streams: Callable[[str], Generator], owner: str) -> None:
+    def __init__(
+        self, factors: FactorRows, streams: Callable[[str], Generator], owner: str, pause: Callable[[], None]
+    ) -> None:
         self._factors = factors
         self._streams = streams
+        self.pause = pause
         self._owner = owner
         self._generator: Generator | None = None
 
@@ -236,6 +243,7 @@ class Portfolio:
         *,
         scratch: BlockScratch,
         out: Array,
+        pause: Callable[[], None] = go_on,
     ) -> Array:
         """Return the losses (n, d) of a block, written into `out` in C order.
 
@@ -247,6 +255,8 @@ class Portfolio:
         scratch : BlockScratch
             Of the thread.
         out : ndarray of shape (n, d)
+        pause : callable
+            Called between pieces of long draws; may raise to stop them.
         """
         covers = any(terms.cover for terms in self.sub_portfolios)
         if not self.added and not covers and not self._sparse:
@@ -258,7 +268,7 @@ class Portfolio:
         component = scratch.empty("component", 1, rows.scenarios)[0]
         for one in self.added:
             with pointing(one.pointer):
-                one.prepared.losses(_OwnBlock(rows, streams, one.owner), component)
+                one.prepared.losses(_OwnBlock(rows, streams, one.owner, pause), component)
             if one.factor < 0.0:
                 np.subtract(work[one.row], component, out=work[one.row])
             else:

@@ -8,7 +8,7 @@ import numpy as np
 from pydantic import Field
 from pydantic.dataclasses import dataclass
 
-from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, refusal
+from service.risk.marginals.contract import LARGEST, STRICT, Amount, MarginalLaw, refusal
 from service.risk.marginals.moments import Array
 from service.risk.quantiles import compensated_cumsum
 from service.risk.score_tables import Atoms, Piece
@@ -62,10 +62,10 @@ class DiscreteMarginal(MarginalLaw):
 
     def _limited_mean(self, limit: float) -> float:
         atoms = self.atoms
-        return math.fsum(atoms.masses * np.minimum(atoms.values, limit))
+        return float(np.sum(atoms.masses * np.minimum(atoms.values, limit)))
 
     def layer_mean(self, start: float, stop: float) -> float:
-        return math.fsum(self.atoms.masses * np.clip(self.atoms.values - start, 0.0, stop - start))
+        return float(np.sum(self.atoms.masses * np.clip(self.atoms.values - start, 0.0, stop - start)))
 
     @property
     def pieces(self) -> tuple[Piece, ...]:
@@ -78,12 +78,14 @@ class EmpiricalMarginal(DiscreteMarginal):
 
     family: Literal["empirical"]
     """Tag of this law."""
-    values: Annotated[list[Amount], Field(min_length=1, max_length=MOST_VALUES)]
+    values: Annotated[list[float], Field(min_length=1, max_length=MOST_VALUES)]
     """The values, in any order, in the unit of the factor."""
     probabilities: Annotated[list[Annotated[float, Field(ge=0.0)]], Field(max_length=MOST_VALUES)] | None = None
     """Probability of each value, without unit, summing to 1 within 1e-9; equal if absent."""
 
     def _check(self) -> None:
+        if max(map(abs, self.values)) > LARGEST:
+            raise refusal("values are at most {most} in size", most=LARGEST)
         if self.probabilities is None:
             return
         if len(self.probabilities) != len(self.values):

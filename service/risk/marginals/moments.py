@@ -119,7 +119,7 @@ def _logarithms(tails: Array) -> tuple[float, float]:
 
 
 def _sums(masses: Array, amounts: Array) -> tuple[float, float]:
-    return math.fsum(masses * amounts), math.fsum(masses * amounts * amounts)
+    return float(np.sum(masses * amounts)), float(np.sum(masses * amounts * amounts))
 
 
 def _both_sides(

@@ -14,7 +14,8 @@ from service.risk.scores import Law, NormalScores, StudentScores
 
 Exact = Callable[[Array], Array]
 
-CACHED = 256  # tables kept; each takes at most 200 kB unless it is of a large empirical law
+CACHED = 256  # tables kept; each takes at most 200 kB ...
+MOST_CACHED_ATOMS = 4096  # ... because large empirical laws, quickly made, are not kept
 CHUNK = 8192  # scores at a time, so that the scratch stays in the cache
 TOLERANCE = 1e-10  # see `ScoreTable.of`
 FIRST_SHARE, SECOND_SHARE = 0.3, 0.5  # of the tolerance, in the two stages in which a table is made
@@ -60,7 +61,8 @@ class ScoreTable:
         The error of a value is at most 1e-10 times its distance from the median plus the width of the
         middle half of the law, and at most 1e-10 times the value where values are positive throughout.
         """
-        return _made(marginal, law)
+        atoms = sum(piece.atoms.values.size for piece in marginal.pieces if piece.atoms is not None)
+        return _cached(marginal, law) if atoms <= MOST_CACHED_ATOMS else _made(marginal, law)
 
     def values(self, scores: Array, *, out: Array | None = None, scratch: Scratch | None = None) -> Array:
         """Return the values at scores, which must be finite.
@@ -272,6 +274,10 @@ class _PieceTable(ScoreTable):
 
 
 @lru_cache(maxsize=CACHED)
+def _cached(marginal: Tabulated, law: Law) -> ScoreTable:
+    return _made(marginal, law)
+
+
 def _made(marginal: Tabulated, law: Law) -> ScoreTable:
     affine = marginal.affine
     if affine is not None and affine.law == law:

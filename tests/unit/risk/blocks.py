@@ -25,6 +25,9 @@ class GivenBlock:
 
     normal_scores = values
 
+    def pause(self):
+        """Go on."""
+
     def uniform(self, column):
         return special.ndtr(self.factors[column])
 

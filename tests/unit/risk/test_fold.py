@@ -21,7 +21,7 @@ COLUMNS = {
     "descending": lambda rng, n: -np.arange(n) * 1.0,
     "large only where not sampled": lambda rng, n: np.where(np.arange(n) % 2 == 1, 1e6 + np.arange(n), 0.0),
     "two values": lambda rng, n: np.where(np.arange(n) < n // 50, 7.0, -7.0),
-    "one huge": lambda rng, n: np.where(np.arange(n) == n // 3, 1e300, rng.random(n)),
+    "one huge": lambda rng, n: np.where(np.arange(n) == n // 3, 1e100, rng.random(n)),
 }
 
 

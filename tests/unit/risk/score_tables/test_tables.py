@@ -226,14 +226,21 @@ def test_equal_laws_share_a_table_and_old_ones_go():
     assert table(1.0) is not table(2.0)
     assert steps(50, equal=True) is not steps(50, equal=True)
     assert ScoreTable.of(steps(50, equal=True), NormalScores()) is ScoreTable.of(steps(50, equal=True), NormalScores())
-    assert inner._made.cache_info().maxsize == inner.CACHED
+    assert inner._cached.cache_info().maxsize == inner.CACHED
+
+
+def test_large_empirical_laws_are_not_kept():
+    before = inner._cached.cache_info().currsize
+    large = steps(inner.MOST_CACHED_ATOMS + 1, equal=True)
+    assert ScoreTable.of(large, NormalScores()) is not ScoreTable.of(large, NormalScores())
+    assert inner._cached.cache_info().currsize == before
 
 
 def test_the_same_bytes_whenever_and_wherever_it_is_made():
     marginal = m.InverseGaussianMarginal(family="inverse_gaussian", mean=7.0, shape=3.0)
     scores = np.random.Generator(np.random.PCG64(5)).standard_normal(50_000)
     first = ScoreTable.of(marginal, NormalScores()).values(scores)
-    inner._made.cache_clear()
+    inner._cached.cache_clear()
     with ThreadPoolExecutor(4) as pool:
         again = list(pool.map(lambda _: ScoreTable.of(marginal, NormalScores()).values(scores), range(4)))
     assert all(first.tobytes() == other.tobytes() for other in again)
