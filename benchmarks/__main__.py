@@ -18,6 +18,7 @@ from threadpoolctl import threadpool_limits
 
 from benchmarks import core, coverage, decoding, transport
 from benchmarks.rows import Outcome, Pace, Row
+from service.executors import keep_freed_memory
 
 ROWS = (*core.ROWS, *transport.ROWS, *decoding.ROWS, *coverage.ROWS)
 
@@ -28,6 +29,7 @@ QUICK = Pace(repeats=3, runs=250, seconds=0.25)
 def main() -> int:
     """Run the rows asked for; the exit code tells whether all of them ran, not how they came out."""
     options = _options()
+    keep_freed_memory()
     rows = sorted(
         (row for row in ROWS if options.only is None or row.number in options.only),
         key=lambda row: int(row.number.removeprefix("P")),

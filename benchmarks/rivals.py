@@ -7,7 +7,7 @@ import orjson
 from fastapi import FastAPI, Request
 from pydantic import BaseModel
 
-from service import calculate
+from service import calculate, problems
 from service.executors import Work
 from service.intake import REQUESTS, Intake
 from service.schemas.results import AllocationsAnswer
@@ -56,4 +56,4 @@ def allocations(asked: Asked) -> AllocationsAnswer:
     document["losses"]["values"] = []
     request = REQUESTS["allocations"].validate_json(orjson.dumps(document))
     taken = Intake("allocations", request, values)
-    return calculate.answer(taken, Work(SETTINGS.threads), SETTINGS)
+    return calculate.answer(taken, Work(SETTINGS.threads), SETTINGS, problems.describe)

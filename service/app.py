@@ -17,7 +17,6 @@ from service.middleware import Envelope
 from service.routes import books, calculations, operations
 from service.settings import Settings
 
-
 ASKED_HEADERS = (
     "Authorization",
     "Content-Digest",

@@ -150,7 +150,7 @@ class Books:
         found: set[str] = set()
         for folder in self._folders:
             try:
-                files = os.listdir(folder)
+                files = [file.name for file in folder.iterdir()]
             except OSError:
                 continue
             names = (file.removesuffix(SUFFIX) for file in files if file.endswith(SUFFIX))
@@ -373,7 +373,7 @@ def _content(folder: Path, file: str, files: dict[str, Stamp]) -> bytes:
     """
     try:
         real = os.path.realpath(folder / file)
-        files[file] = _stamp(os.stat(real))
+        files[file] = _stamp(Path(real).stat())
         if not Path(real).is_relative_to(os.path.realpath(folder)):
             raise Unreadable(f"{file} is a link that leads out of the folder of books")
         descriptor = os.open(real, FLAGS)
@@ -403,7 +403,7 @@ def _stamps(folder: Path, files: Mapping[str, Stamp]) -> dict[str, Stamp]:
     found = {}
     for file in files:
         try:
-            found[file] = _stamp(os.stat(folder / file))
+            found[file] = _stamp((folder / file).stat())
         except OSError:
             found[file] = NOTHING
     return found

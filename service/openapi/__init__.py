@@ -13,7 +13,7 @@ from pydantic.dataclasses import is_pydantic_dataclass
 from typing_extensions import TypeAliasType
 
 from service import __version__
-from service.openapi import calculations
+from service.openapi import books, calculations
 from service.openapi.calculations import CALCULATIONS
 from service.openapi.examples import read_examples
 from service.openapi.parts import COMPONENT_HEADERS, COMPONENTS, SCHEMAS, Json, reference, refusal, service_paths
@@ -37,6 +37,10 @@ TAGS = [
     {
         "name": "calculations",
         "description": "Pure functions of their request: nothing is kept on the server.",
+    },
+    {
+        "name": "books",
+        "description": "Losses that the server keeps under a name, for spreadsheets, pages and programs that GET.",
     },
     {
         "name": "service",
@@ -65,7 +69,7 @@ def build(examples: Path = EXAMPLES) -> Json:
         "info": INFO,
         "servers": [{"url": "/", "description": "This server"}],
         "tags": TAGS,
-        "paths": {**computing, **service_paths()},
+        "paths": {**computing, **books.operations(schemas), **service_paths()},
         "components": {
             "schemas": dict(sorted(schemas.items())),
             "responses": {f"Problem{status}": refusal(status) for status in sorted(statuses)},
@@ -92,7 +96,8 @@ def _schemas() -> Json:
         for name, calculation in CALCULATIONS.items()
         for kind, mode in MODES.items()
     ]
-    adapters += [(part.__name__, "validation", TypeAdapter(part)) for part in calculations.PARTS]
+    adapters += [(part.__name__, "validation", TypeAdapter(part)) for part in (*calculations.PARTS, *books.PARTS)]
+    adapters += [(answer.__name__, "serialization", TypeAdapter(answer)) for answer in books.OWN_ANSWERS]
     _, found = TypeAdapter.json_schemas(adapters, ref_template=COMPONENTS + "{model}")
     schemas = {name: _tidy(schema) for name, schema in found["$defs"].items()} | SCHEMAS
     for model in _models(*(calculation["request"] for calculation in CALCULATIONS.values())):

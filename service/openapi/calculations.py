@@ -7,7 +7,8 @@ from service import query
 from service.openapi.examples import JSON, MULTIPART, Examples, Shown
 from service.openapi.parts import BOM, COMPONENTS, HEADERS, REFRESH, REQUEST_ID, Json, parameter, reference, refusals
 from service.payloads import CSV, TABLE_READERS
-from service.representations.formats import FORMATS
+from service.representations.charts import CHARTS
+from service.representations.formats import FORMS as FORMS_OF
 from service.schemas.requests import (
     AllocationsRequest,
     Candidate,
@@ -68,18 +69,33 @@ TABLES = (
     "with a JSON or multipart body those parameters are refused."
 )
 FORMS = (
-    "\n\nThe answer is JSON or CSV by `Accept`; where a client cannot set headers the path may end in `.json` or "
-    "`.csv`. Where `text/event-stream` alone has the highest weight, the answer is a stream of events: `progress` "
-    "(once at the start, then at most five a second), and at the end exactly one `result`, whose data are the JSON "
+    "\n\nThe form of the answer goes by `Accept`; where a client cannot set headers the path may end in the suffix of "
+    "the form, such as `.csv`. Where `text/event-stream` alone has the highest weight, the answer is a stream of "
+    "events: `progress` (once at the start, then at most five a second), and at the end exactly one `result`, whose data are the JSON "
     "answer, or one `problem`. A stream with neither has failed. The stream begins with the first piece of work, or "
     "after ten seconds of waiting: what is refused before has its ordinary status, what fails later is a `problem`. "
     "Every ten seconds without an event a comment line shows that the connection lives. A caller who leaves stops "
     "the work.\n\nThe same request gives the same bytes at any time, so it is safe to repeat. Time spent, in "
     "milliseconds, is in the header `Server-Timing`."
 )
-REFUSALS = (400, 406, 413, 415, 422, 500, 503)
+REFUSALS = (400, 404, 406, 413, 415, 422, 500, 503)
 MORE_REFUSALS: Mapping[str, tuple[int, ...]] = {"increments": (409,)}
 EVENTS = "text/event-stream"
+WORDS_OF_FORMS: Mapping[str, str] = {
+    "csv": "RFC 4180 with a header line: texts quoted, numbers bare.",
+    "xml": "For one measure (and rule): a `row` for each row of the CSV, its cells as attributes; at most 32767 "
+    "characters.",
+    "arrow": "Arrow IPC stream of the columns of the CSV.",
+    "svg": "A picture with real text; `chart` says which.",
+    "png": "The same picture as PNG.",
+    "txt": "One number.",
+    "html": "A page that fetches nothing.",
+}
+CHART = parameter(
+    "chart",
+    "For a picture: which; contributions of one measure and rule, else the distribution, if absent.",
+    {"type": "string", "enum": list(CHARTS)},
+)
 
 
 def operation(name: str, schemas: Json, examples: Examples) -> Json:
@@ -100,7 +116,7 @@ def operation(name: str, schemas: Json, examples: Examples) -> Json:
         "tags": ["calculations"],
         "summary": said["summary"],
         "description": said["description"] + (TABLES if tables else "") + FORMS,
-        "parameters": [*(_table_parameters(name, schemas) if tables else ()), BOM, REFRESH, *HEADERS],
+        "parameters": [*((*_table_parameters(name, schemas), CHART) if tables else ()), BOM, REFRESH, *HEADERS],
         "requestBody": {
             "description": "The request, or the table alone with its options as query parameters."
             if tables
@@ -118,7 +134,7 @@ def operation(name: str, schemas: Json, examples: Examples) -> Json:
                         "schema": {"type": "string"},
                     },
                 },
-                "content": dict(_answered(reference(said["answer"].__name__), examples.answers)),
+                "content": dict(_answered(name, reference(said["answer"].__name__), examples.answers)),
             },
             **refusals(*REFUSALS, *MORE_REFUSALS.get(name, ())),
         },
@@ -135,11 +151,12 @@ def _asked(name: str, request: Json, examples: Shown) -> Iterator[tuple[str, Jso
         yield media_type, content | _shown(examples, media_type)
 
 
-def _answered(answer: Json, examples: Shown) -> Iterator[tuple[str, Json]]:
+def _answered(name: str, answer: Json, examples: Shown) -> Iterator[tuple[str, Json]]:
     """Yield the media types of an answer."""
-    for form in FORMATS.values():
-        table = {"type": "string", "description": "RFC 4180 with a header line."}
-        schema = answer if form.media_type == JSON else table
+    for form in FORMS_OF[name]:
+        schema = answer if form.suffix == "json" else {"type": "string", "description": WORDS_OF_FORMS[form.suffix]}
+        if form.suffix in ("arrow", "png"):
+            schema = {**schema, "contentMediaType": form.media_type}
         yield form.media_type, {"schema": schema} | _shown(examples, form.media_type)
     events = {"oneOf": [reference("Progress"), answer, reference("Problem")], "description": "Data of one event."}
     words = "Events `progress`, then one `result` or `problem`; the data of each are JSON on one line."

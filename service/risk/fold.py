@@ -169,7 +169,7 @@ class Sieve:
         numbers = np.arange(thresholds.size, dtype=np.min_scalar_type(thresholds.size))  # small ones are faster
         self._column = np.tile(numbers, rows)
         self._above = np.empty(self._wall.shape, dtype=bool)
-        self._columns: list[NDArray[np.uint16]] = []
+        self._columns: list[NDArray[np.unsignedinteger]] = []
         self._losses: list[Array] = []
         self._waiting = 0
         self._count = thresholds.size

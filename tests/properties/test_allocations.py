@@ -10,6 +10,7 @@ from hypothesis import strategies as st
 
 from service.errors import NotDefined
 from service.risk.allocation import RULES
+from service.risk.shapley import shapley_values
 from tests.properties.tables import (
     ADDITIVE,
     COHERENT,
@@ -66,9 +67,7 @@ def test_the_order_of_scenarios_and_columns_does_not_matter(one, table, random, 
     rows, columns = (np.array(random.sample(range(count), count)) for count in (n, d))
     turned, weights = losses[rows][:, columns], None if p is None else p[rows]
     for rule in RULES:
-        found, other = (
-            given_by(rule, one, x, w, smoothing=smoothing) for x, w in ((losses, p), (turned, weights))
-        )
+        found, other = (given_by(rule, one, x, w, smoothing=smoothing) for x, w in ((losses, p), (turned, weights)))
         if stable(found, losses):
             near = pytest.approx(found.values[columns], rel=1e-9, abs=3e-12 * scale(losses))
             assert other.values == near, rule
@@ -154,7 +153,7 @@ def test_comonotone_losses_contribute_what_they_cost_alone(one, table, seed):
     assert contributions("shapley", one, both, p) == near
 
 
-@pytest.mark.parametrize("one", [one for one in of_kind(*COHERENT, "standard_deviation")], ids=ids)
+@pytest.mark.parametrize("one", of_kind(*COHERENT, "standard_deviation"), ids=ids)
 @bounded
 @given(weighted_tables(VARYING))
 def test_no_part_contributes_more_than_it_costs_alone(one, table):
@@ -220,7 +219,13 @@ def test_entropic_contributions_are_derivatives_along_the_diagonal(table, aversi
     assert found == pytest.approx(expected, abs=1e-9 * scale(losses))
 
 
-MEASURES_OF_GAMES = [var(0.75), es(0.5), measure("wang", shift=1.0), measure("expectile", level=0.9), measure("entropic", aversion=0.3)]
+MEASURES_OF_GAMES = [
+    var(0.75),
+    es(0.5),
+    measure("wang", shift=1.0),
+    measure("expectile", level=0.9),
+    measure("entropic", aversion=0.3),
+]
 
 
 @pytest.mark.parametrize("one", MEASURES_OF_GAMES, ids=ids)
@@ -263,8 +268,6 @@ def test_drawn_orders_come_near_all_orders():
         expected += np.where(inside, joined, -missed) * worth
     found = split("shapley", one, losses)
     assert "sampled_shapley" in found.figures.remarks
-    from service.risk.shapley import shapley_values  # noqa: PLC0415
-
     orders = shapley_values(frame, one, seed=1).orders
     extra = orders.std(axis=0, ddof=1) / math.sqrt(len(orders))
     assert found.figures.values == pytest.approx(orders.mean(axis=0), rel=1e-12)

@@ -43,7 +43,9 @@ def test_a_certain_amount_moves_the_figure_by_itself(one, table, amount):
     moved[:, 0] += amount
     moves = one.kind != "standard_deviation" and one.above == "zero"
     expected = value(one, losses, p) + (amount if moves else 0.0)
-    assert value(one, moved, p) == near(expected, np.abs(losses) + abs(amount), times=getattr(one, "multiple", 1.0) * 2.0)
+    assert value(one, moved, p) == near(
+        expected, np.abs(losses) + abs(amount), times=getattr(one, "multiple", 1.0) * 2.0
+    )
 
 
 @pytest.mark.parametrize("one", homogeneous, ids=ids)
@@ -85,7 +87,11 @@ def test_comonotone_losses_add_up(one, table, seed):
     assert value(one, both, p) == near(parts.sum(), both, times=2.0)
 
 
-subadditive = [*of_kind(*COHERENT), *(one for one in of_kind("expectile") if one.level >= 0.5), *of_kind("standard_deviation")]
+subadditive = [
+    *of_kind(*COHERENT),
+    *(one for one in of_kind("expectile") if one.level >= 0.5),
+    *of_kind("standard_deviation"),
+]
 
 
 @pytest.mark.parametrize("one", subadditive, ids=ids)

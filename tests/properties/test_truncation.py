@@ -68,7 +68,11 @@ def test_the_tail_answers_as_the_whole(monkeypatch, n, one, kind):
         assert of_tail.values == pytest.approx(figures.values, rel=1e-12, abs=1e-12 * size), name
         assert of_tail.remarks == figures.remarks, name
         assert of_tail.tail_scenarios == pytest.approx(figures.tail_scenarios), name
-        if one.kind in QUANTILES and name in ("euler", "unsmoothed") and kind not in ("normal", "lognormal", "negative"):
+        if (
+            one.kind in QUANTILES
+            and name in ("euler", "unsmoothed")
+            and kind not in ("normal", "lognormal", "negative")
+        ):
             # the line through a wide atom at the quantile may reach past the tail that was kept
             continue
         for part in ("standard_errors", "lower", "upper"):

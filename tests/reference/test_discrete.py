@@ -139,7 +139,9 @@ def test_the_quantile_is_numpys_inverted_cdf(seed):
     """Source: numpy, at levels that are no multiples of 1/n, where its binary level cannot be on the wrong side."""
     rng = np.random.default_rng(seed)
     n = int(rng.choice([7, 53, 211, 997, 4999]))  # primes: no level with three decimals is k/n
-    sample = rng.choice([rng.normal(size=n), rng.integers(0, 9, size=n) * 1.0, np.where(rng.random(n) < 0.97, 0.0, 1e6)])
+    sample = rng.choice(
+        [rng.normal(size=n), rng.integers(0, 9, size=n) * 1.0, np.where(rng.random(n) < 0.97, 0.0, 1e6)]
+    )
     levels = np.array([0.001, 0.05, 0.333, 0.5, 0.75, 0.9, 0.95, 0.975, 0.99, 0.995, 0.999])
     expected = np.quantile(sample, levels, method="inverted_cdf")
     assert [value(var(level), sample) for level in levels.tolist()] == expected.tolist()

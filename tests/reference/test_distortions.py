@@ -55,11 +55,17 @@ def _named(row):
         return measure("wang", shift=number)
     if kind == "proportional_hazard":
         return measure(kind, exponent=1.0 / number)
-    return measure("dual_power", exponent=number) if kind == "dual_power" else measure("exponential_distortion", aversion=number)
+    return (
+        measure("dual_power", exponent=number)
+        if kind == "dual_power"
+        else measure("exponential_distortion", aversion=number)
+    )
 
 
 @pytest.mark.parametrize(
-    "row", rows("j_distortion_spectral"), ids=lambda row: f"{row['measure']}-{row['parameter'][:12]}-{row['distribution']}"
+    "row",
+    rows("j_distortion_spectral"),
+    ids=lambda row: f"{row['measure']}-{row['parameter'][:12]}-{row['distribution']}",
 )
 def test_distortion_of_a_law(row):
     """Source: closed forms or quadrature as the file's last column says (mark: own).
@@ -153,7 +159,9 @@ def test_levels_at_which_expectiles_meet_quantiles_and_tail_means(row):
     """Source: our own root finding (mark: own); .99855 for the normal 99 % quantile is also Bellini and
     Di Bernardino's (2017; mark: memory).
     """
-    law = row["distribution"].replace("normal", "normal(0,1)") if row["distribution"] == "normal" else row["distribution"]
+    law = (
+        row["distribution"].replace("normal", "normal(0,1)") if row["distribution"] == "normal" else row["distribution"]
+    )
     for column, target in zip(
         ("tau_expectile_equals_var", "tau_expectile_equals_es"),
         _quantile_and_shortfall(row["distribution"], float(row["level"])),
@@ -249,7 +257,9 @@ def test_entropic_and_its_contributions(reach, p):
         gibbs = [w * mpmath.exp(t * a * (x - top)) for w, x in zip(weights, total, strict=True)]
         return mpmath.fdot(gibbs, column) / mpmath.fsum(gibbs)
 
-    expected = top + mpmath.log(mpmath.fsum(w * mpmath.exp(a * (x - top)) for w, x in zip(weights, total, strict=True))) / a
+    expected = (
+        top + mpmath.log(mpmath.fsum(w * mpmath.exp(a * (x - top)) for w, x in zip(weights, total, strict=True))) / a
+    )
     edges = [0, *(mpmath.mpf(2) ** -k for k in range(max(0, int(np.log2(max(reach, 1.0)))) + 2, -1, -1))]
     column = [mpmath.mpf(float(x)) for x in first]
     part = mpmath.quad(lambda t: mean(t, column), edges)

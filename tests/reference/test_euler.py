@@ -18,7 +18,8 @@ from tests.reference.laws import CELL, gauss, panels, rows, score_nodes, upper_n
 from tests.unit.risk.arithmetic import alone, contributions, es, measure, value, var
 
 CASES = {
-    key: list(found) for key, found in groupby(rows("b_euler_contributions"), lambda r: (r["case"], r["measure"], r["level"]))
+    key: list(found)
+    for key, found in groupby(rows("b_euler_contributions"), lambda r: (r["case"], r["measure"], r["level"]))
 }
 
 
@@ -151,7 +152,9 @@ def test_comonotone():
     for level in _levels(case):
         for one in (var(level), es(level)):
             wanted = alone(one, losses, p, sampled=False).values
-            assert contributions("euler", one, losses, p, sampled=False, smoothing="none") == pytest.approx(wanted, rel=1e-12)
+            assert contributions("euler", one, losses, p, sampled=False, smoothing="none") == pytest.approx(
+                wanted, rel=1e-12
+            )
 
 
 # correlations of risk modules, in the order of the file's columns
@@ -177,7 +180,9 @@ SOLVENCY = {
 }
 
 
-@pytest.mark.parametrize("row", rows("f_solvency2_aggregation"), ids=lambda row: f"{row['matrix'][:13]}-{row['components']}")
+@pytest.mark.parametrize(
+    "row", rows("f_solvency2_aggregation"), ids=lambda row: f"{row['matrix'][:13]}-{row['components']}"
+)
 def test_square_root_aggregation(row):
     """Charges aggregated by the square root of their correlated squares are a standard deviation.
 

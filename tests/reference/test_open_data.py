@@ -213,7 +213,9 @@ def test_european_index_returns(client):
     for number, name in enumerate(names):
         _check_headline(
             f"EuStockMarkets {name} -log returns",
-            lambda kind, level, number=number: 4.0 * found[kind, level]["sub_portfolios"][number]["stand_alone"]["value"],
+            lambda kind, level, number=number: (
+                4.0 * found[kind, level]["sub_portfolios"][number]["stand_alone"]["value"]
+            ),
             4.0 * found["value_at_risk", 0.95]["sub_portfolios"][number]["expected_loss"],
         )
     for level, expected in EUROPE.items():

@@ -2,7 +2,6 @@
 
 import numpy as np
 import pytest
-from scipy import special
 
 from service.risk.quantiles import order_statistic_ranks
 from tests.reference.laws import rows

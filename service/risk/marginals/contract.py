@@ -57,15 +57,18 @@ def _shape(value: float, info: ValidationInfo) -> float:
 
 
 Amount = Annotated[float, AfterValidator(_amount), Field(json_schema_extra={"minimum": -LARGEST, "maximum": LARGEST})]
-"""A number on the scale of the factor."""
+"""A number of either sign, on the scale of the factor or of its logarithm."""
 
 Scale = Annotated[float, AfterValidator(_scale), Field(json_schema_extra={"exclusiveMinimum": 0.0, "maximum": LARGEST})]
-"""A positive number on the scale of the factor."""
+"""A positive number, on the scale of the factor or of its logarithm."""
 
 Shape = Annotated[
     float, AfterValidator(_shape), Field(json_schema_extra={"exclusiveMinimum": 0.0, "maximum": EXTREME_SHAPE})
 ]
 """A positive number without unit."""
+
+SignedShape = Amount
+"""A number of either sign without unit."""
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
@@ -217,5 +220,8 @@ class MarginalLaw:
 
 def refusal(detail: str, **context: str | float) -> PydanticCustomError:
     """Return the refusal of parameters that do not go together; `detail` may name the context in braces."""
-    words = {name: value if isinstance(value, str) else f"{value:.6g}" for name, value in context.items()}
+    words = {
+        name: value if isinstance(value, str) else f"{value:.6g}".replace("inf", "infinity")
+        for name, value in context.items()
+    }
     return PydanticCustomError("not_allowed", detail, words)

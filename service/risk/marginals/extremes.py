@@ -7,7 +7,7 @@ import numpy as np
 from pydantic.dataclasses import dataclass
 from scipy import special
 
-from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, Scale
+from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, Scale, SignedShape
 from service.risk.marginals.moments import Array
 from service.risk.marginals.special_functions import decayed, log_gamma_1p, log_gamma_bend, log_upper
 
@@ -84,7 +84,7 @@ class GeneralizedExtremeValueMarginal(MarginalLaw):
 
     family: Literal["generalized_extreme_value"]
     """Tag of this law."""
-    shape: Amount
+    shape: SignedShape
     """Shape, without unit: above 0 a heavy tail with index 1/shape, 0 the Gumbel law, below 0 an upper end."""
     location: Amount
     """Value with 1/e below, in the unit of the factor."""
@@ -162,7 +162,7 @@ class GeneralizedParetoMarginal(MarginalLaw):
 
     family: Literal["generalized_pareto"]
     """Tag of this law."""
-    shape: Amount
+    shape: SignedShape
     """Shape, without unit: above 0 a heavy tail with index 1/shape, 0 exponential, below 0 an upper end."""
     scale: Scale
     """Scale, above 0, in the unit of the factor."""

@@ -11,7 +11,7 @@ from scipy import special
 from service.risk.marginals.contract import OUT_OF_RANGE, STRICT, MarginalLaw, Scale
 from service.risk.marginals.moments import Array, Flags
 
-NODES, WEIGHTS = special.roots_legendre(20)
+NODES, WEIGHTS = np.polynomial.legendre.leggauss(20)
 ROOT_HALF = math.sqrt(0.5)
 LEAST_RATIO, MOST_RATIO = 1e-8, 1e12  # of shape over mean
 MOST_STEPS = 60  # of Newton's method; the worst laws take some 20

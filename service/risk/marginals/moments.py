@@ -10,14 +10,13 @@ from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import special
 
 from service.risk.score_tables import Piece
 
 Array = NDArray[np.float64]
 Flags = NDArray[np.bool_]
 
-NODES, WEIGHTS = special.roots_legendre(32)
+NODES, WEIGHTS = np.polynomial.legendre.leggauss(32)
 NARROWEST = 2.0**-10  # first panel, in units of ln(probability)
 FARTHEST = 650.0  # ln of the smallest probability looked at; beyond it a heavy tail is a power to rounding
 HALF = math.log(2.0)

@@ -77,4 +77,3 @@ def ordered(values, p=None, *, sampled=True):
     order = np.argsort(-values, kind="stable")
     p = None if p is None else np.asarray(p, dtype=np.float64)[order][None, :]
     return Ordered.of(values[order][None, :], scenarios=values.size, probabilities=p, sampled=sampled), order
-

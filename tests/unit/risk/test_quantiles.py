@@ -82,9 +82,7 @@ def test_quantile_and_tail_mean_by_brute_force(pairs, level):
     losses, weights = zip(*pairs, strict=True)
     mass = sum(weights)
     share = Fraction(str(level))
-    expected = min(
-        x for x, _ in pairs if Fraction(sum(w for y, w in pairs if y <= x), mass) >= share
-    )
+    expected = min(x for x, _ in pairs if Fraction(sum(w for y, w in pairs if y <= x), mass) >= share)
     p = np.array(weights) / mass
     assert value(var(level), losses, p) == expected
     above = sum(Fraction(w, mass) * y for y, w in pairs if y > expected)
@@ -128,7 +126,7 @@ def test_ranks_of_order_statistics_by_exact_binomials(n, level, coverage):
 
 
 def test_ranks_of_order_statistics_of_a_large_sample():
-    from scipy import stats  # noqa: PLC0415, TID251  # the slow half of scipy, for one independent check
+    from scipy import stats  # noqa: TID251  # the slow half of scipy, for one independent check
 
     for n, level in ((10_000, 0.99), (1_000_000, 0.995), (250_000, 0.5)):
         low, high, actual = order_statistic_ranks(n, level, 0.95)

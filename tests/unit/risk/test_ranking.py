@@ -79,7 +79,9 @@ def test_a_huge_loss_does_not_tie_the_others(huge, sign):
 
 
 @pytest.mark.parametrize(
-    "one", [var(0.75), var(0.5), es(0.8), measure("expectile", level=0.99), measure("wang", shift=0.5)], ids=lambda m: m.name
+    "one",
+    [var(0.75), var(0.5), es(0.8), measure("expectile", level=0.99), measure("wang", shift=0.5)],
+    ids=lambda m: m.name,
 )
 def test_errors_of_tied_totals_do_not_see_their_rounding(one):
     """Losses in tenths, as amounts in cents are, with totals of four values: errors as for whole numbers."""

@@ -65,7 +65,7 @@ def test_pages_fetch_nothing_from_outside(client, path):
     assert "default-src 'none'" in page.headers["content-security-policy"]
     addresses = re.findall(r"""(?:src|href)="([^"]*)\"""", page.text)
     assert addresses
-    assert all(address.startswith(("/", "data:")) and not address.startswith("//") for address in addresses)
+    assert all(address.startswith(("/", "#", "data:")) and not address.startswith("//") for address in addresses)
     assert "http" not in page.text.replace("http-equiv", "")
 
 

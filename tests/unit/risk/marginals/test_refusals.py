@@ -65,7 +65,7 @@ REFUSED = [
     ({**SPLICED, "tail_probability": 0.0}, "/tail_probability", "tail_probability is above 0 and below 1, not 0"),
     ({**SPLICED, "body": SPLICED}, "/body/family", "'spliced' is not one of normal"),
     ({**SPLICED, "tail": SPLICED}, "/tail/family", "'spliced' is not one of normal"),
-    ({**SPLICED, "threshold": -1.0}, "", "threshold -1 lies outside the tail, whose values go from 2000 to inf"),
+    ({**SPLICED, "threshold": -1.0}, "", "threshold -1 lies outside the tail, whose values go from 2000 to infinity"),
     ({**SPLICED, "threshold": 1999.0}, "", "threshold 1999 lies outside the tail"),
     (
         {**SPLICED, "body": {"family": "uniform", "lower": 0.0, "upper": 100.0}},

@@ -1,0 +1,219 @@
+"""What one more deal changes: candidates on factors and on history, each judged alone."""
+
+import math
+
+import numpy as np
+import pytest
+from scipy import special
+
+from service.errors import Limit, LossesChanged, TooLong
+from service.executors import Work
+from tests.asking import answered, compound, equal, es, factor_model, law, linear, matrix, step, var
+from tests.unit.risk.blocks import FALSE_ALARM
+
+MEASURES = [es(0.99), var(0.99), {"kind": "standard_deviation"}, {"kind": "wang", "shift": 0.5}, es(0.95, above="mean")]
+BOOK = {"a": linear(x=1.0), "b": [linear(y=2.0), compound(law("poisson", mean=0.5), law("exponential", mean=3.0))]}
+LAWS = {name: law("lognormal", mu=0.0, sigma=0.7) for name in "xyz"}
+COPULA = law("gaussian", correlation=equal(0.4))
+
+
+def model(book=BOOK, **more):
+    return factor_model(LAWS, book, **({"dependence": COPULA, "scenarios": 16_384} | more))
+
+
+DEALS = {
+    "on a known factor": {"components": [linear(x=0.5)]},
+    "on another factor": {"components": [linear(z=1.0)], "cover": [step("layer", attachment=1.0, limit=5.0)]},
+    "with draws": {"components": [compound(law("poisson", mean=0.2), law("exponential", mean=5.0))]},
+    "a hedge": {"components": [linear(x=0.5)], "sign": "profit"},
+}
+
+
+def tried(losses, candidates, measures=MEASURES, *, work=None, **more):
+    request = {"losses": losses, "measures": measures, "candidates": candidates, **more}
+    return answered("increments", request, work=work)
+
+
+def deals(*names):
+    return [{"id": name, **DEALS[name]} for name in names or DEALS]
+
+
+@pytest.mark.parametrize("method", ["random", "sobol"])
+def test_increments_are_the_difference_of_two_requests(method):
+    """To the last bit: the draws of the rest are the same with a candidate and without."""
+    losses = model(method=method, scenarios=8192)
+    answer = tried(losses, deals())
+    without = answered("measures", {"losses": losses, "measures": MEASURES})
+    for one in answer.candidates:
+        enlarged = model(BOOK | {one.id: DEALS[one.id]}, method=method, scenarios=8192)
+        request = {"losses": enlarged, "measures": MEASURES}
+        more = answered("allocations", request)
+        for number, figures in enumerate(one.figures):
+            total = more.allocations[number]
+            base = without.measures[number].total.value
+            assert answer.base[number].total.value == base
+            assert figures.total_with.value == pytest.approx(total.total.value, rel=1e-14)
+            assert figures.increment.value == pytest.approx(total.total.value - base, rel=1e-10, abs=1e-13)
+            assert figures.contribution.value == pytest.approx(total.sub_portfolios[2].contribution.value, rel=1e-11)
+            assert figures.stand_alone.value == pytest.approx(total.sub_portfolios[2].stand_alone.value, rel=1e-12)
+            moved = [row.contribution.value for row in total.sub_portfolios[:2]]
+            assert [part.after for part in figures.moved] == pytest.approx(moved, rel=1e-11)
+
+
+def test_a_quantile_of_scenarios_differs_to_the_last_bit():
+    losses = model()
+    for one in tried(losses, deals(), [var(0.99)]).candidates:
+        enlarged = model(BOOK | {one.id: DEALS[one.id]})
+        both = [answered("measures", {"losses": which, "measures": [var(0.99)]}) for which in (losses, enlarged)]
+        before, after = (answer.measures[0].total.value for answer in both)
+        assert one.figures[0].total_with.value == after
+        assert one.figures[0].increment.value == after - before
+
+
+def test_each_candidate_is_alone():
+    together = tried(model(), deals())
+    for name, one in zip(DEALS, together.candidates, strict=True):
+        assert tried(model(), deals(name)).candidates == [one]
+    threads = tried(model(), deals(), work=Work(3))
+    assert threads.candidates == together.candidates
+
+
+ELLIPTICAL = {
+    "normal": (
+        lambda mean, scale: law("normal", mean=mean, standard_deviation=scale),
+        law("gaussian", correlation=matrix([[1.0, 0.5, 0.2], [0.5, 1.0, -0.1], [0.2, -0.1, 1.0]])),
+        float(special.ndtri(0.99)),
+        2.665214220345806,
+    ),
+    "t4": (
+        lambda mean, scale: law("student_t", df=4.0, location=mean, scale=scale),
+        law("student_t", correlation=matrix([[1.0, 0.5, 0.2], [0.5, 1.0, -0.1], [0.2, -0.1, 1.0]]), df=4.0),
+        float(special.stdtrit(4.0, 0.99)),
+        5.220619,
+    ),
+}
+
+
+@pytest.mark.parametrize("case", ELLIPTICAL)
+def test_closed_forms_of_elliptical_candidates(case):
+    """Means 1, 2, 0.5; scales 1, 2, 3: the scale of a sum is the root of its part of the dispersion matrix."""
+    made, copula, quantile, shortfall = ELLIPTICAL[case]
+    means, scales = np.array([1.0, 2.0, 0.5]), np.array([1.0, 2.0, 3.0])
+    dispersion = np.array(copula["correlation"]["values"]) * np.outer(scales, scales)
+    laws = {name: made(mean, scale) for name, mean, scale in zip("xyz", means.tolist(), scales.tolist(), strict=True)}
+    book = {"x": linear(x=1.0), "y": linear(y=1.0)}
+    losses = factor_model(laws, book, dependence=copula, scenarios=200_000)
+    [one] = tried(losses, [{"id": "z", "components": [linear(z=1.0)]}], [var(0.99), es(0.99)]).candidates
+    with_, without = math.sqrt(dispersion.sum()), math.sqrt(dispersion[:2, :2].sum())
+    for figures, k in zip(one.figures, (quantile, shortfall), strict=True):
+        for figure, truth in (
+            (figures.total_with, means.sum() + k * with_),
+            (figures.increment, means[2] + k * (with_ - without)),
+            (figures.contribution, means[2] + k * dispersion[2].sum() / with_),
+            (figures.stand_alone, means[2] + k * scales[2]),
+        ):
+            assert abs(figure.value - truth) < FALSE_ALARM * figure.standard_error + 1e-6
+
+
+def test_a_scaled_copy_tends_to_the_euler_contribution():
+    losses = model()
+    rows = answered("allocations", {"losses": losses, "measures": [es(0.99)]}).allocations[0].sub_portfolios
+    figures = tried(losses, [{"id": "more", "components": [linear(x=1e-4)]}], [es(0.99)]).candidates[0].figures[0]
+    assert figures.increment.value / 1e-4 == pytest.approx(rows[0].contribution.value, rel=1e-3)
+
+
+CHANGES = np.random.Generator(np.random.Philox(5)).standard_normal((500, 2))
+HISTORY = {
+    "kind": "history",
+    "factors": ["x", "y"],
+    "changes": CHANGES.tolist(),
+    "sub_portfolios": [{"id": "a", "components": [linear(x=1.0)]}],
+}
+
+
+@pytest.mark.parametrize("scaling", [None, {"periods": 4, "method": "overlapping"}])
+def test_candidates_on_observed_changes(scaling):
+    losses = HISTORY | ({"horizon_scaling": scaling} if scaling else {})
+    [one] = tried(losses, [{"id": "b", "components": [linear(y=2.0)]}], [es(0.9)]).candidates
+    both = losses | {"sub_portfolios": [*HISTORY["sub_portfolios"], {"id": "b", "components": [linear(y=2.0)]}]}
+    before, after = (
+        answered("measures", {"losses": which, "measures": [es(0.9)]}).measures[0].total.value
+        for which in (losses, both)
+    )
+    assert one.figures[0].increment.value == pytest.approx(after - before, rel=1e-12)
+
+
+GRID = {"kind": "revaluation_grid", "factor": "x", "points": [0.5, 1.0], "losses": [0.0, 5.0], "beyond": "refuse"}
+HEAVY = law("pareto", shape=0.8, scale=1.0)
+REFUSED = {
+    "unknown factor": ({"components": [linear(w=1.0)]}, "/components/0/exposures/0/factor"),
+    "no mean": ({"components": [{"kind": "idiosyncratic", "marginal": HEAVY}]}, "/components"),
+    "grid": ({"components": [linear(x=1.0), GRID]}, "/components/1/points"),
+    "too large": ({"components": [linear(x=1e151)]}, "/0"),
+    "a": ({"components": [linear(x=1.0)]}, "/id"),
+    "short": ({"values": [1.0, 2.0]}, "/values"),
+    "nothing": ({}, ""),
+    "misfit": ({"components": [linear(x=1.0)], "cover": [step("layer", attachment=1.0, annual_limit=2.0)]}, "/cover/0"),
+}
+
+
+def test_a_bad_candidate_spoils_no_other():
+    good = tried(model(), deals()).candidates
+    bad = [{"id": name, **body} for name, (body, _) in REFUSED.items()]
+    answer = tried(model(), [*bad[:4], *deals(), *bad[4:]])
+    assert [one for one in answer.candidates if one.status == "ok"] == good
+    assert answer.refused == len(bad)
+    refused = [one for one in answer.candidates if one.status == "refused"]
+    numbers = [*range(4), *range(4 + len(good), len(bad) + len(good))]
+    for number, one, (_, pointer) in zip(numbers, refused, REFUSED.values(), strict=True):
+        assert one.figures == []
+        assert one.problem["errors"][0]["pointer"].startswith(
+            f"/candidates/{number}{pointer if pointer != '/0' else ''}"
+        )
+
+
+def test_observed_changes_have_no_draws():
+    compound_deal = {"id": "b", "components": [compound(law("poisson", mean=1.0), law("exponential", mean=1.0))]}
+    answer = tried(HISTORY, [compound_deal, {"id": "c", "components": [linear(y=1.0)]}], [es(0.9)])
+    assert [one.status for one in answer.candidates] == ["refused", "ok"]
+    assert answer.candidates[0].problem["errors"][0]["pointer"].startswith("/candidates/0/components/0")
+
+
+def test_the_base_is_the_one_that_is_meant():
+    losses = model()
+    digest = tried(losses, deals("a hedge")).provenance.losses_digest
+    assert tried(losses, deals("a hedge"), base_digest=digest).refused == 0
+    with pytest.raises(LossesChanged):
+        tried(model(seed=2), deals("a hedge"), base_digest=digest)
+
+
+def test_profit_hurdle_and_limit():
+    deal = {"id": "z", "components": [linear(z=1.0)], "expected_profit": 0.5}
+    base = tried(model(), [deal], [es(0.99)])
+    total = base.candidates[0].figures[0].total_with.value
+    for limit, within in ((total * 1.01, True), (total * 0.99, False)):
+        terms = {"hurdle_rate": 0.1, "cost_of_capital": 0.06, "capital_limit": limit}
+        figures = tried(model(), [deal], [es(0.99)], **terms).candidates[0].figures[0]
+        increment = figures.increment.value
+        assert figures.within_limit is within
+        assert figures.required_profit == pytest.approx(0.06 * increment)
+        assert figures.return_on_capital == pytest.approx(0.5 / increment)
+        assert figures.meets_hurdle is (0.1 * increment <= 0.5)
+
+
+def test_time_that_is_over_refuses_the_whole():
+    asked = 0
+
+    def checkpoint(_fraction=0.0, /):
+        nonlocal asked
+        asked += 1
+        if asked > 60:
+            limit = Limit(name="max_seconds", allowed=1.0, asked=None, setting="TAILRACE_MAX_SECONDS")
+            raise TooLong("over", limit=limit)
+
+    with pytest.raises(TooLong):
+        tried(
+            model(),
+            deals() + [{"id": f"c{n}", "components": [linear(x=1.0)]} for n in range(100)],
+            work=Work(1, checkpoint),
+        )
