@@ -50,15 +50,50 @@ AttributeName = Annotated[Text, AfterValidator(_attribute)]
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
-class SubPortfolioColumn:
-    """One sub-portfolio: a column of the loss table."""
+class LabelledLosses:
+    """What every source of losses may say of itself; a book that does not say it has what its file says."""
 
-    id: Text
-    """Its name, unique in the request."""
-    attributes: dict[AttributeName, Text] = Field(default_factory=dict)
-    """What it belongs to, e.g. {"entity": "north", "line": "hull"}; the answer can be grouped by these."""
-    expected_profit: Number | None = None
-    """Expected profit as a gain (positive is a profit), in currency; never derived from the losses."""
+    currency: Annotated[Text | None, Field(description="Currency of all amounts; a label, nothing is converted.")] = (
+        None
+    )
+    valuation_date: Annotated[Date | None, Field(description="Valuation date, YYYY-MM-DD; a label.")] = None
+    horizon: Annotated[Text | None, Field(description="Horizon of the losses, e.g. `1 year`; a label.")] = None
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class DescribedSubPortfolio:
+    """What a sub-portfolio is called and belongs to, whatever its losses come from."""
+
+    id: Annotated[Text, Field(description="Its name, unique in the request.")]
+    attributes: Annotated[
+        dict[AttributeName, Text],
+        Field(
+            description='What it belongs to, e.g. {"entity": "north", "line": "hull"}; answers can be grouped by it.'
+        ),
+    ] = Field(default_factory=dict)
+    expected_profit: Annotated[
+        Number | None,
+        Field(
+            description="Expected profit as a gain (positive is a profit), in currency; never derived from the losses."
+        ),
+    ] = None
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class BuiltSubPortfolio(DescribedSubPortfolio):
+    """A sub-portfolio made of components, which are added; then the sign is applied, then each cover step."""
+
+    sign: Annotated[Literal["loss", "profit"], Field(description="`profit` negates the sum of the components.")] = (
+        "loss"
+    )
+    cover: Annotated[list[Cover], Field(description="Steps that map the running amount in turn.")] = Field(
+        default_factory=list
+    )
+
+
+@dataclass(frozen=True, kw_only=True, config=STRICT)
+class SubPortfolioColumn(DescribedSubPortfolio):
+    """One sub-portfolio: a column of the loss table."""
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
@@ -89,7 +124,7 @@ Rows = Annotated[
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
-class ScenarioLosses:
+class ScenarioLosses(LabelledLosses):
     """A table of loss scenarios that the caller sends: exactly one of `values`, `packed` and `part`."""
 
     kind: Literal["scenarios"]
@@ -118,12 +153,6 @@ class ScenarioLosses:
     """Column of a table with a header that holds the probabilities."""
     ignore_columns: list[Text] | None = None
     """Columns of a table with a header that are left out."""
-    currency: Text | None = None
-    """Currency of all amounts; a label, nothing is converted."""
-    valuation_date: Date | None = None
-    """Valuation date, YYYY-MM-DD; a label."""
-    horizon: Text | None = None
-    """Horizon of the losses, e.g. `1 year`; a label."""
 
     @model_validator(mode="after")
     def _one_table(self) -> Self:
@@ -162,21 +191,11 @@ class Factor:
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
-class FactorSubPortfolio:
+class FactorSubPortfolio(BuiltSubPortfolio):
     """One sub-portfolio of a factor spec: components are added, the sign applied, then each cover step."""
 
-    id: Text
-    """Its name, unique in the request."""
     components: Annotated[list[AnyComponent], Field(min_length=1)]
     """What its loss is made of; the parts are added."""
-    attributes: dict[AttributeName, Text] = Field(default_factory=dict)
-    """What it belongs to, e.g. {"entity": "north", "line": "hull"}; the answer can be grouped by these."""
-    expected_profit: Number | None = None
-    """Expected profit as a gain (positive is a profit), in currency; never derived from the losses."""
-    sign: Literal["loss", "profit"] = "loss"
-    """`profit` negates the sum of the components."""
-    cover: list[Cover] = Field(default_factory=list)
-    """Steps that map the running amount in turn."""
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
@@ -204,7 +223,7 @@ class SimulationPlan:
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
-class FactorLosses:
+class FactorLosses(LabelledLosses):
     """A factor model that the service simulates."""
 
     kind: Literal["factors"]
@@ -217,30 +236,14 @@ class FactorLosses:
     """Copula of the factors; independent if absent."""
     simulation: SimulationPlan = Field(default_factory=SimulationPlan)
     """How it is simulated."""
-    currency: Text | None = None
-    """Currency of all amounts; a label, nothing is converted."""
-    valuation_date: Date | None = None
-    """Valuation date, YYYY-MM-DD; a label."""
-    horizon: Text | None = None
-    """Horizon of the losses, e.g. `1 year`; a label."""
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
-class HistorySubPortfolio:
+class HistorySubPortfolio(BuiltSubPortfolio):
     """One sub-portfolio whose loss is a function of observed factor changes."""
 
-    id: Text
-    """Its name, unique in the request."""
     components: Annotated[list[ObservedComponent], Field(min_length=1)]
     """What its loss is made of; the parts are added."""
-    attributes: dict[AttributeName, Text] = Field(default_factory=dict)
-    """What it belongs to; the answer can be grouped by these."""
-    expected_profit: Number | None = None
-    """Expected profit as a gain (positive is a profit), in currency; never derived from the losses."""
-    sign: Literal["loss", "profit"] = "loss"
-    """`profit` negates the sum of the components."""
-    cover: list[Cover] = Field(default_factory=list)
-    """Steps that map the running amount in turn."""
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
@@ -254,7 +257,7 @@ class HorizonScalingRule:
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
-class HistoryLosses:
+class HistoryLosses(LabelledLosses):
     """Observed factor changes are the scenarios: exactly one of `changes`, `packed` and `part` holds them."""
 
     kind: Literal["history"]
@@ -273,12 +276,6 @@ class HistoryLosses:
     """Weight of a period relative to the next more recent one; equal weights if absent."""
     horizon_scaling: HorizonScalingRule | None = None
     """How the changes are brought to a longer horizon."""
-    currency: Text | None = None
-    """Currency of all amounts; a label, nothing is converted."""
-    valuation_date: Date | None = None
-    """Valuation date, YYYY-MM-DD; a label."""
-    horizon: Text | None = None
-    """Horizon of the losses, e.g. `10 days`; a label."""
 
     @model_validator(mode="after")
     def _one_table(self) -> Self:
@@ -295,19 +292,13 @@ BookName = Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9_-]{0,63}$")]
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
-class BookLosses:
+class BookLosses(LabelledLosses):
     """A book that the server keeps: losses under a name. `GET /v1/books` lists them."""
 
     kind: Literal["book"]
     """Tag of this source."""
     name: BookName
     """Name of the book."""
-    currency: Text | None = None
-    """Currency of all amounts, a label; that of the book if absent."""
-    valuation_date: Date | None = None
-    """Valuation date, YYYY-MM-DD, a label; that of the book if absent."""
-    horizon: Text | None = None
-    """Horizon of the losses, a label; that of the book if absent."""
 
 
 Losses = TypeAliasType(
