@@ -18,7 +18,7 @@ WIDTH = 118
 
 @dataclass(frozen=True, slots=True)
 class Shown:
-    """A request by curl, and the JSON answer in the next fence, if there is one."""
+    """A request by curl, and the JSON answer in the next fence of its section, if there is one."""
 
     command: str
     answer: str | None
@@ -50,9 +50,10 @@ def shown(text: str) -> list[Shown]:
     found = []
     for fence, following in zip(fences, [*fences[1:], None], strict=True):
         if fence[1] == "sh" and fence[2].startswith("curl "):
-            answered = following is not None and following[1] == "json"
-            answer, start = (following[2], following.start(2)) if following and answered else (None, fence.end())
-            found.append(Shown(fence[2], answer, start))
+            if following and following[1] == "json" and "\n#" not in text[fence.end() : following.start()]:
+                found.append(Shown(fence[2], following[2], following.start(2)))
+            else:
+                found.append(Shown(fence[2], None, fence.end()))
     return found
 
 

@@ -304,7 +304,7 @@ class Books:
         """Return the book as its files are, putting down in `files` what was read."""
         document = _content(folder, name + SUFFIX, files)
         members, file = _request(document)
-        body = b"{" + b",".join(json.dumps(key).encode() + b":" + value for key, value in members.items()) + b"}"
+        body = _object(members) if members else document
         if file is None:
             taken = intake.read("allocations", body, content_type=intake.JSON, parameters=(), settings=self._settings)
         else:
@@ -341,16 +341,20 @@ def _request(document: bytes) -> tuple[dict[str, bytes], str | None]:
         whole = "losses" in members
         losses = {key: bytes(value) for key, value in _MEMBERS.decode(members["losses"] if whole else document).items()}
     except (msgspec.DecodeError, UnicodeDecodeError, RecursionError):
-        return {"losses": document}, None
+        return {}, None
     file = losses.pop("file", None)
     if "part" in losses or losses.get("kind") == b'"book"':
         raise Unreadable("a book holds its losses itself or names their table by `file`")
     if file is not None:
         losses["part"] = b'"table"'
-    inner = b"{" + b",".join(json.dumps(key).encode() + b":" + value for key, value in losses.items()) + b"}"
-    members = {**members, "losses": inner} if whole else {"losses": inner}
+    members = {**members, "losses": _object(losses)} if whole else {"losses": _object(losses)}
     members.setdefault("measures", json_text(list(USUAL_MEASURES)))
     return members, None if file is None else _table_name(file, losses.get("kind"))
+
+
+def _object(members: Mapping[str, bytes]) -> bytes:
+    """Return the JSON text of an object whose members are JSON texts."""
+    return b"{" + b",".join(json.dumps(key).encode() + b":" + value for key, value in members.items()) + b"}"
 
 
 def _table_name(file: bytes, kind: bytes | None) -> str:

@@ -9,7 +9,7 @@ from time import perf_counter
 from typing import TypeVar
 
 from service.errors import Busy, Cancelled, Limit, TooLong
-from service.executors import Checkpoint, Work
+from service.executors import Checkpoint, Work, keep_going
 from service.settings import Settings, variable
 
 Answer = TypeVar("Answer")
@@ -67,6 +67,7 @@ class Desk:
         seconds: float | None,
         gone: asyncio.Event,
         short: bool = False,
+        told: Callable[[float], None] = keep_going,
     ) -> Answer:
         """Wait for a place and return ``job(work)``, computed in a thread.
 
@@ -80,6 +81,8 @@ class Desk:
             Set when the caller leaves: the job is stopped at its next checkpoint.
         short : bool
             Whether the job is so short that a thread would cost more than it frees.
+        told : callable
+            Called with the fraction of the work that is done, from any thread.
 
         Raises
         ------
@@ -94,7 +97,7 @@ class Desk:
         allowed = self._settings.max_seconds if seconds is None else min(seconds, self._settings.max_seconds)
         began = perf_counter()
         try:
-            work = Work(self._settings.threads, _checkpoint(began + allowed, allowed, gone))
+            work = Work(self._settings.threads, _checkpoint(began + allowed, allowed, gone, told))
             if short:
                 return job(work)
             return await asyncio.wrap_future(self._pool.submit(job, work))
@@ -139,10 +142,11 @@ class Desk:
             self.computing -= 1
 
 
-def _checkpoint(deadline: float, allowed: float, gone: asyncio.Event) -> Checkpoint:
+def _checkpoint(deadline: float, allowed: float, gone: asyncio.Event, told: Callable[[float], None]) -> Checkpoint:
     """Return the question of one job; `gone` is only read, which is safe in any thread."""
 
-    def checkpoint(_fraction: float = 0.0, /) -> None:
+    def checkpoint(fraction: float = 0.0, /) -> None:
+        told(fraction)
         if gone.is_set():
             raise Cancelled("The caller left while the calculation ran.")
         if perf_counter() > deadline:

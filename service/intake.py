@@ -69,6 +69,24 @@ class Intake:
         """Whether the caller sent a document that can be pointed into."""
         return self.part != BODY_PART and not self.by_query
 
+    @property
+    def scenarios(self) -> int | None:
+        """Scenarios to go through, at most; of two sources, those of the one after. None for a book not looked up."""
+        which = "after" if isinstance(self.request, ComparisonsRequest) else "losses"
+        losses: Losses = getattr(self.request, which)
+        table, source = self.tables.get(which, self.table), self.sources.get(which)
+        if isinstance(losses, FactorLosses):
+            plan = losses.simulation
+            return plan.scenarios if plan.stop_when is None else plan.stop_when.max_scenarios
+        if source is not None and source.table is not None:
+            return source.table.scenarios
+        if isinstance(table, Sheet):
+            return table.values.shape[0]
+        if table is not None:
+            turned = isinstance(losses, ScenarioLosses) and losses.layout == "by_sub_portfolio"
+            return table.shape[1 if turned else 0]
+        return len(losses.changes) if isinstance(losses, HistoryLosses) and losses.changes is not None else None
+
 
 def read(
     calculation: str,

@@ -10,7 +10,7 @@ from pydantic_core import PydanticCustomError
 from service.errors import Fault, InvalidValue, Limit, LimitExceeded
 from service.payloads import Sheet
 from service.risk.loss_table import LossTable, SubPortfolio
-from service.risk.measures.contract import text
+from service.risk.words import text
 from service.schemas.losses import ScenarioLosses
 from service.settings import Settings, variable
 

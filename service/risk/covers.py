@@ -11,15 +11,12 @@ from typing import Annotated, Literal
 
 import numpy as np
 from numpy.typing import NDArray
-from pydantic import ConfigDict, Discriminator, Field
+from pydantic import Discriminator, Field
 from pydantic.dataclasses import dataclass
 from typing_extensions import TypeAliasType
 
 from service.errors import Fault, InvalidValue
-
-STRICT = ConfigDict(
-    strict=True, extra="forbid", allow_inf_nan=False, use_attribute_docstrings=True, use_enum_values=True
-)
+from service.risk.words import STRICT
 
 Array = NDArray[np.float64]
 

@@ -290,7 +290,7 @@ class Ties:
 
     @classmethod
     def of(cls, ordered: Ordered, *, tolerance: Array) -> "Ties":
-        """Group neighbours of the single distribution in `ordered` that differ by at most a `tolerance` (m,) of theirs."""
+        """Group neighbours of the single distribution in `ordered` that differ by at most their `tolerance` (m,)."""
         values = ordered.values[0]
         new = np.empty(values.size, dtype=bool)
         new[:1] = True

@@ -3,6 +3,7 @@
 import asyncio
 import re
 from dataclasses import dataclass
+from functools import partial
 from time import perf_counter
 
 from starlette.requests import Request
@@ -21,6 +22,7 @@ from service.representations.formats import FORMS, Form
 from service.routes.bodies import check_coding, check_digest, read_body
 from service.routes.callers import watched
 from service.routes.doors import Handler, door
+from service.routes.events import EVENTS, EventStream, Progress
 from service.routes.forms import POLICIES, chart_asked, picture, wants_mark
 from service.schemas.losses import BookLosses
 from service.settings import Settings
@@ -64,7 +66,8 @@ class Calculation:
     async def handle(self, request: Request) -> Response:
         """Answer one request; what cannot be answered is refused before it is read."""
         accept = ", ".join(request.headers.getlist("accept"))
-        form = formats.choose(self.suffix, accept, FORMS[self.name])
+        offered = FORMS[self.name] if self.suffix else (*FORMS[self.name], EVENTS)  # last: it must weigh most alone
+        form = formats.choose(self.suffix, accept, offered)
         check_coding(request)
         self.desk.check()
         seconds = _preferred_seconds(request)
@@ -72,13 +75,16 @@ class Calculation:
         body = await read_body(request, self.settings.max_body_bytes)
         clock.mark("read")
         task = _Task(self, request, body, form, clock)
-        data = await self._compute(task, seconds)
-        self.metrics.computed(task.scenarios)
-        headers = {"content-type": form.content_type, "vary": "Accept", "server-timing": clock.told()}
+        headers = {"vary": "Accept"}
         if form.suffix in POLICIES:
             headers["content-security-policy"] = POLICIES[form.suffix]
         if seconds is not None:
             headers["preference-applied"] = f"wait={seconds:.0f}"
+        if form is EVENTS:
+            return EventStream(request, partial(self._told, task, seconds), lambda: task.expected, headers)
+        data = await self._compute(task, seconds)
+        self.metrics.computed(task.scenarios)
+        headers |= {"content-type": form.content_type, "server-timing": clock.told()}
         return Response(data, headers=headers)
 
     async def _compute(self, task: "_Task", seconds: float | None) -> bytes:
@@ -89,6 +95,19 @@ class Calculation:
                 return await self.desk.run(task.run, seconds=seconds, gone=asyncio.Event(), short=True)
         async with watched(task.request) as gone:
             return await self.desk.run(task.run, seconds=seconds, gone=gone)
+
+    async def _told(self, task: "_Task", seconds: float | None, progress: Progress, gone: asyncio.Event) -> bytes:
+        """Compute in a thread and tell how far it is."""
+
+        def run(work: Work) -> bytes:
+            progress.start()
+            return task.run(work)
+
+        if len(task.body) <= SHORT_BODY:
+            task.decode()
+        data = await self.desk.run(run, seconds=seconds, gone=gone, told=progress)
+        self.metrics.computed(task.scenarios)
+        return data
 
 
 class _Clock:
@@ -139,6 +158,11 @@ class _Task:
         self._clock.mark("decode")
         return self._taken
 
+    @property
+    def expected(self) -> int | None:
+        """Scenarios that the figures will rest on; None before the request is read."""
+        return None if self._taken is None else self._taken.scenarios
+
     def is_short(self) -> bool:
         """Return whether a decoded request is computed in less time than a thread is worth."""
         if self._taken is None:
@@ -155,7 +179,7 @@ class _Task:
         self._clock.mark("wait")
         mark, chart = wants_mark(self._parameters()), chart_asked(self._parameters(), self._form)
         of, settings = self._calculation, self._calculation.settings
-        taken = of.books.resolved(self._taken or self.decode(), work)
+        taken = self._taken = of.books.resolved(self._taken or self.decode(), work)
         drawing = calculate.drawing(taken, work, settings) if self._form.drawn else None
         answer = drawing.answer if drawing else calculate.answer(taken, work, settings, problems.describe)
         self.scenarios = answer.provenance.scenarios

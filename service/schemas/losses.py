@@ -13,8 +13,7 @@ from service.risk.components import AnyComponent, ObservedComponent
 from service.risk.copulas import Copula, IndependentCopula
 from service.risk.covers import Cover
 from service.risk.marginals import Marginal
-from service.risk.measures import Text
-from service.risk.measures.contract import STRICT
+from service.risk.words import STRICT, Text
 
 DATE = re.compile(r"\d{4}-\d{2}-\d{2}")
 

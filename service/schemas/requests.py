@@ -10,8 +10,8 @@ from pydantic_core import CoreSchema, PydanticCustomError, core_schema
 
 from service.risk.components import AnyComponent
 from service.risk.covers import Cover
-from service.risk.measures import Measure, Smoothing, Text
-from service.risk.measures.contract import STRICT
+from service.risk.measures import Measure, Smoothing
+from service.risk.words import STRICT, Text
 from service.schemas.losses import AttributeName, Losses, Number
 
 MOST_MEASURES = 32

@@ -134,7 +134,9 @@ def test_a_whole_request_gives_the_defaults():
     assert b'"part": "table"' in demo.request()
 
 
-@pytest.mark.parametrize("name", ["..", "../port", ".port", "", "a" * 65, "port.json", "port\0", "pört", "port\n", "-a"])
+@pytest.mark.parametrize(
+    "name", ["..", "../port", ".port", "", "a" * 65, "port.json", "port\0", "pört", "port\n", "-a"]
+)
 def test_other_names_are_not_found(folder, books, name):
     put(folder, "port.json", FILED)
     put(folder.parent, "port.json", FILED)

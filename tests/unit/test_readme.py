@@ -73,6 +73,15 @@ def test_the_table_goes_in_and_comes_out_as_csv(client):
     assert [line.split(",")[4].strip('"') for line in lines[2:]] == header
 
 
+def test_requests_shown_without_curl_are_answered(client):
+    printed = {one.answer for one in ANSWERED}
+    requests = [fence[2] for fence in FENCE.finditer(TEXT) if fence[1] == "json" and fence[2] not in printed]
+    assert requests
+    for request in requests:
+        response = client.post("/v1/allocations", json=json.loads(request))
+        assert response.status_code == 200, response.text
+
+
 def test_the_events_come(client):
     streams = [one for one in SHOWN if "text/event-stream" in one.command]
     assert len(streams) == 1
@@ -92,7 +101,7 @@ def test_python_as_shown(client):
 
 
 def test_answers_can_be_renewed():
-    text = "a\n```sh\ncurl -s X\n```\n\n```json\n{}\n```\n\n```sh\ncurl -s Y\n```\nend\n"
+    text = "a\n```sh\ncurl -s X\n```\n\n```json\n{}\n```\n\n```sh\ncurl -s Y\n```\n## Next\n```json\n[]\n```\n"
     assert [one.answer for one in shown(text)] == ["{}\n", None]
     assert renewed(text, lambda one: {"x": one.command}).count('{"x": "curl -s X\\n"}\n```') == 1
     assert renewed(text, lambda _one: {}) == text

@@ -40,9 +40,9 @@ from service.risk.covers import (
     tails_after,
 )
 from service.risk.marginals import DiscreteMarginal, Marginal, MarginalLaw
-from service.risk.measures.contract import STRICT, Text
 from service.risk.score_tables import ScoreTable, Scratch
 from service.risk.scores import NormalScores
+from service.risk.words import STRICT, Text
 
 PIECE = 1 << 16  # claims drawn at a time, 0.5 MB
 FARTHEST_SCORE = 37.0  # normal scores beyond have a probability that binary64 cannot tell from 0

@@ -21,7 +21,7 @@ from service.risk.copulas import CopulaFamily, IndependentCopula, Sampler
 from service.risk.copulas.elliptical import GaussianSampler
 from service.risk.covers import Tails
 from service.risk.marginals import MarginalLaw
-from service.risk.measures.contract import STRICT, Text
+from service.risk.words import STRICT, Text
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.intp]

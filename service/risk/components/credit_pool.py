@@ -30,7 +30,7 @@ from service.risk.components.contract import (
     refuse,
     unknown_factors,
 )
-from service.risk.measures.contract import STRICT, Text
+from service.risk.words import STRICT, Text
 
 TINY = 1e-300  # in place of a share of 0 of the obligor's own in the index
 LENGTH_SLACK = 1e-9  # w'Rw may pass 1 by rounding of the weights

@@ -11,7 +11,7 @@ from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
 from typing_extensions import TypeAliasType
 
-from service.risk.measures.contract import STRICT
+from service.risk.words import STRICT
 
 Counts = NDArray[np.int64]
 Spectrum = NDArray[np.complex128]

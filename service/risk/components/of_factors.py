@@ -27,7 +27,7 @@ from service.risk.components.contract import (
 )
 from service.risk.covers import Tails, harmonic
 from service.risk.marginals import NormalMarginal
-from service.risk.measures.contract import STRICT, Text
+from service.risk.words import STRICT, Text
 
 TINY = 1e-300  # in place of a reach of 0
 FEW_PAIRS = 4  # pairs per factor up to which they are added one by one instead of by a matrix product

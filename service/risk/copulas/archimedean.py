@@ -12,9 +12,10 @@ from pydantic_core import PydanticCustomError
 from service.errors import InvalidValue
 from service.risk.copulas.contract import Array, CopulaFamily, Indices, Sampler
 from service.risk.copulas.generators import ArchimedeanGenerator, Clayton, Frank, Gumbel, Joe
-from service.risk.correlation import STRICT, Repair
+from service.risk.correlation import Repair
 from service.risk.scores import Law, Scores, UniformScores
 from service.risk.streams import Draw
+from service.risk.words import STRICT
 
 STRONGEST = 1e6  # beyond it the factors are comonotonic in all but name
 

@@ -10,10 +10,11 @@ from pydantic import Field
 from pydantic.dataclasses import dataclass
 
 from service.errors import Fault
-from service.risk.correlation import STRICT, Repair
+from service.risk.correlation import Repair
 from service.risk.correlation.contract import refuse
 from service.risk.scores import Law, Scores
 from service.risk.streams import Draw
+from service.risk.words import STRICT
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.intp]

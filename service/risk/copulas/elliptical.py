@@ -11,9 +11,10 @@ from pydantic.dataclasses import dataclass
 from service.errors import InvalidValue, pointing
 from service.risk.copulas.contract import Array, CopulaFamily, FactorIds, Indices, Sampler, grouped
 from service.risk.copulas.mixing import LogGamma
-from service.risk.correlation import STRICT, Correlation, Mixing, Repair, Root, SpearmanRhoCorrelation
+from service.risk.correlation import Correlation, Mixing, Repair, Root, SpearmanRhoCorrelation
 from service.risk.scores import Law, NormalScores, Scores, StudentScores
 from service.risk.streams import Draw
+from service.risk.words import STRICT
 
 DF = "Degrees of freedom, without unit; few give strong dependence in both tails, many approach the Gaussian copula."
 DegreesOfFreedom = Annotated[float, Field(ge=0.5, le=1e6, description=DF)]

@@ -12,10 +12,11 @@ from service.errors import Fault
 from service.risk.copulas.contract import Array, CopulaFamily, FactorIds, Indices, Sampler, grouped
 from service.risk.copulas.generators import GENERATORS, ArchimedeanGenerator, GeneratorName
 from service.risk.copulas.inner import inner_dimensions, log_inner
-from service.risk.correlation import STRICT, Repair
+from service.risk.correlation import Repair
 from service.risk.correlation.contract import refuse
 from service.risk.scores import Law, Scores, UniformScores
 from service.risk.streams import Draw
+from service.risk.words import STRICT
 
 STRONGEST = 1e3  # beyond it the factors of a group are comonotonic in all but name
 LEAST = {"clayton": 0.0, "frank": 0.0, "gumbel": 1.0, "joe": 1.0}

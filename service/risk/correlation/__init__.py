@@ -5,7 +5,7 @@ from typing import Annotated
 from pydantic import Discriminator
 from typing_extensions import TypeAliasType
 
-from service.risk.correlation.contract import STRICT, CorrelationForm, Mixing
+from service.risk.correlation.contract import CorrelationForm, Mixing
 from service.risk.correlation.low_rank import EqualCorrelation, LoadingsCorrelation
 from service.risk.correlation.matrices import (
     MOST_FACTORS,
@@ -36,7 +36,6 @@ TYPICAL: tuple[CorrelationForm, ...] = (
 
 __all__ = [
     "MOST_FACTORS",
-    "STRICT",
     "TYPICAL",
     "Correlation",
     "CorrelationForm",

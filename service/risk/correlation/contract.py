@@ -2,15 +2,11 @@
 
 from dataclasses import dataclass as plain
 
-from pydantic import ConfigDict
 from pydantic.dataclasses import dataclass
 
 from service.errors import Fault, InvalidValue
 from service.risk.correlation.roots import Root
-
-STRICT = ConfigDict(
-    strict=True, extra="forbid", allow_inf_nan=False, use_attribute_docstrings=True, use_enum_values=True
-)
+from service.risk.words import STRICT
 
 NOT_A_CORRELATION = "not_a_correlation"
 SLACK = 1e-9  # entries, diagonal and row norms may be off by this much, as sums of rounded decimals are

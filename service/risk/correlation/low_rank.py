@@ -7,8 +7,9 @@ from pydantic import Field
 from pydantic.dataclasses import dataclass
 
 from service.errors import Fault, InvalidValue
-from service.risk.correlation.contract import MOST_FAULTS, SLACK, STRICT, CorrelationForm, Mixing, refuse
+from service.risk.correlation.contract import MOST_FAULTS, SLACK, CorrelationForm, Mixing, refuse
 from service.risk.correlation.roots import FactorRoot, NegativeEqualRoot, Root
+from service.risk.words import STRICT
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)

@@ -11,7 +11,6 @@ from service.risk.correlation.contract import (
     MOST_FAULTS,
     NOT_A_CORRELATION,
     SLACK,
-    STRICT,
     CorrelationForm,
     Mixing,
     refuse,
@@ -19,6 +18,7 @@ from service.risk.correlation.contract import (
 from service.risk.correlation.nearest import Repair, nearest_correlation
 from service.risk.correlation.roots import Array, DenseRoot, Root
 from service.risk.correlation.spearman import student_correlations
+from service.risk.words import STRICT
 
 MOST_FACTORS = 2000  # of a whole matrix, whose root takes about n^3 operations
 ZERO = 1e-10  # an eigenvalue this little below 0 is 0 up to the rounding of the entries

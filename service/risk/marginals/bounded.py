@@ -8,9 +8,10 @@ from pydantic import AfterValidator, Field, ValidationInfo
 from pydantic.dataclasses import dataclass
 from scipy import special
 
-from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, between, refusal
+from service.risk.marginals.contract import Amount, MarginalLaw, between, refusal
 from service.risk.marginals.moments import Array, Flags
 from service.risk.marginals.special_functions import log_gamma_1p, log_gamma_ratio
+from service.risk.words import STRICT
 
 LEAST_SHAPE, MOST_SHAPE = 1e-6, 1e8  # of a beta law; beyond, SciPy's functions lose digits
 SMALLEST_NORMAL = float(np.finfo(np.float64).tiny)

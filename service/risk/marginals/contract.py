@@ -4,17 +4,14 @@ import math
 from typing import TYPE_CHECKING, Annotated, Self
 
 import numpy as np
-from pydantic import AfterValidator, ConfigDict, Field, ValidationInfo, model_validator
+from pydantic import AfterValidator, Field, ValidationInfo, model_validator
 from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
 
 from service.risk.marginals import moments
 from service.risk.marginals.moments import Array
 from service.risk.score_tables import WHOLE, Affine, Piece
-
-STRICT = ConfigDict(
-    strict=True, extra="forbid", allow_inf_nan=False, use_attribute_docstrings=True, use_enum_values=True
-)
+from service.risk.words import STRICT
 
 LARGEST = 1e150  # size of an amount: its square is still a number
 SMALLEST = 1e-150  # size of a scale: likewise

@@ -8,10 +8,11 @@ import numpy as np
 from pydantic import Field
 from pydantic.dataclasses import dataclass
 
-from service.risk.marginals.contract import LARGEST, STRICT, Amount, MarginalLaw, refusal
+from service.risk.marginals.contract import LARGEST, Amount, MarginalLaw, refusal
 from service.risk.marginals.moments import Array
 from service.risk.quantiles import compensated_cumsum
 from service.risk.score_tables import Atoms, Piece
+from service.risk.words import STRICT
 
 MOST_VALUES = 1_000_000
 SLACK = 1e-9  # the probabilities given may sum to 1 within this

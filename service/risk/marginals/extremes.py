@@ -7,9 +7,18 @@ import numpy as np
 from pydantic.dataclasses import dataclass
 from scipy import special
 
-from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, Scale, SignedShape
+from service.risk.marginals.contract import Amount, MarginalLaw, Scale, SignedShape
 from service.risk.marginals.moments import Array
-from service.risk.marginals.special_functions import decayed, log_gamma_1p, log_gamma_bend, log_upper
+from service.risk.marginals.special_functions import (
+    decayed,
+    exp,
+    expm1,
+    log_gamma_1p,
+    log_gamma_bend,
+    log_upper,
+    square,
+)
+from service.risk.words import STRICT
 
 SMALL_SHAPE = 0.01  # below it the closed form of the limited mean loses more digits than quadrature
 NO_SHAPE = 1e-17  # shapes up to it are 0 to rounding
@@ -114,7 +123,7 @@ class GeneralizedExtremeValueMarginal(MarginalLaw):
             return math.inf
         if abs(self.shape) < NO_SHAPE:
             return self.location + self.scale * float(np.euler_gamma)
-        return self.location + self.scale * float(np.expm1(np.minimum(log_gamma_1p(-self.shape), 1e3)) / self.shape)
+        return self.location + self.scale * expm1(log_gamma_1p(-self.shape)) / self.shape
 
     @property
     def variance(self) -> float:
@@ -124,8 +133,7 @@ class GeneralizedExtremeValueMarginal(MarginalLaw):
             return math.inf
         if abs(x) < NO_SHAPE:
             return (math.pi * self.scale) ** 2 / 6.0
-        size = math.log(self.scale) - math.log(abs(x)) + log_gamma_1p(x)
-        return float(np.exp(np.minimum(2.0 * size + np.log(np.expm1(np.minimum(log_gamma_bend(x), 1e3))), 1e3)))
+        return square(exp(log_gamma_1p(x)) * self.scale) * (expm1(log_gamma_bend(x)) / square(x))
 
     @property
     def upper_tail_index(self) -> float:

@@ -8,8 +8,9 @@ from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
 from scipy import special
 
-from service.risk.marginals.contract import OUT_OF_RANGE, STRICT, MarginalLaw, Scale
+from service.risk.marginals.contract import OUT_OF_RANGE, MarginalLaw, Scale
 from service.risk.marginals.moments import Array, Flags
+from service.risk.words import STRICT
 
 NODES, WEIGHTS = np.polynomial.legendre.leggauss(20)
 ROOT_HALF = math.sqrt(0.5)

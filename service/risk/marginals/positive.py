@@ -7,12 +7,13 @@ import numpy as np
 from pydantic.dataclasses import dataclass
 from scipy import special
 
-from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, Scale, Shape
+from service.risk.marginals.contract import Amount, MarginalLaw, Scale, Shape
 from service.risk.marginals.large_gamma import LARGE_SHAPE, large_quantile, large_score, large_term
 from service.risk.marginals.moments import Array
-from service.risk.marginals.special_functions import log_gamma_1p, log_gamma_bend, log_upper
+from service.risk.marginals.special_functions import exp, expm1, log_gamma_1p, log_gamma_bend, log_upper, square
 from service.risk.score_tables import Affine
 from service.risk.scores import NormalScores
+from service.risk.words import STRICT
 
 HALF_LINE = (0.0, math.inf)
 SMALL_CV = 1e-8  # coefficient of variation up to which it is sigma to rounding
@@ -46,10 +47,7 @@ class _Lognormal(MarginalLaw):
 
     @property
     def variance(self) -> float:
-        try:
-            return self.mean**2 * math.expm1(self._log_deviation**2)
-        except OverflowError:
-            return math.inf
+        return square(self.mean) * expm1(self._log_deviation**2)
 
     @property
     def exponential_moment(self) -> float:
@@ -85,10 +83,7 @@ class LognormalMarginal(_Lognormal):
 
     @property
     def mean(self) -> float:
-        try:
-            return math.exp(self.mu + 0.5 * self.sigma**2)
-        except OverflowError:
-            return math.inf
+        return exp(self.mu + 0.5 * self.sigma**2)
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
@@ -112,7 +107,7 @@ class LognormalByMeanMarginal(_Lognormal):
 
     @property
     def variance(self) -> float:
-        return (self.mean * self.cv) ** 2 if self.mean * self.cv < math.sqrt(float(np.finfo(float).max)) else math.inf
+        return square(self.mean * self.cv)
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)
@@ -200,11 +195,11 @@ class WeibullMarginal(MarginalLaw):
 
     @property
     def mean(self) -> float:
-        return self.scale * float(np.exp(np.minimum(log_gamma_1p(1.0 / self.shape), 1e3)))
+        return self.scale * exp(log_gamma_1p(1.0 / self.shape))
 
     @property
     def variance(self) -> float:
-        return self.mean**2 * float(np.expm1(log_gamma_bend(1.0 / self.shape)))
+        return square(self.mean) * expm1(log_gamma_bend(1.0 / self.shape))
 
     @property
     def exponential_moment(self) -> float:

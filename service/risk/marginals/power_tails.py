@@ -7,9 +7,19 @@ import numpy as np
 from pydantic.dataclasses import dataclass
 from scipy import special
 
-from service.risk.marginals.contract import STRICT, MarginalLaw, Scale, Shape
+from service.risk.marginals.contract import MarginalLaw, Scale, Shape
 from service.risk.marginals.moments import Array
-from service.risk.marginals.special_functions import decayed, log_gamma_1p, log_gamma_bend, log_gamma_ratio, log_upper
+from service.risk.marginals.special_functions import (
+    decayed,
+    exp,
+    expm1,
+    log_gamma_1p,
+    log_gamma_bend,
+    log_gamma_ratio,
+    log_upper,
+    square,
+)
+from service.risk.words import STRICT
 
 BENT = 0.05  # part of the radius of convergence of a series within which its terms are used
 UNDERFLOW = 600.0  # ln of a number whose reciprocal is still well above the smallest one
@@ -143,14 +153,14 @@ class BurrXIIMarginal(MarginalLaw):
 
     @property
     def mean(self) -> float:
-        return self.scale * _exp(self._log_moment(1.0 / self.c)) if self.c * self.d > 1.0 else math.inf
+        return self.scale * exp(self._log_moment(1.0 / self.c)) if self.c * self.d > 1.0 else math.inf
 
     @property
     def variance(self) -> float:
         x = 1.0 / self.c
         if not self.c * self.d > 2.0:  # noqa: PLR2004  # the second moment
             return math.inf
-        return self.mean**2 * math.expm1(min(self._bend(x), 700.0))
+        return square(self.mean) * expm1(self._bend(x))
 
     def _log_moment(self, x: float) -> float:
         """Return ln E (X/scale)^(c x) = ln(gamma(1 + x) gamma(d - x) / gamma(d))."""
@@ -187,8 +197,3 @@ class BurrXIIMarginal(MarginalLaw):
         else:
             part = float(special.betainc(1.0 + x, rest, special.expit(log_y)))
         return self.mean * part + limit * float(self._beyond(np.array(limit)))
-
-
-def _exp(x: float) -> float:
-    """Return exp(x), infinity where that is beyond the range of binary64."""
-    return math.exp(x) if x < 709.0 else math.inf  # noqa: PLR2004  # ln of the largest number

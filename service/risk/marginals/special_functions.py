@@ -13,7 +13,7 @@ TERMS = 24  # of the series; the last is below 0.1^24
 ZETA = special.zeta(np.arange(2.0, TERMS + 2.0))  # zeta(2), zeta(3), ...
 SHORT = 0.2  # |t| below which t - ln(1 + t) is summed as a series
 STIRLING_FROM = 30.0  # argument from which four terms of Stirling's series are exact to rounding
-HALF_LOG_TWO_PI = 0.5 * math.log(2.0 * math.pi)
+LARGEST_LOGARITHM = 709.0  # exp(710) is beyond the range of binary64
 
 
 def log_upper(lower: Array, upper: Array) -> Array:
@@ -67,6 +67,21 @@ def log_excess(ratio: Array) -> Array:
         total = square * (1.0 / order + total)
     near = s * (t - 2.0 * total)
     return np.where(small, near, ratio - np.log1p(ratio))
+
+
+def exp(x: float) -> float:
+    """Return exp(x), infinity where that is beyond the range of binary64."""
+    return math.exp(x) if x < LARGEST_LOGARITHM else math.inf
+
+
+def expm1(x: float) -> float:
+    """Return exp(x) - 1, infinity where that is beyond the range of binary64."""
+    return math.expm1(x) if x < LARGEST_LOGARITHM else math.inf
+
+
+def square(x: float) -> float:
+    """Return x², infinity where that is beyond the range of binary64."""
+    return x * x
 
 
 def decayed(rate: float, length: float) -> float:

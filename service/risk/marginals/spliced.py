@@ -11,7 +11,7 @@ from pydantic_core import PydanticCustomError
 from typing_extensions import TypeAliasType
 
 from service.risk.marginals.bounded import BetaMarginal, UniformMarginal
-from service.risk.marginals.contract import OUT_OF_RANGE, STRICT, Amount, MarginalLaw, refusal
+from service.risk.marginals.contract import OUT_OF_RANGE, Amount, MarginalLaw, refusal
 from service.risk.marginals.discrete import DiscreteMarginal, EmpiricalMarginal, PointMarginal
 from service.risk.marginals.extremes import (
     GeneralizedExtremeValueMarginal,
@@ -30,6 +30,7 @@ from service.risk.marginals.positive import (
 from service.risk.marginals.power_tails import BurrXIIMarginal, LomaxMarginal, ParetoMarginal
 from service.risk.marginals.two_sided import LogisticMarginal, NormalMarginal, StudentTMarginal
 from service.risk.score_tables import Atoms, Piece
+from service.risk.words import STRICT
 
 LEAST_MASS = 1e-200  # of what is left of the body and of the tail; less has too few digits to be scaled up
 

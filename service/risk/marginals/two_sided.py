@@ -7,11 +7,12 @@ import numpy as np
 from pydantic.dataclasses import dataclass
 from scipy import special
 
-from service.risk.marginals.contract import STRICT, Amount, MarginalLaw, Scale, Shape
+from service.risk.marginals.contract import Amount, MarginalLaw, Scale, Shape
 from service.risk.marginals.moments import Array
 from service.risk.marginals.special_functions import log_gamma_ratio
 from service.risk.score_tables import Affine
 from service.risk.scores import NormalScores, StudentScores, UniformScores
+from service.risk.words import STRICT
 
 LINE = (-math.inf, math.inf)
 PURE_POWER = 40.0  # ln(x²/df) from which on the tail of Student's t is a power of x to rounding

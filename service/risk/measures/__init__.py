@@ -7,11 +7,9 @@ from typing_extensions import TypeAliasType
 
 from service.risk.measures.contract import (
     ContributionWeights,
-    Level,
     LocatedMeasure,
     RiskMeasure,
     Smoothing,
-    Text,
     full_influence,
     full_values,
 )
@@ -61,7 +59,6 @@ __all__ = [
     "ExpectedShortfall",
     "Expectile",
     "ExponentialDistortion",
-    "Level",
     "LocatedMeasure",
     "Measure",
     "ProportionalHazard",
@@ -70,7 +67,6 @@ __all__ = [
     "RiskMeasure",
     "Smoothing",
     "StandardDeviation",
-    "Text",
     "ValueAtRisk",
     "Wang",
     "full_influence",

@@ -5,70 +5,22 @@ weights @ losses, and because the weights of the total do not change when a sub-
 alone, its Euler contribution is the same weights @ its losses.
 """
 
-import re
 from dataclasses import dataclass as plain
 from typing import Annotated, ClassVar, Literal
 
 import numpy as np
-from pydantic import AfterValidator, ConfigDict, Field
+from pydantic import Field
 from pydantic.dataclasses import dataclass
-from pydantic_core import PydanticCustomError
 
 from service.risk.measures.local_line import LocalLine
-from service.risk.quantiles import Array, Ordered, QuantileInterval, Ties, decimal
+from service.risk.quantiles import Array, Ordered, QuantileInterval, Ties
 from service.risk.uncertainty import Influence, Spread
-
-STRICT = ConfigDict(
-    strict=True, extra="forbid", allow_inf_nan=False, use_attribute_docstrings=True, use_enum_values=True
-)
+from service.risk.words import STRICT, Text
 
 LABEL = "Name of this measure in the answer; by default the kind and its parameters. Unique in a request."
 ABOVE = "`zero`: the figure itself; `mean`: its excess over the expected loss."
 
 Smoothing = Literal["auto", "none"]
-
-MAX_TEXT = 200
-PATTERN = (  # what the OpenAPI document can say of a safe text: refuses no safe one
-    r"^[^\x00-/:-@\[-^`{-\xa9\xab-\xb1\xb4\xb6-\xb8\xbb\xbf\xd7\xf7\u2028\u2029][^\x00-\x1f\x7f-\x9f\u2028\u2029]*$"
-)
-UNSAFE = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029]")
-
-
-def text(value: str) -> str:
-    """Return `value` if it may be echoed: no cell made of it can be taken for a formula."""
-    if not value or not (value[0].isalnum() or value[0] == "_"):
-        code, detail = "unsafe_text", "a name begins with a letter, a digit or an underscore"
-    elif len(value) > MAX_TEXT:
-        code, detail = "unsafe_text", f"a name has at most {MAX_TEXT} characters"
-    elif UNSAFE.search(value):
-        code, detail = "unsafe_text", "a name holds no control characters"
-    else:
-        return value
-    raise PydanticCustomError(code, detail)
-
-
-Text = Annotated[
-    str,
-    AfterValidator(text),
-    Field(json_schema_extra={"minLength": 1, "maxLength": MAX_TEXT, "pattern": PATTERN}),
-]
-
-
-def confidence(value: float) -> float:
-    """Return `value` if it is a confidence level, and say so in words if it looks like a percentage."""
-    if 0.0 < value < 1.0 and 0 < decimal(value) < 1:
-        return value
-    if 1.0 < value < 100.0:  # noqa: PLR2004  # the range in which a percentage would stand
-        hint = f"{value / 100.0:.15g}, not {value:.15g}"
-        raise PydanticCustomError("level", "a level is a number between 0 and 1: {hint}", {"hint": hint})
-    raise PydanticCustomError("level", "a level is a number above 0 and below 1, such as 0.995")
-
-
-Level = Annotated[
-    float,
-    AfterValidator(confidence),
-    Field(json_schema_extra={"exclusiveMinimum": 0.0, "exclusiveMaximum": 1.0}),
-]
 
 
 @plain(frozen=True, slots=True, kw_only=True)

@@ -12,9 +12,10 @@ from pydantic import Field
 from pydantic.dataclasses import dataclass
 from scipy import special
 
-from service.risk.measures.contract import STRICT, ContributionWeights, LocatedMeasure, Needs
+from service.risk.measures.contract import ContributionWeights, LocatedMeasure, Needs
 from service.risk.quantiles import Array, Ordered, Ties, decimal
 from service.risk.uncertainty import Influence
+from service.risk.words import STRICT
 
 LEAST_FACTOR = 0.1  # of the carriers of a proportional hazard; calibrated by simulation
 MILD = 1e-8  # aversion below which the exponential distortion is its own series to 1e-16

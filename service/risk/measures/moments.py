@@ -10,9 +10,7 @@ from scipy import special
 
 from service.errors import NotDefined
 from service.risk.measures.contract import (
-    STRICT,
     ContributionWeights,
-    Level,
     LocatedMeasure,
     Needs,
     RiskMeasure,
@@ -22,6 +20,7 @@ from service.risk.measures.contract import (
 from service.risk.measures.local_line import local_line
 from service.risk.quantiles import Array, Ordered, Ties, decimal
 from service.risk.uncertainty import Influence
+from service.risk.words import STRICT, Level
 
 EXPECTILE_WINDOW = 0.9  # half width of the window for the density at an expectile, as a part of the smaller side
 AT_EXPECTILE = 1e-12  # of the largest loss: an atom so near is at the expectile, whose own rounding is of this order

@@ -11,9 +11,7 @@ from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
 
 from service.risk.measures.contract import (
-    STRICT,
     ContributionWeights,
-    Level,
     LocatedMeasure,
     Needs,
     Smoothing,
@@ -30,6 +28,7 @@ from service.risk.quantiles import (
     quantile_interval,
 )
 from service.risk.uncertainty import Influence, Spread
+from service.risk.words import STRICT, Level
 
 WINDOW = Fraction(9, 10)  # half width of the smoothing window as a part of the tail count
 LEAST_RANKS = 10  # of the smoothing window on each side

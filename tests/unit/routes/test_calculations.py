@@ -91,7 +91,7 @@ def test_scenarios_are_counted(client):
     assert metric(client, "tailrace_scenarios_total") == before + 4
 
 
-@pytest.mark.parametrize("accept", ["text/event-stream", "application/json;q=0, text/html", "audio/*"])
+@pytest.mark.parametrize("accept", ["text/event-stream;q=0", "application/json;q=0, text/html", "audio/*"])
 def test_not_acceptable_comes_before_reading(client, accept):
     response = client.post("/v1/measures", content=b"{", headers={**JSON, "accept": accept})
     problem = assert_problem(response, "not_acceptable", header="Accept")
