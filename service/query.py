@@ -3,6 +3,7 @@
 import re
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from math import inf
 from typing import Any
 
 from service.errors import Fault, InvalidValue
@@ -183,7 +184,7 @@ def scaled_copy(pairs: Pairs) -> dict[str, Any]:
     for name, example in (("sub_portfolio", "sub_portfolio=hull"), ("scale", "scale=1.1")):
         if name not in copy:
             raise _fault(name, f"{name} is needed, e.g. {example}", "missing")
-    if copy["scale"] < 0:
+    if not 0 <= copy["scale"] < inf:
         raise _fault("scale", f"scale is {copy['scale']:.15g}; it is at least 0, and 1 is the size now", "out_of_range")
     return {"id": f"{copy['sub_portfolio'][:LONGEST_NAME]} x {copy['scale']:.15g}", "scaled": copy}
 

@@ -57,8 +57,8 @@ def _heading(answer: Answer) -> Iterator[str]:
     known = [word for word in words if word]
     if known:
         yield ", ".join(known)
-    unit = f" in {labels.currency}" if labels.currency else ""
-    heading = f"{answer.provenance.scenarios:,} scenarios, amounts{unit}"
+    unit = f", amounts in {labels.currency}" if labels.currency else ""
+    heading = f"{answer.provenance.scenarios:,} scenarios{unit}"
     if isinstance(answer, IncrementsAnswer | ComparisonsAnswer):
         yield heading + "\n"
         return

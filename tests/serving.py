@@ -1,5 +1,6 @@
-"""A real server in a thread, and the one shape that every problem must have."""
+"""A real server in a thread, what to wait for, and what answers and problems must look like."""
 
+import math
 import socket
 from contextlib import contextmanager
 from threading import Thread
@@ -12,6 +13,7 @@ from service.app import create_app
 from service.problems import STATUSES
 from service.settings import Settings
 
+ELSEWHERE = 1e-12  # relative difference that another kind of processor may make
 PLACES = {"pointer", "parameter", "header", "part", "row", "column"}
 SMALL = {
     "losses": {
@@ -42,6 +44,32 @@ def running(**settings):
         thread.join(20)
         listener.close()
         assert not thread.is_alive()
+
+
+def until(condition, seconds=10):
+    """Wait until something is so."""
+    deadline = monotonic() + seconds
+    while not condition():
+        assert monotonic() < deadline, "nothing happened"
+        sleep(0.005)
+
+
+def metric(client, name):
+    """Return a number that the service counts."""
+    lines = client.get("/metrics").text.splitlines()
+    return next((float(line.rpartition(" ")[2]) for line in lines if line.startswith(name)), 0.0)
+
+
+def alike(kept, came):
+    """Compare two answers: the same but for the version and for the last digits of numbers."""
+    if isinstance(kept, dict):
+        names = kept.keys() - {"service_version"}
+        return kept.keys() == came.keys() and all(alike(kept[name], came[name]) for name in names)
+    if isinstance(kept, list):
+        return len(kept) == len(came) and all(map(alike, kept, came))
+    if isinstance(kept, float) and isinstance(came, float):
+        return math.isclose(kept, came, rel_tol=ELSEWHERE, abs_tol=1e-9)
+    return kept == came
 
 
 def assert_problem(response, code, **place):

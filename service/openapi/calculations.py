@@ -71,9 +71,10 @@ TABLES = (
 FORMS = (
     "\n\nThe form of the answer goes by `Accept`; where a client cannot set headers the path may end in the suffix of "
     "the form, such as `.csv`. Where `text/event-stream` alone has the highest weight, the answer is a stream of "
-    "events: `progress` (once at the start, then at most five a second), and at the end exactly one `result`, whose data are "
-    "the JSON answer, or one `problem`. A stream with neither has failed. The stream begins with the first piece of work, or "
-    "after ten seconds of waiting: what is refused before has its ordinary status, what fails later is a `problem`. "
+    "events: `progress` (once at the start, then at most five a second), and at the end exactly one `result`, whose "
+    "data are the JSON answer, or one `problem`. A stream with neither has failed. The stream begins with the first "
+    "piece of work, or after ten seconds of waiting: what is refused before has its ordinary status, what fails later "
+    "is a `problem`. "
     "Every ten seconds without an event a comment line shows that the connection lives. A caller who leaves stops "
     "the work.\n\nThe same request gives the same bytes at any time, so it is safe to repeat. Time spent, in "
     "milliseconds, is in the header `Server-Timing`."

@@ -150,8 +150,8 @@ def simulated(plan: Plan, effort: Effort, *, before: Array | None = None) -> Arr
 
     def work(number: int) -> None:
         effort.checkpoint((number - first) / (plan.blocks - first))
-        plan.losses(number, bench.scratch, out=losses[plan.part(number)], pause=effort.checkpoint)
+        block = plan.losses(number, bench.scratch, out=losses[plan.part(number)], pause=effort.checkpoint)
+        block += 0.0  # no negative zero
 
     effort.map(work, range(first, plan.blocks))
-    losses += 0.0  # no negative zero
     return losses

@@ -8,15 +8,19 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from service.risk.effort import Effort
 from service.risk.fold import Sieve, completed_tails, sample_thresholds
-from service.risk.frame import Frame, column_tail, deepest
+from service.risk.frame import CHUNK_BYTES, Frame, column_tail, deepest
 from service.risk.loss_table import Group, SubPortfolio, check_magnitude, group_losses
 from service.risk.measures import RiskMeasure
 from service.risk.quantiles import Array, Indices
-from service.risk.ranking import ranked
+from service.risk.ranking import ranked, worst
 from service.risk.simulation import Plan, Workbench
+
+SAMPLED = 64  # one block in so many foretells the thresholds, and is then simulated once more
+MOST_SAMPLED = 32  # such blocks
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -29,14 +33,52 @@ class StreamedLosses:
     effort : Effort
     numbers : ndarray of int of shape (k,)
         Scenarios that are held, ascending.
-    rows : ndarray of shape (k, d + G)
-        Their losses, groups at the right.
+    places : ndarray of int of shape (k,)
+        Row of each in the chunks.
+    chunks : list of ndarrays of shape (k, c)
+        Their losses, some columns at a time, groups at the right.
     """
 
     plan: Plan
     effort: Effort
     numbers: Indices
-    rows: Array
+    places: Indices
+    chunks: list[Array]
+
+    @classmethod
+    def of(
+        cls, plan: Plan, effort: Effort, order: Indices, parts: "Sequence[_Kept]", groups: Sequence[Group]
+    ) -> "StreamedLosses":
+        """Hold the scenarios `order` (k,), in that order, and let the workers' own rows go.
+
+        What no worker kept is simulated once more.
+        """
+        places = np.argsort(order)
+        numbers = order[places]
+        columns = plan.columns + len(groups)
+        width = max(1, CHUNK_BYTES // (8 * order.size))
+        chunks = [np.empty((order.size, min(width, columns - start))) for start in range(0, columns, width)]
+        held = cls(plan, effort, numbers, places, chunks)
+        found = np.zeros(order.size, dtype=bool)
+        for part in parts:
+            while part.rows:
+                effort.checkpoint()
+                held._put(part.numbers.pop(), part.rows.pop(), found)
+        missing = np.flatnonzero(~found[places])
+        if missing.size:
+            held._put(numbers[missing], _extended(held._again(numbers[missing]), groups), found)
+        return held
+
+    def _put(self, numbers: Indices, rows: Array, found: NDArray[np.bool_]) -> None:
+        """Put rows (m, d + G) of scenarios (m,) into their places, if they have one."""
+        near = np.minimum(np.searchsorted(self.numbers, numbers), self.numbers.size - 1)
+        wanted = self.numbers[near] == numbers
+        places = self.places[near[wanted]]
+        found[places] = True
+        start = 0
+        for chunk in self.chunks:
+            chunk[places] = rows[wanted, start : start + chunk.shape[1]]
+            start += chunk.shape[1]
 
     @property
     def shape(self) -> tuple[int, int]:
@@ -48,11 +90,18 @@ class StreamedLosses:
         return self.take(np.array([number]))[0]
 
     def take(self, numbers: Indices, axis: int = 0) -> Array:  # noqa: ARG002  # as NumPy's
-        """Return the losses of scenarios (m,), shape (m, d), C order."""
-        places = np.minimum(np.searchsorted(self.numbers, numbers), max(self.numbers.size - 1, 0))
-        if self.numbers.size and np.array_equal(self.numbers[places], numbers):
-            return np.ascontiguousarray(self.rows[places, : self.plan.columns])
-        return self._again(numbers)
+        """Return the losses of scenarios (m,), shape (m, d), C order; those not held are simulated again."""
+        near = np.minimum(np.searchsorted(self.numbers, numbers), self.numbers.size - 1)
+        held = self.numbers[near] == numbers
+        out = np.empty((numbers.size, self.plan.columns))
+        start = 0
+        for chunk in self.chunks:
+            part = out[:, start : start + chunk.shape[1]]
+            part[held] = chunk[self.places[near[held]], : part.shape[1]]
+            start += chunk.shape[1]
+        if not held.all():
+            out[~held] = self._again(numbers[~held])
+        return out
 
     def _again(self, numbers: Indices) -> Array:
         """Simulate the blocks that hold the scenarios once more."""
@@ -132,9 +181,15 @@ def streamed(
     depth = deepest(measures, scenarios, contributions=True)
     tail = column_tail(measures, scenarios) if stand_alone else None
     bench = Workbench()
-    first = _extended(plan.losses(0, bench.scratch, pause=effort.checkpoint), groups)
-    least = sample_thresholds(first[:, : plan.columns].sum(axis=1)[:, None], int(depth * scenarios) + 1, scenarios)[0]
-    thresholds = None if tail is None else sample_thresholds(first, tail, scenarios)
+
+    def made(number: int) -> Array:
+        return _extended(plan.losses(number, bench.scratch, pause=effort.checkpoint), groups)
+
+    sample = np.concatenate(effort.map(made, range(min(max(1, plan.blocks // SAMPLED), MOST_SAMPLED))))
+    sums_of_sample = np.add.reduce(sample[:, : plan.columns], axis=1)
+    least = sample_thresholds(sums_of_sample[:, None], int(depth * scenarios) + 1, scenarios)[0]
+    thresholds = None if tail is None else sample_thresholds(sample, tail, scenarios)
+    del sample
     totals = np.empty(scenarios)
     sums = np.empty((plan.blocks, columns))
     workers = min(effort.threads, plan.blocks)
@@ -144,7 +199,7 @@ def streamed(
         for number in range(worker, plan.blocks, workers):
             effort.checkpoint(number / plan.blocks)
             part = plan.part(number)
-            block = _extended(plan.losses(number, bench.scratch, pause=effort.checkpoint), groups)
+            block = made(number)
             total = np.add.reduce(block[:, : plan.columns], axis=1, out=totals[part])
             np.add.reduce(block, axis=0, out=sums[number])
             chosen = np.flatnonzero(total > least)
@@ -156,12 +211,7 @@ def streamed(
 
     parts = effort.map(work, range(workers))
     check_magnitude(totals)
-    numbers = np.concatenate([one for part in parts for one in part.numbers])
-    order = np.argsort(numbers)
-    rows = np.concatenate([one for part in parts for one in part.rows])
-    for part in parts:
-        part.rows.clear()
-    losses = StreamedLosses(plan, effort, numbers[order], rows[order])
+    losses = StreamedLosses.of(plan, effort, worst(totals, depth), parts, groups)
     table = StreamedTable(losses, sub_portfolios)
     tails = None
     if tail is not None and thresholds is not None:

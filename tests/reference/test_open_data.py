@@ -259,5 +259,6 @@ def test_danish_fire_losses(client):
     assert totals == np.quantile(losses[:, 0], LEVELS, method="inverted_cdf").tolist()
     for one in found.values():  # a single sub-portfolio is the whole book
         (row,) = one["sub_portfolios"]
-        assert row["stand_alone"] == one["total"]
+        assert row["stand_alone"]["value"] == one["total"]["value"]
+        assert row["stand_alone"]["standard_error"] == pytest.approx(one["total"]["standard_error"], rel=1e-12)
         assert row["contribution"]["value"] == pytest.approx(one["total"]["value"], rel=1e-12)

@@ -6,6 +6,7 @@ one of 300 cases. The seeds are fixed, and it is the same band for all.
 """
 
 import math
+from base64 import b64encode
 
 import numpy as np
 import pytest
@@ -89,7 +90,7 @@ def history(changes, **more):
     return {
         "kind": "history",
         "factors": ["x", "y"],
-        "changes": changes.tolist(),
+        "packed": {"data": b64encode(changes).decode(), "dtype": "float64", "rows": len(changes), "columns": 2},
         "sub_portfolios": [{"id": name, **one} for name, one in SENSITIVITIES.items()],
         **more,
     }

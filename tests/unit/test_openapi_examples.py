@@ -3,7 +3,6 @@
 import csv
 import io
 import json
-import math
 from functools import cache
 
 import pytest
@@ -13,11 +12,10 @@ from openapi_examples import FOLDER, examples
 from service import openapi
 from service.payloads import TABLE_READERS, split_multipart
 from service.schemas import requests
-from tests.serving import running
+from tests.serving import alike, running
 
 EXAMPLES = {example.name: example for example in examples()}
 MOST_BYTES = 400_000
-ELSEWHERE = 1e-12  # relative difference that other processors may make
 ANSWERS = {name: said["answer"].__name__ for name, said in openapi.CALCULATIONS.items()}
 ASKED = {name: said["request"].__name__ for name, said in openapi.CALCULATIONS.items()}
 KINDS = set(json.loads(openapi.committed())["components"]["schemas"]["Measure"]["discriminator"]["mapping"])
@@ -37,17 +35,6 @@ def judge(component):
         {"$ref": f"#/components/schemas/{component}", "components": document["components"]},
         format_checker=Draft202012Validator.FORMAT_CHECKER,
     )
-
-
-def alike(kept, came):
-    """Compare two answers: the same but for the last digits of numbers, relative to the largest of them."""
-    if isinstance(kept, dict):
-        return kept.keys() == came.keys() and all(alike(kept[name], came[name]) for name in kept)
-    if isinstance(kept, list):
-        return len(kept) == len(came) and all(map(alike, kept, came))
-    if isinstance(kept, float) and isinstance(came, float):
-        return math.isclose(kept, came, rel_tol=ELSEWHERE, abs_tol=1e-9)
-    return kept == came
 
 
 def parsed(example, content):

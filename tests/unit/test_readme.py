@@ -1,7 +1,6 @@
 """What README.md, DEVELOPERS.md and CHANGELOG.md say is so: requests, answers, files, paths, settings."""
 
 import json
-import math
 import re
 import subprocess
 import sys
@@ -11,7 +10,7 @@ import pytest
 from openapi_examples.readme import FENCE, README, SERVER, pretty, renewed, shown
 from service import cli
 from service.settings import Settings, fields, variable
-from tests.serving import running
+from tests.serving import alike, running
 
 ROOT = README.parent
 TEXT = README.read_text(encoding="utf-8")
@@ -22,24 +21,12 @@ ANSWERED = [one for one in SHOWN if one.answer is not None]
 FILE = re.compile(r"`([\w.-][\w./-]*(?:\.(?:csv|json|lock|md|py|toml|ts|yaml)|[\w-]/))`")
 PATH = re.compile(r"`(/[\w./{}-]*)`")
 IN_THE_MAP = re.compile(r"^( *)([\w./]+(?:, [\w./]+)*)(?:  +|$)", re.MULTILINE)
-ELSEWHERE = 1e-12  # relative difference that other processors may make
 
 
 @pytest.fixture(scope="module")
 def client():
     with running() as client:
         yield client
-
-
-def alike(printed, came):
-    if isinstance(printed, dict):
-        same = printed.keys() - {"service_version"}
-        return printed.keys() == came.keys() and all(alike(printed[name], came[name]) for name in same)
-    if isinstance(printed, list):
-        return len(printed) == len(came) and all(map(alike, printed, came))
-    if isinstance(printed, float) and isinstance(came, float):
-        return math.isclose(printed, came, rel_tol=ELSEWHERE, abs_tol=1e-12)
-    return printed == came
 
 
 def test_the_first_request_has_its_answer():

@@ -116,4 +116,4 @@ def _difference(start: Array, width: Array) -> Array:
     close = width < np.maximum(1.0, 0.5 * start)
     t = start[..., None] + np.where(close, width, 0.0)[..., None] * (0.5 + 0.5 * NODES)
     slope = math.sqrt(2.0 / math.pi) - t * special.erfcx(ROOT_HALF * t)
-    return np.where(close, 0.5 * width * (slope @ WEIGHTS), apart)
+    return np.where(close, 0.5 * width * np.sum(slope * WEIGHTS, axis=-1), apart)

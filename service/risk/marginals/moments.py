@@ -97,13 +97,13 @@ def layer_mean(law: Tailed, start: float, stop: float) -> float:
         tails = law.beyond(np.array([low, stop]))
         y, weights = _panels(*_logarithms(tails))
         inside = np.clip(law.quantile(-np.expm1(-y), np.exp(-y)) - low, 0.0, stop - low)
-        total += float(weights @ (inside * np.exp(-y))) + (stop - low) * float(tails[1])
+        total += float(np.sum(weights * inside * np.exp(-y))) + (stop - low) * float(tails[1])
     if start < median:  # what is not hit, likewise from the other side
         high = min(stop, median)
         tails = law.below(np.array([high, start]))
         y, weights = _panels(*_logarithms(tails))
         inside = np.clip(high - law.quantile(np.exp(-y), -np.expm1(-y)), 0.0, high - start)
-        total += (high - start) * (1.0 - float(tails[1])) - float(weights @ (inside * np.exp(-y)))
+        total += (high - start) * (1.0 - float(tails[1])) - float(np.sum(weights * inside * np.exp(-y)))
     return total
 
 
@@ -142,7 +142,8 @@ def _both_sides(
     if mass > 0.5 and rest > 0.0:  # noqa: PLR2004  # the median
         y, weights = _panels(HALF, min(-math.log(rest), FARTHEST))
         excess, weights = far(y), weights * np.exp(-y)
-        first, second = first + float(weights @ excess), second + float(weights @ (excess * excess))
+        more = float(np.sum(weights * excess)), float(np.sum(weights * excess * excess))
+        first, second = first + more[0], second + more[1]
     elif mass > 0.5:  # noqa: PLR2004
         more = _tail(far, HALF, math.inf)
         first, second = first + more[0], second + more[1]
@@ -156,7 +157,7 @@ def _tail(excess: Callable[[Array], Array], start: float, index: float) -> tuple
     y, weights = _panels(start, FARTHEST)
     halved = excess(y) * np.exp(-0.5 * y)  # half of exp(-y) each, lest the square overflow
     last = float(excess(np.array([FARTHEST]))[0])
-    sums = (float(weights @ (halved * np.exp(-0.5 * y))), float(weights @ (halved * halved)))
+    sums = (float(np.sum(weights * halved * np.exp(-0.5 * y))), float(np.sum(weights * halved * halved)))
     moments = []
     for order, moment in enumerate(sums, start=1):
         if index <= order:

@@ -128,9 +128,9 @@ def _fit(target: Target, degree: int, count: int, *, exponential: bool) -> tuple
     values = np.column_stack([inner, np.append(inner[1:, 0], last)])
     if exponential:
         values = np.where(values == 0.0, NO_LOGARITHM, np.log(values))
-    powers = np.asarray(np.linalg.inv(np.vander(nodes, increasing=True)), dtype=np.float64)
-    coefficients = values @ powers.T
-    found = coefficients @ np.vander(tests, degree + 1, increasing=True).T
+    # einsum and not matmul: the sums must not depend on the number of threads
+    coefficients = np.einsum("ij,kj->ik", values, np.linalg.inv(np.vander(nodes, increasing=True)))
+    found = np.einsum("ij,kj->ik", coefficients, np.vander(tests, degree + 1, increasing=True))
     exact = target.function((lower[:, None] + width * (tests + 0.5)).ravel()).reshape(found.shape)
     error = np.abs((np.exp(found) if exponential else found) - exact)
     ratios = np.where(error == 0.0, 0.0, error / target.allowed(exact)).max(axis=1)  # NaN stays NaN

@@ -302,12 +302,11 @@ def _made(marginal: Tabulated, law: Law) -> ScoreTable:
 
 def _smooth(marginal: Tabulated, law: Law, axis: _Axis, start: Piece, stop: Piece) -> ScoreTable:
     """Return the table of a piece from the end of `start` to the end of `stop`."""
-    low, high = np.nextafter(start.lower, 1.0), max(stop.upper, SMALLEST)
-    most, least = np.nextafter(start.upper, 0.0) if start.lower > 0.0 else 1.0, max(low, SMALLEST)
+    lower_range = max(float(np.nextafter(start.lower, 1.0)), SMALLEST), stop.lower
+    upper_range = max(stop.upper, SMALLEST), float(np.nextafter(start.upper, 0.0))
 
     def exact(scores: Array) -> Array:
-        lower, upper = np.clip(law.lower(scores), least, stop.lower), np.clip(law.upper(scores), high, most)
-        return marginal.quantile(lower, upper)
+        return marginal.quantile(np.clip(law.lower(scores), *lower_range), np.clip(law.upper(scores), *upper_range))
 
     ends = _scores(law, np.array([start.lower, stop.lower]), np.array([start.upper, stop.upper]))
     begin, end = np.clip(axis.marks(ends, np.empty(2)), -axis.reach, axis.reach).tolist()

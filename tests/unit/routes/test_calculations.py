@@ -5,14 +5,14 @@ import json
 import socket
 from base64 import b64encode
 from threading import Event, Thread
-from time import monotonic, sleep
+from time import sleep
 
 import pytest
 
 from service import calculate
 from service.errors import NotDefined
 from service.routes import calculations
-from tests.serving import SMALL, assert_problem, running
+from tests.serving import SMALL, assert_problem, metric, running, until
 
 JSON = {"content-type": "application/json"}
 BODY = json.dumps(SMALL).encode()
@@ -25,18 +25,6 @@ LARGE = json.dumps(
 def client():
     with running(max_body_bytes=1 << 20, max_cells=1_000_000) as client:
         yield client
-
-
-def until(condition, seconds=10):
-    deadline = monotonic() + seconds
-    while not condition():
-        assert monotonic() < deadline, "nothing happened"
-        sleep(0.005)
-
-
-def metric(client, name):
-    lines = client.get("/metrics").text.splitlines()
-    return next((float(line.rpartition(" ")[2]) for line in lines if line.startswith(name)), 0.0)
 
 
 def digest(algorithm, body):

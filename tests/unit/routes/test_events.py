@@ -13,12 +13,12 @@ from service import calculate
 from service.errors import NotDefined
 from service.problems import STATUSES
 from service.routes import events
-from tests.serving import SMALL, assert_problem, running
-from tests.unit.routes.test_calculations import LARGE, metric, until
+from tests.serving import SMALL, assert_problem, metric, running, until
 from tests.unit.test_serve import serving
 
 ASK = {"accept": "text/event-stream", "content-type": "application/json"}
 BODY = json.dumps(SMALL).encode()
+LARGE = BODY + b" " * 200_000  # too long to be read before there is a place
 SIMULATED = {
     "losses": {
         "kind": "factors",
