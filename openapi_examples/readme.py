@@ -41,7 +41,7 @@ class Shown:
                 path = word.removeprefix(SERVER)
             elif word not in ("-s", "-sN"):
                 raise ValueError(f"README.md uses curl with {word}, which is not known here")
-        return client.post(path, content=body, headers=headers)
+        return client.request("POST" if body else "GET", path, content=body, headers=headers)
 
 
 def shown(text: str) -> list[Shown]:

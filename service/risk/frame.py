@@ -105,9 +105,9 @@ class Frame:
         """Return how deep `measure` looks; 1 where everything has to be ordered."""
         return depth_of(measure, self.scenarios, contributions=contributions) if self.table.plain else 1.0
 
-    def hold(self, rows: Array) -> None:
-        """Keep the rows (m, d + G) of the deepest ranking."""
-        self._rows = list(self._cut(self._turned(rows, np.arange(len(rows)))))
+    def hold(self, columns: Array) -> None:
+        """Keep the losses (d + G, m) of the deepest ranking, in its order."""
+        self._rows = list(self._cut(columns))
 
     @property
     def scenarios(self) -> int:

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from service.risk.effort import Effort
 from service.risk.fold import Sieve, completed_tails, sample_thresholds
-from service.risk.frame import CHUNK_BYTES, Frame, column_tail, deepest
+from service.risk.frame import Frame, column_tail, deepest
 from service.risk.loss_table import Group, SubPortfolio, check_magnitude, group_losses
 from service.risk.measures import RiskMeasure
 from service.risk.quantiles import Array, Indices
@@ -34,16 +34,16 @@ class StreamedLosses:
     numbers : ndarray of int of shape (k,)
         Scenarios that are held, ascending.
     places : ndarray of int of shape (k,)
-        Row of each in the chunks.
-    chunks : list of ndarrays of shape (k, c)
-        Their losses, some columns at a time, groups at the right.
+        Where each stands in the columns.
+    columns : ndarray of shape (d + G, k)
+        Their losses, groups at the end.
     """
 
     plan: Plan
     effort: Effort
     numbers: Indices
     places: Indices
-    chunks: list[Array]
+    columns: Array
 
     @classmethod
     def of(
@@ -55,10 +55,7 @@ class StreamedLosses:
         """
         places = np.argsort(order)
         numbers = order[places]
-        columns = plan.columns + len(groups)
-        width = max(1, CHUNK_BYTES // (8 * order.size))
-        chunks = [np.empty((order.size, min(width, columns - start))) for start in range(0, columns, width)]
-        held = cls(plan, effort, numbers, places, chunks)
+        held = cls(plan, effort, numbers, places, np.empty((plan.columns + len(groups), order.size)))
         found = np.zeros(order.size, dtype=bool)
         for part in parts:
             while part.rows:
@@ -75,10 +72,7 @@ class StreamedLosses:
         wanted = self.numbers[near] == numbers
         places = self.places[near[wanted]]
         found[places] = True
-        start = 0
-        for chunk in self.chunks:
-            chunk[places] = rows[wanted, start : start + chunk.shape[1]]
-            start += chunk.shape[1]
+        self.columns[:, places] = rows[wanted].T
 
     @property
     def shape(self) -> tuple[int, int]:
@@ -94,11 +88,9 @@ class StreamedLosses:
         near = np.minimum(np.searchsorted(self.numbers, numbers), self.numbers.size - 1)
         held = self.numbers[near] == numbers
         out = np.empty((numbers.size, self.plan.columns))
-        start = 0
-        for chunk in self.chunks:
-            part = out[:, start : start + chunk.shape[1]]
-            part[held] = chunk[self.places[near[held]], : part.shape[1]]
-            start += chunk.shape[1]
+        places = self.places[near[held]]
+        for column, losses in enumerate(self.columns[: self.plan.columns]):
+            out[held, column] = losses[places]
         if not held.all():
             out[~held] = self._again(numbers[~held])
         return out
@@ -219,7 +211,10 @@ def streamed(
         tails = completed_tails(thresholds, found, tail, effort, _Again(plan, groups, effort))
     ranking = ranked(totals, table, depth=depth)
     frame = Frame(table, groups, effort, None, totals, sums.sum(axis=0) / scenarios, tails, ranking)
-    frame.hold(_extended(table.losses.take(ranking.order), groups))
+    if ranking.order.size == losses.numbers.size:
+        frame.hold(losses.columns)
+    else:  # ties reached further than what is held
+        frame.hold(np.ascontiguousarray(_extended(losses.take(ranking.order), groups).T))
     return frame
 
 

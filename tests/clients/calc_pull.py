@@ -96,10 +96,12 @@ def described(cell):
 
 
 def used(sheet):
+    """Return the cells in use, each a text or a number, and their formulas."""
     cursor = sheet.createCursor()
     cursor.gotoEndOfUsedArea(False)
     end = cursor.RangeAddress
-    return [[described(sheet.getCellByPosition(c, r)) for c in range(end.EndColumn + 1)] for r in range(end.EndRow + 1)]
+    area = sheet.getCellRangeByPosition(0, 0, end.EndColumn, end.EndRow)
+    return {"values": [list(row) for row in area.DataArray], "formulas": [list(row) for row in area.FormulaArray]}
 
 
 def work(job, document, context):

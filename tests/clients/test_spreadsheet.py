@@ -112,12 +112,14 @@ def test_the_trap_of_the_decimal_comma_is_real(client):
 def test_a_linked_table(client, table, locale):
     url = f"{base(client)}/v1/books/ternholm/allocations.csv?{ES}"
     sheet = pull(locale=locale, links=[{"url": url, "options": CALC_OPTIONS}], refresh=1)["links"][0]
-    heads = [cell["text"] for cell in sheet[0]]
+    heads, *lines = sheet["values"]
     assert heads == list(table[0])
-    column = heads.index("contribution")
-    assert [line[column]["number"] for line in sheet[1:]] == [float(row["contribution"]) for row in table]
-    assert [line[heads.index("id")]["text"] for line in sheet[1:]] == [row["id"] for row in table]
-    assert not any(cell["formula"].startswith("=") for line in sheet for cell in line)
+    cells = [dict(zip(heads, line, strict=True)) for line in lines]
+    for column in ("contribution", "standard_error", "lower", "upper", "share", "stand_alone"):
+        expected = [float(row[column]) if row[column] else "" for row in table]
+        assert [cell[column] for cell in cells] == expected
+    assert [cell["id"] for cell in cells] == [row["id"] for row in table]
+    assert not any(formula.startswith("=") for line in sheet["formulas"] for formula in line)
 
 
 @needs_calc

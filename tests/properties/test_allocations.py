@@ -21,6 +21,7 @@ from tests.properties.tables import (
     bounded,
     ids,
     of_kind,
+    often,
     scale,
     tables,
     weighted_tables,
@@ -48,7 +49,7 @@ def stable(found, losses):
 @every_measure
 @pytest.mark.parametrize("rule", ADDITIVE)
 @bounded
-@given(weighted_tables(VARYING), st.sampled_from(SMOOTHINGS))
+@given(weighted_tables(VARYING, columns=4), st.sampled_from(SMOOTHINGS))
 def test_contributions_add_up(rule, one, table, smoothing):
     losses, p = table
     found = given_by(rule, one, losses, p, smoothing=smoothing)
@@ -74,7 +75,7 @@ def test_the_order_of_scenarios_and_columns_does_not_matter(one, table, random, 
 
 
 @every_rule
-@bounded
+@often
 @given(weighted_tables(VARYING, columns=4), st.sampled_from(MEASURES))
 def test_repeating_every_scenario_changes_no_contribution(rule, table, one):
     losses, p = table
@@ -87,7 +88,7 @@ def test_repeating_every_scenario_changes_no_contribution(rule, table, one):
 
 
 @every_rule
-@bounded
+@often
 @given(weighted_tables(VARYING, columns=4), st.sampled_from([one for one in MEASURES if one.kind != "entropic"]))
 def test_contributions_grow_with_the_size_of_the_book(rule, table, one):
     losses, p = table
@@ -98,7 +99,7 @@ def test_contributions_grow_with_the_size_of_the_book(rule, table, one):
 
 
 @every_rule
-@bounded
+@often
 @given(weighted_tables(VARYING, columns=4), st.sampled_from([one for one in MEASURES if one.above == "mean"]))
 def test_above_mean_takes_the_mean_from_the_euler_contributions(rule, table, one):
     losses, p = table
@@ -201,7 +202,7 @@ def test_euler_contributions_are_derivatives_in_size(one, table):
         assert found.values[i] == pytest.approx((up - down) / (2.0 * h), abs=1e-8 * scale(losses))
 
 
-@bounded
+@often
 @given(weighted_tables(["normal", "ties"], least=2, columns=3), st.sampled_from([0.05, 1.0, 20.0]))
 def test_entropic_contributions_are_derivatives_along_the_diagonal(table, aversion):
     """The figure of t L grows in t by the sum of contributions of the enlarged book: Aumann and Shapley."""
@@ -284,7 +285,7 @@ def test_another_seed_draws_other_orders():
 
 
 @every_rule
-@bounded
+@often
 @given(tables(["normal", "ties"], least=20), st.sampled_from(MEASURES))
 def test_a_population_has_no_errors(rule, losses, one):
     for found in (given_by(rule, one, losses, sampled=False), total(one, losses, sampled=False)):

@@ -12,6 +12,7 @@ from tests.properties.tables import (
     bounded,
     ids,
     of_kind,
+    often,
     scale,
     tables,
     weighted_tables,
@@ -56,7 +57,7 @@ def test_the_figure_grows_with_the_size_of_the_book(one, table, factor):
     assert value(one, factor * losses, p) == near(factor * value(one, losses, p), factor * losses, times=5.0)
 
 
-@bounded
+@often
 @given(weighted_tables(), st.sampled_from([1e-3, 0.5, 3.0, 100.0]))
 def test_entropic_grows_with_size_if_aversion_shrinks(table, factor):
     losses, p = table

@@ -11,7 +11,7 @@ from service.risk.allocation import RULES
 from service.risk.measures import TYPICAL
 from tests.serving import running
 
-ROWS, COLUMNS = 2500, 7
+ROWS, COLUMNS = 1200, 7
 
 
 def _body(losses, rules, measures, **more):

@@ -51,7 +51,7 @@ def _answers(one, losses):
 
 @pytest.mark.parametrize("kind", LOSSES)
 @pytest.mark.parametrize("one", TAILS, ids=ids)
-@pytest.mark.parametrize("n", [60, 501, 4000])
+@pytest.mark.parametrize("n", [60, 3000])
 def test_the_tail_answers_as_the_whole(monkeypatch, n, one, kind):
     losses = LOSSES[kind](np.random.default_rng(n), n)
     by_tail = _answers(one, losses)
@@ -60,7 +60,7 @@ def test_the_tail_answers_as_the_whole(monkeypatch, n, one, kind):
     monkeypatch.setattr(rankings, "MOST_PARTIAL", 0.0)
     assert framed(one, losses)._ranking.ordered.complete
     whole = _answers(one, losses)
-    if n == 4000 and kind in ("normal", "lognormal"):
+    if n == 3000 and kind in ("normal", "lognormal"):
         assert kept < 0.4 * n
     size = np.abs(losses).max() * 4.0
     for name, figures in whole.items():
@@ -94,7 +94,7 @@ def _exact_shortfall(losses, share):
 
 @pytest.mark.parametrize("kind", LOSSES)
 @pytest.mark.parametrize("level", [0.85, 0.9, 0.975, 0.995])
-@pytest.mark.parametrize("n", [40, 997, 2000])
+@pytest.mark.parametrize("n", [40, 997])
 def test_against_exact_fractions(n, level, kind):
     losses = LOSSES[kind](np.random.default_rng(n), n)
     share = 1 - decimal(level)
