@@ -16,11 +16,11 @@ from time import perf_counter
 import numpy as np
 from threadpoolctl import threadpool_limits
 
-from benchmarks import core, coverage, decoding, transport
+from benchmarks import core, coverage, decoding, simulation, transport
 from benchmarks.rows import Outcome, Pace, Row
 from service.executors import keep_freed_memory
 
-ROWS = (*core.ROWS, *transport.ROWS, *decoding.ROWS, *coverage.ROWS)
+ROWS = (*core.ROWS, *transport.ROWS, *decoding.ROWS, *coverage.ROWS, *simulation.ROWS)
 
 FULL = Pace(repeats=5, runs=2000, seconds=1.0)
 QUICK = Pace(repeats=3, runs=250, seconds=0.25)

@@ -13,7 +13,7 @@ from openpyxl.worksheet.worksheet import Worksheet
 
 from service import demo
 
-FILE = demo.FOLDER / "ternholm.xlsx"
+FILE = demo.FOLDER / demo.WORKBOOK
 ADDRESS = "http://127.0.0.1:8000"
 PARTS = ("ferry_hull", "ferry_liability", "cargo", "quay_property", "storm", "rates_book", "credit_book")
 SETTINGS = (

@@ -55,7 +55,8 @@ def _add_demo(commands: "argparse._SubParsersAction[argparse.ArgumentParser]") -
     demo = commands.add_parser(
         "demo",
         help="allocate the capital of an invented insurer",
-        description="Compute the allocation of Ternholm Mutual, an invented insurer, and print it.",
+        description="Compute the allocation of Ternholm Mutual, an invented insurer, from scenarios and from a factor "
+        "model, and print both.",
     )
     demo.set_defaults(run=_demo)
 
@@ -80,18 +81,25 @@ def _add_compute(commands: "argparse._SubParsersAction[argparse.ArgumentParser]"
         default="table",
         help="form of the answer (default table)",
     )
+    compute.add_argument("--books", metavar="DIR", help=f"folder of the books it names ({variable('books')})")
     compute.set_defaults(run=_compute)
 
 
 def _demo(_options: argparse.Namespace) -> int:
-    """Print the allocation of the demonstration and how to go on."""
+    """Print the allocations of the demonstration, from its scenarios and from a factor model, and how to go on."""
     from service import demo, intake
     from service.payloads import CSV
 
     def read(settings: Settings) -> "intake.Intake":
         return intake.read_parts("allocations", demo.request(), demo.table(), CSV, settings)
 
+    def read_model(settings: Settings) -> "intake.Intake":
+        return intake.read("allocations", demo.model(), content_type=intake.JSON, parameters=(), settings=settings)
+
     code = _answered(read, "table")
+    if code == 0:
+        print(demo.BETWEEN)
+        code = _answered(read_model, "table")
     if code == 0:
         print(demo.NEXT_STEPS, end="")
     return code
@@ -109,12 +117,15 @@ def _compute(options: argparse.Namespace) -> int:
     def read(settings: Settings) -> intake.Intake:
         return intake.read(options.to, body, content_type=intake.JSON, parameters=(), settings=settings)
 
+    if options.books is not None:
+        os.environ[variable("books")] = options.books
     return _answered(read, options.form)
 
 
 def _answered(read: "Callable[[Settings], Intake]", form: str) -> int:
     """Compute in this process and print the answer; return the exit code."""
     from service import calculate, problems
+    from service.books import Books
     from service.errors import TailraceError
     from service.executors import Work
     from service.representations import formats
@@ -126,7 +137,8 @@ def _answered(read: "Callable[[Settings], Intake]", form: str) -> int:
         return _complain(str(error), BAD_USAGE)
     bar = ProgressBar()
     try:
-        answer = calculate.answer(read(settings), Work(settings.threads, bar), settings, problems.describe)
+        work = Work(settings.threads, bar)
+        answer = calculate.answer(Books(settings).resolved(read(settings), work), work, settings, problems.describe)
     except TailraceError as error:
         bar.end()
         return _complain(complaint(error), BAD_USAGE)

@@ -235,9 +235,7 @@ def read_query(calculation: str, document: dict[str, Any]) -> Intake:
         Naming the parameters.
     """
     with in_parameters():
-        return Intake(
-            calculation, _validated(calculation, document, payloads.json_text(document)), None, by_query=True
-        )
+        return Intake(calculation, _validated(calculation, document, payloads.json_text(document)), None, by_query=True)
 
 
 @contextmanager

@@ -6,8 +6,13 @@ FOLDER = Path(__file__).parent
 """Also a folder of books."""
 REQUEST = "ternholm.json"
 TABLE = "ternholm.csv"
+MODEL = "ternholm_model.json"
+WORKBOOK = "ternholm.xlsx"
 
 
+BETWEEN = """
+The same insurer as a factor model, simulated here: claims with their covers, market factors, counterparties.
+"""
 NEXT_STEPS = """
 The same over HTTP: start the service and open its page.
 
@@ -19,6 +24,11 @@ The same over HTTP: start the service and open its page.
 def request() -> bytes:
     """Return the allocation request of the demonstration, whose table stands in the part `table`."""
     return FOLDER.joinpath(REQUEST).read_bytes().replace(f'"file": "{TABLE}"'.encode(), b'"part": "table"')
+
+
+def model() -> bytes:
+    """Return the allocation request of the same insurer as a factor model, to be simulated."""
+    return FOLDER.joinpath(MODEL).read_bytes()
 
 
 def table() -> bytes:

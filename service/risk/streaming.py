@@ -20,7 +20,7 @@ from service.risk.ranking import ranked, worst
 from service.risk.simulation import Plan, Workbench
 
 SAMPLED = 64  # one block in so many foretells the thresholds, and is then simulated once more
-MOST_SAMPLED = 32  # such blocks
+MOST_SAMPLED = 16  # such blocks
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -177,11 +177,19 @@ def streamed(
     def made(number: int) -> Array:
         return _extended(plan.losses(number, bench.scratch, pause=effort.checkpoint), groups)
 
-    sample = np.concatenate(effort.map(made, range(min(max(1, plan.blocks // SAMPLED), MOST_SAMPLED))))
-    sums_of_sample = np.add.reduce(sample[:, : plan.columns], axis=1)
-    least = sample_thresholds(sums_of_sample[:, None], int(depth * scenarios) + 1, scenarios)[0]
-    thresholds = None if tail is None else sample_thresholds(sample, tail, scenarios)
-    del sample
+    def sampled(number: int) -> tuple[Array, Array | None]:
+        block = made(number)
+        return np.add.reduce(block[:, : plan.columns], axis=1), None if tail is None else block
+
+    samples = effort.map(sampled, range(min(max(1, plan.blocks // SAMPLED), MOST_SAMPLED)))
+    known = np.concatenate([total for total, _ in samples])[:, None]
+    least = sample_thresholds(known, int(depth * scenarios) + 1, scenarios)[0]
+    thresholds = None
+    if tail is not None:
+        rows = np.concatenate([block for _, block in samples if block is not None])
+        thresholds = sample_thresholds(rows, tail, scenarios)
+        del rows
+    del samples
     totals = np.empty(scenarios)
     sums = np.empty((plan.blocks, columns))
     workers = min(effort.threads, plan.blocks)

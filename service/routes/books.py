@@ -10,10 +10,10 @@ from typing import Any
 from urllib.parse import urlencode
 
 from starlette.requests import Request
-from starlette.responses import Response
+from starlette.responses import FileResponse, Response
 from starlette.routing import Route
 
-from service import __version__, problems, pulls, query, values
+from service import __version__, demo, problems, pulls, query, values
 from service.books import Book, Books
 from service.calculate import Answer, Drawing
 from service.desk import Desk
@@ -42,6 +42,7 @@ PATHS: Mapping[str, str] = {
 }
 """Path of each question."""
 PRIVATE = "private, no-cache"
+WORKBOOK_TYPE = "application/vnd.openxmlformats-officedocument.spreadsheetml.sheet"
 PAGE = HTML.content_type
 SERVICE_LINKS = '</openapi.json>; rel="service-desc", </docs>; rel="service-doc"'
 ENTITY_TAG = re.compile(r'(?:W/)?("[\x21\x23-\x7e\x80-\xff]*")')
@@ -94,6 +95,7 @@ def routes(*, settings: Settings, books: Books, desk: Desk, metrics: Metrics) ->
     made = [
         door("/", {"GET": partial(_front, reading)}),
         door("/spreadsheets", {"GET": partial(_spreadsheets, reading)}),
+        door(f"/spreadsheets/{demo.WORKBOOK}", {"GET": _workbook}),
     ]
     for kind, path in PATHS.items():
         made += [
@@ -246,6 +248,11 @@ async def _spreadsheets(reading: Reading, request: Request) -> Response:
     heads = await _heads(reading, request)
     base = str(request.base_url).rstrip("/")
     return _page(spreadsheet_page(base, heads, root=request.scope.get("root_path", "")))
+
+
+async def _workbook(_request: Request) -> Response:
+    """Answer the example workbook, which asks the demonstration's book."""
+    return FileResponse(demo.FOLDER / demo.WORKBOOK, media_type=WORKBOOK_TYPE, filename=demo.WORKBOOK)
 
 
 def _page(content: str, **headers: str) -> Response:

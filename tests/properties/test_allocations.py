@@ -278,10 +278,10 @@ def test_drawn_orders_come_near_all_orders():
 
 
 def test_another_seed_draws_other_orders():
-    losses = np.random.default_rng(5).lognormal(size=(60, 13))
-    first, again, other = (contributions("shapley", es(0.8), losses, seed=seed) for seed in (1, 1, 2))
-    assert first.tolist() == again.tolist()
+    losses = np.random.default_rng(5).lognormal(size=(20, 13))
+    first, other = (contributions("shapley", es(0.75), losses, seed=seed) for seed in (1, 2))
     assert first.tolist() != other.tolist()
+    assert first.sum() == pytest.approx(other.sum(), rel=1e-12)
 
 
 @every_rule

@@ -9,6 +9,7 @@ import pyarrow as pa
 import pyarrow.parquet
 import pytest
 
+from openapi_examples import FOLDER
 from service import demo
 from service.books import Books
 from service.errors import NotDefined, NotFound
@@ -324,7 +325,17 @@ def test_files_that_change_while_they_are_read(folder, monkeypatch):
 def test_no_folder_no_books_and_own_books_win():
     assert Books(Settings()).names() == []
     assert Books(Settings(books="/nowhere/at/all")).names() == []
-    assert Books(Settings(demo=True)).names()[-1:] == ["ternholm"]
+    assert Books(Settings(demo=True)).names() == ["ternholm", "ternholm_model"]
+
+
+def test_the_books_of_the_demonstration():
+    books = Books(Settings(demo=True))
+    assert [(one.name, one.state, one.kind) for one in books.described(WORK)] == [
+        ("ternholm", "ready", "scenarios"),
+        ("ternholm_model", "ready", "factors"),
+    ]
+    example = FOLDER / "insurer_model.request.json"
+    assert (demo.FOLDER / "ternholm_model.json").read_bytes() == example.read_bytes()
 
 
 def test_own_books_win_over_those_of_the_demonstration(folder):

@@ -12,7 +12,7 @@ from service.routes.doors import Door
 from service.settings import Settings
 
 DOCUMENT = openapi.build()
-UNDOCUMENTED = re.compile(r"/|/spreadsheets|/openapi\.json|/docs(/.*)?|/v1/[\w/{}]+\.\w+")
+UNDOCUMENTED = re.compile(r"/|/spreadsheets(/.*)?|/openapi\.json|/docs(/.*)?|/v1/[\w/{}]+\.\w+")
 
 
 def schemas(node, where=""):

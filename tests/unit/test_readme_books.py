@@ -11,7 +11,8 @@ from service.representations.spreadsheet import CALC_OPTIONS, cell_formulas
 from tests.serving import running
 
 TEXT = README.read_text(encoding="utf-8")
-PLAIN = re.findall(r"^```\n(.*?)^```$", TEXT[TEXT.index("## Books") :], re.MULTILINE | re.DOTALL)
+FENCES = re.findall(r"^```(\w*)\n(.*?)^```$", TEXT, re.MULTILINE | re.DOTALL)
+PLAIN = [words for language, words in FENCES if not language]
 
 
 @pytest.fixture(scope="module")

@@ -447,6 +447,30 @@ def test_the_report_and_the_pages(client):
             assert client.get(address.replace("&amp;", "&")).status_code == 200, address
 
 
+def test_the_example_workbook(client):
+    answer = client.get("/spreadsheets/ternholm.xlsx")
+    assert answer.content.startswith(b"PK")
+    assert answer.headers["content-type"].endswith("spreadsheetml.sheet")
+    assert 'filename="ternholm.xlsx"' in answer.headers["content-disposition"]
+    assert client.head("/spreadsheets/ternholm.xlsx").content == b""
+
+
+def test_a_factor_model_is_asked_like_any_book():
+    with running(demo=True) as client:
+        home = "/v1/books/ternholm_model"
+        contributions = rows(client.get(f"{home}/allocations.csv?{ES}&group_by="))
+        total = float(contributions[0]["contribution"])
+        parts = [row for row in contributions if row["scope"] == "sub_portfolio"]
+        assert sum(float(row["contribution"]) for row in parts) == pytest.approx(total, rel=1e-12)
+        cell = client.get(f"{home}/value.txt?of=contribution&sub_portfolio={parts[0]['id']}&{ES}")
+        assert float(cell.text) == pytest.approx(float(parts[0]["contribution"]), rel=1e-12)
+        step = client.get(f"{home}/increments.txt?sub_portfolio={parts[0]['id']}&scale=1.000001&{ES}")
+        assert float(step.text) / 1e-6 == pytest.approx(float(cell.text), rel=1e-4)
+        svg = client.get(f"{home}/allocations.svg?{ES}&chart=exceedance")
+        assert svg.text.startswith("<svg")
+        assert client.get(f"{home}/report").status_code == 200
+
+
 ENCODED = [
     "/v1/books/%2e%2e",
     "/v1/books/..%2f..%2fetc%2fpasswd",
