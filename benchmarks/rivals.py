@@ -9,7 +9,7 @@ from pydantic import BaseModel
 
 from service import calculate, problems
 from service.executors import Work
-from service.intake import REQUESTS, Intake
+from service.intake import ADAPTERS, Intake
 from service.schemas.results import AllocationsAnswer
 from service.settings import Settings
 
@@ -54,6 +54,6 @@ def allocations(asked: Asked) -> AllocationsAnswer:
     values = np.asarray(asked.losses.values)
     document = asked.model_dump(exclude={"losses": {"values"}})
     document["losses"]["values"] = []
-    request = REQUESTS["allocations"].validate_json(orjson.dumps(document))
+    request = ADAPTERS["allocations"].validate_json(orjson.dumps(document))
     taken = Intake("allocations", request, values)
     return calculate.answer(taken, Work(SETTINGS.threads), SETTINGS, problems.describe)

@@ -10,7 +10,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from service.errors import NotDefined
-from service.risk.figures import figure_of, judged, lean_of_total
+from service.risk.figures import figure_of, judged, moved_total
 from service.risk.frame import Frame
 from service.risk.measures import RiskMeasure, Smoothing
 from service.risk.quantiles import Array
@@ -66,7 +66,7 @@ class Case:
         """
         if not self.frame.table.sampled:
             return Estimates.exact(values)
-        lean, _ = lean_of_total(self.frame, self.measure)
+        lean = float(moved_total(self.frame, self.measure).lean[0])
         of = spread(_free(influence), self.frame.sampling, beside=_free(total[None, :]))
         if extra is not None:
             of = replace(of, errors=np.sqrt(of.errors**2 + extra))
@@ -106,23 +106,26 @@ def euler(case: Case) -> Contributions:
     ranking = frame.ranking(measure)
     ordered, ties = ranking.ordered, ranking.ties
     weights = measure.contribution_weights(ordered, ties, case.smoothing)
-    lean, total = lean_of_total(frame, measure) if ordered.sampled else (0.0, None)
+    moved = moved_total(frame, measure) if ordered.sampled else None
 
     def part(rows: Array) -> tuple[Array, Spread | None]:
         values = weights.values @ rows
         if measure.above == "mean":
             values = values - ties.p @ rows
-        if total is None:
+        if moved is None:
             return values, None
         influence = measure.contribution_influence(ordered, ties, rows, weights)
         if measure.above == "mean":
             influence = Influence(influence.values - rows.T, influence.rest)
-        return values, spread(influence, Sampling.of(ordered), beside=total)
+        return values, spread(influence, Sampling.of(ordered), beside=moved.influence)
 
     parts = frame.effort.map(part, frame.rows(ranking))
     values = np.concatenate([part for part, _ in parts])
-    spreads = [of for _, of in parts if of is not None]
-    figures = case.estimates(values, Spread.joined(spreads), lean) if spreads else Estimates.exact(values)
+    if moved is None:
+        figures = Estimates.exact(values)
+    else:
+        of = Spread.joined([of for _, of in parts if of is not None])
+        figures = case.estimates(values, of, float(moved.lean[0]))
     return Contributions(figures.remarked("smoothed_quantile") if weights.window else figures, weights.window)
 
 

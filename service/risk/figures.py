@@ -1,6 +1,7 @@
 """Figures of a measure with their errors: of the total, of each column alone, of any loss."""
 
-from dataclasses import replace
+from collections.abc import Callable
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -11,6 +12,7 @@ from service.risk.uncertainty import (
     Estimates,
     Influence,
     Sampling,
+    Spread,
     judged_by_carriers,
     judged_by_tail,
     leaning_estimates,
@@ -19,7 +21,41 @@ from service.risk.uncertainty import (
 )
 
 
-def estimates(measure: RiskMeasure, ordered: Ordered, coverage: float) -> Estimates:
+@dataclass(frozen=True, slots=True)
+class Moved:
+    """What the errors of the figures of c ordered distributions are made of.
+
+    Attributes
+    ----------
+    influence : Influence
+    of : Spread
+        Of the influence values.
+    lean : ndarray of shape (c,)
+        Of the intervals.
+    method : str
+        How they are made.
+    """
+
+    influence: Influence
+    of: Spread
+    lean: Array
+    method: str
+
+    @classmethod
+    def by(cls, measure: RiskMeasure, ordered: Ordered) -> "Moved":
+        """Return what moves the figures of `measure`."""
+        values = measure.values(ordered)
+        influence = full_influence(measure, ordered, values)
+        of = spread(influence, Sampling.of(ordered))
+        lean = measure.lean(ordered, values, of)
+        if lean is None:
+            return cls(influence, of, usual_lean(of), "skewness_adjusted")
+        return cls(influence, of, lean, "log_mean_excess")
+
+
+def estimates(
+    measure: RiskMeasure, ordered: Ordered, coverage: float, moved: Callable[[], Moved] | None = None
+) -> Estimates:
     """Return the figures of c ordered distributions with their errors.
 
     Parameters
@@ -29,6 +65,8 @@ def estimates(measure: RiskMeasure, ordered: Ordered, coverage: float) -> Estima
         c distributions.
     coverage : float
         Nominal coverage of the intervals.
+    moved : callable, optional
+        Gives what the errors are made of, where it may be known.
     """
     values = full_values(measure, ordered)
     if not ordered.sampled:
@@ -38,17 +76,10 @@ def estimates(measure: RiskMeasure, ordered: Ordered, coverage: float) -> Estima
         interval, own = measure.interval(ordered, coverage), measure.errors(ordered)
         if interval is not None and own is not None and tail is not None:
             return without_gaps(Estimates(values, own, interval.lower, interval.upper, tail, "order_statistics"))
-    of = spread(full_influence(measure, ordered), Sampling.of(ordered))
+    made_of = Moved.by(measure, ordered) if moved is None else moved()
+    of, lean, method = made_of.of, made_of.lean, made_of.method
     counts = of.effective if tail is None else tail
-    lean = measure.lean(ordered, values, of)
-    if lean is None:
-        lean, method = usual_lean(of), "skewness_adjusted"
-    else:
-        method = "log_mean_excess"
-    return judged(
-        measure,
-        leaning_estimates(values, of, lean, coverage=coverage, tail_scenarios=counts, method=method),
-    )
+    return judged(measure, leaning_estimates(values, of, lean, coverage=coverage, tail_scenarios=counts, method=method))
 
 
 def judged(measure: RiskMeasure, figures: Estimates) -> Estimates:
@@ -71,7 +102,15 @@ def without_gaps(figures: Estimates) -> Estimates:
 
 def total(frame: Frame, measure: RiskMeasure, coverage: float) -> Estimates:
     """Return the figure of the total, shape (1,)."""
-    return estimates(measure, frame.ranking(measure).ordered, coverage)
+    return estimates(measure, frame.ranking(measure).ordered, coverage, lambda: moved_total(frame, measure))
+
+
+def moved_total(frame: Frame, measure: RiskMeasure) -> Moved:
+    """Return what the error of the total is made of, in the order of the ranking; made once for all who ask."""
+    if measure not in frame.known:
+        frame.known[measure] = Moved.by(measure, frame.ranking(measure).ordered)
+    moved: Moved = frame.known[measure]
+    return moved
 
 
 def stand_alone(frame: Frame, measure: RiskMeasure, coverage: float) -> Estimates:
@@ -91,15 +130,6 @@ def expected_loss(frame: Frame, coverage: float) -> Estimates:
     of = spread(influence, frame.sampling)
     unknown = np.full(1, np.nan)
     return without_gaps(leaning_estimates(values, of, usual_lean(of), coverage=coverage, tail_scenarios=unknown))
-
-
-def lean_of_total(frame: Frame, measure: RiskMeasure) -> tuple[float, Influence]:
-    """Return how far the interval of the total leans, and its influence values in the order of the ranking."""
-    ordered = frame.ranking(measure).ordered
-    influence = full_influence(measure, ordered)
-    of = spread(influence, Sampling.of(ordered))
-    lean = measure.lean(ordered, full_values(measure, ordered), of)
-    return float((usual_lean(of) if lean is None else lean)[0]), influence
 
 
 def tail_scenarios(frame: Frame, level: float) -> tuple[Indices, Array]:

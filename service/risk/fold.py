@@ -231,5 +231,6 @@ def completed_tails(
             found.sort()
             tails[j] = found[: -tail - 1 : -1]
 
-    effort.map(work, np.array_split(np.arange(count), min(count, 4 * effort.threads)))
+    pieces = min(count, 4 * effort.threads, 1 + count * tail // BATCH)
+    effort.map(work, np.array_split(np.arange(count), pieces))
     return tails

@@ -2,6 +2,7 @@
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 
@@ -18,7 +19,7 @@ CHUNK_BYTES = 1 << 25  # of sorted columns held at a time
 KEPT_BYTES = 1 << 28  # of the tail's rows held between measures
 PIECE_BYTES = 1 << 20  # of columns worked on at a time: they and what is made of them stay in the cache
 LEAST_COLUMNS = 16  # of a piece: what is made of the total alone is made once for each piece
-TURNED_ROWS = 64  # turned into columns at a time
+TURNED_BYTES = 1 << 18  # of rows turned into columns at a time
 
 
 def depth_of(measure: RiskMeasure, scenarios: int, *, contributions: bool) -> float:
@@ -55,6 +56,8 @@ class Frame:
     totals : ndarray of shape (n,)
     expected : ndarray of shape (d + G,)
         Mean loss of each column.
+    known : dict
+        What was found out about the total, by measure.
     """
 
     table: Scenarios
@@ -67,6 +70,7 @@ class Frame:
     _ranking: Ranking
     _rows: list[Array] = field(default_factory=list)
     _whole: Ranking | None = None
+    known: dict[RiskMeasure, Any] = field(default_factory=dict)
 
     @classmethod
     def of(
@@ -180,12 +184,13 @@ class Frame:
     def _turned(self, columns: Array, order: Indices) -> Array:
         """Return the rows `order` of `columns` (n, c) as an array of shape (c, m)."""
         turned = np.empty((columns.shape[1], order.size))
+        height = max(1, TURNED_BYTES // (8 * max(1, columns.shape[1])))
 
         def turn(start: int) -> None:
-            part = slice(start, start + TURNED_ROWS)
+            part = slice(start, start + height)
             turned[:, part] = columns[order[part]].T
 
-        self.effort.map(turn, range(0, order.size, TURNED_ROWS))
+        self.effort.map(turn, range(0, order.size, height))
         return turned
 
     def alone(self, measure: RiskMeasure) -> Iterator[Ordered]:

@@ -4,10 +4,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from service.risk.figures import estimates, figure_of, judged
+from service.risk.figures import estimates, judged
 from service.risk.frame import Frame
 from service.risk.measures import ContributionWeights, RiskMeasure, full_influence, full_values
-from service.risk.quantiles import Array
+from service.risk.quantiles import Array, Indices
 from service.risk.ranking import Ranking, ranked_with
 from service.risk.uncertainty import (
     Estimates,
@@ -31,6 +31,10 @@ class Base:
         Of the total.
     influence : ndarray of shape (n,)
         Of the total, in scenario order.
+    order : ndarray of int of shape (m,)
+        Scenarios whose influence is not that of the rest.
+    rest : float
+        Influence of the rest.
     contributions : ndarray of shape (d,)
         Euler contributions of the sub-portfolios.
     """
@@ -38,6 +42,8 @@ class Base:
     measure: RiskMeasure
     value: float
     influence: Array
+    order: Indices
+    rest: float
     contributions: Array
 
 
@@ -68,9 +74,13 @@ class Increment:
 
 def base_of(frame: Frame, measure: RiskMeasure) -> Base:
     """Return what all candidates share."""
-    value, influence = figure_of(frame, measure, frame.totals)
+    ordered, order = frame.one(frame.totals, measure)
+    influence = full_influence(measure, ordered)
+    rest = float(influence.rest[0])
+    values = np.full(frame.scenarios, rest)
+    values[order] = influence.values[0]
     contributions = _parts(measure, frame.ranking(measure), frame)
-    return Base(measure, value, influence, contributions)
+    return Base(measure, float(full_values(measure, ordered)[0]), values, order, rest, contributions)
 
 
 def increment_of(frame: Frame, base: Base, loss: Array, coverage: float) -> Increment:
@@ -112,9 +122,14 @@ def _difference(frame: Frame, base: Base, ranking: Ranking, coverage: float) -> 
     if not ordered.sampled:
         return Estimates.exact(difference)
     influence = full_influence(measure, ordered)
-    values = influence.rest[0] - base.influence
-    values[ranking.order] = influence.values[0] - base.influence[ranking.order]
-    of = spread(Influence(values[None, :], np.zeros(1)), frame.sampling)
+    sampling = frame.sampling
+    inside = np.arange(frame.scenarios)
+    if frame.table.plain and base.order.size + ranking.order.size < frame.scenarios:
+        inside = np.union1d(base.order, ranking.order)  # elsewhere all differ by the same
+        sampling = Sampling(frame.scenarios)
+    values = influence.rest[0] - base.influence[inside]
+    values[np.searchsorted(inside, ranking.order)] = influence.values[0] - base.influence[ranking.order]
+    of = spread(Influence(values[None, :], influence.rest - base.rest), sampling)
     tail = measure.tail_of(ordered)
     counts = of.effective if tail is None else tail
     figures = leaning_estimates(difference, of, usual_lean(of), coverage=coverage, tail_scenarios=counts)

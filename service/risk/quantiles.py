@@ -104,7 +104,7 @@ class Ordered:
 
     def mass(self, share: Fraction) -> float:
         """Return the mass of a share of everything; exact on the caller's decimal when counts are."""
-        return float(share * self.scenarios) if self.probabilities is None else float(share)
+        return share.numerator * self.scenarios / share.denominator if self.probabilities is None else float(share)
 
     def snapped(self, mass: float) -> Array:
         """Return `upper` with what lies within the slack of `mass` put on it."""
@@ -130,8 +130,8 @@ class Ordered:
 
     def at(self, positions: Indices) -> Array:
         """Return the values at one position per distribution, shape (c,)."""
-        rows = np.arange(self.values.shape[0])
-        return self.values[rows, np.broadcast_to(positions, rows.shape)]
+        found: Array = self.values[np.arange(self.values.shape[0]), positions]
+        return found
 
     def tail_weights(self, share: Fraction) -> Array:
         """Return weights of the mean over the worst `share`, the position on the boundary split.
@@ -143,7 +143,9 @@ class Ordered:
         """
         mass = self.mass(share)
         taken = np.minimum(self.snapped(mass), mass)
-        return np.diff(taken, axis=-1, prepend=0.0) / mass
+        taken[..., 1:] -= taken[..., :-1]
+        taken /= mass
+        return taken
 
     def effective_tail(self, share: Fraction) -> Array:
         """Return the effective number of scenarios in the worst `share`: (sum p)^2 / sum p^2, shape (c,).
@@ -223,7 +225,7 @@ def quantile_interval(ordered: Ordered, share: Fraction, coverage: float) -> Qua
     if ordered.probabilities is None and ordered.clusters is None:
         low, high, actual = order_statistic_ranks(ordered.scenarios, level, coverage)
         deepest = ordered.scenarios - low
-        if high > ordered.scenarios or low < 1:
+        if high > ordered.scenarios or low < 1 or deepest >= ordered.values.shape[-1]:  # no such rank, or not kept
             return QuantileInterval(missing, missing, coverage)
         return QuantileInterval(ordered.values[:, deepest], ordered.values[:, ordered.scenarios - high], actual)
     z = float(special.ndtri((1.0 + coverage) / 2.0))

@@ -21,6 +21,7 @@ LEAST_CARRIERS = 5.0  # effective carriers of a measure of the whole distributio
 FULL_CARRIERS = 15.0  # effective carriers below which an error is given with a note; both calibrated by simulation
 LEAST_FREEDOM = 4.0  # degrees of freedom of an interval
 USUAL_LEAN = 2.0 / 3.0  # of the skewness
+SIDES = np.array([[-1.0], [1.0]])  # the lower and the upper end of an interval
 SLIGHT_LEAN = 1e-8  # lean times quantile below which an interval is symmetric to binary64
 
 
@@ -214,13 +215,12 @@ def leaning_estimates(  # each is a property of the figures
     that is symmetric for the logarithm of the excess over q. Coverage was calibrated by simulation.
     """
     freedom = np.maximum(LEAST_FREEDOM, 2.0 * of.effective)
-    t = special.stdtrit(freedom, (1.0 + coverage) / 2.0)
-    flat = ~(np.abs(lean * t) > SLIGHT_LEAN)
-    bend = np.where(flat, 1.0, lean)
+    t = SIDES * special.stdtrit(freedom, (1.0 + coverage) / 2.0)
+    bent = lean * t
+    flat = ~(np.abs(bent) > SLIGHT_LEAN)
     with np.errstate(over="ignore"):  # an end beyond the largest number is found and taken away by `without_gaps`
-        lower, upper = (
-            values + of.errors * np.where(flat, side * t, np.expm1(side * t * bend) / bend) for side in (-1.0, 1.0)
-        )
+        reach = np.where(flat, t, np.expm1(bent) / np.where(flat, 1.0, lean))
+        lower, upper = values + of.errors * reach
     return Estimates(values, of.errors, lower, upper, tail_scenarios, method)
 
 

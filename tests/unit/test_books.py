@@ -10,7 +10,7 @@ import pyarrow.parquet
 import pytest
 
 from openapi_examples import FOLDER
-from service import demo
+from service import cli, demo
 from service.books import Books
 from service.errors import NotDefined, NotFound
 from service.executors import Work
@@ -342,3 +342,23 @@ def test_own_books_win_over_those_of_the_demonstration(folder):
     put(folder, "ternholm.json", {"kind": "scenarios", "sub_portfolios": [{"id": "own"}], "values": [[1.0]]})
     books = Books(Settings(books=str(folder), demo=True))
     assert books.description("ternholm", WORK).sub_portfolios[0].id == "own"
+
+
+def test_a_request_without_a_server_may_name_a_book(folder, tmp_path, capsysbinary, monkeypatch):
+    put(folder, "port.json", FILED)
+    put(folder, "losses.csv", CSV)
+    request = tmp_path / "request.json"
+    measures = [{"kind": "value_at_risk", "level": 0.5}]
+    request.write_text(json.dumps({"losses": {"kind": "book", "name": "port"}, "measures": measures}))
+    monkeypatch.setenv("TAILRACE_BOOKS", "")
+    command = ["compute", str(request), "--to", "measures", "--as", "json"]
+    assert cli.main([*command, "--books", str(folder)]) == 0
+    answer = json.loads(capsysbinary.readouterr().out)
+    assert answer["provenance"]["losses_digest"] == books_digest(folder)
+    monkeypatch.setenv("TAILRACE_BOOKS", "")
+    assert cli.main(command) == 2
+    assert b"there is no book 'port' here" in capsysbinary.readouterr().err
+
+
+def books_digest(folder):
+    return Books(Settings(books=str(folder))).get("port", WORK).source.digest

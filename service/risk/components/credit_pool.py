@@ -265,16 +265,16 @@ class _Bucket:
             np.repeat(np.arange(len(entries)), counts) if len(entries) > DENSE else np.empty(0, dtype=np.intp),
         )
 
-    def add(self, scores: Array, generator: Generator, out: Array) -> None:
+    def add(self, scores: Array, block: Block, out: Array) -> None:
         """Add the losses given normal scores (k, n) to `out` (n,)."""
         if self.start.size <= DENSE:
-            self._one_by_one(scores, np.arange(out.size), generator, out)
+            self._one_by_one(scores, np.arange(out.size), block, out)
             return
         bound = special.ndtr(self._highest(scores))
         likely = bound > LIKELY
-        self._one_by_one(scores[:, likely], np.flatnonzero(likely), generator, out)
+        self._one_by_one(scores[:, likely], np.flatnonzero(likely), block, out)
         rate = -np.log1p(-np.where(likely, 0.0, bound))
-        self._thinned(scores, rate, generator, out)
+        self._thinned(scores, rate, block.generator, out)
 
     def _highest(self, scores: Array) -> Array:
         """Return a bound on start - slopes @ Z over the entries, shape (n,)."""
@@ -283,10 +283,12 @@ class _Bucket:
             highest -= np.minimum(slopes.min() * score, slopes.max() * score)
         return highest
 
-    def _one_by_one(self, scores: Array, scenarios: Indices, generator: Generator, out: Array) -> None:
+    def _one_by_one(self, scores: Array, scenarios: Indices, block: Block, out: Array) -> None:
         """Draw the number of defaults of each entry in the scenarios given."""
+        generator = block.generator
         rows = max(PIECE // self.start.size, 1)
         for start in range(0, scenarios.size, rows):
+            block.pause()
             part = slice(start, start + rows)
             index = self.start - scores[:, part].T @ self.slopes
             chance = special.ndtr(index)
@@ -321,4 +323,4 @@ class _Pool:
         out.fill(0.0)
         for bucket in self.buckets:
             block.pause()
-            bucket.add(block.normal_scores(bucket.columns), block.generator, out)
+            bucket.add(block.normal_scores(bucket.columns), block, out)

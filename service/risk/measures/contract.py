@@ -122,8 +122,7 @@ class RiskMeasure:
 
     def values(self, ordered: Ordered) -> Array:
         """Return the figures, shape (c,), without regard to `above`."""
-        weights = self.weights(ordered)
-        return np.einsum("ij,ij->i", np.broadcast_to(weights, ordered.values.shape), ordered.values)
+        return np.vecdot(self.weights(ordered), ordered.values)
 
     def influence(self, ordered: Ordered, values: Array) -> Influence:
         """Return influence values of the figures `values` (c,), without regard to `above`."""
@@ -181,9 +180,9 @@ def full_values(measure: RiskMeasure, ordered: Ordered) -> Array:
     return values - means(ordered) if measure.above == "mean" else values
 
 
-def full_influence(measure: RiskMeasure, ordered: Ordered) -> Influence:
-    """Return influence values of the figures with regard to `above`."""
-    influence = measure.influence(ordered, measure.values(ordered))
+def full_influence(measure: RiskMeasure, ordered: Ordered, values: Array | None = None) -> Influence:
+    """Return influence values of the figures with regard to `above`; `values` without regard to it, if known."""
+    influence = measure.influence(ordered, measure.values(ordered) if values is None else values)
     if measure.above == "mean":
         return Influence(influence.values - ordered.values, influence.rest)
     return influence

@@ -26,6 +26,7 @@ EXPECTILE_WINDOW = 0.9  # half width of the window for the density at an expecti
 AT_EXPECTILE = 1e-12  # of the largest loss: an atom so near is at the expectile, whose own rounding is of this order
 NODES = 16  # Gauss-Legendre nodes of each panel of the Aumann-Shapley integral
 MOST_PANELS = 64  # aversion times range up to 2^64; beyond it the measure is the largest loss in all but name
+LEAST_EXPONENT = 2.0**-1022  # the smallest normal binary64 number
 UNDERFLOW = 746.0  # exp(-746) is 0 in binary64
 
 
@@ -288,7 +289,7 @@ class Entropic(LocatedMeasure):
 
     def _gibbs(self, values: Array, p: Array, point: float) -> tuple[Array, int]:
         """Return exp(point aversion L) over its mean for the positions where it is not 0, and how many they are."""
-        exponent = point * self.aversion
+        exponent = max(point * self.aversion, LEAST_EXPONENT)
         active = values.size - int(np.searchsorted(values[::-1], values[0] - UNDERFLOW / exponent, side="left"))
         raised = np.exp(exponent * (values[:active] - values[0]))
         return raised / float(raised @ p[:active]), active

@@ -68,6 +68,17 @@ def test_a_quantile_without_a_finite_rank(client):
     assert ("no_error", "/measures/0") in _codes(answer)
 
 
+@pytest.mark.parametrize("coverage", [0.999999999, 1.0 - 1e-15, 1e-300])
+def test_coverages_at_the_ends(client, coverage):
+    """An interval that would need more of the tail than is kept is null, and no failure."""
+    losses = np.random.default_rng(2).normal(size=(5000, 2))
+    measures = [{"kind": "value_at_risk", "level": 0.9}, {"kind": "expected_shortfall", "level": 0.9}]
+    answer = _answer(client, losses, measures, interval_coverage=coverage)
+    for one in answer["allocations"]:
+        interval = one["total"]["interval"]
+        assert interval is None or interval["lower"] <= one["total"]["value"] <= interval["upper"]
+
+
 def test_smoothed_contributions_name_their_window(client):
     answer = _answer(client, THIN, [{"kind": "value_at_risk", "level": 0.9}])
     (one,) = answer["allocations"]

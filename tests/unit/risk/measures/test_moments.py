@@ -104,6 +104,14 @@ def test_entropic_without_probability(place):
     assert found.standard_errors == pytest.approx(expected.standard_errors, rel=1e-9)
 
 
+@pytest.mark.parametrize("aversion", [1e-300, 1e-310])
+def test_entropic_with_hardly_any_aversion_is_the_mean(aversion):
+    one = measure("entropic", aversion=aversion)
+    assert value(one, TOTALS) == pytest.approx(TOTALS.mean(), abs=1e-9)
+    assert contributions("euler", one, LOSSES) == pytest.approx(LOSSES.mean(axis=0), abs=1e-9)
+    contributions("euler", measure("entropic", aversion=5e-324), LOSSES)  # the least binary64 number
+
+
 def test_entropic_beyond_telling_apart():
     with pytest.raises(NotDefined, match="use a smaller aversion"):
         contributions("euler", measure("entropic", aversion=1e20), LOSSES)
