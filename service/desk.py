@@ -151,6 +151,9 @@ def _checkpoint(deadline: float, allowed: float, gone: asyncio.Event, told: Call
             raise Cancelled("The caller left while the calculation ran.")
         if perf_counter() > deadline:
             limit = Limit(name="max_seconds", allowed=allowed, asked=None, setting=variable("max_seconds"))
-            raise TooLong(f"The calculation needs more than the {allowed:g} seconds allowed.", limit=limit)
+            words = (
+                f"The calculation needs more than the {allowed:g} seconds that this server or `Prefer: wait` allows."
+            )
+            raise TooLong(words, limit=limit)
 
     return checkpoint

@@ -117,7 +117,8 @@ def read(
     media_type = content_type.partition(";")[0].strip().lower()
     if media_type in payloads.TABLE_READERS:
         return _table_body(calculation, body, media_type, parameters, settings)
-    query.refuse_unknown(parameters, query.WITHOUT_MEANING)
+    if media_type in (JSON, MULTIPART):
+        query.refuse_unknown(parameters, query.WITHOUT_MEANING)
     if media_type == JSON:
         return _json_body(calculation, body, settings)
     if media_type == MULTIPART:

@@ -11,7 +11,8 @@ WORKBOOK = "ternholm.xlsx"
 
 
 BETWEEN = """
-The same insurer as a factor model, simulated here: claims with their covers, market factors, counterparties.
+A factor model of the same kind of insurer, simulated here: claims with their covers, market factors,
+counterparties. It is another invented book and is not calibrated to the scenarios above: its figures differ.
 """
 NEXT_STEPS = """
 The same over HTTP: start the service and open its page.

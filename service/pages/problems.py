@@ -59,7 +59,7 @@ PROBLEM_PAGES = {
         "wrong Content-Type must be corrected.",
     ),
     "digest_mismatch": ProblemPage(
-        "The body is not the one that was signed",
+        "The body is not the one that its digest was made of",
         "The Content-Digest header gives a digest of another body: something between you and the service "
         "changed or lost bytes, or the digest was made of something else.",
         "Send the request again. If it fails again, compare the digest with one made of the very bytes that are sent.",

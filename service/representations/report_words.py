@@ -29,7 +29,7 @@ RULES = {
 """Rule to its meaning."""
 
 OF_LEVEL = {
-    "value_at_risk": "Losses stay at or below this with a probability of {level}.",
+    "value_at_risk": "The amount that losses stay at or below with a probability of {level}.",
     "expected_shortfall": "The mean of the worst {rest} of losses.",
     "expectile": "The amount at which what losses exceed it by, weighted {level}, balances what they fall short of it "
     "by, weighted {rest}.",
@@ -54,7 +54,9 @@ def measure_meaning(measure: Measure) -> str:
         meaning = f"A loss that is exceeded once in {numbers['return_period']:,.15g} periods in the long run."
     else:
         meaning = OTHERS.get(measure.kind, DISTORTED)
-    return f"{meaning} Shown is its excess over the expected loss." if measure.above == "mean" else meaning
+    if measure.above == "mean":
+        return f"The excess over the expected loss of another amount, which means: {meaning[0].lower()}{meaning[1:]}"
+    return meaning
 
 
 def _rest(level: float) -> float:

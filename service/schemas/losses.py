@@ -173,7 +173,7 @@ class ScenarioLosses(LabelledLosses):
 def _no_header(losses: ScenarioLosses) -> None:
     """Refuse what only a table with a header can have."""
     if losses.sub_portfolios is None:
-        raise PydanticCustomError("missing", "sub_portfolios must name the columns of the table")
+        raise PydanticCustomError("unnamed_columns", "sub_portfolios must name the columns of the table")
     for name in ("scenario_id_column", "probability_column", "ignore_columns"):
         if getattr(losses, name) is not None:
             raise PydanticCustomError("table", "{name} is for tables with a header (part: table)", {"name": name})

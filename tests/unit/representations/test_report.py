@@ -148,7 +148,7 @@ def test_headline_figures_and_their_errors_are_those_of_the_answer(found, html):
         assert f"between {ends.lower:,.{digits}f} and {ends.upper:,.{digits}f}" in words
     assert "in 95 of 100 repetitions of the sampling" in words
     assert "The mean of the worst 10 % of losses." in words
-    assert "Losses stay at or below this with a probability of 95 %." in words
+    assert "The amount that losses stay at or below with a probability of 95 %." in words
     alone = sum(one.stand_alone.value for one in found.answer.allocations[0].sub_portfolios)
     saved = 1 - found.answer.allocations[0].total.value / alone
     assert f"The parts alone add up to {alone:,.1f} EUR: {100 * saved:.1f} % of that" in words
