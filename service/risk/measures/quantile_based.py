@@ -125,11 +125,11 @@ class _Quantile(LocatedMeasure):
 
         A local line of L_i on L at q (see `local_line`): they sum to 1 and their mean of L is q, so that
         the contributions add up by construction. With `ATOM_OF_ITS_OWN` or more scenarios at q,
-        with too few for a window, or without smoothing: the mean over those scenarios.
+        with too few for a window, with a whole population, or without smoothing: the mean over those scenarios.
         """
         line = line_at_quantile(ordered, ties, self.share)
         place = quantile_influence(ordered, self.share)
-        few = ordered.scenarios <= 2 * LEAST_RANKS
+        few = ordered.scenarios <= 2 * LEAST_RANKS or not ordered.sampled
         if smoothing == "none" or few or line.at_centre >= ATOM_OF_ITS_OWN:
             weights = np.where(line.centre, ties.p, 0.0)
             return ContributionWeights(weights / weights.sum(), None, (line,), place)
