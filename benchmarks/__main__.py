@@ -22,8 +22,8 @@ from service.executors import keep_freed_memory
 
 ROWS = (*core.ROWS, *transport.ROWS, *decoding.ROWS, *coverage.ROWS, *simulation.ROWS)
 
-FULL = Pace(repeats=5, runs=2000, seconds=1.0)
-QUICK = Pace(repeats=3, runs=250, seconds=0.25)
+FULL = Pace(repeats=5, slow=5, runs=2000, seconds=1.0)
+QUICK = Pace(repeats=3, slow=1, runs=100, seconds=0.25)
 
 
 def main() -> int:

@@ -63,20 +63,22 @@ def calling(connection: Connection, request: bytes) -> Callable[[], bytes]:
     return lambda: connection.answer(request)
 
 
+def latencies(port: int, request: bytes, *, seconds: float) -> list[float]:
+    """Return the seconds that each of many requests takes, one after the other on one connection."""
+    found = []
+    with closing(Connection(port)) as connection:
+        connection.answer(request)
+        began = last = perf_counter()
+        while last - began < seconds:
+            connection.answer(request)
+            now = perf_counter()
+            found.append(now - last)
+            last = now
+    return found
+
+
 def per_second(port: int, request: bytes, *, seconds: float, connections: int = 1) -> float:
     """Return how many requests are answered a second, each connection sending the next when it has its answer."""
-    until = perf_counter() + seconds
-
-    def send() -> tuple[int, float]:
-        answers = 0
-        with closing(Connection(port)) as connection:
-            connection.answer(request)
-            began = perf_counter()
-            while perf_counter() < until:
-                connection.answer(request)
-                answers += 1
-            return answers, perf_counter() - began
-
     with ThreadPoolExecutor(connections) as pool:
-        ends = list(pool.map(lambda _: send(), range(connections)))
-    return sum(answers / took for answers, took in ends)
+        each = pool.map(lambda _: latencies(port, request, seconds=seconds), range(connections))
+        return sum(len(found) / sum(found) for found in each)

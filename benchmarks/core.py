@@ -14,6 +14,7 @@ from service.risk.fold import fold
 
 LARGE = (100_000, 500)
 TIED_SIZE = (100_000, 100)
+SLOW_CELLS = 10_000_000  # from which on the script takes seconds
 
 
 def over_one_read(pace: Pace, *, stand_alone: bool) -> Outcome:
@@ -40,7 +41,9 @@ def against_a_script(pace: Pace, *, size: tuple[int, int]) -> Outcome:
     table, sheet = table_of(losses), pd.DataFrame(losses)
     full = partial(arithmetic, table, stand_alone=True)
     full()
-    return Outcome.of(one_by_one(lambda: script.figures(sheet), full, pace.repeats, warm=losses.size < 1e7))
+    slow = losses.size > SLOW_CELLS
+    repeats = pace.slow if slow else pace.repeats
+    return Outcome.of(one_by_one(lambda: script.figures(sheet), full, repeats, warm=not slow))
 
 
 def tied_over_untied(pace: Pace, *, kind: str) -> Outcome:

@@ -5,7 +5,7 @@ import base64
 import numpy as np
 import orjson
 
-from benchmarks.books import arithmetic, normals, table_of
+from benchmarks.books import Array, arithmetic, normals, table_of
 from benchmarks.rows import Outcome, Pace, Row, at_most
 from benchmarks.timing import one_by_one
 from service.payloads import rows_from_json, unpack
@@ -29,9 +29,9 @@ def packed_over_core(pace: Pace) -> Outcome:
     """Time the decoding of base64 over the full core."""
     losses = normals(*SIZE)
     rows, columns = losses.shape
-    table, text = table_of(losses), base64.b64encode(losses)
+    table, text = table_of(losses), base64.b64encode(losses.tobytes())
 
-    def decode() -> object:
+    def decode() -> Array:
         return unpack(text, dtype="float64", rows=rows, columns=columns, max_cells=losses.size)
 
     assert np.array_equal(decode(), losses)

@@ -118,7 +118,8 @@ def _lognormal_truth(level: float) -> Truth:
 
         top = min(end, np.log(s) / SIGMAS[0])
         parts = [(-end, 0.0), (0.0, top), (top, end)]
-        return sum(integrate.quad(integrand, *part, epsabs=0.0, epsrel=MAX_ERROR, limit=500)[0] for part in parts)
+        pieces = [integrate.quad(integrand, *part, epsabs=0.0, epsrel=MAX_ERROR, limit=500)[0] for part in parts]
+        return float(sum(pieces))
 
     def beyond(s: float) -> float:
         return along(lambda _z, _first, score: special.ndtr(-score), s)
@@ -135,10 +136,10 @@ def _lognormal_truth(level: float) -> Truth:
     mass = along(density_at, q)
     first_at = along(lambda z, first, score: first * density_at(z, first, score), q) / mass
     first_beyond = along(lambda _z, first, score: first * special.ndtr(-score), q)
-    shift = free * SIGMAS[1]
+    shift = float(free * SIGMAS[1])
 
     def second_beyond(z: float, _first: float, score: float) -> float:
-        return np.exp(SIGMAS[1] * CORRELATION * z + shift**2 / 2.0) * special.ndtr(shift - score)
+        return float(np.exp(SIGMAS[1] * CORRELATION * z + shift**2 / 2.0) * special.ndtr(shift - score))
 
     shortfall = np.array([first_beyond, along(second_beyond, q)]) / (1.0 - level)
     sigmas = np.array(SIGMAS)

@@ -56,4 +56,6 @@ def allocations(asked: Asked) -> AllocationsAnswer:
     document["losses"]["values"] = []
     request = ADAPTERS["allocations"].validate_json(orjson.dumps(document))
     taken = Intake("allocations", request, values)
-    return calculate.answer(taken, Work(SETTINGS.threads), SETTINGS, problems.describe)
+    answer = calculate.answer(taken, Work(SETTINGS.threads), SETTINGS, problems.describe)
+    assert isinstance(answer, AllocationsAnswer)
+    return answer

@@ -42,6 +42,8 @@ class Pace:
     ----------
     repeats : int
         Of timed work.
+    slow : int
+        Repeats of work that takes seconds.
     runs : int
         Simulated samples behind each coverage.
     seconds : float
@@ -49,6 +51,7 @@ class Pace:
     """
 
     repeats: int
+    slow: int
     runs: int
     seconds: float
 

@@ -5,7 +5,7 @@ import subprocess
 import sys
 import time
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import AbstractContextManager, contextmanager
 from pathlib import Path
 
 CHECKOUT = Path(__file__).parent.parent
@@ -34,12 +34,12 @@ def serving(*arguments: str) -> Iterator[int]:
             process.wait()
 
 
-def tailrace(*, workers: int = 1) -> "contextmanager[int]":
+def tailrace(*, workers: int = 1) -> AbstractContextManager[int]:
     """Serve as a user would start it."""
     return serving("service", "serve", "--workers", str(workers))
 
 
-def rivals() -> "contextmanager[int]":
+def rivals() -> AbstractContextManager[int]:
     """Serve the routes that tailrace is measured against, by the same server, without its access log."""
     return serving("uvicorn", "benchmarks.rivals:app", "--no-access-log", "--log-level", "warning")
 

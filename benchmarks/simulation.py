@@ -288,7 +288,7 @@ ROWS = (
         "P24",
         "one candidate, two measures with errors / one read of its column and the totals",
         at_most(3),
-        Span(),
+        at_most(3),
         increment_over_read,
     ),
     Row("P24", "200 candidates / 200 times the marginal cost of one", at_most(1.1), at_most(1.5), batch_over_one),

@@ -1,15 +1,17 @@
 """P12, P13, P16 and P17: whole requests to a running server, against the framework's own way and against nothing."""
 
 import io
+from collections.abc import Mapping
 from contextlib import ExitStack, closing
-from statistics import median
+from itertools import chain
+from statistics import quantiles
 from urllib.parse import urlencode
 
 import orjson
 import pyarrow as pa
 
 from benchmarks.books import LEVELS, Array, arithmetic, names, normals, table_of
-from benchmarks.client import Connection, calling, per_second, request_of
+from benchmarks.client import Connection, calling, latencies, per_second, request_of
 from benchmarks.rows import Outcome, Pace, Row, at_least, at_most
 from benchmarks.servers import rivals, tailrace
 from benchmarks.timing import one_by_one, ratios, taking_turns
@@ -22,6 +24,7 @@ ARROW = "application/vnd.apache.arrow.stream"
 KINDS = ("value_at_risk", "expected_shortfall")
 DEFAULT_PATH = "/allocations"  # of the framework's own route
 ONE = "expected_shortfall 0.99"
+ONE_ASKED: list[dict[str, object]] = [{"kind": "expected_shortfall", "level": 0.99}]
 SIX = "VaR and ES at 3 levels"
 
 
@@ -62,14 +65,14 @@ def default_over_json(pace: Pace) -> Outcome:
         json = calling(ours, json_request(losses, "/v1/allocations", _levels()))
         same = [orjson.loads(answer())["allocations"] for answer in (default, json)]
         assert same[0] == same[1]
-        return Outcome.of(one_by_one(default, json, pace.repeats))
+        return Outcome.of(one_by_one(default, json, pace.slow))
 
 
 def arrow_over_core(pace: Pace) -> Outcome:
     """Time an Arrow request over the sum of a request that only drops the same bytes and of the full core."""
     losses = normals(*LARGE)
     table = table_of(losses)
-    options = {"measure": KINDS, "level": LEVELS}
+    options: dict[str, object] = {"measure": KINDS, "level": LEVELS}
     with ExitStack() as stack:
         ours = stack.enter_context(closing(Connection(stack.enter_context(tailrace()))))
         other = stack.enter_context(closing(Connection(stack.enter_context(rivals()))))
@@ -89,49 +92,64 @@ def arrow_over_ping(pace: Pace) -> Outcome:
     """Count Arrow requests a second over pings a second, on one connection."""
     losses = normals(*SMALL)
     one: dict[str, object] = {"measure": "expected_shortfall", "level": 0.99}
-    alone, six = "with stand-alone figures", f"{SIX}, with stand-alone figures"
-    asked = {
+    asked: dict[str, dict[str, object]] = {
         ONE: {**one, "include_stand_alone": "false"},
-        f"{ONE}, {alone}": one,
-        six: {"measure": KINDS, "level": LEVELS},
+        f"{ONE} with stand-alone figures": one,
+        f"{SIX} with stand-alone figures": {"measure": KINDS, "level": LEVELS},
     }
     requests = {what: arrow_request(losses, "/v1/allocations", options) for what, options in asked.items()}
     ping = request_of("GET", "/ping")
-    found: dict[str, list[float]] = {what: [] for what in asked}
     with tailrace() as ours, rivals() as other:
-        for _ in range(pace.repeats):
-            pings = per_second(other, ping, seconds=pace.seconds)
-            for what, request in requests.items():
-                found[what].append(per_second(ours, request, seconds=pace.seconds) / pings)
-    details = [f"{median(shares):.3g} with {what}" for what, shares in found.items()]
-    return Outcome.of(found[ONE], [*details, f"{pings:.0f} pings a second"])
+        bursts = _bursts(pace, {"ping": (other, ping), **{what: (ours, one) for what, one in requests.items()}})
+    details = [_fastest(bursts[what], bursts["ping"], f"{what} / ping") for what in asked]
+    return Outcome.of(_rates(bursts[ONE], bursts["ping"]), details)
 
 
 def json_over_default(pace: Pace) -> Outcome:
     """Count JSON requests a second over those of the framework's default route, on one connection."""
     losses = normals(*SMALL)
-    measures: list[dict[str, object]] = [{"kind": "expected_shortfall", "level": 0.99}]
     ours_asked, other_asked = (
-        json_request(losses, path, measures, include_stand_alone=False) for path in ("/v1/allocations", DEFAULT_PATH)
+        json_request(losses, path, ONE_ASKED, include_stand_alone=False) for path in ("/v1/allocations", DEFAULT_PATH)
     )
-    found = []
     with tailrace() as ours, rivals() as other:
-        for _ in range(pace.repeats):
-            default = per_second(other, other_asked, seconds=pace.seconds)
-            found.append(per_second(ours, ours_asked, seconds=pace.seconds) / default)
-    return Outcome.of(found)
+        bursts = _bursts(pace, {"default": (other, other_asked), "json": (ours, ours_asked)})
+    details = [_fastest(bursts["json"], bursts["default"], "JSON / default route")]
+    return Outcome.of(_rates(bursts["json"], bursts["default"]), details)
 
 
 def two_over_one(pace: Pace) -> Outcome:
     """Count JSON requests a second that two processes answer over those that one answers."""
-    measures: list[dict[str, object]] = [{"kind": "expected_shortfall", "level": 0.99}]
-    asked = json_request(normals(*SMALL), "/v1/allocations", measures, include_stand_alone=False)
+    asked = json_request(normals(*SMALL), "/v1/allocations", ONE_ASKED, include_stand_alone=False)
     found = []
     with tailrace(workers=2) as two, tailrace() as one:
         for _ in range(pace.repeats):
             alone = per_second(one, asked, seconds=pace.seconds, connections=CONNECTIONS)
             found.append(per_second(two, asked, seconds=pace.seconds, connections=CONNECTIONS) / alone)
     return Outcome.of(found)
+
+
+Bursts = list[list[float]]
+"""Seconds that each request of each burst took."""
+
+
+def _bursts(pace: Pace, requests: Mapping[str, tuple[int, bytes]]) -> dict[str, Bursts]:
+    """Send each request to its port for a while, in turns."""
+    found: dict[str, Bursts] = {what: [] for what in requests}
+    for _ in range(pace.repeats):
+        for what, (port, request) in requests.items():
+            found[what].append(latencies(port, request, seconds=pace.seconds))
+    return found
+
+
+def _rates(above: Bursts, below: Bursts) -> list[float]:
+    """Return the requests a second of one over those of another, burst by burst."""
+    return [(len(over) / sum(over)) / (len(under) / sum(under)) for over, under in zip(above, below, strict=True)]
+
+
+def _fastest(above: Bursts, below: Bursts, what: str) -> str:
+    """Return the same ratio by the fastest tenth of all requests, which other jobs did not disturb."""
+    over, under = (quantiles(chain.from_iterable(bursts), n=10)[0] for bursts in (above, below))
+    return f"{what}: {under / over:.3g} by the fastest tenth ({over * 1e3:.2f} and {under * 1e3:.2f} ms)"
 
 
 ROWS = (

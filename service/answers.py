@@ -40,6 +40,7 @@ from service.schemas.results import (
 from service.sources import FactorMean
 
 WORST_LISTED = 10
+ROUNDING = 1e-13  # of the largest total: a figure below it is 0 but for rounding, and no denominator
 USUAL_LEVEL = 0.99  # of the tail detail where no measure has a level
 
 
@@ -110,7 +111,7 @@ class Notes:
             "thin_tail": f"the error rests on few scenarios: {counts}",
             "no_error": f"too few scenarios to say how sure a figure is: {counts}",
             "few_scenarios": f"a few scenarios carry the error, so intervals may be too narrow: {counts}",
-            "smoothed_quantile": f"contributions to {measure.name} are smoothed over the scenarios in `window`",
+            "smoothed_quantile": f"contributions to {measure.name} are smoothed over neighbouring scenarios",
             "does_not_add_up": "with_without contributions do not add up to the total; `residual` is the rest",
             "sampled_shapley": "Shapley values are averaged over drawn orders of entry; the error includes the drawing",
         }[code]
@@ -170,6 +171,11 @@ def shared(frame: Frame, capital: float | None) -> Shared:
     return Shared(frame, (frame.expected + 0.0).tolist(), profits + sums, capital)
 
 
+def rounding_of(frame: Frame) -> float:
+    """Return the size up to which a figure of the losses may be nothing but rounding."""
+    return ROUNDING * float(np.max(np.abs(frame.totals)))
+
+
 def measure_result(
     name: str, number: int, total: Figure, alone: Sequence[Figure] | None, frame: Frame, notes: Notes
 ) -> MeasureResult:
@@ -178,7 +184,9 @@ def measure_result(
         return MeasureResult(name, total, [], [], None, None)
     count = len(frame.table)
     whole = sum(figure.value for figure in alone[:count])
-    benefit = _ratio(whole - total.value, whole, "the sum of the stand-alone figures", number, notes)
+    benefit = _ratio(
+        whole - total.value, whole, "the sum of the stand-alone figures", number, notes, rounding_of(frame)
+    )
     return MeasureResult(
         name,
         total,
@@ -222,7 +230,8 @@ def allocation_result(
     frame = of.frame
     count = len(frame.table)
     whole = total.value if split.additive else sum(part.value for part in parts[:count])
-    shares = [_ratio(part.value, whole, "the total to be shared", number, notes) for part in parts]
+    least = rounding_of(frame)
+    shares = [_ratio(part.value, whole, "the total to be shared", number, notes, least) for part in parts]
     rows = []
     for j, (part, share) in enumerate(zip(parts, shares, strict=True)):
         allocated = None if of.capital is None or share is None else share * of.capital
@@ -235,7 +244,7 @@ def allocation_result(
                 "stand_alone": single,
                 "diversification_benefit": None
                 if single is None
-                else _ratio(single.value - part.value, single.value, "a stand-alone figure", number, notes),
+                else _ratio(single.value - part.value, single.value, "a stand-alone figure", number, notes, least),
                 "expected_loss": of.expected[j],
                 "expected_profit": of.profits[j],
                 "return_on_capital": _return(of.profits[j], base, number, notes),
@@ -255,9 +264,11 @@ def allocation_result(
     )
 
 
-def _ratio(numerator: float, denominator: float, of: str, number: int, notes: Notes) -> float | None:
-    """Return a ratio, or None with a note where its denominator is not positive."""
-    if denominator > 0.0:
+def _ratio(  # a ratio is of something, and noted somewhere
+    numerator: float, denominator: float, of: str, number: int, notes: Notes, least: float = 0.0
+) -> float | None:
+    """Return a ratio, or None with a note where its denominator is not above `least`."""
+    if denominator > least:
         return numerator / denominator + 0.0
     notes.add("ratio_not_defined", f"a ratio is null: {of} is {denominator:.6g}, not positive", number)
     return None
@@ -344,7 +355,9 @@ def tail_level(measures: Sequence[RiskMeasure]) -> float:
 def tail(frame: Frame, level: float, factors: Sequence[FactorMean]) -> Tail:
     """Return the worst scenarios of the total, and the factors beyond its quantile at `level`."""
     table, totals = frame.table, frame.totals
-    worst = np.argsort(-totals, kind="stable")[:WORST_LISTED]
+    ranked = np.argsort(-totals, kind="stable")
+    possible = ranked if table.probabilities is None else ranked[table.probabilities[ranked] > 0.0]
+    worst = possible[:WORST_LISTED]
     rows = table.losses.take(worst, axis=0)
     listed = []
     for number, row in zip(worst.tolist(), rows.tolist(), strict=True):

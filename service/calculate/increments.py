@@ -104,7 +104,7 @@ class Increments(Calculation):
                 contribution=combined(lambda one: one.contribution),
                 stand_alone=combined(lambda one: one.stand_alone),
             )
-        for estimates in (increment.increment, increment.contribution, increment.stand_alone):
+        for estimates in (increment.total_with, increment.increment, increment.contribution, increment.stand_alone):
             notes.of_estimates(number, pooled.measure, estimates)
         return answers.candidate_figures(
             self.request, candidate.expected_profit, number, pooled, increment, self.ids, notes

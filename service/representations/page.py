@@ -122,11 +122,12 @@ def page(title: str, body: str, *, root: str = "", foot: str = "") -> str:
     """
     links = "".join(f'<li><a href="{escape(root + path)}">{name}</a></li>' for path, name in LINKS)
     footer = f"<footer>{foot}</footer>\n" if foot else ""
+    tab = title if title == "tailrace" else f"{title} - tailrace"
     return (
         '<!doctype html>\n<html lang="en">\n<head><meta charset="utf-8">'
         '<meta name="viewport" content="width=device-width, initial-scale=1">'
         '<meta name="referrer" content="no-referrer">'
-        f'<link rel="icon" href="data:,"><title>{escape(title)} - tailrace</title><style>{STYLE}</style></head>\n'
+        f'<link rel="icon" href="data:,"><title>{escape(tab)}</title><style>{STYLE}</style></head>\n'
         f'<body><a class="skip" href="#main">Skip to the content</a>\n'
         f'<header><nav aria-label="tailrace"><ul>{links}</ul></nav></header>\n'
         f'<main id="main" tabindex="-1"><h1>{escape(title)}</h1>\n{body}</main>\n{footer}</body>\n</html>\n'

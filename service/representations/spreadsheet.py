@@ -63,6 +63,7 @@ NUMBER_COLUMNS = (
     "allocated_capital",
 )
 MEASURE = "measure=expected_shortfall&level=0.99"
+WORKBOOK = "/spreadsheets/ternholm.xlsx"  # made for the demonstration's book
 WHOLE = BookHead(name="BOOK", example="SUB_PORTFOLIO")  # stands in the examples where there is no book
 
 
@@ -80,6 +81,7 @@ def spreadsheet_page(base_url: str, books: Sequence[BookHead], *, root: str = ""
     """
     book = next((one for one in books if one.reason is None), WHOLE)
     parts = (
+        _workbook(root),
         _one(base_url, book),
         _many(base_url, book),
         _linked(base_url, book),
@@ -161,6 +163,13 @@ def _xpath(words: str) -> str:
 
 def _code(words: str, kind: str = "wrap") -> str:
     return f'<pre class="{kind}"><code>{escape(words)}</code></pre>\n'
+
+
+def _workbook(root: str) -> str:
+    return (
+        f"<p>{link(root + WORKBOOK, 'A workbook to begin with')} asks a server that was started with "
+        "<code>--demo</code>; give it the address of this one in its first row.</p>\n"
+    )
 
 
 def _one(base_url: str, book: BookHead) -> str:

@@ -18,6 +18,8 @@ from service.risk.ranking import tie_tolerance
 from service.risk.shapley import shapley_values
 from service.risk.uncertainty import Estimates, Influence, Sampling, Spread, lean_of_parts, leaning_estimates, spread
 
+ROUNDING = 1e-13  # of the largest total: a sum of figures below it is 0 but for rounding
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Case:
@@ -149,7 +151,7 @@ def proportional_stand_alone(case: Case) -> Contributions:
 
     frame.effort.map(one, range(count))
     whole = float(alone.sum())
-    if not whole > 0.0:
+    if not whole > ROUNDING * float(np.max(np.abs(frame.totals))):
         detail = f"the stand-alone figures add up to {whole:g}: no shares in proportion to them exist"
         raise NotDefined(detail)
     shares = alone / whole

@@ -69,6 +69,7 @@ class Frame:
     _tails: Array | None
     _ranking: Ranking
     _rows: list[Array] = field(default_factory=list)
+    _cuts: dict[float, Ranking] = field(default_factory=dict)
     _whole: Ranking | None = None
     known: dict[RiskMeasure, Any] = field(default_factory=dict)
 
@@ -136,7 +137,9 @@ class Frame:
         if depth < 1.0:
             if self._ranking.order.size <= depth * self.scenarios:
                 self._ranking, self._rows = ranked(self.totals, self.table, depth=depth), []
-            return self._ranking.cut(depth)
+            if depth not in self._cuts:
+                self._cuts[depth] = self._ranking.cut(depth)
+            return self._cuts[depth]
         if self._whole is None:
             self._whole = self._ranking
             if not self._ranking.ordered.complete:

@@ -166,4 +166,5 @@ def _contribution(
     tail = measure.tail_of(ordered)
     counts = of.effective if tail is None else tail
     leans = lean_of_parts(of, float(lean[0]))
-    return judged(measure, leaning_estimates(values, of, leans, coverage=coverage, tail_scenarios=counts))
+    figures = judged(measure, leaning_estimates(values, of, leans, coverage=coverage, tail_scenarios=counts))
+    return figures.remarked("smoothed_quantile") if weights.window else figures

@@ -22,6 +22,7 @@ from service.risk.quantiles import (
     Ordered,
     QuantileInterval,
     Ties,
+    cluster_sums,
     decimal,
     distribution_error,
     quantile_error,
@@ -55,6 +56,7 @@ def quantile_influence(ordered: Ordered, share: Fraction) -> Influence:
     return Influence(scale[:, None] * (level - (ordered.values <= q)), scale * (level - 1.0))
 
 
+@lru_cache(maxsize=1024)
 def window_depth(share: float, scenarios: int, *, smoothed: bool) -> float:
     """Return the share of worst scenarios that the error (and the smoothing) of a quantile looks at."""
     reach = RANK_SPREADS * (share * (1.0 - share) / scenarios) ** 0.5
@@ -86,7 +88,7 @@ class _Quantile(LocatedMeasure):
 
     @property
     def tail_share(self) -> float:
-        return float(self.share)
+        return float(min(self.share, 1 - self.share))
 
     def depth(self, scenarios: int, *, contributions: bool) -> float:
         return 1.0 if self.above == "mean" else window_depth(float(self.share), scenarios, smoothed=contributions)
@@ -118,7 +120,7 @@ class _Quantile(LocatedMeasure):
         return quantile_error(ordered, self.share)
 
     def tail_of(self, ordered: Ordered) -> Array:
-        return ordered.effective_tail(self.share)
+        return ordered.effective_tail(min(self.share, 1 - self.share))
 
     def contribution_weights(self, ordered: Ordered, ties: Ties, smoothing: Smoothing) -> ContributionWeights:
         """Return weights that estimate E[L_i given L = q].
@@ -340,7 +342,8 @@ class RangeValueAtRisk(LocatedMeasure):
 
     @property
     def tail_share(self) -> float:
-        return float(next(share for share in reversed(self.shares) if share > 0))
+        outer, inner = self.shares
+        return float(outer - inner)
 
     def depth(self, scenarios: int, *, contributions: bool) -> float:
         return 1.0 if self.above == "mean" else window_depth(float(self.shares[0]), scenarios, smoothed=contributions)
@@ -365,9 +368,13 @@ class RangeValueAtRisk(LocatedMeasure):
         return Influence(tail / float(outer - inner), rest)
 
     def tail_of(self, ordered: Ordered) -> Array:
+        """Return the effective number of scenarios between the two levels."""
         outer, inner = self.shares
-        fewest = inner if inner > 0 else outer
-        return ordered.effective_tail(fewest)
+        if ordered.probabilities is None and ordered.clusters is None:
+            return np.full(ordered.values.shape[0], ordered.mass(outer - inner))
+        weights = np.broadcast_to(self.weights(ordered), ordered.values.shape)
+        parts = weights if ordered.clusters is None else cluster_sums(weights, ordered.clusters)
+        return 1.0 / np.sum(parts * parts, axis=-1)
 
     def contribution_weights(self, ordered: Ordered, ties: Ties, smoothing: Smoothing) -> ContributionWeights:
         weights = LocatedMeasure.contribution_weights(self, ordered, ties, smoothing)

@@ -26,7 +26,10 @@ class _Part:
     """What one part of the book contributes."""
 
     contribution: Annotated[Figure, Field(description="Its part of the total.")]
-    share: Annotated[Money | None, Field(description="Contribution over total, without unit.")]
+    share: Annotated[
+        Money | None,
+        Field(description="Contribution over the sum of all (the total, if the rule adds up), without unit."),
+    ]
     stand_alone: Annotated[Figure | None, Field(description="The measure of its loss alone; null if not asked for.")]
     diversification_benefit: Annotated[
         Money | None, Field(description="1 - contribution / stand-alone figure, without unit.")
