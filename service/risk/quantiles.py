@@ -160,7 +160,9 @@ class Ordered:
         p, mass = self.probabilities, float(share)
         q = self.at(self.position(share))[:, None]
         beyond, at = np.where(self.values > q, p, 0.0), np.where(self.values == q, p, 0.0)
-        part = np.maximum(mass - beyond.sum(axis=-1), 0.0) / at.sum(axis=-1)
+        atom = at.sum(axis=-1)
+        rest = np.maximum(mass - beyond.sum(axis=-1), 0.0)
+        part = np.divide(rest, atom, out=np.zeros_like(atom), where=atom > 0.0)
         return mass * mass / (np.sum(beyond * beyond, axis=-1) + part * np.sum(at * at, axis=-1))
 
 

@@ -22,7 +22,6 @@ from service.risk.quantiles import (
     Ordered,
     QuantileInterval,
     Ties,
-    cluster_sums,
     decimal,
     distribution_error,
     quantile_error,
@@ -370,11 +369,14 @@ class RangeValueAtRisk(LocatedMeasure):
     def tail_of(self, ordered: Ordered) -> Array:
         """Return the effective number of scenarios between the two levels."""
         outer, inner = self.shares
-        if ordered.probabilities is None and ordered.clusters is None:
-            return np.full(ordered.values.shape[0], ordered.mass(outer - inner))
-        weights = np.broadcast_to(self.weights(ordered), ordered.values.shape)
-        parts = weights if ordered.clusters is None else cluster_sums(weights, ordered.clusters)
-        return 1.0 / np.sum(parts * parts, axis=-1)
+        if inner == 0:
+            return ordered.effective_tail(outer)
+        if ordered.clusters is not None:
+            return ordered.effective_tail(outer - inner)
+        # share^2 / number is the sum of squared probabilities beyond a level, of which the band has the difference
+        beyond = float(outer) ** 2 / ordered.effective_tail(outer)
+        within = beyond - float(inner) ** 2 / ordered.effective_tail(inner)
+        return np.divide(float(outer - inner) ** 2, within, out=np.zeros_like(within), where=within > 0.0)
 
     def contribution_weights(self, ordered: Ordered, ties: Ties, smoothing: Smoothing) -> ContributionWeights:
         weights = LocatedMeasure.contribution_weights(self, ordered, ties, smoothing)
