@@ -2,7 +2,7 @@
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field
-from math import ceil
+from math import ceil, inf, isfinite
 from typing import NamedTuple
 
 import numpy as np
@@ -13,6 +13,7 @@ from service.risk.comparisons import Change, State
 from service.risk.frame import Frame
 from service.risk.increments import Base, Increment
 from service.risk.measures import RiskMeasure
+from service.risk.quantiles import Array
 from service.risk.uncertainty import FULL_TAIL, Estimates
 from service.schemas.requests import IncrementsRequest
 from service.schemas.results import (
@@ -40,6 +41,8 @@ from service.schemas.results import (
 from service.sources import FactorMean
 
 WORST_LISTED = 10
+TOO_LARGE = "a figure or its error is too large for a binary64 number"
+MOST_NAMED = 1e15  # scenarios that a note proposes
 ROUNDING = 1e-13  # of the largest total: a figure below it is 0 but for rounding, and no denominator
 USUAL_LEVEL = 0.99  # of the tail detail where no measure has a level
 
@@ -105,8 +108,9 @@ class Notes:
         fewest = float(known.min()) if known.size else 0.0
         of_tail = "tail scenarios carry" if measure.of_tail else "scenarios carry the error of"
         counts = f"{fewest:.3g} {of_tail} {measure.name}"
-        if measure.of_tail and fewest > 0.0:
-            counts += f"; {ceil(FULL_TAIL * self.scenarios / fewest)} scenarios in all would do"
+        enough = FULL_TAIL * self.scenarios / fewest if measure.of_tail and fewest > 0.0 else inf
+        if enough < MOST_NAMED:
+            counts += f"; {ceil(enough)} scenarios in all would do"
         return {
             "thin_tail": f"the error rests on few scenarios: {counts}",
             "no_error": f"too few scenarios to say how sure a figure is: {counts}",
@@ -117,6 +121,24 @@ class Notes:
         }[code]
 
 
+def _refuse_infinite(*arrays: Array) -> None:
+    if any(np.isinf(array).any() for array in arrays):
+        raise NotDefined(TOO_LARGE)
+
+
+def _amount(value: float) -> float:
+    """Return an amount, zero without a sign.
+
+    Raises
+    ------
+    NotDefined
+        For one that is not finite.
+    """
+    if not isfinite(value):
+        raise NotDefined(TOO_LARGE)
+    return value + 0.0
+
+
 def figure_list(estimates: Estimates, coverage: float) -> list[Figure]:
     """Return figures of the answer from estimates of shape (c,).
 
@@ -125,9 +147,9 @@ def figure_list(estimates: Estimates, coverage: float) -> list[Figure]:
     NotDefined
         For a figure that is not finite.
     """
-    if not np.isfinite(estimates.values).all():
-        detail = "a figure is too large for a binary64 number"
-        raise NotDefined(detail)
+    _refuse_infinite(estimates.values, estimates.standard_errors, estimates.lower, estimates.upper)
+    if np.isnan(estimates.values).any():  # but an error that is NaN is none
+        raise NotDefined(TOO_LARGE)
     values = (estimates.values + 0.0).tolist()
     if np.isnan(estimates.standard_errors).all() and np.isnan(estimates.tail_scenarios).all():
         return [Figure(value, None, None, None) for value in values]
@@ -167,7 +189,7 @@ def shared(frame: Frame, capital: float | None) -> Shared:
     for group in frame.groups:
         members = [profits[member] for member in group.members]
         known = [profit for profit in members if profit is not None]
-        sums.append(sum(known) if len(known) == len(members) else None)
+        sums.append(_amount(sum(known)) if len(known) == len(members) else None)
     return Shared(frame, (frame.expected + 0.0).tolist(), profits + sums, capital)
 
 
@@ -234,7 +256,7 @@ def allocation_result(
     shares = [_ratio(part.value, whole, "the total to be shared", number, notes, least) for part in parts]
     rows = []
     for j, (part, share) in enumerate(zip(parts, shares, strict=True)):
-        allocated = None if of.capital is None or share is None else share * of.capital
+        allocated = None if of.capital is None or share is None else _amount(share * of.capital)
         base = part.value if of.capital is None else allocated
         single = None if alone is None else alone[j]
         rows.append(
@@ -267,10 +289,11 @@ def allocation_result(
 def _ratio(  # a ratio is of something, and noted somewhere
     numerator: float, denominator: float, of: str, number: int, notes: Notes, least: float = 0.0
 ) -> float | None:
-    """Return a ratio, or None with a note where its denominator is not above `least`."""
-    if denominator > least:
-        return numerator / denominator + 0.0
-    notes.add("ratio_not_defined", f"a ratio is null: {of} is {denominator:.6g}, not positive", number)
+    """Return a ratio, or None with a note where its denominator is not above `least`, or too small to divide by."""
+    if denominator > least and isfinite(ratio := numerator / denominator):
+        return ratio + 0.0
+    why = "too small to divide by" if denominator > least else "not positive"
+    notes.add("ratio_not_defined", f"a ratio is null: {of} is {denominator:.6g}, {why}", number)
     return None
 
 
@@ -289,7 +312,7 @@ def _total_return(of: Shared, base: float, number: int, notes: Notes) -> float |
     if len(known) < len(profits):
         notes.add("no_expected_profit", f"{len(profits) - len(known)} sub-portfolios have no expected profit")
         return None
-    return _ratio(sum(known), base, "the capital", number, notes)
+    return _ratio(_amount(sum(known)), base, "the capital", number, notes)
 
 
 def candidate_figures(
@@ -303,10 +326,11 @@ def candidate_figures(
 ) -> CandidateFigures:
     """Return what one candidate changes in measure `number`."""
     coverage = request.interval_coverage
+    _refuse_infinite(base.contributions, of.moved)
     total_with, increment, contribution, alone = (
         figure_list(part, coverage)[0] for part in (of.total_with, of.increment, of.contribution, of.stand_alone)
     )
-    needed = None if request.hurdle_rate is None else request.hurdle_rate * increment.value
+    needed = None if request.hurdle_rate is None else _amount(request.hurdle_rate * increment.value)
     cost, most = request.cost_of_capital, request.capital_limit
     return CandidateFigures(
         measure=base.measure.name,
@@ -318,7 +342,7 @@ def candidate_figures(
             alone.value - increment.value, alone.value, "a stand-alone figure", number, notes
         ),
         return_on_capital=_return(profit, increment.value, number, notes),
-        required_profit=None if cost is None else cost * increment.value + 0.0,
+        required_profit=None if cost is None else _amount(cost * increment.value),
         meets_hurdle=None if needed is None or profit is None else profit >= needed,
         within_limit=None if most is None else total_with.value <= most,
         moved=[
@@ -332,6 +356,7 @@ def candidate_figures(
 
 def change_result(name: str, totals: Sequence[Figure], change: Change, coverage: float) -> ComparisonResult:
     """Return how one measure changed; `totals` are before and after."""
+    _refuse_infinite(change.contributions)
     *changes, total = figure_list(change.changes, coverage)
     pairs = [[None if value != value else value + 0.0 for value in pair] for pair in change.contributions.tolist()]  # noqa: PLR0124
     parts = [

@@ -12,6 +12,7 @@ from service.errors import CallerError, Fault, InvalidValue
 MOST_FAULTS = 50  # a table of wrong cells is one mistake, not a thousand
 LONGEST_ECHO = 40  # characters of an offending value that come back
 TAGS = ("kind", "family")
+MISSING = "Field required"  # as the models say it; a check of ours that something is missing has its own words
 
 Document = Any
 Step = str | int
@@ -81,7 +82,7 @@ def _faults(found: Mapping[str, Any], document: Document, model: Any) -> Iterato
             yield fault.beneath(pointer(steps))
         return
     kind = found["type"]
-    if kind in WORDS:
+    if kind in WORDS and not (kind == "missing" and found["msg"] != MISSING):
         code, words = WORDS[kind]
         if kind in ("union_tag_invalid", "union_tag_not_found"):
             steps = [*steps, context["discriminator"].strip("'")]

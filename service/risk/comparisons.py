@@ -153,15 +153,18 @@ def _spread(  # two of everything
         for frame, values, sign in ((now, second, 1.0), (then, first, -1.0))
         if values is not None
     ]
-    squares = np.array([one.errors[0] ** 2 for one in spreads])
-    variance = float(squares.sum())
-    if variance == 0.0:
+    errors = np.array([one.errors[0] for one in spreads])
+    scale = float(errors.max())  # powers of errors could overflow, those of their ratios cannot
+    if scale == 0.0:
         return np.array([0.0, 0.0, min(float(one.effective[0]) for one in spreads)])
-    skewness = sum(float(one.skewness[0]) * float(one.errors[0]) ** 3 for one in spreads) / variance**1.5
+    ratios = errors / scale
+    squares = ratios**2
+    variance = float(squares.sum())
+    skewness = float(np.array([one.skewness[0] for one in spreads]) @ ratios**3) / variance**1.5
     fourth = sum(
         (square / variance) ** 2 / float(one.effective[0]) for square, one in zip(squares, spreads, strict=True)
     )
-    return np.array([np.sqrt(variance), skewness, 1.0 / fourth])
+    return np.array([scale * np.sqrt(variance), skewness, 1.0 / fourth])
 
 
 def _estimates(measure: RiskMeasure, frame: Frame, changes: Array, errors: Array, coverage: float) -> Estimates:

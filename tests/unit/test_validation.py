@@ -5,6 +5,7 @@ from typing import Annotated, Literal
 
 import pytest
 from pydantic import BaseModel, ConfigDict, Field, TypeAdapter, ValidationError, field_validator
+from pydantic_core import PydanticCustomError
 
 from service.errors import InvalidValue
 from service.schemas.requests import AllocationsRequest
@@ -107,6 +108,8 @@ class Outer(BaseModel):
             raise InvalidValue.at("/deep", "not this one", code="own_code")
         if value == "plain":
             raise ValueError("in plain words")
+        if value == "half":
+            raise PydanticCustomError("missing", "the other half is missing")
         return value
 
 
@@ -120,6 +123,7 @@ def test_checks_of_ours_keep_their_faults():
     sound = {"losses": {"kind": "other"}}
     assert faults({**sound, "name": "ours"}, Outer) == {"/name/deep": ("own_code", "not this one")}
     assert faults({**sound, "name": "plain"}, Outer) == {"/name": ("not_allowed", "in plain words")}
+    assert faults({**sound, "name": "half"}, Outer) == {"/name": ("missing", "the other half is missing")}
     assert faults({**sound, "size": 4}, Outer) == {"/size": ("out_of_range", "4 is not at most 3")}
     assert faults({**sound, "size": 0.5}, Outer)["/size"][0] == "wrong_type"
 

@@ -300,13 +300,13 @@ class Entropic(LocatedMeasure):
         A fixed rule over [0, 1] misses the layer near 0 when aversion times the range is large.
         """
         reach = self.aversion * spread
-        count = 0 if reach <= 1.0 else int(np.ceil(np.log2(reach)))
-        if count > MOST_PANELS:
+        if reach > 2.0**MOST_PANELS:
             detail = (
                 f"aversion {self.aversion:g} times the range of the losses is {reach:.3g}: beyond 2^{MOST_PANELS} the "
                 "measure is the largest loss and its contributions cannot be told apart; use a smaller aversion"
             )
             raise NotDefined(detail)
+        count = 0 if reach <= 1.0 else int(np.ceil(np.log2(reach)))
         edges = [0.0, *(2.0**-k for k in range(count, -1, -1))]
         points, shares = special.roots_legendre(NODES)
         return [

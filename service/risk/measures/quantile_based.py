@@ -294,7 +294,8 @@ def _shortfall_contribution_influence(line: LocalLine, ties: Ties, rows: Array, 
     if line.at_centre >= ATOM_OF_ITS_OWN:
         centre = np.where(line.centre, ties.p, 0.0)
         at_quantile = (centre / centre.sum()) @ rows
-    inside = int(np.flatnonzero(weights)[-1]) + 1
+    tail = np.flatnonzero(weights)
+    inside = int(tail[-1]) + 1 if tail.size else 0
     values = np.zeros((rows.shape[1], rows.shape[0]))
     np.subtract(rows[:inside].T, at_quantile[:, None], out=values[:, :inside])
     values[:, :inside] *= np.divide(weights, ties.p, out=np.zeros_like(weights), where=ties.p > 0.0)[:inside]
@@ -369,9 +370,7 @@ class RangeValueAtRisk(LocatedMeasure):
     def tail_of(self, ordered: Ordered) -> Array:
         """Return the effective number of scenarios between the two levels."""
         outer, inner = self.shares
-        if inner == 0:
-            return ordered.effective_tail(outer)
-        if ordered.clusters is not None:
+        if inner == 0 or ordered.probabilities is None or ordered.clusters is not None:
             return ordered.effective_tail(outer - inner)
         # share^2 / number is the sum of squared probabilities beyond a level, of which the band has the difference
         beyond = float(outer) ** 2 / ordered.effective_tail(outer)
