@@ -60,8 +60,8 @@ def test_first_come_first_served_within_the_places():
                 nonlocal together, most
                 together += 1
                 most = max(most, together)
-                release.wait(10)
                 order.append(number)
+                release.wait(10)
                 together -= 1
 
             return run
