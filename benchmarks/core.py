@@ -8,7 +8,7 @@ import pandas as pd
 from benchmarks import script
 from benchmarks.books import TIED, arithmetic, normals, table_of
 from benchmarks.rows import Outcome, Pace, Row, at_least, at_most
-from benchmarks.timing import one_by_one, ratios, taking_turns
+from benchmarks.timing import one_by_one, processor_seconds, ratios, taking_turns
 from service.executors import Work
 from service.risk.fold import fold
 
@@ -18,32 +18,41 @@ SLOW_CELLS = 10_000_000  # from which on the script takes seconds
 
 
 def over_one_read(pace: Pace, *, stand_alone: bool) -> Outcome:
-    """Time the core over one read of its table on one thread."""
+    """Time the core over one read of its table on one thread.
+
+    The covariances of the columns with the total cost what the sums of products add to a pass.
+    """
     losses = normals(*LARGE)
     table = table_of(losses)
-    seconds = taking_turns(
-        {
-            "read": lambda: np.add.reduce(losses.reshape(-1)),
-            "core": lambda: arithmetic(table, stand_alone=stand_alone),
-            "fold": lambda: fold(losses, Work(2)),
-            "products": lambda: fold(losses, Work(2), products=True),
-        },
-        pace.repeats,
-    )
+    works = {
+        "read": lambda: np.add.reduce(losses.reshape(-1)),
+        "core": lambda: arithmetic(table, stand_alone=stand_alone),
+        "fold": lambda: fold(losses, Work(2)),
+        "products": lambda: fold(losses, Work(2), products=True),
+    }
+    seconds = taking_turns(works, pace.repeats)
     covariances = [over - under for over, under in zip(seconds["products"], seconds["fold"], strict=True)]
     core = [sum(both) for both in zip(seconds["core"], covariances, strict=True)]
-    return Outcome.of(ratios(core, seconds["read"]))
+    least = processor_seconds(works, pace.repeats)
+    share = (least["core"] + least["products"] - least["fold"]) / least["read"]
+    return Outcome.of(ratios(core, seconds["read"]), [_by_processor(share, "core / one read")])
 
 
 def against_a_script(pace: Pace, *, size: tuple[int, int]) -> Outcome:
     """Time the plain script over the full core."""
     losses = normals(*size)
     table, sheet = table_of(losses), pd.DataFrame(losses)
-    full = partial(arithmetic, table, stand_alone=True)
-    full()
+    works = {"script": lambda: script.figures(sheet), "core": lambda: arithmetic(table, stand_alone=True)}
+    works["core"]()
     slow = losses.size > SLOW_CELLS
-    repeats = pace.slow if slow else pace.repeats
-    return Outcome.of(one_by_one(lambda: script.figures(sheet), full, repeats, warm=not slow))
+    seconds = taking_turns(works, pace.slow if slow else pace.repeats, warm=not slow)
+    least = processor_seconds(works, 1 if slow else pace.repeats)
+    details = [_by_processor(least["script"] / least["core"], f"script / core, {_size(size)}")]
+    return Outcome.of(ratios(seconds["script"], seconds["core"]), details)
+
+
+def _by_processor(ratio: float, what: str) -> str:
+    return f"{ratio:.3g} by processor time, that of all threads together ({what})"
 
 
 def tied_over_untied(pace: Pace, *, kind: str) -> Outcome:

@@ -1,7 +1,7 @@
 """Times of several pieces of work that take turns, so that whatever disturbs the machine hits all alike."""
 
 from collections.abc import Callable, Mapping
-from time import perf_counter
+from time import perf_counter, process_time
 
 
 def taking_turns(
@@ -39,3 +39,14 @@ def one_by_one(
     """Return the times of one work over those of another, repeat by repeat."""
     seconds = taking_turns({"above": above, "below": below}, repeats, warm=warm)
     return ratios(seconds["above"], seconds["below"])
+
+
+def processor_seconds(works: Mapping[str, Callable[[], object]], repeats: int) -> dict[str, float]:
+    """Return the least processor time of each work over all threads: what other jobs disturb least."""
+    seconds: dict[str, list[float]] = {name: [] for name in works}
+    for _ in range(repeats):
+        for name, work in works.items():
+            began = process_time()
+            work()
+            seconds[name].append(process_time() - began)
+    return {name: min(found) for name, found in seconds.items()}

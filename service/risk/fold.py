@@ -153,8 +153,11 @@ class HeldColumns:
 
     def equal(self, columns: Indices, values: Array) -> Indices:
         """Return how often each of some columns takes its value, shape (k,)."""
-        counts = [np.count_nonzero(self.losses[:, j] == value) for j, value in zip(columns, values, strict=True)]
-        return np.array(counts, dtype=np.intp)
+        counts = np.zeros(columns.size, dtype=np.intp)
+        height = max(LEAST_ROWS, BLOCK_BYTES // (8 * self.losses.shape[1]))
+        for start in range(0, self.losses.shape[0], height):
+            counts += np.count_nonzero(self.losses[start : start + height, columns] == values, axis=0)
+        return counts
 
     def column(self, column: int) -> Array:
         """Return all losses of one column, shape (n,)."""

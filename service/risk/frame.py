@@ -153,7 +153,7 @@ class Frame:
         """
         held = self._ranking.order.size
         keep = 8 * held * self.expected.size <= KEPT_BYTES
-        if (self._rows or keep) and ranking.order.size <= held and not ranking.ordered.complete:
+        if (self._rows or keep) and ranking.order.size <= held:
             if not self._rows:
                 self._rows = list(self._pieces(self._ranking.order))
             for rows in self._rows:
