@@ -24,7 +24,7 @@ from service.risk.allocation import euler
 from service.risk.effort import Effort
 from service.risk.factors import ModelScratch
 from service.risk.frame import Frame
-from service.risk.increments import base_of, increment_of
+from service.risk.increments import base_of, increments_of
 from service.risk.measures import ExpectedShortfall, RiskMeasure, ValueAtRisk
 from service.risk.score_tables import ScoreTable
 from service.risk.scores import NormalScores
@@ -180,7 +180,7 @@ def _plain_increment(losses: Array, deal: Array) -> list[float]:
 
 def _judged(frame: Frame, deals: Iterable[Array]) -> None:
     bases = [base_of(frame, measure) for measure in TAIL]
-    Work(2).map(lambda deal: [increment_of(frame, base, deal, COVERAGE) for base in bases], deals)
+    Work(2).map(lambda deal: increments_of(frame, bases, deal, COVERAGE), deals)
 
 
 def _deals(count: int) -> list[Array]:
@@ -215,8 +215,7 @@ def increment_over_read(pace: Pace) -> Outcome:
         np.add.reduce(frame.totals)
 
     def judge() -> None:
-        for base in bases:
-            increment_of(frame, base, deal, COVERAGE)
+        increments_of(frame, bases, deal, COVERAGE)
 
     return Outcome.of(one_by_one(judge, read, 10 * pace.repeats))
 

@@ -19,6 +19,7 @@ from service import demo, intake
 from service.errors import Busy, CallerError, Fault, NotDefined, NotFound, TailraceError, TooLong, pointing
 from service.executors import Work
 from service.intake import Intake
+from service.kept import Store
 from service.payloads import ARROW, CSV, PARQUET, json_text
 from service.risk.loss_table import groups_of
 from service.schemas.losses import BookLosses, HistoryLosses, Losses
@@ -142,6 +143,7 @@ class Books:
         folders = [Path(settings.books)] if settings.books else []
         self._folders = [*folders, demo.FOLDER] if settings.demo else folders
         self._known: OrderedDict[str, _Known] = OrderedDict()
+        self._held: Store[Any] = Store(settings.max_base_bytes)
         self._lock = Lock()
         self._loading: dict[str, Lock] = {}
 
@@ -323,7 +325,7 @@ class Books:
             losses = replace(losses, changes=None, part="table")  # they are held by the source
         defaults = {key: json.loads(value) for key, value in members.items() if key != "losses"}
         given = {key: value for key, value in defaults.items() if value is not None}
-        return Book(name, losses, replace(source, notes=notes), given, replace(request, losses=losses))
+        return Book(name, losses, replace(source, notes=notes, held=self._held), given, replace(request, losses=losses))
 
 
 def _with(taken: Intake, losses: Mapping[str, Any], sources: Mapping[str, Source]) -> Intake:

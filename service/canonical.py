@@ -52,6 +52,13 @@ def canonical_request(intake: Intake, source: Source) -> dict[str, Any]:
     return document
 
 
+def canonical_base(request: IncrementsRequest, source: Source) -> dict[str, Any]:
+    """Return the canonical form of what all candidates of a request share."""
+    losses = _losses(request.losses, source)
+    shared = {name: losses[name] for name in ("digest", "sub_portfolios", "scenarios_are")}
+    return {"losses": shared, "measures": _measures(request.measures), "coverage": request.interval_coverage}
+
+
 def canonical_comparison(request: ComparisonsRequest, before: Source, after: Source) -> dict[str, Any]:
     """Return the canonical form of a comparison of two sources."""
     return {

@@ -85,6 +85,17 @@ class Framed:
     total: Tails = Tails()  # noqa: RUF009  # frozen: thin tails, as scenarios that were given have
     notes: tuple[Note, ...] = ()
 
+    def again(self, work: Work) -> "Framed":
+        """Return the same for other work on the same scenarios."""
+        return replace(
+            self, frame=self.frame.again(work), scramblings=tuple(frame.again(work) for frame in self.scramblings)
+        )
+
+    @property
+    def size(self) -> int:
+        """Bytes that it takes, about."""
+        return sum(frame.size for frame in (self.frame, *self.scramblings))
+
     def estimated(
         self, measure: RiskMeasure, of: Literal["total", "alone", "parts"], function: Callable[[Frame], Estimates]
     ) -> Estimates:

@@ -1,13 +1,46 @@
-"""Answers kept for those who ask the same again, and one computation for all who ask at the same time."""
+"""What is kept for those who ask the same again, and one computation for all who ask at the same time."""
 
 import asyncio
 from collections import OrderedDict
 from collections.abc import Awaitable, Callable
+from threading import Lock
 from typing import Any, Generic, TypeVar
 
 from service.errors import Cancelled
 
 Answer = TypeVar("Answer")
+Thing = TypeVar("Thing")
+
+
+class Store(Generic[Thing]):
+    """The things used last, as many as fit. Safe to use from several threads."""
+
+    def __init__(self, most_bytes: int) -> None:
+        """Keep things of at most `most_bytes` together."""
+        self._most = most_bytes
+        self._things: OrderedDict[str, tuple[Thing, int]] = OrderedDict()
+        self._bytes = 0
+        self._lock = Lock()
+
+    def get(self, key: str) -> Thing | None:
+        """Return the thing kept under `key`."""
+        with self._lock:
+            found = self._things.get(key)
+            if found is None:
+                return None
+            self._things.move_to_end(key)
+            return found[0]
+
+    def put(self, key: str, thing: Thing, size: int) -> None:
+        """Keep a thing of `size` bytes, and let go of those not used for longest; not if it could never fit."""
+        with self._lock:
+            self._bytes -= self._things.pop(key, (thing, 0))[1]
+            if size > self._most:
+                return
+            self._things[key] = (thing, size)
+            self._bytes += size
+            while self._bytes > self._most:
+                self._bytes -= self._things.popitem(last=False)[1][1]
 
 
 class _Flight(Generic[Answer]):
@@ -26,18 +59,13 @@ class Kept(Generic[Answer]):
 
     def __init__(self, most_bytes: int, size: Callable[[Answer], int]) -> None:
         """Keep answers of at most `most_bytes` together; `size` tells the bytes of one."""
-        self._most, self._size = most_bytes, size
-        self._answers: OrderedDict[str, tuple[Answer, int]] = OrderedDict()
+        self._size = size
+        self._answers: Store[Answer] = Store(most_bytes)
         self._flights: dict[str, _Flight[Answer]] = {}
-        self._bytes = 0
 
     def get(self, key: str) -> Answer | None:
         """Return the answer kept under `key`."""
-        found = self._answers.get(key)
-        if found is None:
-            return None
-        self._answers.move_to_end(key)
-        return found[0]
+        return self._answers.get(key)
 
     async def shared(
         self, key: str, compute: Callable[[asyncio.Event], Awaitable[Answer]], gone: asyncio.Event
@@ -83,17 +111,11 @@ class Kept(Generic[Answer]):
         return flight.task.result()
 
     def _landed(self, key: str, task: "asyncio.Future[Answer]") -> None:
-        """Keep an answer, and let go of those not used for longest."""
+        """Keep an answer."""
         flight = self._flights.get(key)
         if flight is not None and flight.task is task:
             del self._flights[key]
         if task.cancelled() or task.exception() is not None:
             return
         answer = task.result()
-        size = self._size(answer)
-        if size > self._most:
-            return
-        self._bytes += size - self._answers.pop(key, (answer, 0))[1]
-        self._answers[key] = (answer, size)
-        while self._bytes > self._most:
-            self._bytes -= self._answers.popitem(last=False)[1][1]
+        self._answers.put(key, answer, self._size(answer))

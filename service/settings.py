@@ -47,6 +47,12 @@ class Settings:
     max_book_bytes: int = _setting(
         1024 * MEBIBYTE, "memory that the tables of books may take between requests", unit="bytes", least=0
     )
+    max_base_bytes: int = _setting(
+        512 * MEBIBYTE,
+        "memory that books made ready for candidates may take between requests",
+        unit="bytes",
+        least=0,
+    )
     max_answer_bytes: int = _setting(
         64 * MEBIBYTE, "memory that answers kept for repeated GET requests may take", unit="bytes", least=0
     )

@@ -2,12 +2,14 @@
 
 from collections.abc import Sequence
 from dataclasses import asdict, dataclass
+from typing import Any
 
 import numpy as np
 from scipy import special
 
 from service.errors import Fault, InvalidValue, Limit, LimitExceeded, NotFound, pointing
 from service.executors import Work
+from service.kept import Store
 from service.payloads import Sheet
 from service.provenance import document_digest, losses_digest
 from service.resolve import loss_table
@@ -68,6 +70,8 @@ class Source:
         Of each sub-portfolio and then of the total, where the law is known.
     notes : tuple of (str, str, str or None)
         Code, detail and pointer into the request.
+    held : Store
+        Where what is made of the losses may be kept between requests.
     """
 
     digest: str
@@ -79,6 +83,7 @@ class Source:
     factor_ids: tuple[str, ...] = ()
     tails: Sequence[Tails] | None = None
     notes: tuple[tuple[str, str, str | None], ...] = ()
+    held: Store[Any] = Store(0)  # noqa: RUF009  # one that keeps nothing
 
     @property
     def seed(self) -> int | None:

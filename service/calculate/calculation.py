@@ -10,7 +10,7 @@ from service.answers import Notes, figure_list
 from service.canonical import canonical_request
 from service.errors import CallerError, Fault, Limit, LimitExceeded, TailraceError, pointing
 from service.executors import Work
-from service.frames import Demand, framed
+from service.frames import Demand, Framed, framed
 from service.intake import Intake
 from service.provenance import document_digest
 from service.risk import figures
@@ -80,7 +80,15 @@ def _placed(fault: Fault, intake: Intake) -> Fault:
 class Calculation:
     """What all calculations on a frame share."""
 
-    def __init__(self, intake: Intake, source: Source, demand: Demand, work: Work, settings: Settings) -> None:
+    def __init__(  # all that a calculation starts from
+        self,
+        intake: Intake,
+        source: Source,
+        demand: Demand,
+        work: Work,
+        settings: Settings,
+        made: Framed | None = None,
+    ) -> None:
         if isinstance(intake.request, ComparisonsRequest):
             raise TypeError("a comparison is made of two calculations")
         self.asked = intake.request
@@ -88,7 +96,8 @@ class Calculation:
         stop = losses.simulation.stop_when if isinstance(losses, FactorLosses) else None
         with placed(intake):
             self._framed_at = FRAMED_FOR_ALL if demand.all_losses else FRAMED
-            self.made = framed(source, demand, stop, work.part(0.0, self._framed_at), settings)
+            part = work.part(0.0, self._framed_at)
+            self.made = framed(source, demand, stop, part, settings) if made is None else made.again(part)
         self.work = work
         self.intake, self.source, self.frame = intake, source, self.made.frame
         self.coverage = demand.coverage

@@ -1,24 +1,47 @@
 """`POST /v1/increments`: what one more deal would change, each candidate judged alone."""
 
-from collections.abc import Callable
-from dataclasses import replace
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
 
 from service import answers
 from service.answers import Notes
 from service.calculate.calculation import Calculation, Describe, source_asked
 from service.calculate.candidates import Read, Reader
+from service.canonical import canonical_base
 from service.errors import CallerError, LossesChanged, TooLong, pointing
 from service.executors import Work
-from service.frames import Demand
+from service.frames import Demand, Framed
 from service.intake import Intake
-from service.risk.increments import Base, Increment, base_of, increment_of
+from service.provenance import document_digest
+from service.risk.increments import Base, Increment, base_of, increments_of
 from service.risk.quantiles import Array
-from service.risk.uncertainty import Estimates
 from service.schemas.requests import Candidate, IncrementsRequest
 from service.schemas.results import BaseFigure, CandidateFigures, CandidateResult, IncrementsAnswer
 from service.settings import Settings
 
 BATCH_BYTES = 1 << 28  # of losses of candidates held at a time
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Ready:
+    """What candidates are judged against: the same for all requests with this base and these measures.
+
+    Attributes
+    ----------
+    made : Framed
+    bases : list of list of Base
+        For each frame, those of the measures.
+    """
+
+    made: Framed
+    bases: list[list[Base]]
+
+    @property
+    def size(self) -> int:
+        """Bytes that it takes, about."""
+        return self.made.size + sum(base.influence.nbytes + base.order.nbytes for of in self.bases for base in of)
 
 
 class Increments(Calculation):
@@ -32,7 +55,9 @@ class Increments(Calculation):
             detail = f"the losses have the digest {source.digest}, not the one given"
             raise LossesChanged.at("/base_digest", detail)
         demand = Demand(request.measures, request.interval_coverage, stand_alone=False, all_losses=True)
-        super().__init__(intake, source, demand, work, settings)
+        self._key = document_digest(canonical_base(request, source))
+        self._ready: _Ready | None = source.held.get(self._key)
+        super().__init__(intake, source, demand, work, settings, self._ready and self._ready.made)
         self.request, self.describe = request, describe
         self.ids = [one.id for one in source.sub_portfolios]
 
@@ -41,8 +66,12 @@ class Increments(Calculation):
         for number, measure in enumerate(self.request.measures):
             with pointing(f"/measures/{number}"):
                 totals.append(BaseFigure(measure.name, self.total(number, measure)))
-        frames = (self.frame, *self.made.scramblings)
-        bases = [[base_of(frame, measure) for frame in frames] for measure in self.request.measures]
+        if self._ready is None:
+            frames = (self.frame, *self.made.scramblings)
+            bases = [[base_of(frame, measure) for measure in self.request.measures] for frame in frames]
+            self._ready = _Ready(self.made.again(Work()), bases)  # nobody works on what is kept
+            self.source.held.put(self._key, self._ready, self._ready.size)
+        bases = self._ready.bases
         candidates = self.request.candidates
         plan = replace(self.source, plan=self.made.plan)
         reader = Reader(plan, self.frame, self.request.measures, candidates)
@@ -69,9 +98,7 @@ class Increments(Calculation):
             return CandidateResult(read.name, "refused", [], self._problem(read.error)), notes
         try:
             with pointing(f"/candidates/{read.number}"):
-                parts = [
-                    self._figures(read.candidate, base, read.loss, number, notes) for number, base in enumerate(bases)
-                ]
+                parts = self._figures(read.candidate, bases, read.loss, notes)
         except TooLong:
             raise
         except CallerError as error:
@@ -82,30 +109,33 @@ class Increments(Calculation):
         return None if error is None else self.describe(error)
 
     def _figures(
-        self, candidate: Candidate, bases: list[Base], loss: Array, number: int, notes: Notes
-    ) -> CandidateFigures:
-        """Return what a candidate changes in one measure; the first base is that of all scenarios."""
+        self, candidate: Candidate, bases: list[list[Base]], loss: Array, notes: Notes
+    ) -> list[CandidateFigures]:
+        """Return what a candidate changes in each measure; the first frame is that of all scenarios."""
         pooled, *others = bases
-        increment = increment_of(self.frame, pooled, loss, self.coverage)
+        found = increments_of(self.frame, pooled, loss, self.coverage)
         if others:
-            size = loss.size // len(others)
-            parts = [
-                increment_of(frame, base, loss[k * size : (k + 1) * size], self.coverage)
-                for k, (frame, base) in enumerate(zip(self.made.scramblings, others, strict=True))
+            parts = np.split(loss, len(others))
+            apart = [
+                increments_of(frame, of_frame, part, self.coverage)
+                for frame, of_frame, part in zip(self.made.scramblings, others, parts, strict=True)
             ]
-
-            def combined(of: Callable[[Increment], Estimates]) -> Estimates:
-                return self.made.combined(of(increment), [of(part).values for part in parts])
-
-            increment = replace(
-                increment,
-                total_with=combined(lambda one: one.total_with),
-                increment=combined(lambda one: one.increment),
-                contribution=combined(lambda one: one.contribution),
-                stand_alone=combined(lambda one: one.stand_alone),
+            found = [self._combined(one, each) for one, *each in zip(found, *apart, strict=True)]
+        figures = []
+        for number, (base, increment) in enumerate(zip(pooled, found, strict=True)):
+            for estimates in increment.estimated:
+                notes.of_estimates(number, base.measure, estimates)
+            figures.append(
+                answers.candidate_figures(
+                    self.request, candidate.expected_profit, number, base, increment, self.ids, notes
+                )
             )
-        for estimates in (increment.total_with, increment.increment, increment.contribution, increment.stand_alone):
-            notes.of_estimates(number, pooled.measure, estimates)
-        return answers.candidate_figures(
-            self.request, candidate.expected_profit, number, pooled, increment, self.ids, notes
+        return figures
+
+    def _combined(self, pooled: Increment, parts: Sequence[Increment]) -> Increment:
+        """Return an increment with the errors that those of the scramblings show."""
+        apart = zip(pooled.estimated, *(part.estimated for part in parts), strict=True)
+        total_with, increment, contribution, stand_alone = (
+            self.made.combined(one, [part.values for part in each]) for one, *each in apart
         )
+        return Increment(total_with, increment, contribution, stand_alone, pooled.moved)

@@ -1,7 +1,7 @@
 """A loss table made ready for any number of measures: totals, groups, order, tails; each made once."""
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -16,6 +16,7 @@ from service.risk.ranking import MOST_PARTIAL, Ranking, ranked, worst
 from service.risk.uncertainty import Sampling
 
 CHUNK_BYTES = 1 << 25  # of sorted columns held at a time
+RANKED_BYTES = 56  # of each scenario in a ranking
 KEPT_BYTES = 1 << 28  # of the tail's rows held between measures
 PIECE_BYTES = 1 << 20  # of columns worked on at a time: they and what is made of them stay in the cache
 LEAST_COLUMNS = 16  # of a piece: what is made of the total alone is made once for each piece
@@ -106,9 +107,17 @@ class Frame:
         ranking = ranked(folded.totals, table, depth=depth)
         return cls(table, groups, effort, (table.losses, sums), folded.totals, expected, tails, ranking)
 
-    def _depth(self, measure: RiskMeasure, *, contributions: bool) -> float:
-        """Return how deep `measure` looks; 1 where everything has to be ordered."""
-        return depth_of(measure, self.scenarios, contributions=contributions) if self.table.plain else 1.0
+    def again(self, effort: Effort) -> "Frame":
+        """Return the same frame for other work; what is found out on one of them is not known to the other."""
+        return replace(self, effort=effort, _rows=list(self._rows), _cuts=dict(self._cuts), known=dict(self.known))
+
+    @property
+    def size(self) -> int:
+        """Bytes that it takes, about."""
+        columns = self.columns or ()
+        held = (*columns, *self._rows, self.totals, *(() if self._tails is None else (self._tails,)))
+        orders = sum(one.order.size for one in (self._ranking, *self._cuts.values(), self._whole) if one is not None)
+        return sum(one.nbytes for one in held) + RANKED_BYTES * orders
 
     def hold(self, columns: Array) -> None:
         """Keep the losses (d + G, m) of the deepest ranking, in its order."""
@@ -127,9 +136,9 @@ class Frame:
             self.scenarios, None if p is None else p[None, :], None if clusters is None else clusters[None, :]
         )
 
-    def depth(self, measure: RiskMeasure) -> float:
-        """Return the share of worst scenarios that `measure`, its error and its contributions look at."""
-        return self._depth(measure, contributions=True)
+    def depth(self, measure: RiskMeasure, *, contributions: bool = True) -> float:
+        """Return the share of worst scenarios that `measure`, its error (and its contributions) look at."""
+        return depth_of(measure, self.scenarios, contributions=contributions) if self.table.plain else 1.0
 
     def ranking(self, measure: RiskMeasure) -> Ranking:
         """Return the scenarios in the order of their total, as deep as `measure` looks."""
@@ -198,7 +207,7 @@ class Frame:
 
     def alone(self, measure: RiskMeasure) -> Iterator[Ordered]:
         """Yield the columns as ordered distributions, as deep as `measure` looks, a few at a time."""
-        if self._tails is not None and self._depth(measure, contributions=False) < 1.0:
+        if self._tails is not None and self.depth(measure, contributions=False) < 1.0:
             depth = measure.depth(self.scenarios, contributions=False)
             kept = min(self._tails.shape[1], int(np.ceil(depth * self.scenarios)) + 1)
             width = max(LEAST_COLUMNS, PIECE_BYTES // (8 * kept))
@@ -246,5 +255,5 @@ class Frame:
 
     def one(self, values: Array, measure: RiskMeasure) -> tuple[Ordered, Indices]:
         """Return any loss (n,) as a single ordered distribution and the scenario number of each position."""
-        order = worst(values, self._depth(measure, contributions=False))
+        order = worst(values, self.depth(measure, contributions=False))
         return self._ordered(values[order][None, :], order[None, :]), order

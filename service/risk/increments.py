@@ -1,18 +1,20 @@
 """What one more loss changes: the measures with it and without it, errors paired, and how the others' parts move."""
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, field
 
 import numpy as np
 
-from service.risk.figures import estimates, judged
+from service.risk.figures import Moved, estimates, judged
 from service.risk.frame import Frame
 from service.risk.measures import ContributionWeights, RiskMeasure, full_influence, full_values
-from service.risk.quantiles import Array, Indices
+from service.risk.quantiles import Array, Indices, Ordered
 from service.risk.ranking import Ranking, ranked_with
 from service.risk.uncertainty import (
     Estimates,
     Influence,
     Sampling,
+    Spread,
     lean_of_parts,
     leaning_estimates,
     spread,
@@ -71,6 +73,11 @@ class Increment:
     stand_alone: Estimates
     moved: Array
 
+    @property
+    def estimated(self) -> tuple[Estimates, Estimates, Estimates, Estimates]:
+        """What has an error, in the order of the fields."""
+        return self.total_with, self.increment, self.contribution, self.stand_alone
+
 
 def base_of(frame: Frame, measure: RiskMeasure) -> Base:
     """Return what all candidates share."""
@@ -83,57 +90,111 @@ def base_of(frame: Frame, measure: RiskMeasure) -> Base:
     return Base(measure, float(full_values(measure, ordered)[0]), values, order, rest, contributions)
 
 
-def increment_of(frame: Frame, base: Base, loss: Array, coverage: float) -> Increment:
-    """Return what a candidate changes.
+@dataclass(frozen=True, slots=True, eq=False)
+class _Enlarged:
+    """A book with a candidate, and the candidate alone, in order; measures that look equally deep share them."""
+
+    frame: Frame
+    loss: Array
+    _ranked: dict[float, tuple[Ranking, Array]] = field(default_factory=dict)
+    _alone: dict[float, Ordered] = field(default_factory=dict)
+
+    def ranked(self, measure: RiskMeasure) -> tuple[Ranking, Array]:
+        """Return the enlarged book as deep as `measure` looks, and its rows (m, d + 1) in that order."""
+        depth = self.frame.depth(measure)
+        if depth not in self._ranked:
+            self._ranked[depth] = ranked_with(self.frame.totals, self.frame.table, self.loss, depth=depth)
+        return self._ranked[depth]
+
+    def alone(self, measure: RiskMeasure) -> Ordered:
+        """Return the candidate alone as deep as `measure` looks."""
+        depth = self.frame.depth(measure, contributions=False)
+        if depth not in self._alone:
+            self._alone[depth] = self.frame.one(self.loss, measure)[0]
+        return self._alone[depth]
+
+
+def increments_of(frame: Frame, bases: Sequence[Base], loss: Array, coverage: float) -> list[Increment]:
+    """Return what a candidate changes in each measure.
 
     Parameters
     ----------
     frame : Frame
         The book; its scenarios are the candidate's.
-    base : Base
-        Of the measure.
+    bases : sequence of Base
+        One for each measure.
     loss : ndarray of shape (n,)
         The candidate's loss in scenario order.
     coverage : float
         Nominal coverage of the intervals.
     """
-    measure = base.measure
-    ranking, rows = ranked_with(frame.totals, frame.table, loss, depth=frame.depth(measure))
+    enlarged = _Enlarged(frame, loss)
+    return [_increment(enlarged, base, coverage) for base in bases]
+
+
+def _increment(enlarged: _Enlarged, base: Base, coverage: float) -> Increment:
+    """Return what the candidate changes in one measure."""
+    measure, expected = base.measure, enlarged.frame.expected
+    ranking, rows = enlarged.ranked(measure)
     ordered = ranking.ordered
-    total_with = estimates(measure, ordered, coverage)
-    alone, _ = frame.one(loss, measure)
     weights = measure.contribution_weights(ordered, ranking.ties, "auto")
-    moved = weights.values @ rows[:, :-1]
+    parts = weights.values @ rows
     if measure.above == "mean":
-        moved = moved - frame.expected[: moved.size]
+        parts -= np.append(expected[: parts.size - 1], ranking.ties.p @ rows[:, -1])
+    difference = full_values(measure, ordered) - base.value
+    alone = estimates(measure, enlarged.alone(measure), coverage)
+    if not ordered.sampled:
+        total_with, increment, contribution = map(
+            Estimates.exact, (full_values(measure, ordered), difference, parts[-1:])
+        )
+        return Increment(total_with, increment, contribution, alone, parts[:-1])
+    moved = Moved.by(measure, ordered)
+    of = _spread_of_difference(enlarged.frame, base, ranking, moved.influence)
+    counts = measure.tail_of(ordered)
+    tail = of.effective if counts is None else counts
+    increment = leaning_estimates(difference, of, usual_lean(of), coverage=coverage, tail_scenarios=tail)
     return Increment(
-        total_with=total_with,
-        increment=_difference(frame, base, ranking, coverage),
-        contribution=_contribution(measure, ranking, weights, rows[:, -1:], coverage),
-        stand_alone=estimates(measure, alone, coverage),
-        moved=moved,
+        total_with=estimates(measure, ordered, coverage, lambda: moved),
+        increment=judged(measure, increment),
+        contribution=_contribution(measure, ranking, weights, parts[-1:], rows[:, -1:], moved, coverage),
+        stand_alone=alone,
+        moved=parts[:-1],
     )
 
 
-def _difference(frame: Frame, base: Base, ranking: Ranking, coverage: float) -> Estimates:
-    """Return the figure of the enlarged total less that of the base, with the error of the difference."""
-    measure, ordered = base.measure, ranking.ordered
-    difference = full_values(measure, ordered) - base.value
-    if not ordered.sampled:
-        return Estimates.exact(difference)
-    influence = full_influence(measure, ordered)
-    sampling = frame.sampling
-    inside = np.arange(frame.scenarios)
-    if frame.table.plain and base.order.size + ranking.order.size < frame.scenarios:
-        inside = np.union1d(base.order, ranking.order)  # elsewhere all differ by the same
-        sampling = Sampling(frame.scenarios)
-    values = influence.rest[0] - base.influence[inside]
-    values[np.searchsorted(inside, ranking.order)] = influence.values[0] - base.influence[ranking.order]
-    of = spread(Influence(values[None, :], influence.rest - base.rest), sampling)
-    tail = measure.tail_of(ordered)
-    counts = of.effective if tail is None else tail
-    figures = leaning_estimates(difference, of, usual_lean(of), coverage=coverage, tail_scenarios=counts)
-    return judged(measure, figures)
+def _spread_of_difference(frame: Frame, base: Base, ranking: Ranking, influence: Influence) -> Spread:
+    """Return how the influence values of the enlarged total less those of the base spread."""
+    enlarged = np.full(frame.scenarios, influence.rest[0])
+    enlarged[ranking.order] = influence.values[0]
+    rest = influence.rest - base.rest
+    if not frame.table.plain or base.order.size + ranking.order.size >= frame.scenarios:
+        return spread(Influence((enlarged - base.influence)[None, :], rest), frame.sampling)
+    either = np.zeros(frame.scenarios, dtype=bool)
+    either[base.order] = either[ranking.order] = True
+    inside = np.flatnonzero(either)  # elsewhere all differ by the same
+    return spread(Influence((enlarged[inside] - base.influence[inside])[None, :], rest), Sampling(frame.scenarios))
+
+
+def _contribution(  # of one column, as the measure has weighted it
+    measure: RiskMeasure,
+    ranking: Ranking,
+    weights: ContributionWeights,
+    value: Array,
+    column: Array,
+    moved: Moved,
+    coverage: float,
+) -> Estimates:
+    """Return the Euler contribution `value` (1,) of one column (m, 1) to the ranked total, with its error."""
+    ordered = ranking.ordered
+    influence = measure.contribution_influence(ordered, ranking.ties, column, weights)
+    if measure.above == "mean":
+        influence = Influence(influence.values - column.T, influence.rest)
+    of = spread(influence, Sampling.of(ordered), beside=moved.influence)
+    counts = measure.tail_of(ordered)
+    tail = of.effective if counts is None else counts
+    leans = lean_of_parts(of, float(moved.lean[0]))
+    figures = judged(measure, leaning_estimates(value, of, leans, coverage=coverage, tail_scenarios=tail))
+    return figures.remarked("smoothed_quantile") if weights.window else figures
 
 
 def _parts(measure: RiskMeasure, ranking: Ranking, frame: Frame) -> Array:
@@ -142,29 +203,3 @@ def _parts(measure: RiskMeasure, ranking: Ranking, frame: Frame) -> Array:
     inside = np.flatnonzero(weights)
     parts = weights[inside] @ frame.table.losses.take(ranking.order[inside], axis=0)
     return parts - frame.expected[: parts.size] if measure.above == "mean" else parts
-
-
-def _contribution(
-    measure: RiskMeasure, ranking: Ranking, weights: ContributionWeights, rows: Array, coverage: float
-) -> Estimates:
-    """Return the Euler contribution of one column `rows` (m, 1) to the ranked total."""
-    ordered, ties = ranking.ordered, ranking.ties
-    values = weights.values @ rows
-    if measure.above == "mean":
-        values = values - ties.p @ rows
-    if not ordered.sampled:
-        return Estimates.exact(values)
-    influence = measure.contribution_influence(ordered, ties, rows, weights)
-    if measure.above == "mean":
-        influence = Influence(influence.values - rows.T, influence.rest)
-    total = full_influence(measure, ordered)
-    sampling = Sampling.of(ordered)
-    of_total = spread(total, sampling)
-    lean = measure.lean(ordered, full_values(measure, ordered), of_total)
-    lean = usual_lean(of_total) if lean is None else lean
-    of = spread(influence, sampling, beside=total)
-    tail = measure.tail_of(ordered)
-    counts = of.effective if tail is None else tail
-    leans = lean_of_parts(of, float(lean[0]))
-    figures = judged(measure, leaning_estimates(values, of, leans, coverage=coverage, tail_scenarios=counts))
-    return figures.remarked("smoothed_quantile") if weights.window else figures

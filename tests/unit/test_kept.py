@@ -5,7 +5,7 @@ import asyncio
 import pytest
 
 from service.errors import Cancelled, InvalidValue
-from service.kept import Kept
+from service.kept import Kept, Store
 
 
 def run(story):
@@ -105,3 +105,15 @@ def test_a_computation_goes_on_while_one_caller_is_there_and_stops_after_the_las
         assert await answers.shared("other", lambda _gone: at_once("fresh"), asyncio.Event()) == "fresh"
 
     run(story())
+
+
+def test_a_store_holds_what_was_used_last():
+    store = Store(10)
+    store.put("a", "first", 4)
+    store.put("b", "second", 4)
+    store.put("a", "again", 6)
+    assert (store.get("a"), store.get("b")) == ("again", "second")
+    store.put("c", "third", 1)
+    assert (store.get("a"), store.get("b"), store.get("c")) == (None, "second", "third")
+    store.put("b", "too large now", 11)
+    assert store.get("b") is None

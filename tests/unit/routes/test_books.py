@@ -11,6 +11,7 @@ import pyarrow as pa
 import pytest
 
 from service import __version__, calculate
+from service.calculate import increments
 from service.representations.page import PICTURE_POLICY, POLICY
 from tests.serving import assert_problem, running
 
@@ -576,3 +577,31 @@ def test_browsers_of_other_origins_only_by_setting(client, folder):
         assert "access-control-allow-origin" not in stranger.headers
         plain = shared.options(CELL, headers=origin)
         assert plain.headers["allow"] == "GET, HEAD, OPTIONS"
+
+
+def test_a_base_is_made_ready_once(folder, monkeypatch):
+    """Every quote against a book finds its totals and tails made, however it asks; other measures make others."""
+    made, base_of = [], increments.base_of
+    monkeypatch.setattr(increments, "base_of", lambda *a: made.append(a[1].name) or base_of(*a))
+
+    def ask(client, level, **more):
+        candidate = {"id": "deal", "values": [float(k % 13) for k in range(200)]}
+        measures = [{"kind": "expected_shortfall", "level": level}]
+        request = {"losses": {"kind": "book", "name": "harbour"}, "measures": measures, "candidates": [candidate]}
+        return client.post("/v1/increments", json={**request, **more})
+
+    with running(books=str(folder)) as client:
+        first = ask(client, 0.9)
+        assert first.status_code == 200
+        assert ask(client, 0.9).content == first.content
+        assert ask(client, 0.9, hurdle_rate=0.1).status_code == 200
+        assert made == ["expected_shortfall 0.9"]
+        path = f"{HOME}/increments?sub_portfolio=hull&scale=1.1&{ES}"
+        assert client.get(path).status_code == 200
+        assert made == ["expected_shortfall 0.9"]
+        assert ask(client, 0.8).status_code == 200
+        assert made == ["expected_shortfall 0.9", "expected_shortfall 0.8"]
+    made.clear()
+    with running(books=str(folder), max_base_bytes=0) as client:
+        assert ask(client, 0.9).content == ask(client, 0.9).content == first.content
+        assert made == ["expected_shortfall 0.9"] * 2
