@@ -48,6 +48,8 @@ class Intake:
         The numbers as they were sent: bare, or with a header; None where the losses have no table apart.
     part : str or None
         Where a table with a header stands: `body` or `table`.
+    candidates : mapping of int to memoryview
+        For increments: the text of the values of each candidate that gives them, by its number.
     tables : mapping of str to ndarray
         For a request with two sources: the bare table of each, by its name.
     sources : mapping of str to Source
@@ -60,6 +62,7 @@ class Intake:
     request: Request
     table: NDArray[np.float64] | Sheet | None
     part: str | None = None
+    candidates: Mapping[int, memoryview] = field(default_factory=dict)
     tables: Mapping[str, NDArray[np.float64]] = field(default_factory=dict)
     sources: Mapping[str, Source] = field(default_factory=dict)
     by_query: bool = False
@@ -134,44 +137,36 @@ def _json_body(calculation: str, body: bytes, settings: Settings) -> Intake:
     request = _validated(calculation, envelope.document, envelope.text)
     if isinstance(request, ComparisonsRequest):
         books = {"before": request.before, "after": request.after}
-        tables = {name: _inner_table(losses, name, envelope.document, settings) for name, losses in books.items()}
+        tables = {name: _table(losses, name, envelope, settings) for name, losses in books.items()}
         return Intake(calculation, request, None, tables={name: one for name, one in tables.items() if one is not None})
-    return Intake(calculation, request, _table(request.losses, envelope, settings))
+    table = _table(request.losses, "losses", envelope, settings)
+    return Intake(calculation, request, table, candidates=_candidates(envelope))
 
 
-def _inner_table(losses: Losses, name: str, document: dict[str, Any], settings: Settings) -> NDArray[np.float64] | None:
-    """Return the table of one of two sources, which is part of the document like everything else."""
+def _candidates(envelope: payloads.Envelope) -> Mapping[int, memoryview]:
+    """Return the texts of the values of candidates, by their numbers; each is decoded, and refused, alone."""
+    apart = ((pointer.split("/"), text) for pointer, text in envelope.apart.items())
+    return {int(steps[2]): text for steps, text in apart if steps[1] == "candidates"}
+
+
+def _table(losses: Losses, name: str, envelope: payloads.Envelope, settings: Settings) -> NDArray[np.float64] | None:
+    """Return the table that stands in the JSON itself, in its member `name`; None where there is none to be decoded."""
     if isinstance(losses, FactorLosses | BookLosses):
         return None
     if losses.part is not None:
-        raise InvalidValue.at(f"/{name}/part", "a comparison holds both tables itself, as values or packed")
+        alone = "but the body is JSON alone" if name == "losses" else "but a comparison is JSON alone"
+        detail = f"part says that the table is another part of a multipart request, {alone}"
+        raise InvalidValue.at(f"/{name}/part", detail)
     if losses.packed is not None:
         with pointing(f"/{name}/packed"):
-            return _unpacked(losses.packed, losses.packed.data, settings)
+            return _unpacked(losses.packed, envelope.apart[f"/{name}/packed/data"], settings)
     if isinstance(losses, HistoryLosses):
         return None
     with pointing(f"/{name}/values"):
-        text = payloads.json_text(document[name]["values"])
-        return payloads.rows_from_json(memoryview(text), max_cells=settings.max_cells)
+        return payloads.rows_from_json(envelope.apart.get(f"/{name}/values", b""), max_cells=settings.max_cells)
 
 
-def _table(losses: Losses, envelope: payloads.Envelope, settings: Settings) -> NDArray[np.float64] | None:
-    """Return the table that stands in the JSON itself; None where there is none to be decoded."""
-    if isinstance(losses, FactorLosses | BookLosses):
-        return None
-    if losses.part is not None:
-        detail = "part says that the table is another part of a multipart request, but the body is JSON alone"
-        raise InvalidValue.at("/losses/part", detail)
-    if losses.packed is not None and envelope.packed is not None:
-        with pointing("/losses/packed"):
-            return _unpacked(losses.packed, envelope.packed, settings)
-    if isinstance(losses, HistoryLosses):
-        return None
-    with pointing("/losses/values"):
-        return payloads.rows_from_json(envelope.table or b"", max_cells=settings.max_cells)
-
-
-def _unpacked(packed: PackedTable, data: memoryview | str, settings: Settings) -> NDArray[np.float64]:
+def _unpacked(packed: PackedTable, data: memoryview, settings: Settings) -> NDArray[np.float64]:
     return payloads.unpack(
         data, dtype=packed.dtype, rows=packed.rows, columns=packed.columns, max_cells=settings.max_cells
     )
@@ -205,7 +200,8 @@ def read_parts(
     if isinstance(model.losses, FactorLosses | BookLosses) or model.losses.part is None:
         detail = 'a request of two parts says "part": "table" where its losses are, and holds no other table'
         raise InvalidValue.at("/losses", detail)
-    return Intake(calculation, model, _sheet(model.losses, table, media_type, TABLE_PART, settings), TABLE_PART)
+    sheet = _sheet(model.losses, table, media_type, TABLE_PART, settings)
+    return Intake(calculation, model, sheet, TABLE_PART, candidates=_candidates(envelope))
 
 
 def _table_body(

@@ -49,9 +49,14 @@ def losses_digest(
     return PREFIX + digest.hexdigest()
 
 
+def text_digest(text: bytes | memoryview) -> str:
+    """Return the digest of bytes as they are."""
+    return PREFIX + hashlib.sha256(text).hexdigest()
+
+
 def document_digest(document: dict[str, Any]) -> str:
     """Return the digest of a JSON document in canonical form."""
-    return PREFIX + hashlib.sha256(canonical(document)).hexdigest()
+    return text_digest(canonical(document))
 
 
 def canonical(document: dict[str, Any]) -> bytes:

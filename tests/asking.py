@@ -9,8 +9,12 @@ from service.settings import Settings
 
 def answered(calculation, document, *, work=None, **settings):
     """Return the answer of a request given as a document."""
+    return answered_text(calculation, json.dumps(document).encode(), work=work, **settings)
+
+
+def answered_text(calculation, body, *, work=None, **settings):
+    """Return the answer of a request in JSON."""
     chosen = Settings(**settings)
-    body = json.dumps(document).encode()
     read = intake.read(calculation, body, content_type=intake.JSON, parameters=(), settings=chosen)
     return calculate.answer(read, work or Work(1), chosen, problems.describe)
 

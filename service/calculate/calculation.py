@@ -130,6 +130,10 @@ class Calculation:
         self.notes.of_estimates(number, measure, estimates)
         return figure_list(estimates, self.coverage)
 
+    def canonical(self) -> dict[str, Any]:
+        """Return the canonical form of the request."""
+        return canonical_request(self.intake, self.source)
+
     def record(self) -> dict[str, Any]:
         """Return labels, notes and provenance, which every answer holds."""
         request = self.asked
@@ -140,7 +144,7 @@ class Calculation:
             "notes": self.notes.listed(),
             "provenance": Provenance(
                 service_version=__version__,
-                request_digest=document_digest(canonical_request(self.intake, self.source)),
+                request_digest=document_digest(self.canonical()),
                 losses_digest=self.source.digest,
                 method=self.source.method,
                 seed=self.source.seed,

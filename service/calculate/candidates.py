@@ -1,17 +1,17 @@
 """Candidates as sent, each read alone: a name, and a loss in every scenario of the base."""
 
-import sys
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
 from pydantic import TypeAdapter, ValidationError
 
-from service.errors import CallerError, InvalidValue, TooLong, pointing
+from service.errors import CallerError, InvalidValue, Malformed, TooLong, pointing
 from service.frames import missing
-from service.payloads import json_text
+from service.payloads import json_text, row_from_json
+from service.provenance import losses_digest, text_digest
 from service.risk.components import ObservedComponent
 from service.risk.components.portfolio import SubPortfolioTerms
 from service.risk.factors import FactorModel
@@ -25,7 +25,6 @@ from service.schemas.requests import Candidate, ScaledCopy
 from service.sources import Source
 from service.validation import echo, refusal
 
-LARGEST = int(sys.float_info.max)
 CANDIDATE: TypeAdapter[Candidate] = TypeAdapter(Candidate)
 OBSERVED: TypeAdapter[Any] = TypeAdapter(list[ObservedComponent])
 
@@ -65,13 +64,19 @@ class Reader:
     measures : sequence of RiskMeasure
         That are asked of each candidate.
     documents : sequence
-        All candidates as sent.
+        All candidates as sent, but for long lists of values.
+    texts : mapping of int to memoryview
+        Those values in JSON, by the number of their candidate.
+    digests : dict of int to str
+        Of those values, or of their text where it holds other things than numbers; filled by reading them.
     """
 
     source: Source
     frame: Frame
     measures: Sequence[RiskMeasure]
     documents: Sequence[Any]
+    texts: Mapping[int, memoryview]
+    digests: dict[int, str] = field(default_factory=dict)
 
     def read(self, numbers: Sequence[int]) -> list[Read]:
         """Return some candidates, those made of components simulated together."""
@@ -113,15 +118,15 @@ class Reader:
             with pointing(f"/candidates/{number}"):
                 candidate = self._candidate(number, document)
                 loss = None
-                if candidate.values is not None:
+                if number in self.texts:
                     with pointing("/values"):
-                        loss = self._values(document["values"])
+                        loss = self._values(number)
                 elif candidate.scaled is not None:
                     with pointing("/scaled/sub_portfolio"):
                         candidate, loss = self._scaled(candidate, candidate.scaled)
                 else:
                     self._check(candidate, document)
-        except TooLong:
+        except (TooLong, Malformed):  # the whole is late, or no JSON
             raise
         except CallerError as error:
             return Read(number, name, error=error)
@@ -129,8 +134,7 @@ class Reader:
 
     def _candidate(self, number: int, document: Any) -> Candidate:
         """Return the model of a candidate; its values are looked at apart, many at a time."""
-        given = isinstance(document, dict) and document.get("values") is not None
-        shell = document | {"values": [0.0]} if given else document
+        shell = document | {"values": [0.0]} if number in self.texts else document
         try:
             candidate = CANDIDATE.validate_json(json_text(shell))
         except ValidationError as error:
@@ -141,18 +145,15 @@ class Reader:
             raise InvalidValue.at("/id", f"{candidate.id!r} is taken already", code="repeated")
         return candidate
 
-    def _values(self, values: Any) -> Array:
+    def _values(self, number: int) -> Array:
         """Return losses (n,) that were sent as a list."""
-        if not isinstance(values, list) or len(values) != self.frame.scenarios:
-            count = f"{len(values)} values are" if isinstance(values, list) else "no list is"
-            detail = f"{count} given, but the book has {self.frame.scenarios} scenarios"
+        text = self.texts[number]
+        self.digests[number] = text_digest(text)
+        loss = row_from_json(text)
+        self.digests[number] = losses_digest([], loss[:, None], None, self.frame.effort)
+        if loss.size != self.frame.scenarios:
+            detail = f"{loss.size} values are given, but the book has {self.frame.scenarios} scenarios"
             raise InvalidValue.at("", detail, code="wrong_count")
-        wrong = next((number for number, value in enumerate(values) if not _is_number(value)), None)
-        loss = np.array(values if wrong is None else values[:wrong], dtype=np.float64) + 0.0
-        if wrong is None and not np.isfinite(loss).all():
-            wrong = int(np.argmin(np.isfinite(loss)))
-        if wrong is not None:
-            raise InvalidValue.at(f"/{wrong}", f"{echo(values[wrong])} is not a finite number", code="wrong_type")
         check_magnitude(self.frame.totals + loss)
         return loss
 
@@ -233,8 +234,3 @@ def _here() -> Iterator[None]:
 
 def _terms(candidate: Candidate) -> SubPortfolioTerms:
     return SubPortfolioTerms(candidate.id, tuple(candidate.components or ()), candidate.sign, tuple(candidate.cover))
-
-
-def _is_number(value: Any) -> bool:
-    """Return whether a decoded JSON value is a number that binary64 can hold, or its infinity."""
-    return type(value) is float or (type(value) is int and abs(value) <= LARGEST)

@@ -2,6 +2,7 @@
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 
@@ -59,6 +60,7 @@ class Increments(Calculation):
         self._ready: _Ready | None = source.held.get(self._key)
         super().__init__(intake, source, demand, work, settings, self._ready and self._ready.made)
         self.request, self.describe = request, describe
+        self._digests: dict[int, str] = {}
         self.ids = [one.id for one in source.sub_portfolios]
 
     def answer(self) -> IncrementsAnswer:
@@ -74,7 +76,7 @@ class Increments(Calculation):
         bases = self._ready.bases
         candidates = self.request.candidates
         plan = replace(self.source, plan=self.made.plan)
-        reader = Reader(plan, self.frame, self.request.measures, candidates)
+        reader = Reader(plan, self.frame, self.request.measures, candidates, self.intake.candidates, self._digests)
         batch = max(1, BATCH_BYTES // (8 * self.frame.scenarios))
         results: list[CandidateResult] = []
         starts = range(0, len(candidates), batch)
@@ -89,6 +91,14 @@ class Increments(Calculation):
                 self.notes.take(notes)
         refused = sum(one.status == "refused" for one in results)
         return IncrementsAnswer(base=totals, candidates=results, refused=refused, **self.record())
+
+    def canonical(self) -> dict[str, Any]:
+        """Return the canonical form of the request, long lists of values by their digests."""
+        document = super().canonical()
+        candidates = list(document["candidates"])
+        for number, digest in self._digests.items():
+            candidates[number] = candidates[number] | {"values": digest}
+        return document | {"candidates": candidates}
 
     def _judged(self, read: Read, fraction: float, bases: list[list[Base]]) -> tuple[CandidateResult, Notes]:
         """Return what one candidate changes, or its problem; several are judged at the same time."""

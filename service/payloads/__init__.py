@@ -1,6 +1,6 @@
 """From the bytes of a request to float64 arrays: no HTTP, no files, and no error but a ``CallerError``.
 
-The JSON envelope is parted from the table inside it (`split_envelope`), the table is decoded by one of
+The JSON envelope is parted from the tables inside it (`split_envelope`), the table is decoded by one of
 the readers (`rows_from_json`, `unpack`, or a member of `TABLE_READERS`), and a request of two parts is
 taken apart by `split_multipart`. Every array is C ordered and finite, and holds no −0.0.
 """
@@ -11,7 +11,7 @@ from typing import Protocol
 from service.payloads.arrow_table import table_from_arrow
 from service.payloads.csv_table import table_from_csv
 from service.payloads.envelope import Envelope, split_envelope
-from service.payloads.json_table import rows_from_json
+from service.payloads.json_table import row_from_json, rows_from_json
 from service.payloads.json_text import json_text
 from service.payloads.media_types import ARROW, CSV, PARQUET
 from service.payloads.multipart import Parts, split_multipart
@@ -29,6 +29,7 @@ __all__ = [
     "Sheet",
     "TableReader",
     "json_text",
+    "row_from_json",
     "rows_from_json",
     "split_envelope",
     "split_multipart",

@@ -1,17 +1,18 @@
 """The JSON body of a request, parted from the huge values inside it without parsing them.
 
-``/losses/values`` (an array) and ``/losses/packed/data`` (a text) are found, and the rest, in which an
-empty value stands in their place, is parsed strictly. To find them, the place of the usual case is guessed by
-looking for the member's name and the next quotation mark; the guess stands only if a real parser, given
-the small rest, finds the empty value at that very place. Otherwise the real parser passes over the whole
-body. Either way the body is JSON exactly if the rest and the values are, and each is parsed once.
+The arrays ``values`` and the texts ``packed/data`` of `losses`, `before` and `after`, and the arrays ``values``
+of candidates are found, and the rest, in which an empty value stands in their place, is parsed strictly. To
+find them, the places of the usual case are guessed by looking for a member's name and the next quotation mark;
+the guesses stand only if a real parser, given the small rest, finds the empty values at these very places and at
+no other. Otherwise the real parser passes over the whole body. Either way the body is JSON exactly if the rest and
+the values are, and each is parsed once.
 """
 
 import json
 import re
 from collections import Counter
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass, field, replace
 from typing import Any, NoReturn
 
 import msgspec
@@ -22,10 +23,12 @@ from service.payloads.cells import excerpt
 
 USUAL_MAX_BYTES = 1 << 25
 HEAD = 1 << 20
-"""Bytes in which the guess looks for the name of a huge value."""
+"""Bytes in which a guess looks for the name of the next huge value."""
+MOST_GUESSES = 1024
 
 _FILLERS = {ord("["): b"[]", ord('"'): b'""'}
 """What stands in the place of a value that was taken out, by the first byte of the value."""
+FILLER_BYTES = 2
 
 _ENCODING_MARKS = (b"\xff\xfe", b"\xfe\xff", b"\x00", b"{\x00")
 _VALUES = (b'"values"', re.compile(rb'"values"[ \t\r\n]*+:[ \t\r\n]*+(?=\[)'))
@@ -40,7 +43,11 @@ _CONSTANT = re.compile(rb"NaN|Infinity")
 _CONTINUATION = bytes(range(0x80, 0xC0))
 """Bytes that continue a character in UTF-8."""
 
+SOURCES = ("losses", "before", "after")
+"""Members that hold a table of losses."""
+
 _OBJECT = msgspec.json.Decoder(dict[str, msgspec.Raw])
+_LIST = msgspec.json.Decoder(list[msgspec.Raw])
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -49,10 +56,8 @@ class Envelope:
 
     document: dict[str, Any]
     """The body as parsed, with ``[]`` and ``""`` in the place of the values kept apart."""
-    table: memoryview | None
-    """Text of the array at ``/losses/values``; ``None`` if there is no array."""
-    packed: memoryview | None
-    """Inside of the text at ``/losses/packed/data``, escapes and all; ``None`` if there is no text."""
+    apart: Mapping[str, memoryview]
+    """The values kept apart, by their pointers: text of an array, inside of a text, escapes and all."""
     text: bytes
     """JSON text of `document`, for a validating parser."""
 
@@ -63,6 +68,7 @@ class _Span:
 
     start: int
     stop: int
+    pointer: str = field(default="", compare=False)
 
 
 def split_envelope(body: bytes | bytearray, *, max_bytes: int = USUAL_MAX_BYTES) -> Envelope:
@@ -98,14 +104,11 @@ def split_envelope(body: bytes | bytearray, *, max_bytes: int = USUAL_MAX_BYTES)
         raise TooLarge(detail, limit=limit, faults=[Fault(detail=detail, code=TooLarge.code, pointer="")])
     document = _parse(text, body, spans)
     view = memoryview(body)
-    tables = [view[span.start : span.stop] for span in spans if body[span.start] == ord("[")]
-    packed = [view[span.start + 1 : span.stop - 1] for span in spans if body[span.start] == ord('"')]
-    return Envelope(
-        document=document,
-        table=tables[0] if tables else None,
-        packed=packed[0] if packed else None,
-        text=text,
-    )
+    apart = {}
+    for span in spans:
+        quoted = body[span.start] == ord('"')
+        apart[span.pointer] = view[span.start + quoted : span.stop - quoted]
+    return Envelope(document=document, apart=apart, text=text)
 
 
 def _require_object(body: bytes | bytearray) -> None:
@@ -123,15 +126,14 @@ def _require_object(body: bytes | bytearray) -> None:
 
 def _spans_of(body: bytes | bytearray) -> Sequence[_Span]:
     """Return where the huge values stand, in order; what is no object has none."""
-    guess = _guess(body)
-    if guess is not None:
-        filler = _FILLERS[body[guess.start]]
+    guesses = _guesses(body)
+    if guesses:
         try:
-            found = _search(_without(body, [guess]))
+            found = _search(_without(body, guesses))
         except (ValueError, RecursionError):
             found = []
-        if found == [_Span(guess.start, guess.start + len(filler))]:
-            return [guess]
+        if found == _shrunk(guesses):
+            return [replace(guess, pointer=one.pointer) for guess, one in zip(guesses, found, strict=True)]
     try:
         return _search(body)
     except RecursionError:
@@ -140,19 +142,39 @@ def _spans_of(body: bytes | bytearray) -> Sequence[_Span]:
         _refuse(body, str(reason))
 
 
-def _guess(body: bytes | bytearray) -> _Span | None:
-    """Return where a huge value probably stands: from the member's name to the next quotation mark."""
-    name, member = _VALUES
-    if (place := member.match(body, max(body.find(name, 0, HEAD), 0))) is not None:
-        quote = body.find(b'"', place.end())
-        last = body.rfind(b"]", place.end(), quote if quote >= 0 else len(body))
+def _guesses(body: bytes | bytearray) -> list[_Span]:
+    """Return where huge values probably stand, in order."""
+    spans: list[_Span] = []
+    while len(spans) < MOST_GUESSES and (span := _guess(body, spans[-1].stop if spans else 0)) is not None:
+        spans.append(span)
+    return spans
+
+
+def _guess(body: bytes | bytearray, start: int) -> _Span | None:
+    """Return where the next huge value probably stands: from its name to the next quotation mark or closing brace."""
+    places = [(body.find(name, start, start + HEAD), member) for name, member in (_VALUES, _DATA)]
+    for found, member in sorted(places, key=lambda place: place[0]):
+        place = member.match(body, found) if found >= 0 else None
+        if place is None:
+            continue
+        quoted = body[place.end()] == ord('"')
+        quote = body.find(b'"', place.end() + quoted)
+        end = quote if quote >= 0 else len(body)
+        if quoted:
+            return _Span(place.end(), quote + 1) if quote >= 0 and body[quote - 1] != ord("\\") else None
+        brace = body.find(b"}", place.end(), end)
+        last = body.rfind(b"]", place.end(), brace if brace >= 0 else end)
         return _Span(place.end(), last + 1) if last >= 0 else None
-    name, member = _DATA
-    if (place := member.match(body, max(body.find(name, 0, HEAD), 0))) is not None:
-        quote = body.find(b'"', place.end() + 1)
-        if quote >= 0 and body[quote - 1] != ord("\\"):
-            return _Span(place.end(), quote + 1)
     return None
+
+
+def _shrunk(spans: Sequence[_Span]) -> list[_Span]:
+    """Return where the empty values stand that take the place of huge ones."""
+    gone, shrunk = 0, []
+    for span in spans:
+        shrunk.append(_Span(span.start - gone, span.start - gone + FILLER_BYTES))
+        gone += span.stop - span.start - FILLER_BYTES
+    return shrunk
 
 
 def _search(text: bytes | bytearray) -> list[_Span]:
@@ -162,15 +184,24 @@ def _search(text: bytes | bytearray) -> list[_Span]:
     name that occurs twice it takes the last one; the strict parser refuses the rest then.
     """
     base = _address(text)
-    losses = _members(_OBJECT.decode(text).get("losses"))
-    values = losses.get("values")
-    data = _members(losses.get("packed")).get("data")
     found = []
-    for value, first in ((values, b"["), (data, b'"')):
+    for pointer, value, first in _huge(_OBJECT.decode(text)):
         if value is not None and bytes(memoryview(value)[:1]) == first:
             start = _address(value) - base
-            found.append(_Span(start, start + len(memoryview(value))))
+            found.append(_Span(start, start + len(memoryview(value)), pointer))
     return sorted(found, key=lambda span: span.start)
+
+
+def _huge(members: Mapping[str, msgspec.Raw]) -> Iterator[tuple[str, msgspec.Raw | None, bytes]]:
+    """Yield the members that may be huge, each with its pointer and the first byte that it then has."""
+    for name in SOURCES:
+        losses = _members(members.get(name))
+        yield f"/{name}/values", losses.get("values"), b"["
+        yield f"/{name}/packed/data", _members(losses.get("packed")).get("data"), b'"'
+    candidates = members.get("candidates")
+    if candidates is not None and bytes(memoryview(candidates)[:1]) == b"[":
+        for number, candidate in enumerate(_LIST.decode(candidates)):
+            yield f"/candidates/{number}/values", _members(candidate).get("values"), b"["
 
 
 def _members(value: msgspec.Raw | None) -> dict[str, msgspec.Raw]:
@@ -237,7 +268,7 @@ def _original(offset: int, spans: Sequence[_Span]) -> int:
     for span in spans:
         if offset <= span.start:
             break
-        offset += span.stop - span.start - 2  # each filler has two bytes
+        offset += span.stop - span.start - FILLER_BYTES
     return offset
 
 

@@ -65,15 +65,18 @@ def explain(table: memoryview, place: Place) -> CallerError:
         `Malformed` if the text is not JSON; otherwise `InvalidValue` for the first offending value.
     """
     error = _first_fault(table, place)
-    if isinstance(error, Malformed):
-        return error
+    return error if isinstance(error, Malformed) else not_json(table) or error
+
+
+def not_json(text: bytes | memoryview) -> CallerError | None:
+    """Return what makes a text no JSON value; None for one."""
     try:
-        msgspec.json.decode(table, type=msgspec.Raw)
+        msgspec.json.decode(text, type=msgspec.Raw)
     except RecursionError:
         return Malformed.at("", "the table is nested too deeply")
     except ValueError as reason:  # the library's own errors, and those of its text decoding
         return Malformed.at("", f"the table is not JSON: {str(reason).removeprefix('JSON is malformed: ')}")
-    return error
+    return None
 
 
 def _first_fault(table: memoryview, place: Place) -> CallerError:

@@ -7,15 +7,16 @@ a piece is not what it should be, `service.payloads.json_faults` starts over at 
 """
 
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import chain
 
 import numpy as np
 import orjson
 from numpy.typing import NDArray
 
+from service.errors import CallerError, InvalidValue
 from service.payloads.cells import require_cells
-from service.payloads.json_faults import Place, explain
+from service.payloads.json_faults import Place, explain, not_json
 
 PIECE = 1 << 16
 """Bytes parsed at a time."""
@@ -81,6 +82,38 @@ def rows_from_json(table: bytes | memoryview, *, max_cells: int) -> NDArray[np.f
             raise explain(view, before) from None
         done += rows.flat.size
     return flat.reshape(-1, place.columns)
+
+
+def row_from_json(row: bytes | memoryview) -> NDArray[np.float64]:
+    """Decode a JSON array of numbers.
+
+    Parameters
+    ----------
+    row : bytes or memoryview
+        The text of the array alone, in UTF-8.
+
+    Returns
+    -------
+    ndarray of shape (n,)
+        Every value is the float64 nearest to the decimal, −0.0 is 0.
+
+    Raises
+    ------
+    InvalidValue
+        For a value that is not a finite number, or none; the fault points at it, as in ``/2``.
+    Malformed
+        If the text is not JSON.
+    """
+    try:
+        rows = rows_from_json(b"".join((b"[", row, b"]")), max_cells=len(row))
+        if len(rows) == 1:
+            return rows[0]
+        raise InvalidValue.at("/0", "more than one array")
+    except CallerError as error:
+        if (malformed := not_json(row)) is not None:
+            raise malformed from None
+        error.faults = tuple(replace(fault, pointer=(fault.pointer or "").removeprefix("/0")) for fault in error.faults)
+        raise
 
 
 def number_rows(document: bytes) -> NumberRows:

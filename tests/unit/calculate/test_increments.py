@@ -1,14 +1,15 @@
 """What one more deal changes: candidates on factors and on history, each judged alone."""
 
+import json
 import math
 
 import numpy as np
 import pytest
 from scipy import special
 
-from service.errors import Limit, LossesChanged, TooLong
+from service.errors import Limit, LossesChanged, Malformed, TooLong
 from service.executors import Work
-from tests.asking import answered, compound, equal, es, factor_model, law, linear, matrix, step, var
+from tests.asking import answered, answered_text, compound, equal, es, factor_model, law, linear, matrix, step, var
 from tests.unit.risk.blocks import FALSE_ALARM
 
 MEASURES = [es(0.99), var(0.99), {"kind": "standard_deviation"}, {"kind": "wang", "shift": 0.5}, es(0.95, above="mean")]
@@ -170,6 +171,60 @@ def test_a_bad_candidate_spoils_no_other():
         assert one.problem["errors"][0]["pointer"].startswith(
             f"/candidates/{number}{pointer if pointer != '/0' else ''}"
         )
+
+
+TABLE = {
+    "kind": "scenarios",
+    "sub_portfolios": [{"id": "a"}, {"id": "b"}],
+    "values": [[1.0, 2.0], [3.0, -1.0], [5.0, 6.0], [0.0, 0.5]],
+}
+
+
+def test_values_of_candidates():
+    """Numbers are the same however they are written, and each list of others is refused alone."""
+    lists = {
+        "good": [1, 2.0, -0.0, 1e1],
+        "short": [1, 2, 3],
+        "text": [1, 2, "3", 4],
+        "nested": [1, 2, [3], 4],
+        "huge": [1, 2, 3, 10**400],
+        "none": [],
+        "word": "1234",
+    }
+    candidates = [{"id": name, "values": values} for name, values in lists.items()]
+    answer = tried(TABLE, candidates, [es(0.5)])
+    assert [one.status for one in answer.candidates] == ["ok"] + ["refused"] * 6
+    faults = [one.problem["errors"][0] for one in answer.candidates[1:]]
+    assert [fault["pointer"].removeprefix("/candidates/") for fault in faults] == [
+        "1/values",
+        "2/values/2",
+        "3/values/2",
+        "4/values/3",
+        "5/values",
+        "6/values",
+    ]
+    assert "3 values are given, but the book has 4 scenarios" in faults[0]["detail"]
+    again = tried(TABLE, [{"id": "good", "values": [1.0, 2, 0, 10]}], [es(0.5)])
+    alone = tried(TABLE, candidates[:1], [es(0.5)])
+    other = tried(TABLE, [{"id": "good", "values": [1.0, 2, 0, 11]}], [es(0.5)])
+    assert again == alone
+    assert alone.candidates == answer.candidates[:1]
+    assert other.provenance.request_digest != alone.provenance.request_digest
+
+
+def test_values_that_are_no_json_refuse_the_whole():
+    for text in ('"values":[1,,2]', '"values":[1],[2]', '"values":[1 2]', '"values":[NaN]'):
+        document = {"losses": TABLE, "measures": [es(0.5)], "candidates": [{"id": "a b", "values": 7}]}
+        body = json.dumps(document).replace('"values": 7', text).encode()
+        with pytest.raises(Malformed):
+            answered_text("increments", body)
+
+
+def test_many_values_are_no_part_of_the_envelope():
+    candidates = [{"id": f"deal {k}", "values": [1.0, 2.0, 3.0, float(k)]} for k in range(100)]
+    request = {"losses": TABLE, "measures": [es(0.5)], "candidates": candidates}
+    assert len(json.dumps(candidates)) > 5000
+    assert answered("increments", request, max_envelope_bytes=4000).refused == 0
 
 
 def test_observed_changes_have_no_draws():

@@ -32,12 +32,14 @@ def refused(body, words):
 def restored(envelope):
     """Return the whole document, as a plain parser would have read it."""
     document = json.loads(envelope.text)
-    if envelope.table is not None:
-        assert document["losses"]["values"] == []
-        document["losses"]["values"] = json.loads(bytes(envelope.table))
-    if envelope.packed is not None:
-        assert document["losses"]["packed"]["data"] == ""
-        document["losses"]["packed"]["data"] = json.loads(b'"' + bytes(envelope.packed) + b'"')
+    for pointer, text in envelope.apart.items():
+        *steps, last = (int(step) if step.isdigit() else step for step in pointer.split("/")[1:])
+        node = document
+        for step in steps:
+            node = node[step]
+        quote = b'"' if last == "data" else b""
+        assert node[last] == ("" if quote else [])
+        node[last] = json.loads(quote + bytes(text) + quote)
     return document
 
 
@@ -66,6 +68,10 @@ def restored(envelope):
         b'{"losses":[{"values":[[1]]}],"values":[[2]]}',
         b'{"losses":null}',
         b"{}",
+        b'{"losses":{"values":[[1]]},"candidates":[{"id":"a","values":[1]},{"values":[2,3],"x":[4]},{"values":"no"},[5]]}',
+        b'{"candidates":[{"values":[1]}],"losses":{"values":[[1]]}}',
+        b'{"candidates":{"values":[1]},"losses":{"kind":"book"}}',
+        b'{"before":{"values":[[1]]},"after":{"packed":{"data":"AAAA"}},"x":{"values":[[2]]}}',
         b'{"a":"\\ud83d\\ude00 \\\\ud800"}',
         '{"größe":"é","losses":{"values":[[1]],"währung":"€"}}'.encode(),
     ],
@@ -84,13 +90,12 @@ def test_the_parts_make_up_the_document(body, kind):
     ],
 )
 def test_the_table_is_kept_as_text(body, table):
-    assert bytes(split(body).table) == table
+    assert bytes(split(body).apart["/losses/values"]) == table
 
 
 def test_what_is_no_table_stays_in_the_document():
     envelope = split(b'{"losses":{"values":"text","packed":{"data":7}}}')
-    assert envelope.table is None
-    assert envelope.packed is None
+    assert envelope.apart == {}
     assert envelope.document == {"losses": {"values": "text", "packed": {"data": 7}}}
 
 
@@ -99,7 +104,21 @@ def test_a_large_table_and_its_decoding():
     body = json.dumps({"losses": {"kind": "scenarios", "values": table.tolist()}, "level": 0.99}).encode()
     envelope = split(body)
     assert envelope.document == {"losses": {"kind": "scenarios", "values": []}, "level": 0.99}
-    assert np.array_equal(rows_from_json(envelope.table, max_cells=table.size), table)
+    assert np.array_equal(rows_from_json(envelope.apart["/losses/values"], max_cells=table.size), table)
+
+
+def test_what_is_kept_apart():
+    body = (
+        b'{"before":{"values":[[1]]},"after":{"packed":{"data":"AA"}},"losses":{"values":[[2]]},'
+        b'"candidates":[{"id":"x"},{"values":[3, 4]},{"values":"no"}]}'
+    )
+    texts = {pointer: bytes(text) for pointer, text in split(body).apart.items()}
+    assert texts == {
+        "/before/values": b"[[1]]",
+        "/after/packed/data": b"AA",
+        "/losses/values": b"[[2]]",
+        "/candidates/1/values": b"[3, 4]",
+    }
 
 
 def test_a_large_packed_table_is_not_copied():
@@ -107,8 +126,11 @@ def test_a_large_packed_table_is_not_copied():
     text = base64.b64encode(table.tobytes()).decode()
     body = json.dumps({"losses": {"packed": {"data": text, "rows": 2000}}}).encode()
     envelope = split(body)
-    assert envelope.packed.obj is body
-    assert np.array_equal(unpack(envelope.packed, dtype="float64", rows=2000, columns=30, max_cells=table.size), table)
+    assert envelope.apart["/losses/packed/data"].obj is body
+    assert np.array_equal(
+        unpack(envelope.apart["/losses/packed/data"], dtype="float64", rows=2000, columns=30, max_cells=table.size),
+        table,
+    )
 
 
 @pytest.mark.parametrize(
@@ -160,7 +182,7 @@ def test_a_large_packed_table_is_not_copied():
 def test_what_is_not_a_json_object(body, words):
     if body == b'{"losses":{"values":[[1]]]}}':  # the guess leaves the superfluous bracket to the table's decoder
         with pytest.raises(Malformed):
-            rows_from_json(split_envelope(body).table, max_cells=9)
+            rows_from_json(split_envelope(body).apart["/losses/values"], max_cells=9)
         return
     refused(body, words)
 
@@ -168,7 +190,7 @@ def test_what_is_not_a_json_object(body, words):
 def test_deep_nesting_inside_the_table():
     body = b'{"losses":{"values":' + b"[" * 100_000 + b"]" * 100_000 + b"}}"
     with pytest.raises(Malformed, match="nested too deeply"):
-        rows_from_json(split_envelope(body).table, max_cells=9)
+        rows_from_json(split_envelope(body).apart["/losses/values"], max_cells=9)
 
 
 def test_the_place_is_that_in_the_body():
@@ -180,20 +202,24 @@ def test_the_place_is_that_in_the_body():
 def test_a_value_in_the_wrong_place_is_refused_by_the_decoder():
     envelope = split_envelope(b'{"losses":{"packed":{"data":"A\nAA"}}}')
     with pytest.raises(CallerError):
-        unpack(envelope.packed, dtype="float64", rows=1, columns=1, max_cells=1)
+        unpack(envelope.apart["/losses/packed/data"], dtype="float64", rows=1, columns=1, max_cells=1)
 
 
 leaves = st.one_of(
     st.none(), st.booleans(), st.integers(-9, 9), st.text(alphabet='a"\\[]{},é\u2028\U0001f600', max_size=4)
 )
-names = st.sampled_from(["losses", "values", "packed", "data", "x"])
+names = st.sampled_from(["losses", "values", "packed", "data", "candidates", "after", "x"])
 values = st.recursive(
     leaves,
     lambda inner: st.lists(inner, max_size=3) | st.dictionaries(names, inner, max_size=3),
     max_leaves=12,
 )
 documents = st.dictionaries(names, values, max_size=3) | st.fixed_dictionaries(
-    {"x": values, "losses": st.dictionaries(names, values, max_size=4)}
+    {
+        "x": values,
+        "losses": st.dictionaries(names, values, max_size=4),
+        "candidates": st.lists(st.dictionaries(names, values, max_size=2), max_size=3),
+    }
 )
 
 

@@ -11,7 +11,7 @@ from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 from service.errors import CallerError, InvalidValue, LimitExceeded, Malformed
-from service.payloads import json_table, rows_from_json
+from service.payloads import json_table, row_from_json, rows_from_json
 
 MANY = 1 << 30
 
@@ -267,3 +267,42 @@ def test_three_megabytes_of_nonsense_are_refused_in_time(text):
     start = time.perf_counter()
     fault_of(text)
     assert time.perf_counter() - start < 5
+
+
+@pytest.mark.parametrize(
+    ("text", "values"), [(b"[1]", [1.0]), (b" [ -0, 1e3 ,\n2.5]", [0.0, 1000.0, 2.5]), (b"[7,8]", [7.0, 8.0])]
+)
+def test_one_row(text, values):
+    row = row_from_json(text)
+    assert row.tolist() == values
+    assert not np.signbit(row).any()
+
+
+def test_a_long_row():
+    values = np.random.default_rng(1).normal(size=30_000)
+    assert np.array_equal(row_from_json(json.dumps(values.tolist()).encode()), values)
+
+
+@pytest.mark.parametrize(
+    ("text", "pointer", "words"),
+    [
+        (b"[1,true]", "/1", "true is not a number"),
+        (b"[1,2,[3]]", "/2", "an array is not a number"),
+        (b"[1,null]", "/1", "null is not a number"),
+        (b'[1,2,"3"]', "/2", "'3' is a text, not a number"),
+        (b"[1e999]", "/0", "beyond the range"),
+        (b"[]", "", "no values"),
+    ],
+)
+def test_a_row_of_other_things(text, pointer, words):
+    with pytest.raises(InvalidValue, match=words) as caught:
+        row_from_json(text)
+    assert caught.value.faults[0].pointer == pointer
+
+
+@pytest.mark.parametrize(
+    "text", [b"[1],[2]", b"[1],[2,3]", b"[1,,2]", b"[1", b"1]", b"[1] ]", b"", b"[" * 5000, b"[NaN]"]
+)
+def test_a_row_that_is_no_json(text):
+    with pytest.raises(Malformed):
+        row_from_json(text)
