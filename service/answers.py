@@ -44,6 +44,7 @@ WORST_LISTED = 10
 TOO_LARGE = "a figure or its error is too large for a binary64 number"
 MOST_NAMED = 1e15  # scenarios that a note proposes
 ROUNDING = 1e-13  # of the largest total: a figure below it is 0 but for rounding, and no denominator
+LEAST_LEVEL = 0.5  # below which a level may be meant as the probability of the tail
 USUAL_LEVEL = 0.99  # of the tail detail where no measure has a level
 
 
@@ -77,6 +78,11 @@ class Notes:
 
     def of_estimates(self, number: int, measure: RiskMeasure, estimates: Estimates) -> None:
         """Make the notes that the remarks on `estimates` call for."""
+        level = measure.parameters.get("level", 1.0)
+        if measure.of_tail and level < LEAST_LEVEL:
+            rest = 1.0 - level
+            words = f"{measure.name} looks at the worst {100.0 * rest:.4g} % of all losses"
+            self.add("low_level", f"{words}; level {rest:.15g} looks at the worst {100.0 * level:.4g} %", number)
         for code in sorted(estimates.remarks):
             known: NoteCode = code  # type: ignore[assignment]  # the remarks are codes of notes
             self.add(known, self._detail(code, measure, estimates), number)

@@ -23,7 +23,7 @@ from service.risk.streams import BLOCK, SCRAMBLINGS
 from service.risk.uncertainty import Estimates
 from service.schemas.losses import StopWhen
 from service.settings import Settings, variable
-from service.sources import Source
+from service.sources import Note, Source
 
 FIRST_LOOK = 65_536  # scenarios before the first look at the error
 TAIL_OF_FIRST_LOOK = 1_000  # tail scenarios before it
@@ -31,8 +31,6 @@ LOOKS_IN_A_ROW = 2  # that must meet the target
 CELL_BYTES = 8
 PART_HELD = 2  # a table may take one part in so many of the memory; sorted copies of it take the rest
 SIMULATED = 0.9  # of the progress of making a frame, where its scenarios have to be simulated
-
-Note = tuple[str, str, str | None]
 
 
 @dataclass(frozen=True, slots=True)

@@ -38,6 +38,31 @@ SOBOL = "simulated scenarios, Sobol points in 8 scramblings"
 OBSERVED = "observed changes of the factors as scenarios"
 
 
+NO_SUB_PORTFOLIOS = frozenset(
+    [
+        "date",
+        "id",
+        "index",
+        "no",
+        "number",
+        "period",
+        "prob",
+        "probability",
+        "scenario",
+        "scenario_id",
+        "sum",
+        "total",
+        "weight",
+        "weights",
+        "year",
+    ]
+)
+"""Names that a table of scenarios usually gives to labels, weights and sums."""
+
+Note = tuple[str, str, str | None]
+"""Code, detail and pointer into the request."""
+
+
 @dataclass(frozen=True, slots=True)
 class FactorMean:
     """The mean of a factor given the tail, in its unit and as a normal score."""
@@ -82,7 +107,7 @@ class Source:
     changes: Changes | None = None
     factor_ids: tuple[str, ...] = ()
     tails: Sequence[Tails] | None = None
-    notes: tuple[tuple[str, str, str | None], ...] = ()
+    notes: tuple[Note, ...] = ()
     held: Store[Any] = Store(0)  # noqa: RUF009  # one that keeps nothing
 
     @property
@@ -138,13 +163,27 @@ def source_of(losses: Losses, table: Sent, *, part: str | None, work: Work, sett
         made = loss_table(losses, table, part=part, settings=settings)
         ids = [one.id for one in made.sub_portfolios]
         digest = losses_digest(ids, made.losses, made.probabilities, work)
-        return Source(digest, GIVEN, made.sub_portfolios, table=made)
+        notes = _doubtful(ids) if losses.sub_portfolios is None else ()
+        return Source(digest, GIVEN, made.sub_portfolios, table=made, notes=notes)
     if isinstance(losses, BookLosses):
         raise NotFound.at("/losses/name", f"there is no book {losses.name!r} here")
     with pointing("/losses"):
         if isinstance(losses, FactorLosses):
             return _simulated(losses, settings)
         return _observed(losses, table, work)
+
+
+def _doubtful(ids: Sequence[str]) -> tuple[Note, ...]:
+    """Return a note on columns, named by a header alone, that are hardly sub-portfolios."""
+    found = [one for one in ids if one.casefold().replace(" ", "_") in NO_SUB_PORTFOLIOS]
+    if not found:
+        return ()
+    names = ", ".join(map(repr, found))
+    detail = (
+        f"taken as sub-portfolios, as every column of numbers: {names}; name a column of labels by "
+        "scenario_id_column, one of weights by probability_column, and any other by ignore_columns"
+    )
+    return (("column_taken", detail, None),)
 
 
 def _described(columns: Sequence[FactorSubPortfolio] | Sequence[HistorySubPortfolio]) -> tuple[SubPortfolio, ...]:

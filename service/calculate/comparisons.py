@@ -50,6 +50,7 @@ class Comparisons:
         self.notes = Notes(self.after.calculation.frame.scenarios, pointed=True)
         for book in (self.before, self.after):
             self.notes.take(book.calculation.notes)
+        self._compare_labels()
         self.paired = self._paired()
 
     def answer(self) -> ComparisonsAnswer:
@@ -105,6 +106,19 @@ class Comparisons:
         self.notes.of_estimates(number, measure, change.changes)
         totals = [one.calculation.total(number, measure) for one in books]
         return change_result(measure.name, totals, change, coverage)
+
+    def _compare_labels(self) -> None:
+        """Refuse two currencies, and note other labels that make a change hard to read."""
+        then, now = self.request.before, self.request.after
+        if then.currency and now.currency and then.currency != now.currency:
+            detail = f"before is in {then.currency}, after in {now.currency}: nothing is converted"
+            raise InvalidValue.at("/after/currency", detail, code="not_allowed")
+        if then.horizon and now.horizon and then.horizon != now.horizon:
+            detail = f"the horizons differ, so the books are not all that changed: {then.horizon}, then {now.horizon}"
+            self.notes.say("labels_differ", detail, "/after/horizon")
+        if then.valuation_date and now.valuation_date and then.valuation_date > now.valuation_date:
+            detail = f"before is of {then.valuation_date}, later than after, which is of {now.valuation_date}"
+            self.notes.say("labels_differ", detail, "/after/valuation_date")
 
     def _paired(self) -> bool:
         """Return whether the scenarios of both books are the same."""

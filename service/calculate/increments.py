@@ -68,6 +68,11 @@ class Increments(Calculation):
         for number, measure in enumerate(self.request.measures):
             with pointing(f"/measures/{number}"):
                 totals.append(BaseFigure(measure.name, self.total(number, measure)))
+        for name in ("hurdle_rate", "cost_of_capital"):
+            rate = getattr(self.request, name)
+            if rate is not None and rate >= 1.0:
+                detail = f"{name} {rate:g} is {100.0 * rate:g} % of the capital; a rate is a fraction, 0.08 for 8 %"
+                self.notes.say("high_rate", detail, f"/{name}")
         if self._ready is None:
             frames = (self.frame, *self.made.scramblings)
             bases = [[base_of(frame, measure) for measure in self.request.measures] for frame in frames]

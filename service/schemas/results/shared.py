@@ -26,6 +26,10 @@ NoteCode = Literal[
     "square_root_of_time",
     "correlation_repaired",
     "driven_sum",
+    "column_taken",
+    "low_level",
+    "high_rate",
+    "labels_differ",
 ]
 
 
@@ -50,7 +54,11 @@ class Note:
             "`overlapping_periods`: sums of overlapping periods depend on each other, and errors allow for it. "
             "`square_root_of_time`: changes were multiplied by the square root of the number of periods. "
             "`correlation_repaired`: how far the nearest correlation matrix lies from the one given. "
-            "`driven_sum`: how exact the quantile function of a driven compound is."
+            "`driven_sum`: how exact the quantile function of a driven compound is. "
+            "`column_taken`: a column with the name of a total, label or weight was taken as a sub-portfolio. "
+            "`low_level`: a confidence level below 0.5, which may be meant as the probability of the tail. "
+            "`high_rate`: a rate of 1 or more, which may be meant in percent. "
+            "`labels_differ`: two books that are compared differ in their horizon, or go back in time."
         ),
     ]
     detail: Annotated[str, Field(description="The same in a sentence.")]

@@ -137,3 +137,27 @@ def test_limits_point_at_their_book():
 
 def test_threads_change_nothing():
     assert compared(model(BEFORE), model(AFTER), work=Work(3)) == compared(model(BEFORE), model(AFTER))
+
+
+def labelled(**labels):
+    return model(BEFORE) | labels
+
+
+def test_nothing_is_converted():
+    assert compared(labelled(currency="EUR"), labelled(currency="EUR")).labels.currency == "EUR"
+    assert compared(labelled(currency="EUR"), model(BEFORE)).notes == []
+    with pytest.raises(CallerError, match="before is in EUR, after in USD") as caught:
+        compared(labelled(currency="EUR"), labelled(currency="USD"))
+    assert caught.value.faults[0].pointer == "/after/currency"
+
+
+def test_labels_that_make_a_change_hard_to_read_are_noted():
+    june = labelled(horizon="1 year", valuation_date="2026-06-30")
+    september = labelled(horizon="1 day", valuation_date="2026-09-30")
+    assert [note.pointer for note in compared(june, september).notes] == ["/after/horizon"]
+    notes = compared(september, june).notes
+    assert [(note.code, note.pointer) for note in notes] == [
+        ("labels_differ", "/after/horizon"),
+        ("labels_differ", "/after/valuation_date"),
+    ]
+    assert "2026-09-30, later than" in notes[1].detail

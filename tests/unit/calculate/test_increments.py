@@ -256,6 +256,13 @@ def test_profit_hurdle_and_limit():
         assert figures.meets_hurdle is (0.1 * increment <= 0.5)
 
 
+def test_rates_in_percent_are_noted():
+    deal = {"id": "a deal", "values": [1.0, 2.0, 3.0, 4.0]}
+    notes = tried(TABLE, [deal], [es(0.5)], hurdle_rate=8.0, cost_of_capital=0.06).notes
+    assert [note.pointer for note in notes if note.code == "high_rate"] == ["/hurdle_rate"]
+    assert "hurdle_rate 8 is 800 %" in next(note.detail for note in notes if note.code == "high_rate")
+
+
 def test_time_that_is_over_refuses_the_whole():
     asked = 0
 

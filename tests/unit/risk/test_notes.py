@@ -278,3 +278,12 @@ def test_scenarios_without_probability_do_not_count(client):
         assert one["total"]["value"] == pytest.approx(other["total"]["value"], rel=1e-12)
         values = [[row["contribution"]["value"] for row in each["sub_portfolios"]] for each in (one, other)]
         assert values[0] == pytest.approx(values[1], rel=1e-9)
+
+
+def test_a_level_that_may_be_meant_as_the_probability_of_the_tail(client):
+    measures = [{"kind": "expected_shortfall", "level": level} for level in (0.01, 0.99)]
+    answer = _answer(client, THIN, measures)
+    notes = [note for note in answer["notes"] if note["code"] == "low_level"]
+    assert [note["pointer"] for note in notes] == ["/measures/0"]
+    assert "the worst 99 % of all losses" in notes[0]["detail"]
+    assert "level 0.99 looks at the worst 1 %" in notes[0]["detail"]

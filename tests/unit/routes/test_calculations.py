@@ -349,3 +349,17 @@ def test_a_caller_who_leaves_while_sending_is_dropped(client):
     raw_request(client, BODY, length=len(BODY) + 100).close()
     until(lambda: cancelled(client) == before + 1)
     assert client.post("/v1/measures", content=BODY, headers=JSON).status_code == 200
+
+
+def test_columns_that_are_hardly_sub_portfolios_are_noted(client):
+    def notes(header, query=""):
+        table = f"{header}\n" + "".join(f"{k},{2 * k},{3 * k}\n" for k in range(1, 40))
+        path = f"/v1/measures?measure=expected_shortfall&level=0.5{query}"
+        answer = client.post(path, content=table, headers={"content-type": "text/csv"}).json()
+        return [note for note in answer["notes"] if note["code"] == "column_taken"]
+
+    assert notes("hull,cargo,quay") == []
+    assert notes("hull,cargo,total", "&ignore_columns=total") == []
+    [note] = notes("Scenario,hull,Total")
+    assert note["pointer"] is None
+    assert "'Scenario', 'Total'" in note["detail"]
