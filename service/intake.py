@@ -73,6 +73,13 @@ class Intake:
         return self.part != BODY_PART and not self.by_query
 
     @property
+    def losses(self) -> tuple[Losses, ...]:
+        """The losses asked about: of one source, or of the two that are compared."""
+        if isinstance(self.request, ComparisonsRequest):
+            return self.request.before, self.request.after
+        return (self.request.losses,)
+
+    @property
     def scenarios(self) -> int | None:
         """Scenarios to go through, at most; of two sources, those of the one after. None for a book not looked up."""
         which = "after" if isinstance(self.request, ComparisonsRequest) else "losses"

@@ -2,7 +2,7 @@
 
 import asyncio
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import partial
 from time import perf_counter
 
@@ -13,6 +13,7 @@ from starlette.routing import Route
 from service import calculate, intake, problems
 from service.books import Books
 from service.desk import Desk
+from service.errors import LimitExceeded
 from service.executors import Work
 from service.intake import Intake
 from service.metrics import Metrics
@@ -24,16 +25,18 @@ from service.routes.callers import watched
 from service.routes.doors import Handler, door
 from service.routes.events import EVENTS, EventStream, Progress
 from service.routes.forms import POLICIES, chart_asked, picture, wants_mark
-from service.schemas.losses import BookLosses
+from service.schemas.losses import ScenarioLosses
 from service.settings import Settings
 
 CALCULATIONS = tuple(intake.MODELS)
 """Names of the calculations; each is the last word of its path."""
 
 SHORT_BODY = 128 * 1024
-"""Bytes of a body that takes less time (about 2 ms) to read and compute than a thread is worth."""
+"""Bytes of a body that takes less time (about 2 ms) to read than a thread is worth."""
+SHORT_CELLS = 16 * 1024
+"""Cells of a table on which figures take less time than that, also where the body was packed more densely."""
 SHORT_WORK = 6
-"""Most measures times rules of such a body."""
+"""Most measures times rules of such a request."""
 WAIT = re.compile(r'(?:^|[,;\s])wait\s*=\s*"?(\d{1,9})"?\s*(?:$|[,;])', re.IGNORECASE)  # RFC 7240, 4.3
 BODY_TYPES = ", ".join(("application/json", "multipart/form-data", *TABLE_READERS))
 
@@ -79,7 +82,7 @@ class Calculation:
         if form.suffix in POLICIES:
             headers["content-security-policy"] = POLICIES[form.suffix]
         if seconds is not None:
-            headers["preference-applied"] = f"wait={seconds:.0f}"
+            headers["preference-applied"] = f"wait={min(seconds, self.settings.max_seconds):.0f}"
         if form is EVENTS:
             return EventStream(request, partial(self._told, task, seconds), lambda: task.expected, headers)
         data = await self._compute(task, seconds)
@@ -89,10 +92,8 @@ class Calculation:
 
     async def _compute(self, task: "_Task", seconds: float | None) -> bytes:
         """Compute at once what is short; else in a thread, and only while the caller is there."""
-        if len(task.body) <= SHORT_BODY:
-            task.decode()
-            if task.is_short() and self.desk.has_place:
-                return await self.desk.run(task.run, seconds=seconds, gone=asyncio.Event(), short=True)
+        if task.decoded_if_short() and self.desk.has_place:
+            return await self.desk.run(task.run, seconds=seconds, gone=asyncio.Event(), short=True)
         async with watched(task.request) as gone:
             return await self.desk.run(task.run, seconds=seconds, gone=gone)
 
@@ -103,8 +104,7 @@ class Calculation:
             progress.start()
             return task.run(work)
 
-        if len(task.body) <= SHORT_BODY:
-            task.decode()
+        task.decoded_if_short()
         data = await self.desk.run(run, seconds=seconds, gone=gone, told=progress)
         self.metrics.computed(task.scenarios)
         return data
@@ -144,7 +144,21 @@ class _Task:
         self.request = request
         self.scenarios = 0
 
-    def decode(self) -> Intake:
+    def decoded_if_short(self) -> bool:
+        """Read the body if that is short, and return whether the rest is done in less time than a thread is worth."""
+        if len(self.body) > SHORT_BODY:
+            return False
+        settings = self._calculation.settings
+        few = min(settings.max_cells, SHORT_CELLS)
+        try:
+            self.decode(replace(settings, max_cells=few))
+        except LimitExceeded as error:
+            if few == settings.max_cells or error.limit.name != "max_cells":
+                raise
+            return False  # a small body that holds much, which a thread will read
+        return self._is_short()
+
+    def decode(self, settings: Settings) -> Intake:
         """Read the body as a request."""
         headers = self.request.headers
         check_digest(", ".join(headers.getlist("content-digest")), self.body)
@@ -153,7 +167,7 @@ class _Task:
             self.body,
             content_type=headers.get("content-type", ""),
             parameters=self._parameters(),
-            settings=self._calculation.settings,
+            settings=settings,
         )
         self._clock.mark("decode")
         return self._taken
@@ -163,12 +177,12 @@ class _Task:
         """Scenarios that the figures will rest on; None before the request is read."""
         return None if self._taken is None else self._taken.scenarios
 
-    def is_short(self) -> bool:
+    def _is_short(self) -> bool:
         """Return whether a decoded request is computed in less time than a thread is worth."""
         if self._taken is None:
             return False
         request = self._taken.request
-        if self._form.drawn or any(isinstance(one, BookLosses) for one in vars(request).values()):
+        if self._form.drawn or not all(isinstance(losses, ScenarioLosses) for losses in self._taken.losses):
             return False
         rules = getattr(request, "rules", ("none",))
         times = len(rules) * len(getattr(request, "candidates", ("none",)))
@@ -179,7 +193,7 @@ class _Task:
         self._clock.mark("wait")
         mark, chart = wants_mark(self._parameters()), chart_asked(self._parameters(), self._form)
         of, settings = self._calculation, self._calculation.settings
-        taken = self._taken = of.books.resolved(self._taken or self.decode(), work)
+        taken = self._taken = of.books.resolved(self._taken or self.decode(settings), work)
         drawing = calculate.drawing(taken, work, settings) if self._form.drawn else None
         answer = drawing.answer if drawing else calculate.answer(taken, work, settings, problems.describe)
         self.scenarios = answer.provenance.scenarios

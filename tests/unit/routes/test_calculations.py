@@ -1,17 +1,22 @@
 """The calculations over HTTP: forms, headers, and every way in which a request can fail."""
 
 import hashlib
+import io
 import json
 import socket
 from base64 import b64encode
-from threading import Event, Thread
+from threading import Event, Thread, current_thread
 from time import sleep
 
+import numpy as np
+import pyarrow as pa
 import pytest
+from pyarrow import parquet
 
 from service import calculate
 from service.errors import NotDefined
 from service.routes import calculations
+from tests.asking import factor_model, law, linear
 from tests.serving import SMALL, assert_problem, metric, running, until
 
 JSON = {"content-type": "application/json"}
@@ -264,6 +269,8 @@ def test_prefer_lowers_the_time_allowed(client, monkeypatch, header, body):
 def test_preferences_that_were_applied_are_told(client):
     response = client.post("/v1/measures", content=BODY, headers={**JSON, "prefer": "wait=30"})
     assert response.headers["preference-applied"] == "wait=30"
+    response = client.post("/v1/measures", content=BODY, headers={**JSON, "prefer": "wait=100000"})
+    assert response.headers["preference-applied"] == "wait=60"
     response = client.post("/v1/measures", content=BODY, headers={**JSON, "prefer": "wait=soon, await=1"})
     assert response.status_code == 200
     assert "preference-applied" not in response.headers
@@ -363,3 +370,49 @@ def test_columns_that_are_hardly_sub_portfolios_are_noted(client):
     [note] = notes("Scenario,hull,Total")
     assert note["pointer"] is None
     assert "'Scenario', 'Total'" in note["detail"]
+
+
+def packed_densely():
+    """Return a Parquet file of few bytes and many equal losses."""
+    made = io.BytesIO()
+    parquet.write_table(pa.table({"hull": np.zeros(200_000), "quay": np.ones(200_000)}), made, compression="zstd")
+    return made.getvalue()
+
+
+MODEL = factor_model(
+    {"sea": law("normal", mean=0.0, standard_deviation=1.0)}, {"hull": linear(sea=1.0)}, scenarios=9000
+)
+OBSERVED = {
+    "kind": "history",
+    "factors": ["sea"],
+    "changes": [[0.1 * k] for k in range(20)],
+    "sub_portfolios": MODEL["sub_portfolios"],
+}
+PARQUET = {"content-type": "application/vnd.apache.parquet"}
+BY_QUERY = "/v1/measures?measure=expected_shortfall&level=0.5"
+
+
+@pytest.mark.parametrize(
+    ("path", "body", "headers", "in_thread"),
+    [
+        ("/v1/measures", BODY, JSON, False),
+        (BY_QUERY, b"hull,quay\n1,2\n3,4\n", {"content-type": "text/csv"}, False),
+        ("/v1/measures", LARGE, JSON, True),
+        ("/v1/measures", json.dumps({**SMALL, "losses": MODEL}).encode(), JSON, True),
+        ("/v1/measures", json.dumps({**SMALL, "losses": OBSERVED}).encode(), JSON, True),
+        (BY_QUERY, packed_densely(), PARQUET, True),
+    ],
+    ids=["small", "small table", "large", "model", "history", "packed densely"],
+)
+def test_the_event_loop_does_small_work_alone(client, monkeypatch, path, body, headers, in_thread):
+    """A small body may ask for much: a simulation, or a table that unpacks to many losses."""
+    threads, answer = [], calculate.answer
+
+    def noted(*arguments):
+        threads.append(current_thread().name)
+        return answer(*arguments)
+
+    monkeypatch.setattr(calculate, "answer", noted)
+    response = client.post(path, content=body, headers=headers)
+    assert response.status_code == 200, response.text
+    assert [name.startswith("tailrace-desk") for name in threads] == [in_thread]
