@@ -74,7 +74,7 @@ def answer_in(answered: Answer | Drawing) -> Answer:
     return answered.answer if isinstance(answered, Drawing) else answered
 
 
-def ask(kind: str, pairs: Pairs, book: Book) -> Asked:
+def ask(kind: str, pairs: Pairs, book: Book, settings: Settings) -> Asked:
     """Return what query parameters ask of a book, checked as far as can be without computing.
 
     Parameters
@@ -84,6 +84,7 @@ def ask(kind: str, pairs: Pairs, book: Book) -> Asked:
     pairs : sequence of (str, str)
         Known parameters of the request alone.
     book : Book
+    settings : Settings
 
     Raises
     ------
@@ -93,7 +94,7 @@ def ask(kind: str, pairs: Pairs, book: Book) -> Asked:
     """
     document = query.book_request(pairs, kind, book.name, book.defaults)
     if kind == "value":
-        return _value(pairs, document, book)
+        return _value(pairs, document, book, min(FEW_GROUPS, settings.max_groups))
     if kind == "increments":
         document["candidates"] = [query.scaled_copy(pairs)]
         values.check_sub_portfolio(document["candidates"][0]["scaled"]["sub_portfolio"], book.source.sub_portfolios)
@@ -110,8 +111,8 @@ def _asked(kind: str, document: dict[str, Any], book: Book, number: int = 0) -> 
     return Asked(taken, document_digest(canonical_request(taken, book.source)), number)
 
 
-def _value(pairs: Pairs, document: dict[str, Any], book: Book) -> Asked:
-    """Return the request of one number: the same for as many cells of a sheet as can be."""
+def _value(pairs: Pairs, document: dict[str, Any], book: Book, few: int) -> Asked:
+    """Return the request of one number: the same for as many cells of a sheet as can be; `few` groups come free."""
     asked = values.selection(pairs)
     values.check(asked, book.source.sub_portfolios)
     usual = book.request
@@ -128,7 +129,7 @@ def _value(pairs: Pairs, document: dict[str, Any], book: Book) -> Asked:
     if len(document.get("rules", ())) > 1 and any(name == "rule" for name, _ in pairs):
         raise InvalidValue.of(Fault(detail="one number is of one rule", code="repeated", parameter="rule"))
     document["rules"] = [rule]
-    document["group_by"] = _attributes(asked.attribute, book)
+    document["group_by"] = _attributes(asked.attribute, book, few)
     return _asked("value", document, book, measure)
 
 
@@ -151,9 +152,10 @@ def _unnamed(measure: RiskMeasure) -> dict[str, Any]:
     return asdict(measure) | {"label": None}
 
 
-def _attributes(asked: str | None, book: Book) -> list[str]:
-    """Return the attributes to group by: those of the book, all others if they are few, and the one asked for."""
+def _attributes(asked: str | None, book: Book, few: int) -> list[str]:
+    """Return the attributes to group by: those of the book, all if they make few groups, and the one asked for."""
     parts: Sequence[SubPortfolio] = book.source.sub_portfolios
     names = list(dict.fromkeys(name for one in parts for name in one.attributes))
-    few = sum(len({one.attributes.get(name) for one in parts}) for name in names) <= FEW_GROUPS
-    return list(dict.fromkeys([*book.request.group_by, *(names if few else ()), *([asked] if asked else ())]))
+    all_ = list(dict.fromkeys([*book.request.group_by, *names]))
+    free = all_ if len(groups_of(parts, all_)) <= few else book.request.group_by
+    return list(dict.fromkeys([*free, *([asked] if asked else ())]))

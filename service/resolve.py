@@ -1,18 +1,19 @@
 """From the `losses` of a request to a LossTable."""
 
 from collections.abc import Sequence
+from dataclasses import replace
 from math import fsum
 
 import numpy as np
 from numpy.typing import NDArray
-from pydantic_core import PydanticCustomError
 
-from service.errors import Fault, InvalidValue, Limit, LimitExceeded
+from service import limits
+from service.errors import Fault, InvalidValue
 from service.payloads import Sheet
 from service.risk.loss_table import LossTable, SubPortfolio
-from service.risk.words import text
+from service.risk.words import unsafe
 from service.schemas.losses import ScenarioLosses
-from service.settings import Settings, variable
+from service.settings import Settings
 
 PROBABILITY_SLACK = 1e-9  # by which given probabilities may miss 1
 
@@ -42,18 +43,7 @@ def loss_table(losses: ScenarioLosses, table: Array | Sheet, *, part: str | None
         columns, values, probabilities, scenario_ids = _from_sheet(losses, table, part or "table")
     else:
         columns, values, probabilities, scenario_ids = _from_rows(losses, table)
-    if len(columns) > settings.max_sub_portfolios:
-        detail = f"{len(columns)} sub-portfolios are more than the {settings.max_sub_portfolios} allowed here"
-        raise LimitExceeded(
-            detail,
-            limit=Limit(
-                name="max_sub_portfolios",
-                allowed=settings.max_sub_portfolios,
-                asked=len(columns),
-                setting=variable("max_sub_portfolios"),
-            ),
-            faults=[Fault(detail=detail, code="limit_exceeded", pointer="/losses")],
-        )
+    limits.check("max_sub_portfolios", len(columns), settings, "/losses")
     if losses.sign == "profit":
         values = 0.0 - values
     return LossTable(values, probabilities, losses.scenarios_are == "sample", columns, scenario_ids)
@@ -193,13 +183,9 @@ def _check_labels(ids: Sequence[str], part: str, column: str) -> None:
 
 
 def _check_text(value: str, place: Fault) -> None:
-    try:
-        text(value)
-    except PydanticCustomError as error:
-        detail = error.message()
-        raise InvalidValue.of(
-            Fault(detail=detail, code=place.code, part=place.part, row=place.row, column=place.column)
-        ) from None
+    detail = unsafe(value)
+    if detail is not None:
+        raise InvalidValue.of(replace(place, detail=detail))
 
 
 def _misplaced(pointer: str, parameter: str, detail: str, part: str) -> InvalidValue:

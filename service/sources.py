@@ -7,7 +7,8 @@ from typing import Any
 import numpy as np
 from scipy import special
 
-from service.errors import Fault, InvalidValue, Limit, LimitExceeded, NotFound, pointing
+from service import limits
+from service.errors import InvalidValue, NotFound, pointing
 from service.executors import Work
 from service.kept import Store
 from service.payloads import Sheet
@@ -30,7 +31,7 @@ from service.schemas.losses import (
     Losses,
     ScenarioLosses,
 )
-from service.settings import Settings, variable
+from service.settings import Settings
 
 GIVEN = "given scenarios, exact weighted order statistics"
 RANDOM = "simulated scenarios, random draws"
@@ -168,9 +169,10 @@ def source_of(losses: Losses, table: Sent, *, part: str | None, work: Work, sett
     if isinstance(losses, BookLosses):
         raise NotFound.at("/losses/name", f"there is no book {losses.name!r} here")
     with pointing("/losses"):
+        limits.check("max_sub_portfolios", len(losses.sub_portfolios), settings, "/sub_portfolios")
         if isinstance(losses, FactorLosses):
             return _simulated(losses, settings)
-        return _observed(losses, table, work)
+        return _observed(losses, table, work, settings)
 
 
 def _doubtful(ids: Sequence[str]) -> tuple[Note, ...]:
@@ -201,8 +203,7 @@ def _simulated(losses: FactorLosses, settings: Settings) -> Source:
     )
     asked = losses.simulation
     most = asked.scenarios if asked.stop_when is None else asked.stop_when.max_scenarios
-    if max(most, asked.scenarios) > settings.max_scenarios:
-        raise _too_many(max(most, asked.scenarios), settings)
+    limits.check("max_scenarios", max(most, asked.scenarios), settings, "/simulation/scenarios")
     with pointing("/simulation"):
         make = Plan.quasi_random if asked.method == "sobol" else Plan.random
         plan = make(model, seed=asked.seed, scenarios=asked.scenarios)
@@ -221,9 +222,11 @@ def _simulated(losses: FactorLosses, settings: Settings) -> Source:
     )
 
 
-def _observed(losses: HistoryLosses, sent: Sent, work: Work) -> Source:
+def _observed(losses: HistoryLosses, sent: Sent, work: Work, settings: Settings) -> Source:
     """Return observed changes as scenarios; pointers are into `losses`."""
     changes = _changes(losses, sent)
+    limits.check("max_cells", changes.size, settings, "")
+    limits.check("max_cells", len(changes) * len(losses.sub_portfolios), settings, "/sub_portfolios")
     scaling = losses.horizon_scaling
     made = history_losses(
         losses.factors,
@@ -275,11 +278,3 @@ def _spec_digest(losses: FactorLosses | HistoryLosses) -> str:
     for one in document["sub_portfolios"]:
         del one["attributes"], one["expected_profit"]
     return document_digest(document)
-
-
-def _too_many(asked: int, settings: Settings) -> LimitExceeded:
-    name = "max_scenarios"
-    detail = f"{asked} scenarios are more than the {settings.max_scenarios} allowed here"
-    limit = Limit(name=name, allowed=settings.max_scenarios, asked=asked, setting=variable(name))
-    fault = Fault(detail=detail, code=LimitExceeded.code, pointer="/simulation/scenarios")
-    return LimitExceeded(detail, limit=limit, faults=[fault])

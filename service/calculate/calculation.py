@@ -5,10 +5,10 @@ from contextlib import contextmanager
 from dataclasses import replace
 from typing import Any
 
-from service import __version__, answers
+from service import __version__, answers, limits
 from service.answers import Notes, figure_list
 from service.canonical import canonical_request
-from service.errors import CallerError, Fault, Limit, LimitExceeded, TailraceError, pointing
+from service.errors import CallerError, Fault, TailraceError, pointing
 from service.executors import Work
 from service.frames import Demand, Framed, framed
 from service.intake import Intake
@@ -19,7 +19,7 @@ from service.risk.measures import RangeValueAtRisk, RiskMeasure
 from service.schemas.losses import FactorLosses, Losses, ScenarioLosses
 from service.schemas.requests import ComparisonsRequest, MeasuresRequest
 from service.schemas.results import Figure, Labels, Provenance, Tail
-from service.settings import Settings, variable
+from service.settings import Settings
 from service.sources import Source, source_of
 
 FRAMED = 0.8  # of the progress of a calculation, where figures look at tails alone
@@ -42,11 +42,7 @@ def groups_asked(request: MeasuresRequest, source: Source, settings: Settings) -
     """Return the groups that a request asks for."""
     with pointing("/group_by"):
         groups = groups_of(source.sub_portfolios, request.group_by)
-        if len(groups) > settings.max_groups:
-            detail = f"{len(groups)} groups are more than the {settings.max_groups} allowed here"
-            name = "max_groups"
-            limit = Limit(name=name, allowed=settings.max_groups, asked=len(groups), setting=variable(name))
-            raise LimitExceeded(detail, limit=limit, faults=[Fault(detail=detail, code=LimitExceeded.code)])
+        limits.check("max_groups", len(groups), settings, None)
     return groups
 
 

@@ -21,6 +21,7 @@ from service.risk.loss_table import check_magnitude
 from service.risk.measures import RiskMeasure
 from service.risk.quantiles import Array
 from service.risk.simulation import Plan, simulated
+from service.risk.words import unsafe
 from service.schemas.requests import Candidate, ScaledCopy
 from service.sources import Source
 from service.validation import echo, refusal
@@ -113,7 +114,7 @@ class Reader:
     def _one(self, number: int) -> Read:
         document = self.documents[number]
         known = document.get("id") if isinstance(document, dict) else None
-        name = known if isinstance(known, str) else None
+        name = known if isinstance(known, str) and unsafe(known) is None else None
         try:
             with pointing(f"/candidates/{number}"):
                 candidate = self._candidate(number, document)

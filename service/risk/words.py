@@ -20,17 +20,21 @@ PATTERN = (  # what the OpenAPI document can say of a safe text: refuses no safe
 UNSAFE = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029]")
 
 
-def text(value: str) -> str:
-    """Return `value` if it may be echoed: no cell made of it can be taken for a formula."""
+def unsafe(value: str) -> str | None:
+    """Return why a text may not be echoed; None if no cell made of it can be taken for a formula."""
     if not value or not (value[0].isalnum() or value[0] == "_"):
-        code, detail = "unsafe_text", "a name begins with a letter, a digit or an underscore"
-    elif len(value) > MAX_TEXT:
-        code, detail = "unsafe_text", f"a name has at most {MAX_TEXT} characters"
-    elif UNSAFE.search(value):
-        code, detail = "unsafe_text", "a name holds no control characters"
-    else:
-        return value
-    raise PydanticCustomError(code, detail)
+        return "a name begins with a letter, a digit or an underscore"
+    if len(value) > MAX_TEXT:
+        return f"a name has at most {MAX_TEXT} characters"
+    return "a name holds no control characters" if UNSAFE.search(value) else None
+
+
+def text(value: str) -> str:
+    """Return `value` if it may be echoed."""
+    detail = unsafe(value)
+    if detail is not None:
+        raise PydanticCustomError("unsafe_text", detail)
+    return value
 
 
 Text = Annotated[

@@ -125,7 +125,12 @@ class Pull:
         if self.kind in ("books", "book"):
             return await self._described(request, form, mark=mark)
         book = await self.reading.book(request)
-        asked = pulls.ask(self.kind, [pair for pair in pairs if not (numbered and pair[0] in ("of", "field"))], book)
+        asked = pulls.ask(
+            self.kind,
+            [pair for pair in pairs if not (numbered and pair[0] in ("of", "field"))],
+            book,
+            self.reading.settings,
+        )
         number = _number_of(pairs) if numbered else None
         tag = self._tag(asked, form, {"mark": mark, "chart": chart, "query": pairs if self._by_query(form) else None})
 

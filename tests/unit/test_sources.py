@@ -153,3 +153,30 @@ def test_refused_histories(more, pointer):
     with pytest.raises(CallerError) as caught:
         measured(history(**more))
     assert caught.value.faults[0].pointer == pointer
+
+
+HISTORY = {
+    "kind": "history",
+    "factors": ["x", "y"],
+    "changes": [[0.1 * k, 0.2 * (k % 7)] for k in range(30)],
+    "sub_portfolios": model()["sub_portfolios"],
+}
+
+
+@pytest.mark.parametrize("losses", [model(), HISTORY], ids=["factors", "history"])
+def test_sub_portfolios_beyond_the_limit(losses):
+    request = {"losses": losses, "measures": [es(0.9)]}
+    assert answered("measures", request, max_sub_portfolios=2).scenarios
+    with pytest.raises(LimitExceeded, match="2 sub-portfolios are more than the 1 allowed here") as caught:
+        answered("measures", request, max_sub_portfolios=1)
+    assert caught.value.faults[0].pointer == "/losses/sub_portfolios"
+
+
+def test_changes_beyond_the_limit():
+    many = HISTORY | {"sub_portfolios": [{**HISTORY["sub_portfolios"][0], "id": f"a{k}"} for k in range(3)]}
+    for losses, cells, pointer in ((HISTORY, 60, "/losses"), (many, 90, "/losses/sub_portfolios")):
+        request = {"losses": losses, "measures": [es(0.9)]}
+        assert answered("measures", request, max_cells=cells).scenarios == 30
+        with pytest.raises(LimitExceeded, match=f"{cells} cells are more than the {cells - 1} allowed") as caught:
+            answered("measures", request, max_cells=cells - 1)
+        assert caught.value.faults[0].pointer == pointer

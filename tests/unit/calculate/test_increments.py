@@ -212,6 +212,13 @@ def test_values_of_candidates():
     assert other.provenance.request_digest != alone.provenance.request_digest
 
 
+def test_names_that_may_not_be_echoed_are_not():
+    names = ["=1+1", "@x", "a\x1b[31mred", "x" * 201, "x" * 200]
+    answer = tried(TABLE, [{"id": name, "values": [0, 0, 0, 1]} for name in names], [es(0.5)])
+    assert [one.id for one in answer.candidates] == [None] * 4 + ["x" * 200]
+    assert answer.refused == 4
+
+
 def test_values_that_are_no_json_refuse_the_whole():
     for text in ('"values":[1,,2]', '"values":[1],[2]', '"values":[1 2]', '"values":[NaN]'):
         document = {"losses": TABLE, "measures": [es(0.5)], "candidates": [{"id": "a b", "values": 7}]}

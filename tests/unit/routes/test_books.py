@@ -144,8 +144,11 @@ def test_a_book_in_every_post(client, path):
     for name, code in (("absent", "not_found"), ("broken", "not_defined"), ("../harbour", "invalid_value")):
         refused = client.post(f"/v1/{path}", json={**request, field: {"kind": "book", "name": name}})
         assert_problem(refused, code, pointer=f"/{field}/name")
-    relabelled = client.post(f"/v1/{path}", json={**request, field: {**book, "currency": "CHF"}}).json()
-    assert relabelled["labels"]["currency"] == ("EUR" if path == "comparisons" else "CHF")
+    relabelled = client.post(f"/v1/{path}", json={**request, field: {**book, "currency": "CHF"}})
+    if path == "comparisons":
+        assert_problem(relabelled, "invalid_value", pointer="/after/currency")
+    else:
+        assert relabelled.json()["labels"]["currency"] == "CHF"
 
 
 def test_a_comparison_of_a_book_with_itself_is_paired(client):
@@ -605,3 +608,13 @@ def test_a_base_is_made_ready_once(folder, monkeypatch):
     with running(books=str(folder), max_base_bytes=0) as client:
         assert ask(client, 0.9).content == ask(client, 0.9).content == first.content
         assert made == ["expected_shortfall 0.9"] * 2
+
+
+def test_a_cell_asks_for_no_more_groups_than_are_allowed(folder):
+    harbour(folder, "many", {f"p{k}": {"line": "sea", "ship": f"ship {k}"} for k in range(5)})
+    with running(books=str(folder), max_groups=3) as client:
+        total = client.get(f"/v1/books/many/value.txt?of=total&{ES}")
+        assert total.status_code == 200, total.text
+        cell = f"/v1/books/many/value.txt?of=contribution&{ES}"
+        assert client.get(f"{cell}&attribute=line&group=sea").status_code == 200
+        assert_problem(client.get(f"{cell}&attribute=ship&group=ship%201"), "limit_exceeded")
