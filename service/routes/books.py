@@ -1,9 +1,7 @@
 """The doors of the books, for spreadsheets, pages and programs that can only GET."""
 
 import asyncio
-import hashlib
-import re
-from collections.abc import Awaitable, Callable, Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from functools import partial
 from typing import Any
@@ -20,7 +18,6 @@ from service.desk import Desk
 from service.executors import Work
 from service.kept import Kept
 from service.metrics import Metrics
-from service.provenance import canonical
 from service.pulls import Asked, answer_in
 from service.representations import formats
 from service.representations.charts import Chart
@@ -30,8 +27,9 @@ from service.representations.page import POLICY, BookHead
 from service.representations.report import report_page
 from service.representations.spreadsheet import spreadsheet_page
 from service.routes.callers import watched
+from service.routes.conditional import conditional, tag_of, unchanged
 from service.routes.doors import door
-from service.routes.forms import POLICIES, chart_asked, picture, wants_mark
+from service.routes.forms import chart_asked, headers_of, picture, wants_mark
 from service.schemas.results import AllocationsAnswer, BookDescription, BooksAnswer, IncrementsAnswer
 from service.settings import Settings
 
@@ -41,11 +39,17 @@ PATHS: Mapping[str, str] = {
     **{kind: f"/v1/books/{{name}}/{kind}" for kind in ("measures", "allocations", "increments", "value", "report")},
 }
 """Path of each question."""
-PRIVATE = "private, no-cache"
 WORKBOOK_TYPE = "application/vnd.openxmlformats-officedocument.spreadsheetml.sheet"
-PAGE = HTML.content_type
+PAGE = {"content-type": HTML.content_type, "content-security-policy": POLICY}
 SERVICE_LINKS = '</openapi.json>; rel="service-desc", </docs>; rel="service-doc"'
-ENTITY_TAG = re.compile(r'(?:W/)?("[\x21\x23-\x7e\x80-\xff]*")')
+
+
+class _Unread(Exception):  # no error: it leads to the desk
+    """A book has to be read first."""
+
+
+def _read_nothing(_fraction: float = 0.0, /) -> None:
+    raise _Unread
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -62,6 +66,13 @@ class Reading:
         """Do what may take long, only while the caller is there."""
         async with watched(request) as gone:
             return await self.desk.run(job, seconds=None, gone=gone)
+
+    async def known(self, request: Request, job: Callable[[Work], Any]) -> Any:
+        """Do what takes a place only where books have to be read for it."""
+        try:
+            return await asyncio.to_thread(job, Work(checkpoint=_read_nothing))
+        except _Unread:
+            return await self.at_desk(request, job)
 
     async def book(self, request: Request) -> Book:
         """Return the book of the path."""
@@ -99,10 +110,10 @@ def routes(*, settings: Settings, books: Books, desk: Desk, metrics: Metrics) ->
     ]
     for kind, path in PATHS.items():
         made += [
-            door(f"{path}.{form.suffix}", {"GET": Pull(kind, form.suffix, reading).handle})
+            door(f"{path}.{form.suffix}", {"GET": Pull(kind, form.suffix, reading).handle}, asked=True)
             for form in FORMS_OF_BOOKS[kind]
         ]
-    made += [door(path, {"GET": Pull(kind, None, reading).handle}) for kind, path in PATHS.items()]
+    made += [door(path, {"GET": Pull(kind, None, reading).handle}, asked=True) for kind, path in PATHS.items()]
     return made
 
 
@@ -147,14 +158,14 @@ class Pull:
                 return await asyncio.to_thread(self._drawn, answered, book, form, chart, pairs, request)
             return await asyncio.to_thread(formats.write, answer, form, mark=mark)
 
-        return await _conditional(request, form, tag, write)
+        return await conditional(request, tag, write, headers_of(form))
 
     def _by_query(self, form: Form) -> bool:
         """Return whether an answer depends on more than the canonical request."""
         return self.kind in ("value", "report") or form is TXT
 
     def _tag(self, asked: Asked, form: Form, more: dict[str, Any]) -> str:
-        return _tag({"request": asked.digest, "kind": self.kind, "form": form.suffix, **more})
+        return tag_of({"request": asked.digest, "kind": self.kind, "form": form.suffix, **more})
 
     def _drawn(
         self, drawing: Drawing, book: Book, form: Form, chart: Chart | None, pairs: query.Pairs, request: Request
@@ -177,14 +188,9 @@ class Pull:
                 return books.description(request.path_params["name"], work)
             return BooksAnswer([one.summary() for one in books.described(work)])
 
-        found = await self.reading.at_desk(request, job)
+        found = await self.reading.known(request, job)
         data = formats.write(found, form, mark=mark)
-        tag = _tag({"digest": hashlib.sha256(data).hexdigest(), "form": form.suffix})
-
-        async def write() -> bytes:
-            return data
-
-        return await _conditional(request, form, tag, write)
+        return await unchanged(request, data, headers_of(form))
 
 
 def _number_of(pairs: query.Pairs) -> tuple[values.OfIncrement, values.Part]:
@@ -194,33 +200,6 @@ def _number_of(pairs: query.Pairs) -> tuple[values.OfIncrement, values.Part]:
         values.chosen(given, "of", values.OF_INCREMENT, "increment"),
         values.chosen(given, "field", values.FIELDS, "value"),
     )
-
-
-async def _conditional(request: Request, form: Form, tag: str, write: Callable[[], Awaitable[bytes]]) -> Response:
-    """Answer with what `write` makes, unless the caller has it already or asks for the head alone."""
-    headers = {"etag": tag, "vary": "Accept", "cache-control": PRIVATE}
-    if _has(request.headers.getlist("if-none-match"), tag):
-        return Response(status_code=304, headers=headers)
-    headers["content-type"] = form.content_type
-    if form.suffix in POLICIES:
-        headers["content-security-policy"] = POLICIES[form.suffix]
-    if request.method == "HEAD":
-        response = Response(headers=headers)
-        del response.headers["content-length"]
-        return response
-    return Response(await write(), headers=headers)
-
-
-def _has(given: list[str], tag: str) -> bool:
-    """Return whether an If-None-Match header names the tag (RFC 9110, 13.1.2: weak comparison)."""
-    said = ", ".join(given).strip()
-    return said == "*" or tag in ENTITY_TAG.findall(said)
-
-
-def _tag(of: dict[str, Any]) -> str:
-    """Return a strong entity tag; answers are sent in no content coding."""
-    made_by = {"version": __version__, "coding": "identity"}
-    return f'"{hashlib.sha256(canonical({**of, **made_by})).hexdigest()[:40]}"'
 
 
 def head_of(book: BookDescription) -> BookHead:
@@ -239,26 +218,23 @@ def head_of(book: BookDescription) -> BookHead:
 
 
 async def _heads(reading: Reading, request: Request) -> list[BookHead]:
-    described: list[BookDescription] = await reading.at_desk(request, reading.books.described)
+    described: list[BookDescription] = await reading.known(request, reading.books.described)
     return [head_of(one) for one in described]
 
 
 async def _front(reading: Reading, request: Request) -> Response:
     heads = await _heads(reading, request)
     page = index_page(heads, version=__version__, root=request.scope.get("root_path", ""))
-    return _page(page, link=SERVICE_LINKS)
+    return await unchanged(request, page.encode(), {**PAGE, "link": SERVICE_LINKS})
 
 
 async def _spreadsheets(reading: Reading, request: Request) -> Response:
     heads = await _heads(reading, request)
     base = str(request.base_url).rstrip("/")
-    return _page(spreadsheet_page(base, heads, root=request.scope.get("root_path", "")))
+    page = spreadsheet_page(base, heads, root=request.scope.get("root_path", ""))
+    return await unchanged(request, page.encode(), PAGE)
 
 
 async def _workbook(_request: Request) -> Response:
     """Answer the example workbook, which asks the demonstration's book."""
     return FileResponse(demo.FOLDER / demo.WORKBOOK, media_type=WORKBOOK_TYPE, filename=demo.WORKBOOK)
-
-
-def _page(content: str, **headers: str) -> Response:
-    return Response(content, headers={**headers, "content-security-policy": POLICY}, media_type=PAGE)

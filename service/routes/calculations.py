@@ -52,7 +52,7 @@ def routes(*, settings: Settings, books: Books, desk: Desk, metrics: Metrics) ->
 
 
 def _door(path: str, handler: Handler) -> Route:
-    return door(path, {"POST": handler, "QUERY": handler}, accept_post=BODY_TYPES, accept_query=BODY_TYPES)
+    return door(path, {"POST": handler, "QUERY": handler}, asked=True, accept_post=BODY_TYPES, accept_query=BODY_TYPES)
 
 
 @dataclass(frozen=True, slots=True)

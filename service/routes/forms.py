@@ -15,6 +15,12 @@ POLICIES = {"svg": PICTURE_POLICY, "png": PICTURE_POLICY, "html": POLICY}
 """Content-Security-Policy of a form."""
 
 
+def headers_of(form: Form) -> dict[str, str]:
+    """Return the header fields of an answer in a form."""
+    policy = POLICIES.get(form.suffix)
+    return {"content-type": form.content_type} | ({} if policy is None else {"content-security-policy": policy})
+
+
 def wants_mark(parameters: Pairs) -> bool:
     """Return whether a CSV answer begins with the byte order mark."""
     return _chosen(parameters, "bom", ("0", "1")) == "1"

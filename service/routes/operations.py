@@ -16,6 +16,7 @@ from service.metrics import Metrics
 from service.pages import docs, html
 from service.pages.problems import problem_index, problem_page, problem_record
 from service.representations.formats import best
+from service.routes.conditional import unchanged
 from service.routes.doors import Handler, door
 from service.settings import Settings, variable
 from service.validation import CODES
@@ -43,10 +44,11 @@ def routes(
     start = _said(docs.START, "text/javascript; charset=utf-8")
     limits = _said(json.dumps(limits_of(settings)), JSON)
     return [
-        door("/healthz", {"GET": _said('{"status":"alive"}', JSON, cache_control="no-store")}),
+        door("/healthz", {"GET": _alive}),
         door("/readyz", {"GET": partial(_ready, desk)}),
         door("/metrics", {"GET": partial(_metrics, metrics)}),
         door("/v1/limits", {"GET": limits}),
+        door("/v1/limits.json", {"GET": limits}),
         door("/problems", {"GET": partial(_problems, statuses)}),
         door("/problems/{code}", {"GET": partial(_problem, statuses)}),
         door("/openapi.json", {"GET": _said(document, JSON)}),
@@ -70,16 +72,19 @@ def limits_of(settings: Settings) -> list[dict[str, Any]]:
     ]
 
 
-def _said(content: str | bytes, media_type: str, *, policy: str | None = None, **headers: str) -> Handler:
+def _said(content: str | bytes, media_type: str, *, policy: str | None = None) -> Handler:
     """Return a handler that always answers the same."""
-    sent = {name.replace("_", "-"): value for name, value in headers.items()}
-    if policy is not None:
-        sent["content-security-policy"] = policy
+    data = content.encode() if isinstance(content, str) else content
+    sent = {"content-type": media_type} | ({} if policy is None else {"content-security-policy": policy})
 
-    async def handle(_request: Request) -> Response:
-        return Response(content, headers=sent, media_type=media_type)
+    async def handle(request: Request) -> Response:
+        return await unchanged(request, data, sent)
 
     return handle
+
+
+async def _alive(_request: Request) -> Response:
+    return Response('{"status":"alive"}', headers={"cache-control": "no-store"}, media_type=JSON)
 
 
 async def _ready(desk: Desk, _request: Request) -> Response:

@@ -5,6 +5,7 @@ import io
 import json
 import re
 from concurrent.futures import ThreadPoolExecutor
+from threading import Event, Thread
 from xml.etree import ElementTree as ET
 
 import pyarrow as pa
@@ -13,7 +14,7 @@ import pytest
 from service import __version__, calculate
 from service.calculate import increments
 from service.representations.page import PICTURE_POLICY, POLICY
-from tests.serving import assert_problem, running
+from tests.serving import assert_problem, metric, running, until
 
 HARBOUR = {
     "losses": {"kind": "scenarios", "file": "harbour.csv", "currency": "EUR", "sub_portfolios": []},
@@ -146,7 +147,7 @@ def test_a_book_in_every_post(client, path):
         assert_problem(refused, code, pointer=f"/{field}/name")
     relabelled = client.post(f"/v1/{path}", json={**request, field: {**book, "currency": "CHF"}})
     if path == "comparisons":
-        assert_problem(relabelled, "invalid_value", pointer="/after/currency")
+        assert_problem(relabelled, "invalid_value", pointer="/after")
     else:
         assert relabelled.json()["labels"]["currency"] == "CHF"
 
@@ -618,3 +619,27 @@ def test_a_cell_asks_for_no_more_groups_than_are_allowed(folder):
         cell = f"/v1/books/many/value.txt?of=contribution&{ES}"
         assert client.get(f"{cell}&attribute=line&group=sea").status_code == 200
         assert_problem(client.get(f"{cell}&attribute=ship&group=ship%201"), "limit_exceeded")
+
+
+def test_what_is_known_of_books_takes_no_place(folder, monkeypatch):
+    """Lists, heads and pages are there also while all places to compute are taken."""
+    monkeypatch.setattr("service.books.UNSETTLED", -1)
+    finish, answer = Event(), calculate.answer
+
+    def wait(*arguments):
+        finish.wait(20)
+        return answer(*arguments)
+
+    paths = ("/v1/books", HOME, "/", "/spreadsheets")
+    with running(books=str(folder), max_concurrent=1, max_waiting=0) as client:
+        assert [client.get(path).status_code for path in paths] == [200] * 4
+        monkeypatch.setattr(calculate, "answer", wait)
+        sender = Thread(target=lambda: client.get(f"{HOME}/measures?{ES}"))
+        sender.start()
+        until(lambda: metric(client, "tailrace_calculations_in_flight") == 1)
+        for method in ("GET", "HEAD"):
+            assert [client.request(method, path).status_code for path in paths] == [200] * 4
+        assert client.head(f"{HOME}/allocations?{ES}").status_code == 200
+        assert_problem(client.get(f"{HOME}/allocations?{ES}"), "busy")
+        finish.set()
+        sender.join(20)

@@ -139,3 +139,21 @@ def test_every_error_class_has_a_status_and_a_page():
         assert kind in problems.PROBLEMS, f"{kind.__name__} has no row in problems.py"
         assert kind.code in problems.PROBLEM_PAGES, f"{kind.code} has no page"
     assert problems.STATUSES.keys() == problems.PROBLEM_PAGES.keys()
+
+
+def test_what_stays_the_same_is_not_sent_again(client):
+    for path in ("/", "/spreadsheets", "/docs", "/v1/limits", "/v1/limits.json", "/openapi.json"):
+        first = client.get(path)
+        assert first.headers["cache-control"] == "private, no-cache"
+        assert first.headers["vary"] == "Accept"
+        again = client.get(path, headers={"if-none-match": first.headers["etag"]})
+        assert (again.status_code, again.content) == (304, b"")
+
+
+@pytest.mark.parametrize(
+    "path",
+    ["/", "/v1/limits", "/healthz", "/readyz", "/metrics", "/problems", "/openapi.json", "/docs", "/spreadsheets"],
+)
+def test_parameters_without_meaning_are_refused(client, path):
+    assert client.get(path, params={"refresh": "2"}).status_code == 200
+    assert_problem(client.get(path, params={"level": "0.99"}), "invalid_value", parameter="level")
