@@ -28,11 +28,13 @@ ENV PATH=/opt/tailrace/bin:$PATH \
     PYTHONUNBUFFERED=1 \
     PYTHONDONTWRITEBYTECODE=1 \
     OMP_NUM_THREADS=1 \
-    OPENBLAS_NUM_THREADS=1
+    OPENBLAS_NUM_THREADS=1 \
+    TAILRACE_HOST=0.0.0.0 \
+    TAILRACE_PORT=8000
 WORKDIR /tmp
 USER 10001:10001
 EXPOSE 8000
 STOPSIGNAL SIGTERM
 HEALTHCHECK --interval=10s --timeout=3s --start-period=20s --retries=3 \
-    CMD ["python3", "-c", "import urllib.request; urllib.request.urlopen('http://127.0.0.1:8000/healthz', timeout=2)"]
-CMD ["tailrace", "serve", "--host", "0.0.0.0", "--port", "8000"]
+    CMD ["python3", "-c", "import os, urllib.request as u; u.urlopen(f'http://127.0.0.1:{os.environ[\"TAILRACE_PORT\"]}/healthz', timeout=2)"]
+CMD ["tailrace", "serve"]
