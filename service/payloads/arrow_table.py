@@ -1,4 +1,4 @@
-"""An Arrow IPC stream, read to numbers and texts."""
+"""An Arrow IPC stream or file, read to numbers and texts."""
 
 import struct
 from collections.abc import Collection
@@ -12,12 +12,19 @@ from service.payloads.sheet import PART, Sheet, invalid_cell, select
 END_OF_STREAM = b"\xff\xff\xff\xff\x00\x00\x00\x00"
 """The marker behind the last message of a stream ("IPC Streaming Format" of the Arrow columnar format)."""
 
+MAGIC = b"ARROW1"
+"""First and last bytes of a file ("IPC File Format"): magic, padding, a stream, footer, its length, magic."""
+START = 8
+"""Bytes before the stream in a file."""
+END = 4 + len(MAGIC)
+"""Bytes behind the footer."""
+
 # Positions of fields in the tables Message and RecordBatch of the format's Message.fbs.
 _MESSAGE_HEADER = 2
 _BATCH_LENGTH = 0
 _BATCH_COMPRESSION = 3
 
-_WHAT = "an Arrow IPC stream"
+_WHAT = "an Arrow IPC stream or file"
 _PLACE = Fault(detail="", code="", part=PART)
 
 
@@ -28,7 +35,7 @@ def table_from_arrow(
     ignore: Collection[str] = (),
     max_cells: int,
 ) -> Sheet:
-    """Read a table from an Arrow IPC stream.
+    """Read a table from an Arrow IPC stream, or from the stream inside an Arrow IPC file.
 
     Parameters
     ----------
@@ -65,7 +72,7 @@ def table_from_arrow(
     """
     pa = pyarrow()
     with reading(_WHAT):
-        buffer = pa.py_buffer(body)
+        buffer = pa.py_buffer(_stream_of(memoryview(body)))
         aligned = pa.ipc.Alignment.DataTypeSpecific
         stream = pa.ipc.open_stream(buffer, options=pa.ipc.IpcReadOptions(ensure_alignment=aligned))
         schema = stream.schema
@@ -81,6 +88,19 @@ def table_from_arrow(
             stream = pa.ipc.open_stream(buffer, options=options)
         table = stream.read_all()
         return sheet_of(iter([table]), selection, rows=rows)
+
+
+def _stream_of(body: memoryview) -> memoryview:
+    """Return the stream inside a file, and anything else as it is."""
+    if bytes(body[: len(MAGIC)]) != MAGIC:
+        return body
+    if len(body) < START + END or bytes(body[-len(MAGIC) :]) != MAGIC:
+        raise malformed("the file is cut: it does not end as it begins")
+    footer = struct.unpack_from("<i", body, len(body) - END)[0]
+    end = len(body) - END - footer
+    if footer < 0 or end < START:
+        raise malformed("the file says that its footer is longer than the file")
+    return body[START:end]
 
 
 def _count_rows(buffer: Any) -> int:

@@ -324,3 +324,34 @@ def test_metadata_that_ends_too_early():
 
 def test_one_reader_for_each_media_type():
     assert list(TABLE_READERS) == [CSV, ARROW, PARQUET]
+
+
+def arrow_file(table, *, rows=None, **options):
+    sink = io.BytesIO()
+    with pa.ipc.new_file(sink, table.schema, options=pa.ipc.IpcWriteOptions(**options)) as writer:
+        writer.write_table(table, max_chunksize=rows)
+    return sink.getvalue()
+
+
+def test_the_stream_inside_a_file_is_read():
+    table = pa.table({"a": np.arange(1000.0), "b": np.arange(1000), "label": [f"s{k}" for k in range(1000)]})
+    options = {"text_columns": ["label"], "max_cells": MANY}
+    for rows in (None, 77):
+        found = table_from_arrow(arrow_file(table, rows=rows), **options)
+        wanted = table_from_arrow(stream(table), **options)
+        assert np.array_equal(found.values, wanted.values)
+        assert (found.names, found.texts) == (wanted.names, wanted.texts)
+    with pytest.raises(InvalidValue, match="compressed"):
+        table_from_arrow(arrow_file(table, compression="lz4"), **options)
+    with pytest.raises(LimitExceeded):
+        table_from_arrow(arrow_file(table), text_columns=["label"], max_cells=1999)
+
+
+def test_damaged_files_are_refused():
+    whole = arrow_file(pa.table({"a": np.arange(100.0)}))
+    for cut in range(6, len(whole)):
+        with pytest.raises(CallerError):
+            table_from_arrow(whole[:cut], max_cells=MANY)
+    for length in (-1, 0, 2**31 - 1, len(whole)):
+        with pytest.raises(CallerError):
+            table_from_arrow(whole[:-10] + length.to_bytes(4, "little", signed=True) + whole[-6:], max_cells=MANY)
