@@ -11,7 +11,7 @@ from typing import Annotated, Literal
 
 import numpy as np
 from numpy.typing import NDArray
-from pydantic import Discriminator, Field
+from pydantic import Field
 from pydantic.dataclasses import dataclass
 from typing_extensions import TypeAliasType
 
@@ -282,10 +282,9 @@ Cover = TypeAliasType(
     "Cover",
     Annotated[
         LayerCover | CedeLayerCover | QuotaShareCover | CapCover | FloorCover,
-        Discriminator("kind"),
+        Field(discriminator="kind", description="Any step of a cover, told apart by `kind`."),
     ],
 )
-"""Any step of a cover, told apart by `kind`."""
 
 TYPICAL: tuple[CoverStep, ...] = (
     LayerCover(kind="layer", attachment=100.0, limit=400.0, share=0.5),

@@ -4,7 +4,7 @@ import datetime as dt
 import re
 from typing import Annotated, Any, Literal, Self
 
-from pydantic import AfterValidator, Discriminator, Field, WithJsonSchema, model_validator
+from pydantic import AfterValidator, Field, WithJsonSchema, model_validator
 from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
 from typing_extensions import TypeAliasType
@@ -301,6 +301,9 @@ class BookLosses(LabelledLosses):
 
 
 Losses = TypeAliasType(
-    "Losses", Annotated[ScenarioLosses | FactorLosses | HistoryLosses | BookLosses, Discriminator("kind")]
+    "Losses",
+    Annotated[
+        ScenarioLosses | FactorLosses | HistoryLosses | BookLosses,
+        Field(discriminator="kind", description="Any source of losses, told apart by `kind`."),
+    ],
 )
-"""Any source of losses, told apart by `kind`."""

@@ -2,7 +2,7 @@
 
 from typing import Annotated
 
-from pydantic import Discriminator
+from pydantic import Field
 from typing_extensions import TypeAliasType
 
 from service.risk.components.aggregate import AggregateLaw, QuantileBound
@@ -43,19 +43,20 @@ AnyComponent = TypeAliasType(
         | IdiosyncraticComponent
         | CompoundComponent
         | CreditPoolComponent,
-        Discriminator("kind"),
+        Field(discriminator="kind", description="Any component, told apart by `kind`."),
     ],
 )
-"""Any component, told apart by `kind`."""
 
 ObservedComponent = TypeAliasType(
     "ObservedComponent",
     Annotated[
         ConstantComponent | LinearComponent | DeltaGammaComponent | RevaluationGridComponent,
-        Discriminator("kind"),
+        Field(
+            discriminator="kind",
+            description="Any component that depends on factors alone, told apart by `kind`: for observed changes.",
+        ),
     ],
 )
-"""Any component that is a function of the factors alone, told apart by `kind`: for observed changes."""
 
 TYPICAL: tuple[Component, ...] = (
     ConstantComponent(kind="constant", amount=10.0),

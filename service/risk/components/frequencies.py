@@ -6,7 +6,7 @@ from typing import Annotated, Literal, Self
 import numpy as np
 from numpy.random import Generator
 from numpy.typing import NDArray
-from pydantic import Discriminator, Field, model_validator
+from pydantic import Field, model_validator
 from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
 from typing_extensions import TypeAliasType
@@ -156,9 +156,11 @@ class BinomialFrequency(FrequencyLaw):
 
 ClaimFrequency = TypeAliasType(
     "ClaimFrequency",
-    Annotated[PoissonFrequency | NegativeBinomialFrequency | BinomialFrequency, Discriminator("family")],
+    Annotated[
+        PoissonFrequency | NegativeBinomialFrequency | BinomialFrequency,
+        Field(discriminator="family", description="Any law of the number of claims, told apart by `family`."),
+    ],
 )
-"""Any law of the number of claims, told apart by `family`."""
 
 TYPICAL_FREQUENCIES: tuple[FrequencyLaw, ...] = (
     PoissonFrequency(family="poisson", mean=3.0),

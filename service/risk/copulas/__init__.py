@@ -2,7 +2,7 @@
 
 from typing import Annotated
 
-from pydantic import Discriminator
+from pydantic import Field
 from typing_extensions import TypeAliasType
 
 from service.risk.copulas.archimedean import (
@@ -39,10 +39,9 @@ Copula = TypeAliasType(
         | JoeCopula
         | FrankCopula
         | NestedCopula,
-        Discriminator("family"),
+        Field(discriminator="family", description="Any copula, told apart by `family`."),
     ],
 )
-"""Any copula, told apart by `family`."""
 
 _PAIRS = [[1.0, 0.5, 0.2], [0.5, 1.0, 0.3], [0.2, 0.3, 1.0]]
 

@@ -2,7 +2,7 @@
 
 from typing import Annotated
 
-from pydantic import Discriminator
+from pydantic import Field
 from typing_extensions import TypeAliasType
 
 from service.risk.correlation.contract import CorrelationForm, Mixing
@@ -20,10 +20,9 @@ Correlation = TypeAliasType(
     "Correlation",
     Annotated[
         MatrixCorrelation | KendallTauCorrelation | SpearmanRhoCorrelation | LoadingsCorrelation | EqualCorrelation,
-        Discriminator("kind"),
+        Field(discriminator="kind", description="Any form of a correlation matrix, told apart by `kind`."),
     ],
 )
-"""Any form of a correlation matrix, told apart by `kind`."""
 
 TYPICAL: tuple[CorrelationForm, ...] = (
     MatrixCorrelation(kind="matrix", values=[[1.0, 0.5, 0.2], [0.5, 1.0, 0.3], [0.2, 0.3, 1.0]]),

@@ -2,7 +2,7 @@
 
 from typing import Annotated
 
-from pydantic import Discriminator
+from pydantic import Field
 from typing_extensions import TypeAliasType
 
 from service.risk.marginals.bounded import BetaMarginal, UniformMarginal
@@ -48,10 +48,9 @@ Marginal = TypeAliasType(
         | EmpiricalMarginal
         | PointMarginal
         | SplicedMarginal,
-        Discriminator("family"),
+        Field(discriminator="family", description="Any marginal, told apart by `family`."),
     ],
 )
-"""Any marginal, told apart by `family`."""
 
 TYPICAL: tuple[MarginalLaw, ...] = (
     NormalMarginal(family="normal", mean=0.02, standard_deviation=0.15),

@@ -5,7 +5,7 @@ from functools import cached_property
 from typing import Annotated, Literal
 
 import numpy as np
-from pydantic import AfterValidator, Discriminator, Field
+from pydantic import AfterValidator, Field
 from pydantic.dataclasses import dataclass
 from pydantic_core import PydanticCustomError
 from typing_extensions import TypeAliasType
@@ -56,10 +56,9 @@ SplicePart = TypeAliasType(
         | LogisticMarginal
         | EmpiricalMarginal
         | PointMarginal,
-        Discriminator("family"),
+        Field(discriminator="family", description="Any marginal that is not spliced itself, told apart by `family`."),
     ],
 )
-"""Any marginal that is not spliced itself, told apart by `family`."""
 
 
 def _probability(value: float) -> float:

@@ -2,7 +2,7 @@
 
 from typing import Annotated
 
-from pydantic import Discriminator
+from pydantic import Field
 from typing_extensions import TypeAliasType
 
 from service.risk.measures.contract import (
@@ -31,10 +31,9 @@ Measure = TypeAliasType(
         | ExponentialDistortion
         | Entropic
         | ReturnLevel,
-        Discriminator("kind"),
+        Field(discriminator="kind", description="Any measure, told apart by `kind`."),
     ],
 )
-"""Any measure, told apart by `kind`."""
 
 TYPICAL: tuple[RiskMeasure, ...] = (
     ValueAtRisk(kind="value_at_risk", level=0.995),
