@@ -5,15 +5,17 @@ from contextlib import asynccontextmanager
 from os import environ
 
 from fastapi import FastAPI
+from starlette.datastructures import Headers
 from starlette.middleware import Middleware
 from starlette.middleware.cors import CORSMiddleware
+from starlette.types import Receive, Scope, Send
 
 from service import __version__, openapi, problems
 from service.books import Books
 from service.desk import Desk
 from service.executors import keep_freed_memory
 from service.metrics import Metrics
-from service.middleware import Envelope
+from service.middleware import FIRST_ERROR, Envelope
 from service.routes import books, calculations, operations
 from service.settings import Settings
 
@@ -28,6 +30,24 @@ ASKED_HEADERS = (
     "traceparent",
 )
 TOLD_HEADERS = ("ETag", "Retry-After", "Server-Timing", "X-Request-ID")
+
+
+class Sharing(CORSMiddleware):
+    """Answers the questions of browsers on behalf of other origins.
+
+    One that asks for more than is allowed gets the answer to any OPTIONS: without the fields that allow it, a
+    browser does not send the request.
+    """
+
+    async def __call__(self, scope: Scope, receive: Receive, send: Send) -> None:
+        """Serve one request."""
+        if scope["type"] == "http" and scope["method"] == "OPTIONS":
+            headers = Headers(scope=scope)
+            asked = {"origin", "access-control-request-method"} <= set(headers)
+            if asked and self.preflight_response(headers).status_code >= FIRST_ERROR:
+                await self.app(scope, receive, send)
+                return
+        await super().__call__(scope, receive, send)
 
 
 def create_app(settings: Settings) -> FastAPI:
@@ -73,7 +93,7 @@ def _shared_with(settings: Settings) -> list[Middleware]:
         return []
     return [
         Middleware(
-            CORSMiddleware,
+            Sharing,
             allow_origins=origins,
             allow_methods=["GET", "HEAD", "OPTIONS", "POST", "QUERY"],
             allow_headers=ASKED_HEADERS,

@@ -581,6 +581,11 @@ def test_browsers_of_other_origins_only_by_setting(client, folder):
         assert "access-control-allow-origin" not in stranger.headers
         plain = shared.options(CELL, headers=origin)
         assert plain.headers["allow"] == "GET, HEAD, OPTIONS"
+        for more in ({"origin": "https://evil.example"}, {"access-control-request-headers": "x-other"}):
+            refused = shared.options("/v1/measures", headers={**asked, **more})
+            assert (refused.status_code, refused.content) == (204, b"")
+            assert "access-control-allow-origin" not in refused.headers
+            assert refused.headers["x-request-id"]
 
 
 def test_a_base_is_made_ready_once(folder, monkeypatch):
