@@ -27,6 +27,7 @@ from service.schemas.requests import AllocationsRequest, ComparisonsRequest
 from service.schemas.results import BookDescription, BookSubPortfolio, Labels
 from service.settings import Settings
 from service.sources import Source, source_of
+from service.suggestions import hint
 
 NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9_-]{0,63}")
 TABLE_NAME = re.compile(r"[A-Za-z0-9_][A-Za-z0-9_.-]{0,127}")
@@ -231,7 +232,8 @@ class Books:
             for folder in self._folders:
                 if os.path.lexists(folder / (name + SUFFIX)):
                     return folder
-        raise NotFound.of(Fault(detail=f"there is no book {name[:80]!r} here", code=NotFound.code))
+        detail = f"there is no book {name[:80]!r} here{hint(name[:80], self.names())}"
+        raise NotFound.of(Fault(detail=detail, code=NotFound.code))
 
     def _fresh(self, name: str, folder: Path) -> _Known | None:
         """Return what is known of a book if its files are still the same."""

@@ -7,6 +7,7 @@ from math import inf
 from typing import Any
 
 from service.errors import Fault, InvalidValue
+from service.suggestions import hint
 
 NUMBER = re.compile(r"-?(0|[1-9]\d*)(\.\d+)?([eE][-+]?\d+)?")
 
@@ -209,8 +210,8 @@ def refuse_unknown(pairs: Pairs, names: Sequence[str]) -> None:
     """Refuse parameters that are not among `names`."""
     unknown = next((name for name, _ in pairs if name not in names), None)
     if unknown is not None:
-        known = ", ".join(names) if names else "none"
-        raise _fault(unknown[:80], f"unknown query parameter {unknown[:80]!r}; known here: {known}", "unknown_field")
+        name = unknown[:80]
+        raise _fault(name, f"unknown query parameter {name!r}{hint(name, names)}", "unknown_parameter")
 
 
 def _members(pairs: Pairs, parameters: Mapping[str, Parameter]) -> dict[str, Any]:

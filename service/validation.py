@@ -1,13 +1,13 @@
 """From what the models found wrong to an error in a person's words that points into the caller's document."""
 
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from difflib import get_close_matches
 from functools import cache
 from typing import Any
 
 from pydantic import TypeAdapter, ValidationError
 
 from service.errors import CallerError, Fault, InvalidValue
+from service.suggestions import suggestion
 
 MOST_FAULTS = 50  # a table of wrong cells is one mistake, not a thousand
 LONGEST_ECHO = 40  # characters of an offending value that come back
@@ -53,12 +53,6 @@ def refusal(error: ValidationError, document: Document, model: Any = None) -> In
 def pointer(steps: Sequence[Step]) -> str:
     """Return the RFC 6901 pointer of `steps`."""
     return "".join("/" + str(step).replace("~", "~0").replace("/", "~1") for step in steps)
-
-
-def suggestion(name: str, known: Iterator[str] | Sequence[str]) -> str:
-    """Return ``; did you mean 'level'?`` or nothing."""
-    close = get_close_matches(name, list(known), n=1)
-    return f"; did you mean '{close[0]}'?" if close else ""
 
 
 def echo(value: object) -> str:

@@ -16,6 +16,7 @@ from service.schemas.results import (
     IncrementsAnswer,
     ValueAnswer,
 )
+from service.suggestions import hint
 
 Word = TypeVar("Word", bound=str)
 
@@ -98,16 +99,7 @@ def check(asked: Selection, parts: Sequence[SubPortfolio]) -> None:
     if asked.sub_portfolio is not None:
         check_sub_portfolio(asked.sub_portfolio, parts)
     if asked.attribute is not None:
-        names = asked.attribute.split(SEPARATOR)
-        for name in names:
-            if not any(name in one.attributes for one in parts):
-                detail = f"no sub-portfolio has the attribute {name[:80]!r}"
-                raise _refused("attribute", detail, "unknown_attribute")
-        values = [[one.attributes.get(name) for name in names] for one in parts]
-        groups = {None if None in of else SEPARATOR.join(map(str, of)) for of in values}
-        if asked.group not in groups:
-            detail = f"no group of {asked.attribute[:80]!r} is named {(asked.group or '')[:80]!r}"
-            raise NotFound.of(Fault(detail=detail, code=NotFound.code, parameter="group"))
+        _check_group(asked.attribute, asked.group, parts)
 
 
 def check_sub_portfolio(name: str, parts: Sequence[SubPortfolio]) -> None:
@@ -117,9 +109,26 @@ def check_sub_portfolio(name: str, parts: Sequence[SubPortfolio]) -> None:
     ------
     NotFound
     """
-    if name not in (one.id for one in parts):
-        detail = f"the book has no sub-portfolio {name[:80]!r}"
+    ids = [one.id for one in parts]
+    if name not in ids:
+        detail = f"the book has no sub-portfolio {name[:80]!r}{hint(name[:80], ids)}"
         raise NotFound.of(Fault(detail=detail, code=NotFound.code, parameter="sub_portfolio"))
+
+
+def _check_group(attribute: str, group: str | None, parts: Sequence[SubPortfolio]) -> None:
+    names = attribute.split(SEPARATOR)
+    attributes = dict.fromkeys(name for one in parts for name in one.attributes)
+    unknown = next((name[:80] for name in names if name not in attributes), None)
+    if unknown is not None:
+        detail = f"no sub-portfolio has the attribute {unknown!r}{hint(unknown, attributes)}"
+        raise _refused("attribute", detail, "unknown_attribute")
+    values = [[one.attributes.get(name) for name in names] for one in parts]
+    groups = dict.fromkeys(None if None in of else SEPARATOR.join(map(str, of)) for of in values)
+    if group not in groups:
+        said = (group or "")[:80]
+        known = hint(said, [one for one in groups if one is not None])
+        detail = f"no group of {attribute[:80]!r} is named {said!r}{known}"
+        raise NotFound.of(Fault(detail=detail, code=NotFound.code, parameter="group"))
 
 
 def value_of(asked: Selection, answer: AllocationsAnswer, number: int) -> ValueAnswer:

@@ -24,6 +24,7 @@ from service.risk.simulation import Plan, simulated
 from service.risk.words import unsafe
 from service.schemas.requests import Candidate, ScaledCopy
 from service.sources import Source
+from service.suggestions import suggestion
 from service.validation import echo, refusal
 
 CANDIDATE: TypeAdapter[Candidate] = TypeAdapter(Candidate)
@@ -162,7 +163,9 @@ class Reader:
         """Return a candidate that is a part of a sub-portfolio with its losses (n,), and its profit if not given."""
         names = [one.id for one in self.source.sub_portfolios]
         if copy.sub_portfolio not in names:
-            raise InvalidValue.at("", f"the book has no sub-portfolio {echo(copy.sub_portfolio)}", code="not_allowed")
+            meant = suggestion(copy.sub_portfolio, names)
+            detail = f"the book has no sub-portfolio {echo(copy.sub_portfolio)}{meant}"
+            raise InvalidValue.at("", detail, code="not_allowed")
         column = names.index(copy.sub_portfolio)
         loss = copy.step * np.asarray(self.frame.table.losses[:, column]) + 0.0
         check_magnitude(self.frame.totals + loss)

@@ -8,6 +8,7 @@ import numpy as np
 
 from service.errors import Fault, InvalidValue, NotDefined
 from service.risk.quantiles import Array, Indices
+from service.suggestions import suggestion
 
 SEPARATOR = "/"  # between the attributes of a crossing
 LARGEST_LOSS = 1e150  # the squares of larger losses overflow binary64
@@ -143,7 +144,8 @@ def groups_of(sub_portfolios: Sequence[SubPortfolio], attributes: Sequence[str])
         members: dict[str | None, list[int]] = {}
         for name in names:
             if not any(name in one.attributes for one in sub_portfolios):
-                detail = f"no sub-portfolio has the attribute {name!r}"
+                known = dict.fromkeys(other for one in sub_portfolios for other in one.attributes)
+                detail = f"no sub-portfolio has the attribute {name!r}{suggestion(name, known)}"
                 raise InvalidValue.of(Fault(detail=detail, code="unknown_attribute", pointer=f"/{number}"))
         for column, one in enumerate(sub_portfolios):
             values = [one.attributes.get(name) for name in names]

@@ -9,7 +9,7 @@ from pydantic_core import PydanticCustomError
 
 from service.errors import InvalidValue
 from service.schemas.requests import AllocationsRequest
-from service.validation import MOST_FAULTS, echo, locate, pointer, refusal, suggestion
+from service.validation import MOST_FAULTS, echo, locate, pointer, refusal
 
 LOSSES = {"kind": "scenarios", "sub_portfolios": [{"id": "a"}], "values": [[1]]}
 SOUND = {"losses": LOSSES, "measures": [{"kind": "value_at_risk", "level": 0.5}]}
@@ -45,6 +45,7 @@ def faults(document, model=AllocationsRequest):
         ({"measures": [{"level": 0.5}]}, "/measures/0/kind", "missing", "'kind' says what this is"),
         ({"measures": [{"kind": "value_at_risk"}]}, "/measures/0/level", "missing", "this field is required"),
         ({"measures": [{"kind": "wangg", "shift": 1}]}, "/measures/0/kind", "not_allowed", "did you mean 'wang'?"),
+        ({"measures": [{"kind": "VaR"}]}, "/measures/0/kind", "not_allowed", "did you mean 'value_at_risk'?"),
         ({"measures": [{"kind": "wang", "shift": -1}]}, "/measures/0/shift", "out_of_range", "-1 is not at least 0"),
         (
             {"capital_measure": {"kind": "wang", "shft": 1, "shift": 1}},
@@ -163,8 +164,3 @@ def test_pointer_escapes():
 )
 def test_echo(value, words):
     assert echo(value) == words
-
-
-def test_suggestion_only_if_close():
-    assert suggestion("lvel", ["level", "kind"]) == "; did you mean 'level'?"
-    assert suggestion("zzz", ["level"]) == ""

@@ -7,7 +7,6 @@ all that does not change from block to block and writes the losses of a block of
 import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass as plain
-from difflib import get_close_matches
 from functools import cached_property
 from typing import Protocol
 
@@ -22,6 +21,7 @@ from service.risk.copulas.elliptical import GaussianSampler
 from service.risk.covers import Tails
 from service.risk.marginals import MarginalLaw
 from service.risk.words import STRICT, Text
+from service.suggestions import suggestion
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.intp]
@@ -205,9 +205,8 @@ def unknown_factors(named: Sequence[tuple[str, str]], factors: FactorSet) -> lis
     faults = []
     for pointer, name in named:
         if name not in factors.positions:
-            close = get_close_matches(name, factors.ids, n=1)
-            hint = f"; did you mean '{close[0]}'?" if close else ""
-            faults.append(Fault(detail=f"there is no factor '{name}'{hint}", code="unknown_factor", pointer=pointer))
+            detail = f"there is no factor '{name}'{suggestion(name, factors.ids)}"
+            faults.append(Fault(detail=detail, code="unknown_factor", pointer=pointer))
     return faults
 
 

@@ -1,7 +1,6 @@
 """What a copula is: something that is checked against the factors and then gives scores, block by block."""
 
 from collections.abc import Sequence
-from difflib import get_close_matches
 from typing import Annotated, Protocol
 
 import numpy as np
@@ -15,6 +14,7 @@ from service.risk.correlation.contract import refuse
 from service.risk.scores import Law, Scores
 from service.risk.streams import Draw
 from service.risk.words import STRICT
+from service.suggestions import suggestion
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.intp]
@@ -82,11 +82,8 @@ def grouped(factor_ids: Sequence[str], groups: Sequence[Sequence[str]]) -> list[
         for j, name in enumerate(names):
             pointer = f"/groups/{g}/factors/{j}"
             if name not in numbers:
-                close = get_close_matches(name, factor_ids, n=1)
-                hint = f"; did you mean '{close[0]}'?" if close else ""
-                faults.append(
-                    Fault(detail=f"there is no factor '{name}'{hint}", code="unknown_factor", pointer=pointer)
-                )
+                detail = f"there is no factor '{name}'{suggestion(name, factor_ids)}"
+                faults.append(Fault(detail=detail, code="unknown_factor", pointer=pointer))
             elif name in seen:
                 where = "twice in this group" if seen[name] == g else f"in group {seen[name]} already (from 0)"
                 faults.append(Fault(detail=f"the factor '{name}' is {where}", code="not_allowed", pointer=pointer))

@@ -394,6 +394,32 @@ def test_a_scaled_sub_portfolio_that_is_none(client, query, code, parameter):
     assert client.head(f"{HOME}/increments?{query}").status_code in (404, 422)
 
 
+@pytest.mark.parametrize(
+    ("path", "code", "parameter", "words"),
+    [
+        ("/v1/books/harbor", "not_found", None, "there is no book 'harbor' here; did you mean 'harbour'?"),
+        ("/v1/books/zzz", "not_found", None, "there is no book 'zzz' here; known here: broken, harbour"),
+        (f"{HOME}/measures?mesure=wang&shift=1", "invalid_value", "mesure", "did you mean 'measure'?"),
+        (f"{HOME}/measures?measure=es&level=0.9", "invalid_value", "measure", "did you mean 'expected_shortfall'?"),
+        (f"{HOME}/measures?{ES}&group_by=lines", "invalid_value", "group_by", "did you mean 'line'?"),
+        (f"{HOME}/increments?sub_portfolio=strom&scale=2", "not_found", "sub_portfolio", "did you mean 'storm'?"),
+        (f"{HOME}/increments?sub_portfolio=zz&scale=2", "not_found", "sub_portfolio", "here: hull, cargo, storm"),
+        (f"{HOME}/value?of=share&attribute=entiti&group=a", "invalid_value", "attribute", "did you mean 'entity'?"),
+        (f"{HOME}/value?of=share&attribute=line&group=se", "not_found", "group", "did you mean 'sea'?"),
+        (f"{HOME}/value?of=share&attribute=line&group=air", "not_found", "group", "known here: sea, land"),
+    ],
+)
+def test_a_name_that_is_none_gets_a_hint(client, path, code, parameter, words):
+    problem = assert_problem(client.get(path), code, **({"parameter": parameter} if parameter else {}))
+    assert words in problem["detail"]
+
+
+def test_an_unknown_parameter_has_a_code_of_its_own(client):
+    problem = assert_problem(client.get(f"{HOME}/measures?mesure=wang"), "invalid_value", parameter="mesure")
+    assert [one["code"] for one in problem["errors"]] == ["unknown_parameter"]
+    assert "unknown_parameter" in client.get("/problems").text
+
+
 def test_text_of_an_increment_is_of_one_measure(client):
     refused = client.get(f"{HOME}/increments.txt?sub_portfolio=hull&scale=1.1")
     assert_problem(refused, "invalid_value", parameter="measure")
