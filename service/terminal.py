@@ -147,8 +147,8 @@ def _increments(answer: IncrementsAnswer) -> Iterator[str]:
                 rows.append(row)
         yield f"{base.measure} now {_short(base.total.value)}\n{text_table(Table(columns, rows))}"
     for one in answer.candidates:
-        if one.problem is not None:
-            yield f"{one.id or 'a candidate without a name'} refused: {one.problem['detail']}\n"
+        if one.reason is not None:
+            yield f"{one.id or 'a candidate without a name'} refused: {one.reason}\n"
 
 
 def _comparison(result: ComparisonResult) -> str:

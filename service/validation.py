@@ -80,21 +80,23 @@ def _faults(found: Mapping[str, Any], document: Document, model: Any) -> Iterato
         code, words = WORDS[kind]
         if kind in ("union_tag_invalid", "union_tag_not_found"):
             steps = [*steps, context["discriminator"].strip("'")]
-        detail = words(found["input"], context)
+        detail = words(found["input"], {**context, "field": echo(steps[-1] if steps else "")})
     else:
-        code, detail = _unlisted(found)
+        code, detail = _unlisted(found, str(steps[-1]) if steps else "")
     if code == "unknown_field":
         detail += suggestion(str(steps[-1]), _fields(model, steps[:-1], document))
     yield Fault(detail=detail, code=code, pointer=pointer(steps))
 
 
-def _unlisted(found: Mapping[str, Any]) -> tuple[str, str]:
-    """Return code and words of a finding without a row in `WORDS`."""
+def _unlisted(found: Mapping[str, Any], field: str) -> tuple[str, str]:
+    """Return code and words of a finding about `field` without a row in `WORDS`."""
     kind, context = found["type"], found.get("ctx", {})
     if kind == "value_error":
         return "not_allowed", str(context["error"])
     if kind.endswith(("_type", "_parsing", "_from_float")):
         needed = next((words for start, words in NEEDED.items() if kind.startswith(start)), "another type")
+        if kind.startswith("float") and field.endswith("level"):
+            needed = LEVEL
         return "wrong_type", f"{needed} is needed here, not {echo(found['input'])}"
     if found["msg"].startswith("Input "):
         return "not_allowed", f"the value {found['msg'].removeprefix('Input ')}"
@@ -203,9 +205,13 @@ NEEDED = {
     "none": "null",
 }
 """How the name of a type finding starts, and what is needed there."""
+LEVEL = "a number between 0 and 1, such as 0.995,"
+
+_REQUIRED: tuple[str, Words] = ("missing", lambda _value, context: f"{context['field']} is required")
+_UNKNOWN: tuple[str, Words] = ("unknown_field", lambda _value, context: f"there is no field {context['field']}")
 
 WORDS: dict[str, tuple[str, Words]] = {
-    "missing": ("missing", lambda _value, _context: "this field is required"),
+    "missing": _REQUIRED,
     "union_tag_not_found": (
         "missing",
         lambda _value, context: f"{context['discriminator']} says what this is",
@@ -213,11 +219,8 @@ WORDS: dict[str, tuple[str, Words]] = {
     "union_tag_invalid": ("not_allowed", _choice("expected_tags")),
     "literal_error": ("not_allowed", _choice("expected")),
     "enum": ("not_allowed", _choice("expected")),
-    "extra_forbidden": ("unknown_field", lambda _value, _context: "there is no field of this name"),
-    "unexpected_keyword_argument": (
-        "unknown_field",
-        lambda _value, _context: "there is no field of this name",
-    ),
+    "extra_forbidden": _UNKNOWN,
+    "unexpected_keyword_argument": _UNKNOWN,
     "finite_number": ("not_finite", lambda _value, _context: "a finite number is needed here"),
     "greater_than": _range("greater than", "gt"),
     "greater_than_equal": _range("at least", "ge"),
@@ -237,7 +240,7 @@ WORDS: dict[str, tuple[str, Words]] = {
         "wrong_text",
         lambda value, _context: f"{echo(value)} is not written as it must be",
     ),
-    "missing_keyword_only_argument": ("missing", lambda _value, _context: "this field is required"),
-    "missing_argument": ("missing", lambda _value, _context: "this field is required"),
+    "missing_keyword_only_argument": _REQUIRED,
+    "missing_argument": _REQUIRED,
 }
-"""Type of a finding to our code and words."""
+"""Type of a finding to our code and words; these know the input, and the context with the name of the `field`."""

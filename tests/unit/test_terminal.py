@@ -104,7 +104,16 @@ def test_json_is_what_the_service_answers(capsys, name):
         ("five_rules", ["proportional stand alone", "with without", "not shared out: ", "shapley"]),
         ("every_measure", ["wang 0.5", "unexpected loss", "return_level 10", "standard error"]),
         ("treasury", ["risk: commodity", "diversification ", "horizon 1 quarter"]),
-        ("quote_batch", ["now 1,541", "quote_1001", "hurdle", "limit", "quote_1003 refused: 147 values are given"]),
+        (
+            "quote_batch",
+            [
+                "now 1,541",
+                "quote_1001",
+                "hurdle",
+                "limit",
+                "quote_1003 refused: /candidates/2/values: 147 values are given",
+            ],
+        ),
         ("close_to_close", ["treasury", "gone", "all new", "all changed"]),
     ],
 )
@@ -151,8 +160,8 @@ def test_a_file_that_cannot_be_read(capsys, tmp_path, name, words):
         (json.dumps({**SMALL, "measurs": []}), "measures", ["at /measurs: ", "did you mean 'measures'?"]),
         (json.dumps(SMALL).replace("0.5}]}", "99.5}]}"), "measures", ["at /measures/0/level: ", "0.995"]),
         (json.dumps(SMALL).replace("[3.0, -1.0]", '[3.0, "x"]'), "measures", ["/losses/values/1/1"]),
-        (json.dumps({**SMALL, "rules": ["covariance"]}), "measures", ["at /rules: there is no field of this name"]),
-        (json.dumps(SMALL), "increments", ["at /candidates: this field is required"]),
+        (json.dumps({**SMALL, "rules": ["covariance"]}), "measures", ["at /rules: there is no field 'rules'"]),
+        (json.dumps(SMALL), "increments", ["at /candidates: 'candidates' is required"]),
         (json.dumps({**SMALL, "group_by": ["entity"]}), "allocations", ["at /group_by", "entity"]),
     ],
 )

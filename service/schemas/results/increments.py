@@ -67,6 +67,14 @@ class CandidateResult:
         Field(description="Why it was refused; null if it was judged."),
     ]
 
+    @property
+    def reason(self) -> str | None:
+        """Why it was refused in a sentence that says where: what `problem` holds, without line breaks."""
+        if self.problem is None:
+            return None
+        faults = [f"{one['pointer']}: {one['detail']}" for one in self.problem["errors"] if one.get("pointer")]
+        return "; ".join(faults) or str(self.problem["detail"])
+
 
 @dataclass(frozen=True, slots=True)
 class BaseFigure:
@@ -92,7 +100,7 @@ class IncrementsAnswer:
         rows: list[tuple[object, ...]] = []
         for one in self.candidates:
             if one.problem is not None:
-                rows.append((one.id, one.status, *[None] * 14, str(one.problem["detail"]), self.labels.currency))
+                rows.append((one.id, one.status, *[None] * 14, one.reason, self.labels.currency))
             rows += [
                 (
                     one.id,

@@ -173,6 +173,21 @@ def test_a_bad_candidate_spoils_no_other():
         )
 
 
+def test_the_reason_says_where():
+    bad = [{}, {"id": "n", "values": [0.0, 1.0], "expected_profit": "x"}, {"id": "m", "value": [0.0]}, {"id": "s"}]
+    bad[3]["scaled"] = {"sub_portfolio": "B", "scale": 1.1}
+    losses = {"kind": "scenarios", "sub_portfolios": [{"id": "b"}], "values": [[1.0], [2.0]]}
+    answer = tried(losses, bad)
+    reasons = [one.reason for one in answer.candidates]
+    assert reasons[0] == "/candidates/0/id: 'id' is required"
+    assert reasons[1] == "/candidates/1/expected_profit: a number is needed here, not 'x'"
+    assert reasons[2] == "/candidates/2/value: there is no field 'value'; did you mean 'values'?"
+    assert reasons[3] == "/candidates/3/scaled/sub_portfolio: the book has no sub-portfolio 'B'; did you mean 'b'?"
+    table = answer.table()
+    place = [column.name for column in table.columns].index("problem")
+    assert [row[place] for row in table.rows] == reasons
+
+
 TABLE = {
     "kind": "scenarios",
     "sub_portfolios": [{"id": "a"}, {"id": "b"}],

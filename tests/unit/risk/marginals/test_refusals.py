@@ -58,7 +58,7 @@ REFUSED = [
     ({"family": "empirical", "values": [1.0, 2.0], "probabilities": [-0.5, 1.5]}, "/probabilities/0", "not at least 0"),
     ({"family": "empirical", "values": [1.0, -1e200]}, "", r"values are at most 1e\+150 in size"),
     ({"family": "empirical", "values": [1.0, "2"]}, "/values/1", "a number is needed here"),
-    ({"family": "point"}, "/value", "this field is required"),
+    ({"family": "point"}, "/value", "'value' is required"),
     ({"family": "point", "value": 1.0, "values": 1.0}, "/values", "did you mean 'value'"),
     ({"family": "points", "value": 1.0}, "/family", "did you mean 'point'"),
     ({**SPLICED, "tail_probability": 1.0}, "/tail_probability", "tail_probability is above 0 and below 1, not 1"),
