@@ -22,7 +22,19 @@ from service.schemas.results import (
 )
 
 WIDTH = 100
-AT_RIGHT = ("share", "diversified", "return", "hurdle", "limit")  # columns of texts that stand like numbers
+OF_CANDIDATES = (
+    "increment",
+    "lower",
+    "upper",
+    "alone",
+    "diversified",
+    "expected profit",
+    "return",
+    "required profit",
+    "meets hurdle",
+    "within limit",
+)
+AT_RIGHT = ("share", "diversified", "return", "meets hurdle", "within limit")  # texts that stand like numbers
 BAR = 30  # characters of a full progress bar
 BAR_SECONDS = 0.1  # between two drawings of it
 CAUTION = (
@@ -125,24 +137,24 @@ def _measure(result: MeasureResult) -> str:
 
 def _increments(answer: IncrementsAnswer) -> Iterator[str]:
     """Yield a table per measure, and the reasons of the candidates that were refused."""
-    names = ("increment", "lower", "upper", "alone", "diversified", "return", "required profit", "hurdle", "limit")
-    columns = (_text("candidate"), *(_ratio_or_number(name) for name in names))
+    columns = (_text("candidate"), *(_ratio_or_number(name) for name in OF_CANDIDATES))
     for number, base in enumerate(answer.base):
         rows = []
         for one in answer.candidates:
             if one.figures:
                 of = one.figures[number]
-                verdicts = (_verdict(of.meets_hurdle), _verdict(of.within_limit))
-                ratios = (_percent(of.diversification_benefit), _percent(of.return_on_capital))
                 figure = of.increment
                 row = (
                     one.id,
                     figure.value,
                     *_ends(figure),
                     of.stand_alone.value,
-                    *ratios,
+                    _percent(of.diversification_benefit),
+                    one.expected_profit,
+                    _percent(of.return_on_capital),
                     of.required_profit,
-                    *verdicts,
+                    _verdict(of.meets_hurdle),
+                    _verdict(of.within_limit),
                 )
                 rows.append(row)
         yield f"{base.measure} now {_short(base.total.value)}\n{text_table(Table(columns, rows))}"

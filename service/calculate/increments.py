@@ -110,15 +110,17 @@ class Increments(Calculation):
         notes = Notes(self.frame.scenarios, pointed=self.notes.pointed)
         self.frame.effort.checkpoint(fraction)
         if read.candidate is None or read.loss is None or read.error is not None:
-            return CandidateResult(read.name, "refused", [], self._problem(read.error)), notes
+            return CandidateResult(read.name, "refused", None, [], self._problem(read.error)), notes
         try:
             with pointing(f"/candidates/{read.number}"):
                 parts = self._figures(read.candidate, bases, read.loss, notes)
         except TooLong:
             raise
         except CallerError as error:
-            return CandidateResult(read.name, "refused", [], self._problem(error)), notes
-        return CandidateResult(read.candidate.id, "ok", parts, None), notes
+            return CandidateResult(read.name, "refused", None, [], self._problem(error)), notes
+        profit = read.candidate.expected_profit
+        profit = None if profit is None else profit + 0.0
+        return CandidateResult(read.candidate.id, "ok", profit, parts, None), notes
 
     def _problem(self, error: CallerError | None) -> dict[str, object] | None:
         return None if error is None else self.describe(error)

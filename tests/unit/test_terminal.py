@@ -109,9 +109,10 @@ def test_json_is_what_the_service_answers(capsys, name):
             [
                 "now 1,541",
                 "quote_1001",
-                "hurdle",
-                "limit",
-                "quote_1003 refused: /candidates/2/values: 147 values are given",
+                "expected profit",
+                "meets hurdle",
+                "within limit",
+                "quote_1003 refused: /candidates/3/values: 147 values are given",
             ],
         ),
         ("close_to_close", ["treasury", "gone", "all new", "all changed"]),

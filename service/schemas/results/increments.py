@@ -61,6 +61,12 @@ class CandidateResult:
 
     id: Annotated[str | None, Field(description="The candidate; null if it has no readable name.")]
     status: Annotated[Literal["ok", "refused"], Field(description="Whether it was judged.")]
+    expected_profit: Annotated[
+        Money | None,
+        Field(
+            description="Its expected profit as a gain: as given, or its part of that of what it scales, in currency."
+        ),
+    ]
     figures: Annotated[list[CandidateFigures], Field(description="One per measure, in the order asked.")]
     problem: Annotated[
         dict[str, Any] | None,
@@ -100,7 +106,7 @@ class IncrementsAnswer:
         rows: list[tuple[object, ...]] = []
         for one in self.candidates:
             if one.problem is not None:
-                rows.append((one.id, one.status, *[None] * 14, one.reason, self.labels.currency))
+                rows.append((one.id, one.status, *[None] * 14, one.reason, self.labels.currency, None))
             rows += [
                 (
                     one.id,
@@ -118,6 +124,7 @@ class IncrementsAnswer:
                     None if figures.within_limit is None else str(figures.within_limit).lower(),
                     None,
                     self.labels.currency,
+                    one.expected_profit,
                 )
                 for figures in one.figures
             ]
@@ -131,4 +138,5 @@ INCREMENTS_COLUMNS = (
     *ratio_columns("diversification_benefit", "return_on_capital"),
     *money_columns("required_profit"),
     *text_columns("meets_hurdle", "within_limit", "problem", "currency"),
+    *money_columns("expected_profit"),
 )

@@ -355,7 +355,9 @@ def test_a_scaled_sub_portfolio(client):
     figures = candidate["figures"][0]
     assert figures["return_on_capital"] == pytest.approx(0.1 * 3.0 / figures["increment"]["value"], rel=1e-12)
     assert figures["required_profit"] == pytest.approx(0.1 * figures["increment"]["value"], rel=1e-12)
+    assert candidate["expected_profit"] == pytest.approx(0.1 * 3.0, rel=1e-12)
     row = rows(client.get(path.replace("increments?", "increments.csv?")))[0]
+    assert row["expected_profit"] == repr(candidate["expected_profit"])
     text = client.get(path.replace("increments?", "increments.txt?")).text
     assert row["increment"] == text == repr(figures["increment"]["value"])
     lower = client.get(path.replace("increments?", "increments.txt?") + "&of=total_with&field=lower")
