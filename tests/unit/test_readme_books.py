@@ -40,6 +40,14 @@ def test_the_book_is_one(tmp_path):
         assert client.post("/v1/measures", json=request).status_code == 200
 
 
+def test_measures_of_a_book_are_those_of_get_and_a_post_names_its_own(client):
+    assert "what GET asks the book" in TEXT
+    assert "a POST names its measures itself" in TEXT
+    assert client.get("/v1/books/ternholm/measures").status_code == 200
+    refused = client.post("/v1/measures", json={"losses": {"kind": "book", "name": "ternholm"}})
+    assert [one["pointer"] for one in refused.json()["errors"]] == ["/measures"]
+
+
 def test_the_formula_is_the_one_of_the_page(client):
     formula = PLAIN[1].strip()
     assert formula == cell_formulas(SERVER, BookHead(name="ternholm", example="storm"))["English"]
