@@ -109,6 +109,8 @@ def _demo(_options: argparse.Namespace) -> int:
 def _compute(options: argparse.Namespace) -> int:
     """Print the answer to a request in a file."""
     from service import intake
+    from service.errors import CallerError, InvalidValue
+    from service.terminal import mistaken
 
     try:
         body = sys.stdin.buffer.read() if options.request == "-" else Path(options.request).read_bytes()
@@ -116,7 +118,11 @@ def _compute(options: argparse.Namespace) -> int:
         return _complain(f"cannot read {options.request}: {error.strerror}", FAILED)
 
     def read(settings: Settings) -> intake.Intake:
-        return intake.read(options.to, body, content_type=intake.JSON, parameters=(), settings=settings)
+        try:
+            return intake.read(options.to, body, content_type=intake.JSON, parameters=(), settings=settings)
+        except CallerError as error:
+            words = mistaken(options.request, body, options.to)
+            raise (InvalidValue(words) if words else error) from None
 
     if options.books is not None:
         os.environ[variable("books")] = options.books

@@ -4,8 +4,12 @@ import sys
 import textwrap
 import time
 from collections.abc import Callable, Iterator
+from pathlib import Path
 from typing import TextIO
 
+import msgspec
+
+from service.books import TABLES
 from service.errors import Fault, TailraceError
 from service.representations.table import Column, Table, text_table
 from service.schemas.results import (
@@ -35,6 +39,9 @@ OF_CANDIDATES = (
     "within limit",
 )
 AT_RIGHT = ("share", "diversified", "return", "meets hurdle", "within limit")  # texts that stand like numbers
+TOP = "at the top"
+MARKS = {"candidates": "increments", "before": "comparisons", "after": "comparisons"}
+"""Members of a request that belong to one calculation alone."""
 BAR = 30  # characters of a full progress bar
 BAR_SECONDS = 0.1  # between two drawings of it
 CAUTION = (
@@ -42,6 +49,8 @@ CAUTION = (
     "They are no statement of required or available capital: local rules and the responsible actuary or risk "
     "officer decide."
 )
+
+_OBJECT = msgspec.json.Decoder(dict[str, msgspec.Raw])
 
 Answer = MeasuresAnswer | AllocationsAnswer | IncrementsAnswer | ComparisonsAnswer
 
@@ -211,8 +220,42 @@ def _wrapped(words: str) -> str:
     return textwrap.fill(words, WIDTH) + "\n"
 
 
+def mistaken(name: str, body: bytes, calculation: str) -> str | None:
+    """Return what a body that is no request of `calculation` looks like, and what to do with it; None if nothing known.
+
+    Parameters
+    ----------
+    name : str
+        Of its file.
+    body : bytes
+    calculation : str
+        What it was read as.
+    """
+    if Path(name).suffix in TABLES:
+        return f'this is a table, not a request: put it beside a book whose losses say "file": "{Path(name).name}"'
+    members = _members(body)
+    meant = next((other for member, other in MARKS.items() if member in members), calculation)
+    if meant != calculation:
+        return f"this looks like {meant}: --to {meant}"
+    if "file" in _members(members.get("losses", b"")) or ("kind" in members and "losses" not in members):
+        losses = f'"losses": {{"kind": "book", "name": "{Path(name).stem}"}}'
+        return f"this is a book, not a request: a request asks it by {losses}, with its folder behind --books"
+    return None
+
+
+def _members(text: bytes | msgspec.Raw) -> dict[str, msgspec.Raw]:
+    """Return the members of a JSON object, none of anything else."""
+    try:
+        return _OBJECT.decode(text)
+    except (ValueError, RecursionError):
+        return {}
+
+
 def complaint(error: TailraceError) -> str:
-    """Return an error in a person's words, one line for each fault."""
+    """Return an error in a person's words: one line for each fault, and a single one where the sentence is its own."""
+    if [fault.detail for fault in error.faults] == [error.detail]:
+        place = _place(error.faults[0])
+        return f"{place}: {error.detail}" if place not in ("", TOP) else error.detail
     lines = [error.detail]
     lines += [f"  {place}: {fault.detail}" for fault in error.faults if (place := _place(fault))]
     return "\n".join(lines)
@@ -220,7 +263,7 @@ def complaint(error: TailraceError) -> str:
 
 def _place(fault: Fault) -> str:
     if fault.pointer is not None:
-        return f"at {fault.pointer or 'the top'}"
+        return f"at {fault.pointer}" if fault.pointer else TOP
     if fault.parameter or fault.header:
         return f"at {fault.parameter or fault.header}"
     words = [f"row {fault.row}" if fault.row else "", f"column {fault.column}" if fault.column else ""]

@@ -155,7 +155,7 @@ def test_a_file_that_cannot_be_read(capsys, tmp_path, name, words):
     ("text", "to", "words"),
     [
         ("", "measures", ["tailrace: the body is empty"]),
-        ('{"losses": \n{]}', "measures", ["tailrace: the body is not JSON", "line 2, column 2", "at the top"]),
+        ('{"losses": \n{]}', "measures", ["tailrace: the body is not JSON", "line 2, column 2"]),
         ("[1]", "measures", ["the body must be a JSON object"]),
         ('{"losses": {"kind": "scenarios", "values": NaN}}', "measures", ["NaN is not JSON"]),
         (json.dumps({**SMALL, "measurs": []}), "measures", ["at /measurs: ", "did you mean 'measures'?"]),
@@ -175,6 +175,50 @@ def test_what_is_refused_is_said_in_words(capsys, tmp_path, text, to, words):
     for word in words:
         assert word in complaint
     assert "Traceback" not in complaint
+
+
+COMPARED = {"before": SMALL["losses"], "after": SMALL["losses"], "measures": SMALL["measures"]}
+
+
+@pytest.mark.parametrize(
+    ("name", "text", "words"),
+    [
+        (
+            "quotes.json",
+            json.dumps({**SMALL, "candidates": []}),
+            "tailrace: this looks like increments: --to increments",
+        ),
+        ("close.json", json.dumps(COMPARED), "tailrace: this looks like comparisons: --to comparisons"),
+        (
+            "port.json",
+            json.dumps({"losses": {"file": "port.csv"}}),
+            'a book, not a request: a request asks it by "losses"',
+        ),
+        (
+            "source.json",
+            json.dumps(SMALL["losses"]),
+            '{"kind": "book", "name": "source"}, with its folder behind --books',
+        ),
+        (
+            "port.csv",
+            "hull,cargo\n1,2\n",
+            'a table, not a request: put it beside a book whose losses say "file": "port.csv"',
+        ),
+    ],
+)
+def test_what_is_no_request_is_recognised(capsys, tmp_path, name, text, words):
+    file = tmp_path / name
+    file.write_text(text)
+    code, output, complaint = run(capsys, "compute", str(file))
+    assert (code, output, complaint.count("\n")) == (2, "", 1)
+    assert words in complaint
+
+
+def test_a_single_fault_is_said_once(capsys, tmp_path):
+    file = tmp_path / "request.json"
+    file.write_text(json.dumps({**SMALL, "capital": "x"}))
+    said = "tailrace: at /capital: a number is needed here, not 'x'\n"
+    assert run(capsys, "compute", str(file)) == (2, "", said)
 
 
 @pytest.mark.parametrize(
