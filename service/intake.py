@@ -134,8 +134,11 @@ def read(
     if media_type == MULTIPART:
         parts = payloads.split_multipart(body, content_type)
         return read_parts(calculation, parts.request, parts.table, parts.table_media_type, settings)
-    known = ", ".join((JSON, MULTIPART, *payloads.TABLE_READERS))
-    detail = f"the media type of the body is {media_type or 'missing'}; known here: {known}"
+    others = ", ".join((MULTIPART, *payloads.TABLE_READERS))
+    detail = (
+        f"the media type of the body is {media_type or 'missing'}: send the header Content-Type: {JSON} "
+        f"or, where the body is that, {others}"
+    )
     raise UnsupportedMediaType(detail, faults=[Fault(detail=detail, code="media_type", header="Content-Type")])
 
 

@@ -11,6 +11,25 @@ from service.suggestions import hint
 
 NUMBER = re.compile(r"-?(0|[1-9]\d*)(\.\d+)?([eE][-+]?\d+)?")
 
+EXAMPLES: Mapping[str, str] = {
+    "level": "0.995",
+    "lower_level": "0.95",
+    "upper_level": "0.99",
+    "multiple": "2",
+    "shift": "0.5",
+    "exponent": "0.8",
+    "aversion": "0.001",
+    "return_period": "200",
+    "scenarios_per_period": "1",
+    "interval_coverage": "0.95",
+    "capital": "250000",
+    "hurdle_rate": "0.08",
+    "cost_of_capital": "0.06",
+    "capital_limit": "250000",
+    "scale": "1.1",
+}
+"""A number for each parameter that is one."""
+
 LONGEST_NAME = 170  # characters of a sub-portfolio in the name of a candidate made of it
 
 Pairs = Sequence[tuple[str, str]]
@@ -18,7 +37,7 @@ Pairs = Sequence[tuple[str, str]]
 
 def _number(name: str, value: str) -> float | int:
     if not NUMBER.fullmatch(value):
-        raise _fault(name, f"{name} is {value[:40]!r}, not a number such as 0.995", "wrong_type")
+        raise _fault(name, f"{name} is {value[:40]!r}, not a number such as {EXAMPLES[name]}", "wrong_type")
     return int(value) if re.fullmatch(r"-?\d{1,15}", value) else float(value)
 
 

@@ -60,6 +60,9 @@ def _from_rows(losses: ScenarioLosses, table: Array) -> Resolved:
     if len(columns) != values.shape[1]:
         word = "rows" if turned else "columns"
         detail = f"{len(columns)} sub-portfolios are named, but the table has {values.shape[1]} {word}"
+        if len(columns) == values.shape[0]:
+            row, other = ("sub-portfolio", "by_scenario") if turned else ("scenario", "by_sub_portfolio")
+            detail += f"; a row is a {row} unless layout is '{other}'"
         raise InvalidValue.at("/losses/sub_portfolios", detail, code="wrong_count")
     _refuse_repeated([one.id for one in columns], "/losses/sub_portfolios", "/id")
     probabilities = None
@@ -183,8 +186,11 @@ def _check_labels(ids: Sequence[str], part: str, column: str) -> None:
 
 
 def _check_text(value: str, place: Fault) -> None:
-    detail = unsafe(value)
-    if detail is not None:
+    why = unsafe(value)
+    if why is not None:
+        detail = f"{value[:40]!r}: {why}"
+        if value.startswith(" "):
+            detail += "; the space behind the comma is a part of it"
         raise InvalidValue.of(replace(place, detail=detail))
 
 

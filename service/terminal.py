@@ -221,7 +221,7 @@ def _wrapped(words: str) -> str:
 
 
 def mistaken(name: str, body: bytes, calculation: str) -> str | None:
-    """Return what a body that is no request of `calculation` looks like, and what to do with it; None if nothing known.
+    """Return what a body that is no request of `calculation` looks like, and what to do with it, if that is known.
 
     Parameters
     ----------

@@ -25,6 +25,8 @@ BLOCK_CELLS = 1 << 14
 """Cells that the csv module holds as text at a time."""
 
 _SEPARATORS = {";": "semicolons", "\t": "tabs", "|": "bars"}
+_WORKBOOKS = (b"PK\x03\x04", b"\xd0\xcf\x11\xe0")
+"""How a file of a spreadsheet program begins: a zip archive, or in its old form a compound file."""
 _PLACE = Fault(detail="", code="", part=PART)
 
 
@@ -69,6 +71,8 @@ def table_from_csv(
 
 
 def _require_text(data: bytes) -> None:
+    if data.startswith(_WORKBOOKS):
+        raise _malformed("the table is a workbook, or an archive of another kind: save the sheet as CSV in UTF-8")
     if data.startswith((b"\xff\xfe", b"\xfe\xff")) or b"\x00" in data:
         raise _malformed("the table holds NUL bytes or is UTF-16: CSV is sent in UTF-8")
 

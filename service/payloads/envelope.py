@@ -258,8 +258,9 @@ def _refuse(body: bytes | bytearray, reason: str) -> NoReturn:
     _refuse_lone_surrogates(body, body, ())
     byte = _BYTE.search(reason)
     if byte and (word := _CONSTANT.match(body, int(byte[1]))) is not None:
-        _not_finite(word[0].decode())
-    detail = f"the body is not JSON: {_BYTE.sub('', reason.removeprefix('JSON is malformed: '))}"
+        detail = _not_finite(word[0].decode())
+    else:
+        detail = f"the body is not JSON: {_BYTE.sub('', reason.removeprefix('JSON is malformed: '))}"
     raise _at_byte(detail, body, int(byte[1])) if byte else Malformed.at("", detail)
 
 
@@ -289,8 +290,12 @@ def _distinct(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
     return members
 
 
-def _not_finite(name: str) -> NoReturn:
-    raise Malformed.at("", f"{name} is not JSON: every number must be finite")
+def _not_finite(name: str) -> str:
+    return f"{name} is not JSON: every number must be finite"
 
 
-_STRICT = json.JSONDecoder(object_pairs_hook=_distinct, parse_constant=_not_finite)
+def _refuse_constant(name: str) -> NoReturn:
+    raise Malformed.at("", _not_finite(name))
+
+
+_STRICT = json.JSONDecoder(object_pairs_hook=_distinct, parse_constant=_refuse_constant)

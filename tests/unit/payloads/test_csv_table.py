@@ -167,6 +167,7 @@ def test_values_that_are_not_allowed(text, row, column, words, block):
         ('a,b\n1,"2\n', "not CSV"),
         ('a,"b\n1,2\n', "not CSV"),
         ("a,b\n1,\x00\n", "NUL"),
+        (b"PK\x03\x04\x14\x00\x06\x00", "a workbook, or an archive of another kind: save the sheet as CSV"),
         ("a,b\n1,2\n".encode("utf-16"), "UTF-16"),
         (b"a,b\n1,\xff\n", "not UTF-8"),
         (b"\xff,b\n1,2\n", "not UTF-8"),

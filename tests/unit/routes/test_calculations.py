@@ -120,6 +120,13 @@ def test_codings_are_refused(client, coding):
     assert response.headers["accept-encoding"] == "identity"
 
 
+def test_a_body_without_a_type_is_told_the_header(client):
+    for sent in ("application/x-www-form-urlencoded", ""):  # the first is what curl says of itself
+        problem = client.post("/v1/measures", content=BODY, headers={"content-type": sent}).json()
+        assert "send the header Content-Type: application/json or, " in problem["detail"]
+        assert "text/csv" in problem["detail"]
+
+
 @pytest.mark.parametrize("media_type", ["text/plain", "application/xml", "nonsense", ""])
 def test_other_media_types_are_refused(client, media_type):
     response = client.post("/v1/measures", content=BODY, headers={"content-type": media_type})
