@@ -177,14 +177,14 @@ def _carried_out(
 def _held(source: Source, plan: Plan, demand: Demand, work: Work, losses: Array) -> Framed:
     """Return the frame of simulated losses in memory."""
 
-    def of(part: Array, *, sampled: bool) -> Frame:
-        table = LossTable(part, None, sampled, source.sub_portfolios)
+    def of(part: Array) -> Frame:
+        table = LossTable(part, None, not plan.sobol, source.sub_portfolios, points=bool(plan.sobol))
         return Frame.of(table, demand.groups, demand.measures, work, stand_alone=demand.stand_alone)
 
     size = plan.scenarios // SCRAMBLINGS
     parts = [losses[k * size : (k + 1) * size] for k in range(SCRAMBLINGS)] if plan.sobol else []
-    scramblings = tuple(of(part, sampled=False) for part in parts)
-    return Framed(of(losses, sampled=not plan.sobol), demand.coverage, scramblings, plan)
+    scramblings = tuple(of(part) for part in parts)
+    return Framed(of(losses), demand.coverage, scramblings, plan)
 
 
 def _until(source: Source, plan: Plan, demand: Demand, stop: StopWhen, work: Work, settings: Settings) -> Framed:

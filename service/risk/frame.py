@@ -241,6 +241,7 @@ class Frame:
             scenarios=self.scenarios,
             probabilities=None if p is None or orders is None else p[orders],
             sampled=self.table.sampled,
+            points=self.table.points,
             clusters=None if clusters is None or orders is None else clusters[orders],
         )
 

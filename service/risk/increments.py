@@ -144,10 +144,9 @@ def _increment(enlarged: _Enlarged, base: Base, coverage: float) -> Increment:
     difference = full_values(measure, ordered) - base.value
     alone = estimates(measure, enlarged.alone(measure), coverage)
     if not ordered.sampled:
-        total_with, increment, contribution = map(
-            Estimates.exact, (full_values(measure, ordered), difference, parts[-1:])
-        )
-        return Increment(total_with, increment, contribution, alone, parts[:-1])
+        whole = full_values(measure, ordered)
+        total_with, increment, contribution = map(Estimates.exact, (whole, difference, parts[-1:]))
+        return Increment(total_with, increment, _noted(contribution, weights), alone, parts[:-1])
     moved = Moved.by(measure, ordered)
     of = _spread_of_difference(enlarged.frame, base, ranking, moved.influence)
     counts = measure.tail_of(ordered)
@@ -194,6 +193,10 @@ def _contribution(  # of one column, as the measure has weighted it
     tail = of.effective if counts is None else counts
     leans = lean_of_parts(of, float(moved.lean[0]))
     figures = judged(measure, leaning_estimates(value, of, leans, coverage=coverage, tail_scenarios=tail))
+    return _noted(figures, weights)
+
+
+def _noted(figures: Estimates, weights: ContributionWeights) -> Estimates:
     return figures.remarked("smoothed_quantile") if weights.window else figures
 
 

@@ -71,6 +71,10 @@ class Scenarios(Protocol):
         """Whether the scenarios are draws."""
 
     @property
+    def points(self) -> bool:
+        """Whether the scenarios are quasi-random points."""
+
+    @property
     def sub_portfolios(self) -> tuple[SubPortfolio, ...]:
         """One per column."""
 
@@ -106,6 +110,8 @@ class LossTable:
     scenario_ids : tuple of str or None
     clusters : ndarray of int of shape (n,) or None
         Cluster of each scenario where they are dependent within clusters; None where all are independent.
+    points : bool
+        Whether the scenarios are quasi-random points: no draws, but not the whole distribution either.
     """
 
     losses: Array
@@ -114,6 +120,7 @@ class LossTable:
     sub_portfolios: tuple[SubPortfolio, ...]
     scenario_ids: tuple[str, ...] | None = None
     clusters: Indices | None = None
+    points: bool = False
 
     @property
     def plain(self) -> bool:

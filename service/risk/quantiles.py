@@ -66,6 +66,8 @@ class Ordered:
     clusters : ndarray of int of shape (1, m) or (c, m), or None
         Number of the cluster of each position where scenarios are dependent within clusters; None where all
         are independent.
+    points : bool
+        Whether the scenarios are quasi-random points: no draws, but not the whole distribution either.
     """
 
     values: Array
@@ -75,6 +77,7 @@ class Ordered:
     unit: float
     sampled: bool
     clusters: Indices | None = None
+    points: bool = False
 
     @classmethod
     def of(
@@ -85,12 +88,18 @@ class Ordered:
         probabilities: Array | None,
         sampled: bool,
         clusters: Indices | None = None,
+        points: bool = False,
     ) -> "Ordered":
         """Make the masses that belong to `values` (c, m), already descending."""
         if probabilities is None:
             upper = np.arange(1.0, values.shape[-1] + 1.0)[None, :]
-            return cls(values, scenarios, None, upper, float(scenarios), sampled, clusters)
-        return cls(values, scenarios, probabilities, compensated_cumsum(probabilities), 1.0, sampled, clusters)
+            return cls(values, scenarios, None, upper, float(scenarios), sampled, clusters, points)
+        return cls(values, scenarios, probabilities, compensated_cumsum(probabilities), 1.0, sampled, clusters, points)
+
+    @property
+    def whole(self) -> bool:
+        """Whether the scenarios are the whole distribution."""
+        return not self.sampled and not self.points
 
     @property
     def complete(self) -> bool:

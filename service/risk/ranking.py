@@ -48,6 +48,7 @@ class Ranking:
             scenarios=self.ordered.scenarios,
             probabilities=None,
             sampled=self.ordered.sampled,
+            points=self.ordered.points,
         )
         tolerance = self.tolerance[:size]
         return Ranking(ordered, self.order[:size], Ties.of(ordered, tolerance=tolerance), tolerance)
@@ -167,6 +168,7 @@ def ranking_of(values: Array, order: Indices, table: Scenarios, tolerance: Array
         scenarios=table.scenarios,
         probabilities=None if table.probabilities is None else table.probabilities[order][None, :],
         sampled=table.sampled,
+        points=table.points,
         clusters=None if table.clusters is None else table.clusters[order][None, :],
     )
     ties = Ties.of(ordered, tolerance=tolerance)

@@ -121,6 +121,7 @@ class StreamedTable:
     clusters: None = None
     scenario_ids: None = None
     sampled: bool = True
+    points: bool = False
     plain: bool = True
 
     @property

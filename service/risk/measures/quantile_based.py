@@ -130,7 +130,7 @@ class _Quantile(LocatedMeasure):
         """
         line = line_at_quantile(ordered, ties, self.share)
         place = quantile_influence(ordered, self.share)
-        few = ordered.scenarios <= 2 * LEAST_RANKS or not ordered.sampled
+        few = ordered.scenarios <= 2 * LEAST_RANKS or ordered.whole
         if smoothing == "none" or few or line.at_centre >= ATOM_OF_ITS_OWN:
             weights = np.where(line.centre, ties.p, 0.0)
             return ContributionWeights(weights / weights.sum(), None, (line,), place)
