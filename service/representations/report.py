@@ -96,9 +96,18 @@ class _Report:
     _number: Iterator[int] = field(default_factory=lambda: count(1))
 
     @property
-    def currency(self) -> str | None:
-        """Currency of all amounts."""
-        return self.answer.labels.currency
+    def power(self) -> int:
+        """Of ten, by which every amount of the page is divided."""
+        return Amounts.of(self._headline_values(), self.answer.labels.currency).power
+
+    def _headline_values(self) -> Iterator[float]:
+        """Yield the figures of the cards, of which the largest decides the unit of the page."""
+        yield self.answer.expected_loss.value
+        yield from (result.total.value for result in self.answer.allocations)
+
+    def _written(self, values: Iterable[float | None]) -> Amounts:
+        """Return how amounts that stand together are written: all in the unit of the page."""
+        return Amounts.of(values, self.answer.labels.currency, power=self.power)
 
     def head(self) -> str:
         """Return what the report is about and what it is not."""
@@ -134,11 +143,11 @@ class _Report:
     def _card(self, title: str, meaning: str, figure: Figure, result: Allocation | None = None) -> str:
         ends = figure.interval
         values = [figure.value] if ends is None else [figure.value, ends.lower, ends.upper]
-        amounts = Amounts.of(values, self.currency)
+        amounts = self._written(values)
         words = [meaning, sampling_error(figure, amounts)]
         alone = None if result is None else _sum_alone(result)
         if alone is not None and result is not None and alone > 0.0:
-            shown = Amounts.of([alone], self.currency)
+            shown = self._written([alone])
             saved = (alone - result.total.value) / alone
             words.append(
                 f"The parts alone add up to {shown.text(alone)}{shown.after}: "
@@ -169,8 +178,8 @@ class _Report:
     def _figure(self, draw: Callable[[Look], str], caption: str) -> str:
         """Return a picture laid out twice, for a desk and for a telephone; only one is ever shown."""
         number = next(self._number)
-        desk = draw(Look(inside=f"picture-{number}"))
-        phone = draw(Look(width=NARROW, inside=f"picture-{number}-phone"))
+        desk = draw(Look(inside=f"picture-{number}", power=self.power))
+        phone = draw(Look(width=NARROW, inside=f"picture-{number}-phone", power=self.power))
         return (
             f'<figure><div class="desk">{desk}</div><div class="phone">{phone}</div>'
             f"<figcaption>{escape(caption)}</figcaption></figure>\n"
@@ -180,8 +189,7 @@ class _Report:
         """Return how one measure is shared by one rule."""
         title = f"{measure_words(result.measure)}, shared by the {rule_words(result.rule)} rule"
         words = [RULES.get(result.rule, "")]
-        amounts = Amounts.of([result.total.value, *(one.contribution.value for one in result.sub_portfolios)],
-                             self.currency)  # fmt: skip
+        amounts = self._written([result.total.value, *(one.contribution.value for one in result.sub_portfolios)])
         if result.window is not None:
             window = result.window
             words.append(
@@ -192,7 +200,7 @@ class _Report:
         if result.residual is not None:
             words.append(
                 f"Contributions add up to {amounts.text(result.total.value - result.residual)}{amounts.after}; "
-                f"{amounts.text(result.residual)} of the total is not shared out."
+                f"{amounts.text(result.residual)}{amounts.after} of the total is not shared out."
             )
         picture = self._figure(
             lambda look: contributions_chart(result, self.answer.labels, look),
@@ -212,7 +220,7 @@ class _Report:
             largest = sorted(ordered, key=lambda one: -abs(one.contribution.value))[:MOST_ROWS]
             ordered = sorted(largest, key=lambda one: -one.contribution.value)
             caption += f" (the {MOST_ROWS} largest of {len(parts):,})"
-        amounts = Amounts.of([result.total.value, *_amounts(ordered)], self.currency)
+        amounts = self._written([result.total.value, *_amounts(ordered)])
         whole = [
             Cell("total"),
             Cell(amounts.text(result.total.value)),
@@ -242,7 +250,7 @@ class _Report:
 
     def worst(self, tail: Tail) -> str:
         """Return the worst scenarios, and the factors' means beyond the level."""
-        amounts = Amounts.of([one.total for one in tail.scenarios], self.currency)
+        amounts = self._written(one.total for one in tail.scenarios)
         heads = [
             Cell("scenario", "text"),
             Cell("probability"),
@@ -257,7 +265,7 @@ class _Report:
             cells = [
                 [
                     Cell(name(one.id)),
-                    Cell(Amounts.of([one.mean], None, significant=4).text(one.mean)),
+                    Cell(Amounts.of([one.mean], None, significant=4, power=0).text(one.mean)),
                     Cell(f"{one.normal_score:z.2f}"),
                 ]
                 for one in tail.factors

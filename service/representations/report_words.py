@@ -68,7 +68,5 @@ def sampling_error(figure: Figure, amounts: Amounts) -> str:
     ends = figure.interval
     if ends is None:
         return "No error of sampling can be given for it; see the notes."
-    return (
-        f"Error of sampling: between {amounts.text(ends.lower)} and {amounts.text(ends.upper)}. A range made this way "
-        f"holds the model's own figure in {odds(ends.coverage)} repetitions of the sampling."
-    )
+    between = f"{amounts.text(ends.lower)} and {amounts.text(ends.upper)}{amounts.after}"
+    return f"Error of sampling: between {between}. A range made this way holds the model's own figure in {odds(ends.coverage)} repetitions of the sampling."

@@ -8,6 +8,8 @@ from unicodedata import east_asian_width
 
 SIGNIFICANT = 5  # digits shown of the largest amount
 LARGE, SMALL = 1e7, 1e-3  # beyond which amounts are shown in another unit
+LARGEST = 1e10  # in a currency that is a multiple already, such as EUR thousand
+MOST_DECIMALS = 9
 POWERS = {6: "million", 9: "billion", 12: "trillion"}
 OF_LEVEL = ("expectile", "expected_shortfall", "value_at_risk")  # kinds whose only parameter is a level
 KINDS = (
@@ -45,21 +47,23 @@ class Amounts:
     currency: str | None
 
     @classmethod
-    def of(cls, values: Iterable[float | None], currency: str | None, significant: int = SIGNIFICANT) -> "Amounts":
-        """Return how to write `values` so that the largest shows so many digits."""
+    def of(
+        cls,
+        values: Iterable[float | None],
+        currency: str | None,
+        *,
+        significant: int = SIGNIFICANT,
+        power: int | None = None,
+    ) -> "Amounts":
+        """Return how to write `values` so that the largest shows so many digits, in a unit of its own or in `power`."""
         known = [value for value in values if value is not None and isfinite(value)]
         largest = max(map(abs, known), default=0.0)
-        if largest == 0.0:
-            return cls(0, 0, currency)
-        size = floor(log10(largest))
-        power = 0
-        if largest >= LARGE:
-            power = 3 * ((size - 1) // 3)
-        elif largest < SMALL:
-            power = 3 * (size // 3)
-        if power == 0 and all(value.is_integer() for value in map(float, known)):
-            return cls(0, 0, currency)
-        return cls(power, max(significant - 1 - (size - power), 0), currency)
+        if power is None:
+            power = _power(largest, LARGEST if currency and " " in currency else LARGE)
+        if largest == 0.0 or (power == 0 and all(value.is_integer() for value in map(float, known))):
+            return cls(power, 0, currency)
+        decimals = significant - 1 - (floor(log10(largest)) - power)
+        return cls(power, min(max(decimals, 0), MOST_DECIMALS), currency)
 
     def text(self, value: float | None) -> str:
         """Return `value` with thousands separators; what rounds to zero has no sign, what is missing a dash."""
@@ -84,6 +88,13 @@ class Amounts:
     def after(self) -> str:
         """` UNIT`, or nothing."""
         return f" {self.unit}" if self.unit else ""
+
+
+def _power(largest: float, large: float) -> int:
+    """Return the power of ten that amounts up to `largest` are divided by; below `large` none."""
+    if largest >= large:
+        return 3 * ((floor(log10(largest)) - 1) // 3)
+    return 3 * (floor(log10(largest)) // 3) if 0.0 < largest < SMALL else 0
 
 
 def percent(ratio: float | None, decimals: int = 1) -> str:

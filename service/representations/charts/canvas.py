@@ -69,6 +69,8 @@ class Look:
     """In pixels; it is laid out for this width."""
     inside: str | None = None
     """The prefix of its ids inside a page; None for a file of its own, which has a white ground."""
+    power: int | None = None
+    """Of ten, by which the page around it divides amounts; None for what suits the picture."""
 
     @property
     def narrow(self) -> bool:

@@ -15,6 +15,7 @@ from service.representations.wording import (
     rule_words,
     sentence,
     shortened,
+    width,
 )
 
 MOST_ROWS = 60
@@ -59,16 +60,16 @@ def contributions_chart(
     if attribute is not None:
         parts = [one for one in result.groups if one.attribute == attribute]
     rows = _rows(parts)
-    amounts = Amounts.of([one.value for one in rows], labels.currency)
+    figures = [result.total.value, *(one.value for one in rows)]
+    amounts = Amounts.of(figures, labels.currency, power=look.power)
     title = f"Contributions to {measure_words(result.measure)}"
     canvas.text(16, 25, shortened(title, look.width - 32, HEADING), size=HEADING, full=title)
     of = f"{'sub-portfolio' if attribute is None else attribute}, {rule_words(result.rule)} rule"
-    total = Amounts.of([result.total.value], labels.currency)
-    subtitle = f"by {of}; total {total.text(result.total.value)}{total.after}"
+    subtitle = f"by {of}; total {amounts.text(result.total.value)}{amounts.after}"
     canvas.text(16, 44, shortened(subtitle, look.width - 32, look.size), tint="soft", full=subtitle)
     foot = _legend(canvas, parts, 62)
     left = 16 + (NAMES_NARROW if look.narrow else NAMES) + 8
-    right = look.width - 16 - (FIGURES_NARROW if look.narrow else FIGURES + SHARES) - 10
+    right = look.width - 16 - _figures(rows, amounts, look) - 10
     x = _across(rows, left, right)
     ticks = x.ticks(2 if look.narrow else 5)
     pitch = TALL if len(rows) <= FEW_ROWS else LOW
@@ -135,6 +136,12 @@ def _across(rows: Sequence[_Row], left: float, right: float) -> Scale:
     return Scale(low - room if low < 0.0 else low, high + room if high > 0.0 else high, left, right)
 
 
+def _figures(rows: Sequence[_Row], amounts: Amounts, look: Look) -> float:
+    """Return the room of the figures to the right of the bars."""
+    widest = max((width(amounts.text(one.value), look.size) for one in rows), default=0.0)
+    return max(FIGURES_NARROW, widest) if look.narrow else max(FIGURES, widest) + SHARES
+
+
 def _legend(canvas: Canvas, parts: Sequence[Part], y: float) -> float:
     """Explain the shapes and return where that ends."""
     ends = next((one.contribution.interval for one in parts if one.contribution.interval is not None), None)
@@ -152,7 +159,6 @@ def _legend(canvas: Canvas, parts: Sequence[Part], y: float) -> float:
     words = f"interval for the error of sampling, right in {odds(ends.coverage)} repetitions"
     if canvas.look.narrow:
         x, y = 16.0, y + 17
-        words = f"interval for the error of sampling, right in {odds(ends.coverage)} repetitions"
     canvas.span(x, x + 14, y - 4)
     for number, line in enumerate(wrapped(words, canvas.look.width - x - step - 16)):
         y += 16 * bool(number)

@@ -40,9 +40,8 @@ def distribution_chart(
     """
     canvas = Canvas(look or Look())
     drawn = marks[:MOST]
-    amounts = Amounts.of(
-        [distribution.mean, *(one.value for one in drawn), distribution.tail_from], labels.currency, significant=4
-    )
+    figures = [distribution.mean, *(one.value for one in drawn), distribution.tail_from]
+    amounts = Amounts.of(figures, labels.currency, significant=4, power=canvas.look.power)
     canvas.text(16, 25, "Loss distribution", size=HEADING)
     mean = Mark(name="mean", value=distribution.mean, at=distribution.mean)
     enlarged = _enlarged(distribution)

@@ -37,7 +37,8 @@ def exceedance_chart(
     canvas = Canvas(look or Look())
     look = canvas.look
     drawn = marks[:MOST]
-    amounts = Amounts.of([one.value for one in drawn] or [distribution.highest], labels.currency, significant=4)
+    figures = [one.value for one in drawn] or [distribution.highest]
+    amounts = Amounts.of(figures, labels.currency, significant=4, power=look.power)
     canvas.text(16, 25, "Exceedance curve", size=HEADING)
     right = look.width - (RIGHT if not look.narrow else RIGHT - 16)
     left = LEFT if not look.narrow else LEFT - 8

@@ -13,7 +13,7 @@ from service.representations.charts import CHARTS, NARROW, Look, contributions_c
 from service.representations.charts.axes import Scale, log_ticks, round_ticks
 from service.representations.charts.marks import Flags
 from service.representations.png import png
-from service.representations.wording import Amounts
+from service.representations.wording import Amounts, width
 from service.risk.distribution import distribution_of
 from tests.unit.representations.answers import MEASURES, ODD, asked, storms
 
@@ -124,6 +124,21 @@ def test_contributions_are_sorted_with_interval_stand_alone_figure_and_share(one
         assert f"({ends.lower:z,.1f} to {ends.upper:z,.1f}), alone {one.stand_alone.value:z,.1f}" in description
     places = [description.index(one.id) for one in order]
     assert places == sorted(places)
+
+
+def test_a_picture_of_contributions_has_one_unit_and_room_for_its_figures():
+    found = asked(storms() * 1e4, measures=MEASURES[1:], currency="EUR")
+    svg = contributions_chart(found.answer.allocations[0], found.answer.labels)
+    shown = " | ".join(texts(svg))
+    assert f"total {found.answer.allocations[0].total.value / 1e6:,.3f} million EUR" in shown
+    assert "amount, in million EUR" in shown
+    plain = contributions_chart(found.answer.allocations[0], found.answer.labels, Look(power=0))
+    assert "million" not in plain
+    large = asked(storms() * 1e6, measures=MEASURES[1:], currency="EUR thousand")
+    svg = contributions_chart(large.answer.allocations[0], large.answer.labels, Look(width=NARROW))
+    widest = max((one.contribution.value for one in large.answer.allocations[0].sub_portfolios))
+    axis = max(float(one.get("x")) for one in parsed(svg).iter(f"{SVG}text") if one.get("text-anchor") == "middle")
+    assert axis < NARROW - 16 - width(f"{widest:,.0f}", 12.0)
 
 
 def test_names_are_escaped_and_shown_in_full_in_a_title(one_measure):

@@ -154,6 +154,19 @@ def test_headline_figures_and_their_errors_are_those_of_the_answer(found, html):
     assert f"The parts alone add up to {alone:,.1f} EUR: {100 * saved:.1f} % of that" in words
 
 
+@pytest.mark.parametrize(("currency", "unit"), [("EUR", "million EUR"), ("EUR thousand", "EUR thousand")])
+def test_one_unit_serves_the_whole_page(currency, unit):
+    found = asked(storms() * 2e3, currency=currency, tail_detail=True)
+    page = Page(report_page(BOOK, found.answer, found.distribution, found.measures))
+    expected, shortfall = found.answer.expected_loss.value, found.answer.allocations[1].total.value
+    assert expected < 1e7 < shortfall
+    shown = (f"{expected / 1e6:.4f}", f"{shortfall / 1e6:.3f}") if currency == "EUR" else (f"{expected:,.0f}",)
+    assert all(f"{one} {unit}" in page.words for one in shown)
+    assert page.words.count("EUR") == page.words.count(unit) + page.words.count("Amounts in: EUR") * (unit != currency)
+    assert re.search(rf"Error of sampling: between [\d.,]+ and [\d.,]+ {unit}\. ", page.words)
+    assert f"amount, in {unit}" in page.words
+
+
 def test_tables_show_each_row_of_the_answer_rounded(found, html):
     page = Page(html)
     headings = [words for level, words in page.headings if level == 2]

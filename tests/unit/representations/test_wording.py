@@ -19,7 +19,8 @@ from service.representations.wording import (
     [
         ([1234.5678, 2.0], "EUR", "1,234.6", "EUR"),
         ([12_345_678.0], "EUR", "12.346", "million EUR"),
-        ([12_345_678.0], "EUR thousand", "12.346", "million × EUR thousand"),
+        ([12_345_678.5], "EUR thousand", "12,345,678", "EUR thousand"),
+        ([12_345_678_901.0], "EUR thousand", "12.346", "billion × EUR thousand"),
         ([-9.87e12], None, "-9,870.0", "billion"),
         ([5e-7], "BTC", "500.00", "1e-9 BTC"),
         ([100.0, 7.0], None, "100", ""),
@@ -32,6 +33,22 @@ def test_amounts_have_one_unit_and_five_digits(values, currency, shown, unit):
     amounts = Amounts.of(values, currency)
     assert amounts.text(values[0]) == shown
     assert amounts.unit == unit
+
+
+@pytest.mark.parametrize(
+    ("value", "power", "shown"),
+    [
+        (1_610_282.0, 6, "1.6103"),
+        (0.0, 6, "0"),
+        (0.012, 6, "0.000000012"),
+        (3e7, 0, "30,000,000"),
+        (5e-9, 0, "0.000000005"),
+    ],
+)
+def test_amounts_in_the_unit_of_others(value, power, shown):
+    amounts = Amounts.of([value], "EUR", power=power)
+    assert amounts.text(value) == shown
+    assert amounts.unit == ("million EUR" if power else "EUR")
 
 
 def test_what_is_missing_is_a_dash():
