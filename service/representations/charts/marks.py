@@ -7,7 +7,7 @@ from typing import NamedTuple
 from service.representations.charts.axes import Scale
 from service.representations.charts.canvas import EDGE, WIDER, Canvas, Look
 from service.representations.shapes import Figure, Measure, Measured
-from service.representations.wording import Amounts, measure_words, odds, shortened, width
+from service.representations.wording import ABOVE_MEAN, Amounts, measure_words, odds, shortened, width
 
 MOST = 12  # marks in a picture
 BESIDE = 5.0  # pixels between a line and its label
@@ -31,14 +31,17 @@ class Mark:
     coverage: float | None = None
 
     def words(self, amounts: Amounts) -> str:
-        """Return name and figure."""
-        added = " (drawn from the mean)" if self.at != self.value else ""
-        return f"{self.name}: {amounts.text(self.value)}{added}"
+        """Return name and figure, and where it stands if that is not the figure."""
+        place = "" if self.at == self.value else f", at {amounts.text(self.at)}"
+        return f"{self.name}: {self._figure(amounts)}{place}"
 
     def short(self, amounts: Amounts, room: float, size: float) -> str:
         """Return the name, cut to the room there is, and the whole figure."""
-        figure = f": {amounts.text(self.value)}"
+        figure = f": {self._figure(amounts)}"
         return shortened(self.name, room - width(figure, size), size) + figure
+
+    def _figure(self, amounts: Amounts) -> str:
+        return amounts.text(self.value) + ("" if self.at == self.value else ABOVE_MEAN)
 
     def told(self, amounts: Amounts) -> str:
         """Return name, figure and interval, for a screen reader."""
@@ -66,7 +69,7 @@ def marks_of(measures: Iterable[Measure], results: Sequence[Measured], expected_
     for measure in measures:
         figure = figures[measure.name]
         shift = expected_loss.value if measure.above == "mean" or measure.kind == "standard_deviation" else 0.0
-        marks.append(mark(measure_words(measure.name), figure, shift))
+        marks.append(mark(measure_words(measure.name.removesuffix(ABOVE_MEAN)), figure, shift))
     return marks
 
 

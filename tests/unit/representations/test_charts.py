@@ -99,7 +99,11 @@ def test_an_excess_over_the_mean_is_drawn_from_the_mean():
     for mark, result in zip(found.marks, found.answer.allocations, strict=True):
         assert mark.value == result.total.value
         assert mark.at == pytest.approx(result.total.value + mean, rel=1e-15)
-        assert "drawn from the mean" in mark.words(Amounts.of([mark.value], None))
+        amounts = Amounts.of([mark.value], None)
+        figure = f": {amounts.text(mark.value)} above mean"
+        assert mark.words(amounts).endswith(f"{figure}, at {amounts.text(mark.at)}")
+        assert mark.words(amounts).count("mean") == 1
+        assert mark.short(amounts, width(figure, 12.0) + 60.0, 12.0).endswith(f"…{figure}")
     assert found.marks[0].at == pytest.approx(np.sort(storms().sum(axis=1))[1799], rel=1e-12)
 
 
@@ -136,7 +140,7 @@ def test_a_picture_of_contributions_has_one_unit_and_room_for_its_figures():
     assert "million" not in plain
     large = asked(storms() * 1e6, measures=MEASURES[1:], currency="EUR thousand")
     svg = contributions_chart(large.answer.allocations[0], large.answer.labels, Look(width=NARROW))
-    widest = max((one.contribution.value for one in large.answer.allocations[0].sub_portfolios))
+    widest = max(one.contribution.value for one in large.answer.allocations[0].sub_portfolios)
     axis = max(float(one.get("x")) for one in parsed(svg).iter(f"{SVG}text") if one.get("text-anchor") == "middle")
     assert axis < NARROW - 16 - width(f"{widest:,.0f}", 12.0)
 
