@@ -83,7 +83,8 @@ REFUSALS = (400, 404, 406, 413, 415, 422, 500, 503)
 MORE_REFUSALS: Mapping[str, tuple[int, ...]] = {"increments": (409,)}
 EVENTS = "text/event-stream"
 WORDS_OF_FORMS: Mapping[str, str] = {
-    "csv": "RFC 4180 with a header line: texts quoted, numbers bare.",
+    "csv": "RFC 4180 with a header line: texts quoted, numbers bare. In the total of an allocation share, stand-alone "
+    "figure and expected profit are sums over the sub-portfolios.",
     "xml": "For one measure (and rule): a `row` for each row of the CSV, its cells as attributes; at most 32767 "
     "characters.",
     "arrow": "Arrow IPC stream of the columns of the CSV.",

@@ -3,7 +3,7 @@
 from collections.abc import Sequence
 from html import escape
 
-from service.representations.page import BookHead, Cell, book_path, link, name, page, table
+from service.representations.page import BookHead, Cell, book_path, link, more_of, name, page, table
 
 NONE = (
     "<p>There are no books on this server. A book is a file of losses under a name: start the service with "
@@ -47,6 +47,7 @@ def _sound(books: Sequence[BookHead], root: str) -> str:
         Cell("sub-portfolios"),
         Cell("scenarios"),
         Cell("figures", "text"),
+        Cell("one more deal", "text"),
     ]
     return table("Books that can be used", heads, [_row(book, root) for book in books])
 
@@ -57,11 +58,12 @@ def _row(book: BookHead, root: str) -> list[Cell]:
         link(book_path(root, book.name, f"allocations.{form}"), form.upper()) for form in ("csv", "json")
     )
     return [
-        Cell(f'<a href="{escape(book_path(root, book.name, "report"))}">{name(book.name)}, report</a>'),
+        Cell(f'<a href="{escape(book_path(root, book.name, "report"))}">report on {name(book.name)}</a>'),
         Cell(", ".join(name(words) for words in about if words) or "–", "words"),
         Cell("–" if book.sub_portfolios is None else f"{book.sub_portfolios:,}"),
         Cell("–" if book.scenarios is None else f"{book.scenarios:,}"),
         Cell(forms, "text"),
+        Cell("–" if book.example is None else more_of(root, book.name, book.example), "text"),
     ]
 
 

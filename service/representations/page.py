@@ -5,11 +5,12 @@ from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from hashlib import sha256
 from html import escape
-from urllib.parse import quote
+from urllib.parse import quote, urlencode
 
 from service.representations.charts.canvas import DARK, LIGHT, dark_style
 
 SHORT = 25  # rows of a table that paper does not break
+MORE = "1.1"  # times its size, of a part that grows
 INKS = ("ink", "soft", "line", "page")  # that pages share with the pictures in them
 
 
@@ -147,6 +148,12 @@ def link(address: str, words: str) -> str:
 def book_path(root: str, book: str, rest: str) -> str:
     """Return the path of something of a book."""
     return f"{root}/v1/books/{quote(book, safe='')}/{rest}"
+
+
+def more_of(root: str, book: str, part: str, measure: Sequence[tuple[str, str]] = ()) -> str:
+    """Return a link to what a tenth more of a sub-portfolio would change; without `measure`, in those of the book."""
+    query = urlencode([("sub_portfolio", part), ("scale", MORE), *measure])
+    return f'<a href="{escape(book_path(root, book, f"increments.csv?{query}"))}">{name(part)} × {MORE}</a>'
 
 
 @dataclass(frozen=True, slots=True)

@@ -10,10 +10,11 @@ from service.representations.charts import (
     Look,
     contributions_chart,
     distribution_chart,
+    enlarged,
     exceedance_chart,
     marks_of,
 )
-from service.representations.page import BookHead, Cell, book_path, link, name, page, table
+from service.representations.page import BookHead, Cell, book_path, link, more_of, name, page, table
 from service.representations.report_words import CAUTIONS, RULES, measure_meaning, sampling_error
 from service.representations.shapes import (
     Allocation,
@@ -26,6 +27,7 @@ from service.representations.shapes import (
     Tail,
     WorstScenario,
 )
+from service.representations.sums import share_of_all, sum_alone, sum_profit
 from service.representations.wording import (
     Amounts,
     group_words,
@@ -39,6 +41,8 @@ from service.representations.wording import (
 
 MOST_ROWS = 200  # of a table; the data forms have all
 LARGEST_PARTS = 3  # named of a worst scenario
+MOST_LINKED = 5  # parts that a link makes larger
+FEW_SCENARIOS = 30  # below which even an error of sampling is a guess
 
 Part = SubPortfolioPart | GroupPart
 
@@ -98,12 +102,11 @@ class _Report:
     @property
     def power(self) -> int:
         """Of ten, by which every amount of the page is divided."""
-        return Amounts.of(self._headline_values(), self.answer.labels.currency).power
+        return Amounts.of((one.value for one in self._figures()), self.answer.labels.currency).power
 
-    def _headline_values(self) -> Iterator[float]:
-        """Yield the figures of the cards, of which the largest decides the unit of the page."""
-        yield self.answer.expected_loss.value
-        yield from (result.total.value for result in self.answer.allocations)
+    def _figures(self) -> list[Figure]:
+        """Return the figures of the cards, of which the largest decides the unit of the page."""
+        return [self.answer.expected_loss, *(result.total for result in self.answer.allocations)]
 
     def _written(self, values: Iterable[float | None]) -> Amounts:
         """Return how amounts that stand together are written: all in the unit of the page."""
@@ -138,17 +141,19 @@ class _Report:
             result = results[measure.name]
             words = measure_words(measure.name)
             cards.append(self._card(words[:1].upper() + words[1:], measure_meaning(measure), result.total, result))
-        return f'<section><h2>The whole book</h2>\n<div class="cards">{"".join(cards)}</div></section>\n'
+        few = self.answer.scenarios < FEW_SCENARIOS and any(one.interval for one in self._figures())
+        rough = f'<p class="caution">{escape(ROUGH.format(self.answer.scenarios))}</p>\n' if few else ""
+        return f'<section><h2>The whole book</h2>\n{rough}<div class="cards">{"".join(cards)}</div></section>\n'
 
     def _card(self, title: str, meaning: str, figure: Figure, result: Allocation | None = None) -> str:
         ends = figure.interval
         values = [figure.value] if ends is None else [figure.value, ends.lower, ends.upper]
         amounts = self._written(values)
         words = [meaning, sampling_error(figure, amounts)]
-        alone = None if result is None else _sum_alone(result)
-        if alone is not None and result is not None and alone > 0.0:
+        alone = None if result is None or len(result.sub_portfolios) == 1 else sum_alone(result.sub_portfolios)
+        saved = _saved(figure.value, alone)
+        if alone is not None and saved is not None:
             shown = self._written([alone])
-            saved = (alone - result.total.value) / alone
             words.append(
                 f"The parts alone add up to {shown.text(alone)}{shown.after}: "
                 f"{percent(saved)} of that {'is saved by' if saved >= 0.0 else 'is gained by'} holding them together."
@@ -166,8 +171,7 @@ class _Report:
         labels = self.answer.labels
         distribution = self._figure(
             lambda look: distribution_chart(self.distribution, marks, labels, look),
-            "How probable losses of each size are. The worst ones have a colour of their own and are drawn once more "
-            "beneath, wider and with heights by the square root, so that single scenarios can be seen.",
+            sentence(DISTRIBUTION + (ENLARGED if enlarged(self.distribution) else "")),
         )
         exceedance = self._figure(
             lambda look: exceedance_chart(self.distribution, marks, labels, look),
@@ -206,12 +210,25 @@ class _Report:
             lambda look: contributions_chart(result, self.answer.labels, look),
             "Contributions of the sub-portfolios, largest first, beside what each would need alone.",
         )
-        tables = [self._parts("By sub-portfolio", "sub-portfolio", result, result.sub_portfolios)]
+        tables = [
+            self._parts("By sub-portfolio", "sub-portfolio", result, result.sub_portfolios),
+            self._one_more(result),
+        ]
         for attribute in dict.fromkeys(one.attribute for one in result.groups):
             groups = [one for one in result.groups if one.attribute == attribute]
             tables.append(self._parts(f"By {attribute}", attribute, result, groups))
         heading = f"<h2>{name(title[:1].upper() + title[1:])}</h2>\n<p>{escape(' '.join(filter(None, words)))}</p>\n"
         return f'<section class="allocation">{heading}{picture}{"".join(tables)}</section>\n'
+
+    def _one_more(self, result: Allocation) -> str:
+        """Return links to what more of each of the largest parts would change."""
+        measure = next(one for one in self.measures if one.name == result.measure)
+        largest = sorted(result.sub_portfolios, key=lambda one: -abs(one.contribution.value))[:MOST_LINKED]
+        links = ", ".join(more_of(self.root, self.book.name, one.id, measure_query(measure)) for one in largest)
+        return (
+            f"<p>What would change if a part grew by a tenth, as CSV: {links}. The address takes any "
+            "<code>sub_portfolio</code> and <code>scale</code>.</p>\n"
+        )
 
     def _parts(self, caption: str, head: str, result: Allocation, parts: Sequence[Part]) -> str:
         """Return the table of sub-portfolios or of one attribute's groups, largest contribution first."""
@@ -220,16 +237,17 @@ class _Report:
             largest = sorted(ordered, key=lambda one: -abs(one.contribution.value))[:MOST_ROWS]
             ordered = sorted(largest, key=lambda one: -one.contribution.value)
             caption += f" (the {MOST_ROWS} largest of {len(parts):,})"
-        amounts = self._written([result.total.value, *_amounts(ordered)])
+        alone, profit = sum_alone(parts), sum_profit(parts)
+        amounts = self._written([result.total.value, *_amounts(ordered), alone, profit])
         whole = [
             Cell("total"),
             Cell(amounts.text(result.total.value)),
             Cell(_between(result.total, amounts)),
-            Cell(percent(1.0) if result.residual is None and result.total.value > 0.0 else "–"),
-            Cell("–"),
-            Cell("–"),
+            Cell(percent(share_of_all(result))),
+            Cell("–" if alone is None else f"sum {amounts.text(alone)}"),
+            Cell(percent(_saved(result.total.value, alone))),
             Cell(amounts.text(self.answer.expected_loss.value)),
-            Cell("–"),
+            Cell(amounts.text(profit)),
             Cell(percent(result.return_on_capital)),
             Cell(amounts.text(result.capital)),
         ]
@@ -252,7 +270,7 @@ class _Report:
         """Return the worst scenarios, and the factors' means beyond the level."""
         amounts = self._written(one.total for one in tail.scenarios)
         heads = [
-            Cell("scenario", "text"),
+            Cell("scenario, counted from 1", "text"),
             Cell("probability"),
             Cell("total loss"),
             Cell(f"largest {LARGEST_PARTS} parts", "words"),
@@ -314,6 +332,11 @@ class _Report:
         return f"<p>{self._unrounded()}</p>"
 
 
+ROUGH = "There are only {} scenarios: they tell little about how sure a figure is, and intervals made of them may miss."
+DISTRIBUTION = "How probable losses of each size are. The worst ones have a colour of their own"
+ENLARGED = (
+    " and are drawn once more beneath, wider and with heights by the square root, so that single scenarios can be seen"
+)
 HEADS = (
     "contribution",
     "interval",
@@ -336,11 +359,15 @@ def _amounts(parts: Iterable[Part]) -> Iterable[float | None]:
         yield one.allocated_capital
 
 
-def _sum_alone(result: Allocation) -> float | None:
-    """Return the sum of the stand-alone figures; None where there is one part only, or one has none."""
-    figures = [one.stand_alone for one in result.sub_portfolios]
-    known = [figure.value for figure in figures if figure is not None]
-    return sum(known) if 1 < len(known) == len(figures) else None
+def measure_query(measure: Measure) -> list[tuple[str, str]]:
+    """Return the query parameters that ask for a measure."""
+    numbers = [(key, f"{value:.15g}") for key, value in measure.parameters.items()]
+    return [("measure", measure.kind), *numbers, *([("above", "mean")] if measure.above == "mean" else [])]
+
+
+def _saved(total: float, alone: float | None) -> float | None:
+    """Return by what part the total lies below the sum of the stand-alone figures."""
+    return None if alone is None or alone <= 0.0 else (alone - total) / alone
 
 
 def _part_cells(one: Part, amounts: Amounts) -> list[Cell]:
@@ -368,7 +395,7 @@ def _worst_cells(one: WorstScenario, amounts: Amounts) -> list[Cell]:
     largest = sorted(one.losses, key=lambda part: -part.value)[:LARGEST_PARTS]
     parts = "; ".join(f"{name(part.id)} {amounts.text(part.value)}" for part in largest)
     return [
-        Cell(name(one.scenario_id) if one.scenario_id is not None else f"number {one.number:,}"),
+        Cell(name(one.scenario_id) if one.scenario_id is not None else f"number {one.number + 1:,}"),
         Cell(probability(one.probability)),
         Cell(amounts.text(one.total)),
         Cell(parts, "words"),

@@ -69,4 +69,7 @@ def sampling_error(figure: Figure, amounts: Amounts) -> str:
     if ends is None:
         return "No error of sampling can be given for it; see the notes."
     between = f"{amounts.text(ends.lower)} and {amounts.text(ends.upper)}{amounts.after}"
-    return f"Error of sampling: between {between}. A range made this way holds the model's own figure in {odds(ends.coverage)} repetitions of the sampling."
+    return (
+        f"Error of sampling: between {between}. A range made this way holds the model's own figure in "
+        f"{odds(ends.coverage)} repetitions of the sampling."
+    )

@@ -1,6 +1,6 @@
 """Numbers and names in a person's words: rounded for reading, never for data."""
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from decimal import Decimal
 from math import floor, isfinite, log10
@@ -11,16 +11,17 @@ LARGE, SMALL = 1e7, 1e-3  # beyond which amounts are shown in another unit
 LARGEST = 1e10  # in a currency that is a multiple already, such as EUR thousand
 MOST_DECIMALS = 9
 POWERS = {6: "million", 9: "billion", 12: "trillion"}
-OF_LEVEL = ("expectile", "expected_shortfall", "value_at_risk")  # kinds whose only parameter is a level
 KINDS = (
-    *OF_LEVEL,
     "dual_power",
     "entropic",
+    "expected_shortfall",
+    "expectile",
     "exponential_distortion",
     "proportional_hazard",
     "range_value_at_risk",
     "return_level",
     "standard_deviation",
+    "value_at_risk",
     "wang",
 )
 ABOVE_MEAN = " above mean"
@@ -132,14 +133,21 @@ def measure_words(name: str) -> str:
     kind, *numbers = plain.split(" ")
     if kind not in KINDS:
         return name
+    known = all(one.replace(".", "", 1).isdigit() for one in numbers)
+    return (_kind_words(kind, numbers) if known else " ".join([kind.replace("_", " "), *numbers])) + above
+
+
+def _kind_words(kind: str, numbers: Sequence[str]) -> str:
+    """Return the name of a kind of measure with its parameters."""
     words = kind.replace("_", " ")
-    if kind in OF_LEVEL and len(numbers) == 1 and numbers[0].replace(".", "", 1).isdigit():
-        numbers = [level_words(float(numbers[0]))]
-    if kind == "range_value_at_risk":
-        words = "range value at risk"
-    if kind == "standard_deviation" and numbers == ["1"]:
-        numbers = []
-    return " ".join([words, *numbers]) + above
+    match kind, *numbers:
+        case (("expectile" | "expected_shortfall" | "value_at_risk"), level):
+            return f"{words} {level_words(float(level))}"
+        case ("standard_deviation", multiple):
+            return words if multiple == "1" else f"{multiple} × {words}"
+        case ("return_level", periods, *scenarios):
+            return f"loss of once in {periods} periods" + "".join(f" of {one} scenarios" for one in scenarios)
+    return " ".join([words, *numbers])
 
 
 def rule_words(rule: str) -> str:

@@ -6,7 +6,7 @@ from typing import Literal
 from service.errors import Fault, InvalidValue
 from service.representations.charts.canvas import NARROW, WIDTH, Look, dark_style
 from service.representations.charts.contributions import contributions_chart
-from service.representations.charts.distribution import distribution_chart
+from service.representations.charts.distribution import distribution_chart, enlarged
 from service.representations.charts.exceedance import exceedance_chart
 from service.representations.charts.marks import Mark, mark, marks_of, places
 from service.representations.shapes import AllocationsAnswer, Distribution, MeasuresAnswer
@@ -22,6 +22,7 @@ __all__ = [
     "dark_style",
     "distribution_chart",
     "draw",
+    "enlarged",
     "exceedance_chart",
     "mark",
     "marks_of",

@@ -44,8 +44,8 @@ def distribution_chart(
     amounts = Amounts.of(figures, labels.currency, significant=4, power=canvas.look.power)
     canvas.text(16, 25, "Loss distribution", size=HEADING)
     mean = Mark(name="mean", value=distribution.mean, at=distribution.mean)
-    enlarged = _enlarged(distribution)
-    body = [mean, *(one for one in drawn if not enlarged or one.at < distribution.tail_from)]
+    twice = enlarged(distribution)
+    body = [mean, *(one for one in drawn if not twice or one.at < distribution.tail_from)]
     worst = probability(distribution.tail_probability)
     plot = _Plot(canvas, distribution, amounts)
     foot = plot.draw(
@@ -56,7 +56,7 @@ def distribution_chart(
         body,
         root=False,
     )
-    if enlarged:
+    if twice:
         tail = [one for one in drawn if one.at >= distribution.tail_from]
         caption = f"The worst {worst}, enlarged"
         foot = plot.draw(foot + 12, caption, distribution.tail, distribution.tail_range, tail, root=True)
@@ -73,7 +73,7 @@ def distribution_chart(
     return canvas.finish(foot, title, sentence("; ".join(told)))
 
 
-def _enlarged(distribution: Distribution) -> bool:
+def enlarged(distribution: Distribution) -> bool:
     """Return whether the tail gets a plot of its own."""
     low, high = distribution.tail_range
     singles = sum(loss >= distribution.tail_from for loss, _ in distribution.atoms)

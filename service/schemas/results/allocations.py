@@ -5,6 +5,7 @@ from typing import Annotated
 
 from pydantic import Field
 
+from service.representations.sums import share_of_all, sum_alone, sum_profit
 from service.representations.table import Table
 from service.schemas.results.shared import (
     Figure,
@@ -119,16 +120,31 @@ class AllocationsAnswer:
     provenance: Annotated[Provenance, Field(description="What an auditor needs to repeat the figures.")]
 
     def table(self) -> Table:
-        """Return one row for the total, each sub-portfolio and each group of every allocation."""
+        """Return one row for the total, each sub-portfolio and each group of every allocation.
+
+        In the row of a total the share, the stand-alone figure and the expected profit are sums over the
+        sub-portfolios.
+        """
         rows: list[tuple[object, ...]] = []
         for result in self.allocations:
             head = (result.measure, result.rule)
-            total = (*ends_of(result.total), None, None, None, self.expected_loss.value, None)
-            tail = (result.return_on_capital, result.capital, self.labels.currency)
-            rows.append((*head, "total", None, None, *total, *tail))
+            rows.append((*head, "total", None, None, *self._total(result)))
             rows += [(*head, "sub_portfolio", None, one.id, *self._row(one)) for one in result.sub_portfolios]
             rows += [(*head, "group", one.attribute, one.group, *self._row(one)) for one in result.groups]
         return Table(ALLOCATIONS_COLUMNS, rows)
+
+    def _total(self, result: AllocationResult) -> tuple[object, ...]:
+        return (
+            *ends_of(result.total),
+            share_of_all(result),
+            sum_alone(result.sub_portfolios),
+            None,
+            self.expected_loss.value,
+            sum_profit(result.sub_portfolios),
+            result.return_on_capital,
+            result.capital,
+            self.labels.currency,
+        )
 
     def _row(self, row: AllocationRow | GroupRow) -> tuple[object, ...]:
         return (

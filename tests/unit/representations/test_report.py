@@ -3,13 +3,14 @@
 import re
 from html.parser import HTMLParser
 from itertools import pairwise
+from urllib.parse import parse_qsl, urlsplit
 
 import pytest
 
 from service.representations.charts.canvas import DARK, LIGHT
 from service.representations.page import POLICY, STYLE
-from service.representations.report import MOST_ROWS, report_page
-from tests.unit.representations.answers import BOOK, MEASURES, ODD, asked, storms
+from service.representations.report import MOST_ROWS, measure_query, report_page
+from tests.unit.representations.answers import BOOK, MEASURES, ODD, as_asked, asked, storms
 
 VOID = {"meta", "link", "br"}
 ATTRIBUTES = [{"line": "hull"}, {"line": "cargo"}, {"line": "hull"}, {}]
@@ -186,13 +187,33 @@ def test_tables_show_each_row_of_the_answer_rounded(found, html):
         assert cells[-1] == f"{one.allocated_capital:z,.1f}"
     for one in result.groups:
         assert part.row(one.group or "(none)")[1] == f"{one.contribution.value:z,.1f}"
-    assert part.row("total")[1] == f"{result.total.value:,.1f}"
+    alone = sum(one.stand_alone.value for one in result.sub_portfolios)
+    profit = sum(one.expected_profit for one in result.sub_portfolios)
+    total = part.row("total")
+    assert total[1] == f"{result.total.value:,.1f}"
+    assert total[3:6] == ["100.0 %", f"sum {alone:,.1f}", f"{100 * (1 - result.total.value / alone):.1f} %"]
+    assert total[7] == f"{profit:,.1f}"
+
+
+def test_each_measure_leads_to_what_more_of_a_part_would_change(html):
+    links = [urlsplit(one) for one in Page(html).links if "increments" in one]
+    assert {one.path for one in links} == {"/v1/books/harbour/increments.csv"}
+    asked_for = [dict(parse_qsl(one.query)) for one in links]
+    assert sorted(one["sub_portfolio"] for one in asked_for) == sorted(3 * ODD)
+    assert {tuple(one.items())[1:] for one in asked_for} == {
+        (("scale", "1.1"), ("measure", "value_at_risk"), ("level", "0.95")),
+        (("scale", "1.1"), ("measure", "expected_shortfall"), ("level", "0.9")),
+        (("scale", "1.1"), ("measure", "expectile"), ("level", "0.9")),
+    }
+    above = measure_query(as_asked({"kind": "wang", "shift": 0.5, "above": "mean"}))
+    assert above == [("measure", "wang"), ("shift", "0.5"), ("above", "mean")]
 
 
 def test_worst_scenarios_notes_method_and_provenance(found, html):
     words = Page(html).words
     worst = found.answer.tail.scenarios[0]
-    assert Page(html).row(f"number {worst.number:,}")[2] == f"{worst.total:,.0f}"
+    assert Page(html).row("scenario, counted from 1")
+    assert Page(html).row(f"number {worst.number + 1:,}")[2] == f"{worst.total:,.0f}"
     for note in found.answer.notes:
         assert note.detail[1:] in words
     assert found.answer.provenance.losses_digest in words
@@ -224,6 +245,19 @@ def test_a_rule_that_does_not_add_up_says_so():
     assert "do not add up" in page.words
     assert f"{found.answer.allocations[0].residual:z,.1f} of the total is not shared out" in page.words
     assert page.row("total")[3] == "–"
+
+
+def test_few_scenarios_are_said_to_be_few_and_drawn_once():
+    found = asked([[1.0, 2.0], [3.0, 5.0], [2.0, 2.0]])
+    page = Page(report_page(BOOK, found.answer, found.distribution, found.measures))
+    assert "There are only 3 scenarios" in page.words
+    assert "The worst ones have a colour of their own." in page.words
+
+
+def test_many_scenarios_are_drawn_twice(html):
+    words = Page(html).words
+    assert "of their own and are drawn once more beneath" in words
+    assert "There are only" not in words
 
 
 def test_a_long_table_shows_the_largest_rows():

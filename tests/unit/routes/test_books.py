@@ -283,6 +283,16 @@ def test_a_sheet_of_a_hundred_cells_costs_one_computation(folder, counted):
         assert total in client.get("/metrics").text
 
 
+def test_the_row_of_a_total_sums_what_parts_have(client):
+    table = list(rows(client.get(f"{HOME}/allocations.csv?{ES}")))
+    parts = [row for row in table if row["scope"] == "sub_portfolio"]
+    (total,) = [row for row in table if row["scope"] == "total"]
+    assert float(total["share"]) == 1.0
+    for column in ("stand_alone", "expected_profit"):
+        cells = [row[column] for row in parts]
+        assert total[column] == ("" if "" in cells else repr(sum(map(float, cells))))
+
+
 def test_the_cells_are_the_figures_of_the_table(client):
     table = {(row["measure"], row["scope"], row["id"]): row for row in rows(client.get(f"{HOME}/allocations.csv"))}
     for measure in ("expected_shortfall", "value_at_risk"):
