@@ -15,7 +15,7 @@ from service.risk.increments import Base, Increment
 from service.risk.measures import RiskMeasure
 from service.risk.quantiles import Array
 from service.risk.uncertainty import FULL_TAIL, Estimates
-from service.schemas.requests import IncrementsRequest
+from service.schemas.requests import Candidate, IncrementsRequest
 from service.schemas.results import (
     AllocationResult,
     AllocationRow,
@@ -60,16 +60,18 @@ class Notes:
         Whether the request is a JSON document that can be pointed into.
     made : dict
         The notes by code and measure.
+    undefined : dict
+        By measure: why its first ratio is null, and how many are.
     """
 
     scenarios: int
     pointed: bool
     made: dict[tuple[str, int | None], Note] = field(default_factory=dict)
+    undefined: dict[int, tuple[str, int]] = field(default_factory=dict)
 
     def add(self, code: NoteCode, detail: str, number: int | None = None) -> None:
         """Make a note, of measure `number` if given."""
-        pointer = f"/measures/{number}" if self.pointed and number is not None else None
-        self.made.setdefault((code, number), Note(code, detail, pointer))
+        self.made.setdefault((code, number), Note(code, detail, self._pointer(number)))
 
     def say(self, code: str, detail: str, pointer: str | None) -> None:
         """Make a note on something else than a measure."""
@@ -87,8 +89,19 @@ class Notes:
             known: NoteCode = code  # type: ignore[assignment]  # the remarks are codes of notes
             self.add(known, self._detail(code, measure, estimates), number)
 
+    def no_ratio(self, why: str, number: int, count: int = 1) -> None:
+        """Make one note on all ratios of measure `number` that are null: why the first is, and how many more are."""
+        first, before = self.undefined.get(number, (why, 0))
+        self.undefined[number] = first, before + count
+        others = before + count - 1
+        more = f"; {others:,} more {'is' if others == 1 else 'are'} null likewise" if others else ""
+        note = Note("ratio_not_defined", f"a ratio is null: {first}{more}", self._pointer(number))
+        self.made["ratio_not_defined", number] = note
+
     def take(self, others: "Notes") -> None:
-        """Add the notes of others that are not made yet."""
+        """Add the notes of others that are not made yet, and count their ratios."""
+        for number, (why, count) in others.undefined.items():
+            self.no_ratio(why, number, count)
         for key, note in others.made.items():
             self.made.setdefault(key, note)
 
@@ -108,15 +121,23 @@ class Notes:
         """Return the notes made, in the order of the measures."""
         return list(self.made.values())
 
+    def _pointer(self, number: int | None) -> str | None:
+        return f"/measures/{number}" if self.pointed and number is not None else None
+
     def _detail(self, code: str, measure: RiskMeasure, estimates: Estimates) -> str:
         tail = estimates.tail_scenarios
         known = tail[np.isfinite(tail)]
         fewest = float(known.min()) if known.size else 0.0
-        of_tail = "tail scenarios carry" if measure.of_tail else "scenarios carry the error of"
-        counts = f"{fewest:.3g} {of_tail} {measure.name}"
+        shown = f"{fewest:.3g}"
+        noun, verb = ("scenario", "carries") if shown == "1" else ("scenarios", "carry")
+        role = f"tail {noun} {verb}" if measure.of_tail else f"{noun} {verb} the error of"
+        counts = f"{shown} {role} {measure.name}"
         enough = FULL_TAIL * self.scenarios / fewest if measure.of_tail and fewest > 0.0 else inf
         if enough < MOST_NAMED:
-            counts += f"; {ceil(enough)} scenarios in all would do"
+            counts += f"; {ceil(enough):,} scenarios in all would do"
+        if fewest < 1.0 and self._beyond(measure):
+            less = " less the mean" if measure.above == "mean" else ""
+            counts += f"; the level is beyond the set: the figure is simply the worst loss{less}"
         return {
             "thin_tail": f"the error rests on few scenarios: {counts}",
             "no_error": f"too few scenarios to say how sure a figure is: {counts}",
@@ -125,6 +146,13 @@ class Notes:
             "does_not_add_up": "with_without contributions do not add up to the total; `residual` is the rest",
             "sampled_shapley": "Shapley values are averaged over drawn orders of entry; the error includes the drawing",
         }[code]
+
+    def _beyond(self, measure: RiskMeasure) -> bool:
+        """Return whether the tail of a measure holds less than one scenario."""
+        numbers = measure.parameters
+        if "return_period" in numbers:
+            return numbers["return_period"] * numbers.get("scenarios_per_period", 1.0) > self.scenarios
+        return "level" in numbers and (1.0 - numbers["level"]) * self.scenarios < 1.0
 
 
 def _refuse_infinite(*arrays: Array) -> None:
@@ -261,7 +289,10 @@ def allocation_result(
     least = rounding_of(frame)
     shares = [_ratio(part.value, whole, "the total to be shared", number, notes, least) for part in parts]
     rows = []
-    for j, (part, share) in enumerate(zip(parts, shares, strict=True)):
+    names = [one.id for one in frame.table.sub_portfolios]
+    names += [f"{group.attribute} {group.name or '(none)'}" for group in frame.groups]
+    role = "contribution" if of.capital is None else "capital"
+    for j, (name, part, share) in enumerate(zip(names, parts, shares, strict=True)):
         allocated = None if of.capital is None or share is None else _amount(share * of.capital)
         base = part.value if of.capital is None else allocated
         single = None if alone is None else alone[j]
@@ -272,10 +303,10 @@ def allocation_result(
                 "stand_alone": single,
                 "diversification_benefit": None
                 if single is None
-                else _ratio(single.value - part.value, single.value, "a stand-alone figure", number, notes, least),
+                else _ratio(single.value - part.value, single.value, _alone(name), number, notes, least),
                 "expected_loss": of.expected[j],
                 "expected_profit": of.profits[j],
-                "return_on_capital": _return(of.profits[j], base, number, notes),
+                "return_on_capital": _return(of.profits[j], base, f"the {role} of {name}", number, notes),
                 "allocated_capital": allocated,
             }
         )
@@ -299,14 +330,18 @@ def _ratio(  # a ratio is of something, and noted somewhere
     if denominator > least and isfinite(ratio := numerator / denominator):
         return ratio + 0.0
     why = "too small to divide by" if denominator > least else "not positive"
-    notes.add("ratio_not_defined", f"a ratio is null: {of} is {denominator:.6g}, {why}", number)
+    notes.no_ratio(f"{of} is {denominator:.6g}, {why}", number)
     return None
 
 
-def _return(profit: float | None, base: float | None, number: int, notes: Notes) -> float | None:
+def _return(profit: float | None, base: float | None, of: str, number: int, notes: Notes) -> float | None:
     if profit is None or base is None:
         return None
-    return _ratio(profit, base, "the capital of a part", number, notes)
+    return _ratio(profit, base, of, number, notes)
+
+
+def _alone(name: str) -> str:
+    return f"the stand-alone figure of {name}"
 
 
 def _total_return(of: Shared, base: float, number: int, notes: Notes) -> float | None:
@@ -316,14 +351,16 @@ def _total_return(of: Shared, base: float, number: int, notes: Notes) -> float |
     if not known:
         return None
     if len(known) < len(profits):
-        notes.add("no_expected_profit", f"{len(profits) - len(known)} sub-portfolios have no expected profit")
+        lacking = len(profits) - len(known)
+        noun = "sub-portfolio has" if lacking == 1 else "sub-portfolios have"
+        notes.add("no_expected_profit", f"{lacking:,} {noun} no expected profit")
         return None
     return _ratio(_amount(sum(known)), base, "the capital", number, notes)
 
 
 def candidate_figures(
     request: IncrementsRequest,
-    profit: float | None,
+    candidate: Candidate,
     number: int,
     base: Base,
     of: Increment,
@@ -336,6 +373,7 @@ def candidate_figures(
     total_with, increment, contribution, alone = (
         figure_list(part, coverage)[0] for part in (of.total_with, of.increment, of.contribution, of.stand_alone)
     )
+    profit = candidate.expected_profit
     needed = None if request.hurdle_rate is None else _amount(request.hurdle_rate * increment.value)
     cost, most = request.cost_of_capital, request.capital_limit
     return CandidateFigures(
@@ -344,10 +382,8 @@ def candidate_figures(
         increment=increment,
         contribution=contribution,
         stand_alone=alone,
-        diversification_benefit=_ratio(
-            alone.value - increment.value, alone.value, "a stand-alone figure", number, notes
-        ),
-        return_on_capital=_return(profit, increment.value, number, notes),
+        diversification_benefit=_ratio(alone.value - increment.value, alone.value, _alone(candidate.id), number, notes),
+        return_on_capital=_return(profit, increment.value, f"the increment of {candidate.id}", number, notes),
         required_profit=None if cost is None else _amount(cost * increment.value),
         meets_hurdle=None if needed is None or profit is None else profit >= needed,
         within_limit=None if most is None else total_with.value <= most,

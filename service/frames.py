@@ -206,9 +206,9 @@ def _until(source: Source, plan: Plan, demand: Demand, stop: StopWhen, work: Wor
         scenarios = min(2 * scenarios, stop.max_scenarios)
     reached = f"the largest relative standard error of a total is {worst:.3g}"
     if met < LOOKS_IN_A_ROW:
-        note = f"stopped at the most scenarios allowed, {longer.scenarios}: {reached}"
+        note = f"stopped at the most scenarios allowed, {longer.scenarios:,}: {reached}"
     else:
-        note = f"stopped after {longer.scenarios} scenarios: {reached}; intervals are not corrected for stopping"
+        note = f"stopped after {longer.scenarios:,} scenarios: {reached}; intervals are not corrected for stopping"
     looking = work.part(min(done / stop.max_scenarios, 1.0), 1.0)
     made = _carried_out(source, longer, demand, looking, settings, before=before)
     return replace(made, notes=(*made.notes, ("stopped", note, "/losses/simulation/stop_when")))

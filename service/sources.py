@@ -209,7 +209,7 @@ def _simulated(losses: FactorLosses, settings: Settings) -> Source:
         plan = make(model, seed=asked.seed, scenarios=asked.scenarios)
     notes = [(code, detail, f"/losses{pointer}") for code, detail, pointer in model.notes]
     if asked.method == "sobol" and plan.scenarios != asked.scenarios:
-        detail = f"{plan.scenarios} points were taken, eight times a power of two"
+        detail = f"{plan.scenarios:,} points were taken, eight times a power of two"
         notes.append(("sobol_points", detail, "/losses/simulation/scenarios"))
     each, total = model.existence()
     return Source(

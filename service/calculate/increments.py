@@ -142,11 +142,7 @@ class Increments(Calculation):
         for number, (base, increment) in enumerate(zip(pooled, found, strict=True)):
             for estimates in increment.estimated:
                 notes.of_estimates(number, base.measure, estimates)
-            figures.append(
-                answers.candidate_figures(
-                    self.request, candidate.expected_profit, number, base, increment, self.ids, notes
-                )
-            )
+            figures.append(answers.candidate_figures(self.request, candidate, number, base, increment, self.ids, notes))
         return figures
 
     def _combined(self, pooled: Increment, parts: Sequence[Increment]) -> Increment:

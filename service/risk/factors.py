@@ -230,7 +230,8 @@ class FactorModel:
             for number, one in enumerate(terms.components):
                 if isinstance(one, CompoundComponent) and one.driver is not None:
                     pointer = f"/sub_portfolios/{row}/components/{number}"
-                    notes.append(("driven_sum", one.law_of_sum.statement, pointer))
+                    detail = f"the aggregate claims of {terms.id} {one.law_of_sum.statement}"
+                    notes.append(("driven_sum", detail, pointer))
         return tuple(notes)
 
     def existence(self) -> tuple[list[Tails], Tails]:

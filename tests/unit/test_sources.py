@@ -46,7 +46,7 @@ def test_provenance_names_method_and_seed():
 def test_points_are_rounded_up_with_a_note():
     [note] = [one for one in measured(model(method="sobol", scenarios=5000)).notes if one.code == "sobol_points"]
     assert note.pointer == "/losses/simulation/scenarios"
-    assert "8192" in note.detail
+    assert "8,192 points" in note.detail
     assert "sobol_points" not in {one.code for one in measured(model(method="sobol", scenarios=4096)).notes}
 
 

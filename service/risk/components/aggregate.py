@@ -118,15 +118,14 @@ class AggregateLaw:
 
     @property
     def statement(self) -> str:
-        """The grid and its error in words."""
-        tail = f"; quantiles stop at probability 1 − {FARTHEST:g}"
+        """How the quantiles of the sum are computed and how exact they are, to be read behind its name."""
         if self.stepped:
-            return f"the sum stands on multiples of {self.cell:.6g} and is exact on {self.cells} of them{tail}"
-        worst = max(self.bounds, key=_width)
+            return f"are computed exactly, on {self.cells:,} multiples of {self.cell:.6g}"
+        known = [bound for bound in self.bounds if math.isfinite(bound.upper)]
+        worst = max(map(_width, known))
         return (
-            f"{self.grids} grid(s) of {self.cells} cells, the first of width {self.cell:.6g}; the quantile at "
-            f"{worst.probability:g} lies between {worst.lower:.8g} and {worst.upper:.8g}, and is taken as "
-            f"{worst.value:.8g}{tail}"
+            f"are computed on a grid: no quantile up to level {known[-1].probability:g} is off by more than "
+            f"{100.0 * worst:.2g} % (grids: {self.grids}, cells of each: {self.cells:,}, first width: {self.cell:.6g})"
         )
 
 

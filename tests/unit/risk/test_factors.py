@@ -210,7 +210,8 @@ def test_sobol_points_drive_the_factors_and_nothing_else():
 def test_the_grid_of_a_driven_sum_is_stated():
     [(code, detail, pointer)] = model(*ALL).notes
     assert (code, pointer) == ("driven_sum", "/sub_portfolios/4/components/0")
-    assert "lies between" in detail
+    name = model(*ALL).portfolio.sub_portfolios[4].id
+    assert detail.startswith(f"the aggregate claims of {name} are computed ")
 
 
 def test_models_without_factors():

@@ -30,6 +30,10 @@ def _codes(answer):
     return {(note["code"], note["pointer"]) for note in answer["notes"]}
 
 
+def _detail(answer, code):
+    return next(note["detail"] for note in answer["notes"] if note["code"] == code)
+
+
 def _errors(answer):
     one = answer["allocations"][0]
     figures = [one["total"], *(row["contribution"] for row in one["sub_portfolios"])]
@@ -52,7 +56,7 @@ def test_thin_tails(client, level, code):
     if code:
         (note,) = answer["notes"]
         assert "scenarios in all would do" in note["detail"]
-        wanted = int(note["detail"].split("; ")[1].split(" ")[0])
+        wanted = int(note["detail"].split("; ")[1].split(" ")[0].replace(",", ""))
         assert wanted == pytest.approx(100.0 / (1.0 - level), abs=1.0)
 
 
@@ -143,12 +147,59 @@ def test_ratios_without_a_positive_denominator_are_null(client):
         assert row["expected_loss"] < 0.0
     assert one["return_on_capital"] is None
     assert {code for code, _ in _codes(answer)} == {"ratio_not_defined", "no_expected_profit"}
+    ratio, profit = (_detail(answer, code) for code in ("ratio_not_defined", "no_expected_profit"))
+    assert ratio.startswith("a ratio is null: the total to be shared is -")
+    assert ratio.endswith("not positive; 4 more are null likewise")  # two shares, two benefits, one return
+    assert profit == "1 sub-portfolio has no expected profit"
     answer = _answer(client, gains, [{"kind": "expected_shortfall", "level": 0.8}], path="/v1/measures")
     (one,) = answer["measures"]
     assert one["diversification_benefit"] is None
     summed = sum(part["figure"]["value"] for part in one["stand_alone"])
     assert one["diversification_amount"] == pytest.approx(summed - one["total"]["value"])
     assert ("ratio_not_defined", "/measures/0") in _codes(answer)
+
+
+@pytest.mark.parametrize("path", ["/v1/allocations", "/v1/increments"])
+def test_a_ratio_that_is_null_is_named(client, path):
+    losses = np.stack([np.abs(THIN[:, 0]), np.zeros(1000)], axis=1)
+    names = [{"id": "hull"}, {"id": "idle", "attributes": {"line": "none"}}]
+    more = {"candidates": [{"id": "nothing", "values": [0.0] * 1000}]} if path == "/v1/increments" else {}
+    measures = [{"kind": "expected_shortfall", "level": 0.8}]
+    answer = _answer(client, losses, measures, sub_portfolios=names, path=path, **more)
+    name = "nothing" if more else "idle"
+    assert (
+        _detail(answer, "ratio_not_defined") == f"a ratio is null: the stand-alone figure of {name} is 0, not positive"
+    )
+
+
+@pytest.mark.parametrize(
+    ("measure", "beyond"),
+    [
+        ({"kind": "value_at_risk", "level": 0.995}, ": the figure is simply the worst loss"),
+        (
+            {"kind": "expected_shortfall", "level": 0.75, "above": "mean"},
+            ": the figure is simply the worst loss less the mean",
+        ),
+        ({"kind": "return_level", "return_period": 4}, ": the figure is simply the worst loss"),
+        ({"kind": "value_at_risk", "level": 0.001}, None),
+        ({"kind": "expected_shortfall", "level": 0.6}, None),
+    ],
+)
+def test_a_level_beyond_the_set_is_the_worst_loss(client, measure, beyond):
+    answer = _answer(client, THIN[:3], [measure])
+    detail = _detail(answer, "no_error")
+    assert ("the level is beyond the set" in detail) == bool(beyond)
+    if beyond:
+        assert detail.endswith(beyond)
+        worst = THIN[:3].sum(axis=1).max() - ("above" in measure) * THIN[:3].sum() / 3.0
+        assert answer["allocations"][0]["total"]["value"] == pytest.approx(worst, rel=1e-12)
+
+
+def test_one_scenario_carries_and_thousands_have_separators(client):
+    answer = _answer(client, THIN[:100], [{"kind": "expected_shortfall", "level": 0.99}])
+    assert ": 1 tail scenario carries expected_shortfall 0.99; 10,000 scenarios in all would do" in _detail(
+        answer, "no_error"
+    )
 
 
 def test_capital_is_spread_in_the_ratio_of_the_contributions(client):
