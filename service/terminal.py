@@ -84,9 +84,21 @@ def _heading(answer: Answer) -> Iterator[str]:
         yield heading + "\n"
         return
     yield f"{heading}, expected loss {_short(answer.expected_loss.value)}"
-    interval = answer.expected_loss.interval
-    if interval is not None:
-        yield f"lower and upper: {100.0 * interval.coverage:g} % intervals of the error of sampling\n"
+    coverage = next((ends.coverage for one in _figures(answer) if (ends := one.interval) is not None), None)
+    if coverage is not None:
+        yield f"lower and upper: {100.0 * coverage:g} % intervals of the error of sampling\n"
+
+
+def _figures(answer: MeasuresAnswer | AllocationsAnswer) -> Iterator[Figure]:
+    """Yield the figures whose intervals the tables show."""
+    if isinstance(answer, MeasuresAnswer):
+        for measured in answer.measures:
+            yield measured.total
+            yield from (one.figure for one in measured.stand_alone)
+            yield from (one.figure for one in measured.groups)
+        return
+    for allocated in answer.allocations:
+        yield from (allocated.total, *(one.contribution for one in (*allocated.sub_portfolios, *allocated.groups)))
 
 
 def _allocation(result: AllocationResult) -> str:

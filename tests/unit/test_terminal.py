@@ -65,6 +65,7 @@ def test_demo_prints_the_allocation_and_how_to_go_on(capsys):
     code, output, complaint = run(capsys, "demo")
     assert (code, complaint) == (0, "")
     assert "Ternholm Mutual" in output
+    assert "lower and upper: 95 % intervals" in output
     for name in ("value_at_risk 0.995", "expected_shortfall 0.99", "ferry_hull", "line: storm", "total"):
         assert name in output
     assert "no statement of required or available capital" in " ".join(output.split())
@@ -78,6 +79,7 @@ def test_a_table_a_person_can_read(capsys, small):
     assert (code, complaint) == (0, "")
     lines = output.splitlines()
     assert lines[0] == "4 scenarios, expected loss 4.125"
+    assert "lower and upper" not in output  # too few scenarios for such columns
     start = lines.index("expected_shortfall 0.5, euler")
     assert lines[start + 1].split() == ["sub-portfolio", "contribution", "share", "alone", "diversified"]
     rows = [line.split() for line in lines[start + 3 : start + 6]]
