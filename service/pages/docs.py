@@ -3,6 +3,8 @@
 from importlib.util import find_spec
 from pathlib import Path
 
+from service.representations.page import LINKS
+
 POLICY = (
     "default-src 'none'; script-src 'self'; style-src 'self' 'unsafe-inline'; img-src 'self' data:; "
     "connect-src 'self'; base-uri 'none'; form-action 'none'; frame-ancestors 'none'"
@@ -16,12 +18,14 @@ ASSETS = {
 }
 """File to media type."""
 
-PAGE = """<!doctype html>
+NAVIGATION = "".join(f'<a href="{path}" style="margin-right:1.2rem">{name}</a>' for path, name in LINKS)
+PAGE = f"""<!doctype html>
 <html lang="en"><head><meta charset="utf-8">
 <meta name="viewport" content="width=device-width, initial-scale=1">
 <title>tailrace API</title>
 <link rel="icon" href="/docs/favicon.png"><link rel="stylesheet" href="/docs/swagger-ui.css"></head>
-<body><div id="page"></div>
+<body><nav aria-label="tailrace" style="padding:1rem 1.25rem 0;font:15px sans-serif">{NAVIGATION}</nav>
+<div id="page"></div>
 <script src="/docs/swagger-ui-bundle.js"></script><script src="/docs/start.js"></script></body></html>
 """
 

@@ -1,10 +1,10 @@
 """What the service says of each problem: the page behind the `type` of a problem."""
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass
 from html import escape
 
-from service.pages.html import page
+from service.representations.page import page
 
 
 @dataclass(frozen=True, slots=True)
@@ -16,14 +16,42 @@ class ProblemPage:
     remedy: str
 
 
-def problem_page(code: str, status: int) -> str:
-    """Return the page of the problem `code`, answered with `status`."""
+def problem_page(code: str, status: int, *, root: str = "") -> str:
+    """Return the page of the problem `code`, answered with `status`; `root` as for every page."""
     said = PROBLEM_PAGES[code]
     return page(
         said.title,
         f"<p><code>{escape(code)}</code>, status {status}</p>\n"
         f"<h2>What it means</h2><p>{escape(said.meaning)}</p>\n"
         f"<h2>What to do</h2><p>{escape(said.remedy)}</p>\n",
+        root=root,
+    )
+
+
+def refusal_page(code: str, detail: str, faults: Sequence[str], instance: str, *, root: str = "") -> str:
+    """Return the page that a person sees instead of the one asked for.
+
+    Parameters
+    ----------
+    code, detail : str
+        Of the problem.
+    faults : sequence of str
+        What is wrong at single places.
+    instance : str
+        The request id.
+    root : str
+        As for every page.
+    """
+    said = PROBLEM_PAGES[code]
+    places = "".join(f"<li>{escape(words)}</li>" for words in faults)
+    return page(
+        said.title,
+        f"<p>{escape(detail)}</p>\n"
+        + (f"<ul>{places}</ul>\n" if places else "")
+        + f"<h2>What to do</h2><p>{escape(said.remedy)}</p>\n"
+        f'<p><a href="{escape(root)}/">The books on this server</a></p>\n'
+        f'<p class="soft">Request <code>{escape(instance)}</code></p>\n',
+        root=root,
     )
 
 
@@ -32,10 +60,10 @@ def problem_record(code: str, status: int) -> dict[str, object]:
     return {"type": f"/problems/{code}", "code": code, "status": status, **asdict(PROBLEM_PAGES[code])}
 
 
-def problem_index(statuses: Mapping[str, int], fault_codes: Mapping[str, str]) -> str:
+def problem_index(statuses: Mapping[str, int], fault_codes: Mapping[str, str], *, root: str = "") -> str:
     """Return the page that lists every problem, and the codes inside `errors`."""
     rows = "".join(
-        f'<dt><a href="/problems/{code}"><code>{code}</code></a> ({status})</dt>'
+        f'<dt><a href="{escape(root)}/problems/{code}"><code>{code}</code></a> ({status})</dt>'
         f"<dd>{escape(PROBLEM_PAGES[code].title)}</dd>\n"
         for code, status in statuses.items()
     )
@@ -47,6 +75,7 @@ def problem_index(statuses: Mapping[str, int], fault_codes: Mapping[str, str]) -
         "and where: a JSON pointer into your own request, the name of a parameter or a header, or a row "
         f"and column of a table.</p>\n<dl>{rows}</dl>\n<h2>Codes inside errors</h2><p>Besides the code of "
         f"the problem itself and those of single checks:</p><dl>{codes}</dl>\n",
+        root=root,
     )
 
 

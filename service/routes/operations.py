@@ -13,9 +13,10 @@ from starlette.routing import Route
 from service.desk import Desk
 from service.errors import NotFound
 from service.metrics import Metrics
-from service.pages import docs, html
+from service.pages import docs
 from service.pages.problems import problem_index, problem_page, problem_record
 from service.representations.formats import best
+from service.representations.page import POLICY
 from service.routes.conditional import unchanged
 from service.routes.doors import Handler, door
 from service.settings import Settings, variable
@@ -99,7 +100,7 @@ async def _metrics(metrics: Metrics, _request: Request) -> Response:
 async def _problems(statuses: Mapping[str, int], request: Request) -> Response:
     if _wants_json(request):
         return _record([problem_record(code, status) for code, status in statuses.items()])
-    return _page(problem_index(statuses, CODES))
+    return _page(problem_index(statuses, CODES, root=_root(request)))
 
 
 async def _problem(statuses: Mapping[str, int], request: Request) -> Response:
@@ -107,7 +108,15 @@ async def _problem(statuses: Mapping[str, int], request: Request) -> Response:
     status = statuses.get(code)
     if status is None:
         raise NotFound("There is no problem of this name; GET /problems lists all.")
-    return _record(problem_record(code, status)) if _wants_json(request) else _page(problem_page(code, status))
+    if _wants_json(request):
+        return _record(problem_record(code, status))
+    return _page(problem_page(code, status, root=_root(request)))
+
+
+def _root(request: Request) -> str:
+    """Return the path under which the service is mounted."""
+    root: str = request.scope.get("root_path", "")
+    return root
 
 
 async def _asset(name: str, _request: Request) -> Response:
@@ -121,7 +130,7 @@ def _wants_json(request: Request) -> bool:
 
 
 def _page(content: str) -> Response:
-    headers = {"content-security-policy": html.POLICY, "vary": "Accept"}
+    headers = {"content-security-policy": POLICY, "vary": "Accept"}
     return Response(content, headers=headers, media_type=HTML)
 
 

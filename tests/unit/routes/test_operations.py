@@ -9,6 +9,7 @@ import pytest
 from service import errors, problems
 from service.openapi import committed
 from service.pages import docs
+from service.representations.page import LINKS, POLICY
 from service.settings import Settings, variable
 from tests.serving import assert_problem, running
 
@@ -73,6 +74,14 @@ def test_pages_fetch_nothing_from_outside(client, path):
 def test_links_of_pages_lead_somewhere(client, path):
     for address in set(re.findall(r'href="(/[^"]*)"', client.get(path).text)):
         assert client.get(address).status_code == 200, address
+
+
+@pytest.mark.parametrize("path", PAGES)
+def test_every_page_leads_to_all_others(client, path):
+    page = client.get(path)
+    assert [f'href="{address}"' in page.text for address, _ in LINKS] == [True] * len(LINKS)
+    if path != "/docs":
+        assert page.headers["content-security-policy"] == POLICY
 
 
 def test_limits_are_the_settings(client):
