@@ -5,6 +5,7 @@ from dataclasses import asdict, dataclass
 from html import escape
 
 from service.representations.page import page
+from service.representations.wording import sentence
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,10 +44,10 @@ def refusal_page(code: str, detail: str, faults: Sequence[str], instance: str, *
         As for every page.
     """
     said = PROBLEM_PAGES[code]
-    places = "".join(f"<li>{escape(words)}</li>" for words in faults)
+    places = "".join(f"<li>{escape(sentence(words))}</li>" for words in faults)
     return page(
         said.title,
-        f"<p>{escape(detail)}</p>\n"
+        f"<p>{escape(sentence(detail))}</p>\n"
         + (f"<ul>{places}</ul>\n" if places else "")
         + f"<h2>What to do</h2><p>{escape(said.remedy)}</p>\n"
         f'<p><a href="{escape(root)}/">The books on this server</a></p>\n'

@@ -153,7 +153,7 @@ def book_path(root: str, book: str, rest: str) -> str:
 def more_of(root: str, book: str, part: str, measure: Sequence[tuple[str, str]] = ()) -> str:
     """Return a link to what a tenth more of a sub-portfolio would change; without `measure`, in those of the book."""
     query = urlencode([("sub_portfolio", part), ("scale", MORE), *measure])
-    return f'<a href="{escape(book_path(root, book, f"increments.csv?{query}"))}">{name(part)} × {MORE}</a>'
+    return f'<a href="{escape(book_path(root, book, f"increments.csv?{query}"))}">{name(part)}&nbsp;×&nbsp;{MORE}</a>'
 
 
 @dataclass(frozen=True, slots=True)

@@ -24,6 +24,12 @@ KINDS = (
     "value_at_risk",
     "wang",
 )
+BRIEF = {
+    "expected shortfall": "ES",
+    "value at risk": "VaR",
+    "standard deviation": "SD",
+    "loss of once in": "once in",
+}  # of kinds in words, where there is little room
 ABOVE_MEAN = " above mean"
 NARROW = dict.fromkeys("fijlrt'|!.,:;/\\[]()- I", 0.29)
 WIDE = dict.fromkeys("mwMW@%&", 0.87) | dict.fromkeys("ABCDEGHKNOPQRSUVXY…", 0.72)
@@ -148,6 +154,11 @@ def _kind_words(kind: str, numbers: Sequence[str]) -> str:
         case ("return_level", periods, *scenarios):
             return f"loss of once in {periods} periods" + "".join(f" of {one} scenarios" for one in scenarios)
     return " ".join([words, *numbers])
+
+
+def brief(words: str) -> str:
+    """Return the name of a measure in words, its kind as the trade shortens it."""
+    return next((words.replace(kind, short) for kind, short in BRIEF.items() if kind in words), words)
 
 
 def rule_words(rule: str) -> str:

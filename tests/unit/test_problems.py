@@ -104,7 +104,9 @@ def test_a_person_who_asked_for_a_page_gets_a_page(path, accept, page):
     assert (response.media_type == "text/html; charset=utf-8") == page
     if page:
         text = response.body.decode()
-        assert all(words in text for words in ("&lt;two&gt; are wrong", "level: no &lt;number&gt;", "id-1", 'href="/"'))
+        assert all(
+            words in text for words in ("&lt;two&gt; are wrong.", "Level: no &lt;number&gt;.", "id-1", 'href="/"')
+        )
         assert response.headers["content-security-policy"]
         assert response.headers["vary"] == "Accept"
     else:

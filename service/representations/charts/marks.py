@@ -7,7 +7,7 @@ from typing import NamedTuple
 from service.representations.charts.axes import Scale
 from service.representations.charts.canvas import EDGE, WIDER, Canvas, Look
 from service.representations.shapes import Figure, Measure, Measured
-from service.representations.wording import ABOVE_MEAN, Amounts, measure_words, odds, shortened, width
+from service.representations.wording import ABOVE_MEAN, Amounts, brief, measure_words, odds, shortened, width
 
 MOST = 12  # marks in a picture
 BESIDE = 5.0  # pixels between a line and its label
@@ -32,16 +32,19 @@ class Mark:
 
     def words(self, amounts: Amounts) -> str:
         """Return name and figure, and where it stands if that is not the figure."""
-        place = "" if self.at == self.value else f", at {amounts.text(self.at)}"
-        return f"{self.name}: {self._figure(amounts)}{place}"
+        return f"{self.name}: {self._figure(amounts)}{self._place(amounts)}"
 
     def short(self, amounts: Amounts, room: float, size: float) -> str:
-        """Return the name, cut to the room there is, and the whole figure."""
-        figure = f": {self._figure(amounts)}"
-        return shortened(self.name, room - width(figure, size), size) + figure
+        """Return the name in brief and the whole figure, and where it stands or a cut name as the room allows."""
+        name, figure = brief(self.name), f": {self._figure(amounts)}"
+        longer = f"{name}{figure}{self._place(amounts)}"
+        return longer if width(longer, size) <= room else shortened(name, room - width(figure, size), size) + figure
 
     def _figure(self, amounts: Amounts) -> str:
         return amounts.text(self.value) + ("" if self.at == self.value else ABOVE_MEAN)
+
+    def _place(self, amounts: Amounts) -> str:
+        return "" if self.at == self.value else f", at {amounts.text(self.at)}"
 
     def told(self, amounts: Amounts) -> str:
         """Return name, figure and interval, for a screen reader."""
@@ -116,6 +119,8 @@ class _Label(NamedTuple):
     """What it covers of its row, interval and all."""
     text: tuple[float, float]
     """What its words cover."""
+    whole: bool
+    """Whether nothing of its words is left out."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -148,15 +153,15 @@ class Flags:
         return laid
 
     def _label(self, one: Mark, row: int, side: str) -> _Label:
-        x, words = self.scale(one.at), one.words(self.amounts)
+        x, full = self.scale(one.at), one.words(self.amounts)
         room = (self.look.width - EDGE - x if side == "start" else x - EDGE) - BESIDE
-        if WIDER * width(words, self.look.size) > room:
-            words = one.short(self.amounts, room / WIDER, self.look.size)
+        fits = WIDER * width(full, self.look.size) <= room
+        words = full if fits else one.short(self.amounts, room / WIDER, self.look.size)
         wide = width(words, self.look.size) + BESIDE + 4
         left, right = text = (x - 4, x + wide) if side == "start" else (x - wide, x + 4)
         if one.lower is not None and one.upper is not None:
             left, right = min(left, self.scale(one.lower) - 4), max(right, self.scale(one.upper) + 4)
-        return _Label(one, row, side, words, x, (left, right), text)
+        return _Label(one, row, side, words, x, (left, right), text, fits)
 
     @property
     def height(self) -> float:
@@ -193,6 +198,6 @@ def _overlap(one: _Label, other: _Label) -> bool:
 
 def _faults(labels: Sequence[_Label]) -> tuple[int, int, int]:
     """Return what speaks against an arrangement: texts cut short, texts crossed by lines, rows used."""
-    cut = sum("…" in label.words for label in labels)
+    cut = sum(("…" in label.words) + (not label.whole) for label in labels)
     crossed = sum(one.text[0] < other.x < one.text[1] and other.row < one.row for one in labels for other in labels)
     return cut, crossed, sum(label.row for label in labels)

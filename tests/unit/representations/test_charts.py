@@ -13,7 +13,7 @@ from service.representations.charts import CHARTS, NARROW, Look, contributions_c
 from service.representations.charts.axes import Scale, log_ticks, round_ticks
 from service.representations.charts.marks import Flags
 from service.representations.png import png
-from service.representations.wording import Amounts, width
+from service.representations.wording import Amounts, brief, width
 from service.risk.distribution import distribution_of
 from tests.unit.representations.answers import MEASURES, ODD, asked, storms
 
@@ -103,7 +103,12 @@ def test_an_excess_over_the_mean_is_drawn_from_the_mean():
         figure = f": {amounts.text(mark.value)} above mean"
         assert mark.words(amounts).endswith(f"{figure}, at {amounts.text(mark.at)}")
         assert mark.words(amounts).count("mean") == 1
-        assert mark.short(amounts, width(figure, 12.0) + 60.0, 12.0).endswith(f"…{figure}")
+        name = brief(mark.name)
+        whole = f"{name}{figure}, at {amounts.text(mark.at)}"
+        assert name != mark.name
+        assert mark.short(amounts, width(whole, 12.0), 12.0) == whole
+        assert mark.short(amounts, width(whole, 12.0) - 1.0, 12.0) == f"{name}{figure}"
+        assert mark.short(amounts, width(figure, 12.0) + 20.0, 12.0).endswith(f"…{figure}") or len(name) < 4
     assert found.marks[0].at == pytest.approx(np.sort(storms().sum(axis=1))[1799], rel=1e-12)
 
 

@@ -29,7 +29,7 @@ BROKEN = BookHead(name="broken", reason="row 3 of <losses.csv> is short")
 def test_the_front_page_lists_books_and_leads_on():
     page = assert_page(index_page([BROKEN, SOUND], version="1.2.3"))
     assert page.row("report on harbour")[1:4] == ["A <i>name</i>, amounts in EUR", "7", "10,000"]
-    assert page.row("report on harbour")[5] == "quay & pier × 1.1"
+    assert page.row("report on harbour")[5] == "quay & pier\xa0×\xa01.1"
     assert page.row("broken") == ["broken", "row 3 of <losses.csv> is short"]
     assert "/v1/books/harbour/increments.csv?sub_portfolio=quay+%26+pier&scale=1.1" in page.links
     wanted = {"/v1/books/harbour/report", "/v1/books/harbour/allocations.csv", "/docs", "/spreadsheets", "/problems"}

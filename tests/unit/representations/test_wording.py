@@ -4,6 +4,7 @@ import pytest
 
 from service.representations.wording import (
     Amounts,
+    brief,
     level_words,
     measure_words,
     odds,
@@ -86,6 +87,11 @@ def test_percentages_and_odds():
 )
 def test_names_of_measures(name, words):
     assert measure_words(name) == words
+
+
+def test_names_in_brief():
+    names = ("value at risk 99.5 %", "2 × standard deviation", "loss of once in 200 periods", "wang 0.5")
+    assert [brief(one) for one in names] == ["VaR 99.5 %", "2 × SD", "once in 200 periods", "wang 0.5"]
 
 
 def test_long_names_are_cut_to_the_room():
