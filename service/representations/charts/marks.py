@@ -30,21 +30,24 @@ class Mark:
     """Ends of its interval, on the axis of losses."""
     coverage: float | None = None
 
+    @property
+    def shifted(self) -> bool:
+        """Whether it does not stand at its own figure."""
+        return self.at != self.value
+
     def words(self, amounts: Amounts) -> str:
         """Return name and figure, and where it stands if that is not the figure."""
-        return f"{self.name}: {self._figure(amounts)}{self._place(amounts)}"
+        place = f"{ABOVE_MEAN}, at {amounts.text(self.at)}" if self.shifted else ""
+        return f"{self.name}: {amounts.text(self.value)}{place}"
 
     def short(self, amounts: Amounts, room: float, size: float) -> str:
         """Return the name in brief and the whole figure, and where it stands or a cut name as the room allows."""
-        name, figure = brief(self.name), f": {self._figure(amounts)}"
-        longer = f"{name}{figure}{self._place(amounts)}"
+        name, figure, place = brief(self.name), f": {amounts.text(self.value)}", ""
+        if self.shifted:
+            sign = "-" if self.value < 0.0 else "+"
+            figure, place = f": mean {sign} {amounts.text(abs(self.value))}", f" = {amounts.text(self.at)}"
+        longer = f"{name}{figure}{place}"
         return longer if width(longer, size) <= room else shortened(name, room - width(figure, size), size) + figure
-
-    def _figure(self, amounts: Amounts) -> str:
-        return amounts.text(self.value) + ("" if self.at == self.value else ABOVE_MEAN)
-
-    def _place(self, amounts: Amounts) -> str:
-        return "" if self.at == self.value else f", at {amounts.text(self.at)}"
 
     def told(self, amounts: Amounts) -> str:
         """Return name, figure and interval, for a screen reader."""
@@ -198,6 +201,6 @@ def _overlap(one: _Label, other: _Label) -> bool:
 
 def _faults(labels: Sequence[_Label]) -> tuple[int, int, int]:
     """Return what speaks against an arrangement: texts cut short, texts crossed by lines, rows used."""
-    cut = sum(("…" in label.words) + (not label.whole) for label in labels)
+    cut = sum((not label.whole) + ("…" in label.words) + label.words.startswith("…") for label in labels)
     crossed = sum(one.text[0] < other.x < one.text[1] and other.row < one.row for one in labels for other in labels)
     return cut, crossed, sum(label.row for label in labels)

@@ -11,7 +11,7 @@ import pytest
 from service.errors import InvalidValue, NotAcceptable
 from service.representations.charts import CHARTS, NARROW, Look, contributions_chart, draw, exceedance_chart, marks_of
 from service.representations.charts.axes import Scale, log_ticks, round_ticks
-from service.representations.charts.marks import Flags
+from service.representations.charts.marks import Flags, Mark
 from service.representations.png import png
 from service.representations.wording import Amounts, brief, width
 from service.risk.distribution import distribution_of
@@ -103,8 +103,8 @@ def test_an_excess_over_the_mean_is_drawn_from_the_mean():
         figure = f": {amounts.text(mark.value)} above mean"
         assert mark.words(amounts).endswith(f"{figure}, at {amounts.text(mark.at)}")
         assert mark.words(amounts).count("mean") == 1
-        name = brief(mark.name)
-        whole = f"{name}{figure}, at {amounts.text(mark.at)}"
+        name, figure = brief(mark.name), f": mean + {amounts.text(mark.value)}"
+        whole = f"{name}{figure} = {amounts.text(mark.at)}"
         assert name != mark.name
         assert mark.short(amounts, width(whole, 12.0), 12.0) == whole
         assert mark.short(amounts, width(whole, 12.0) - 1.0, 12.0) == f"{name}{figure}"
@@ -341,3 +341,11 @@ def test_a_distribution_may_be_weighted(one_measure):
     parsed(draw("distribution", one_measure.answer, found, one_measure.marks))
     plain = SimpleNamespace(currency=None, horizon=None)
     assert "loss" in texts(exceedance_chart(found, one_measure.marks, plain))
+
+
+def test_a_mark_keeps_its_name_where_the_other_side_has_room():
+    scale = Scale(0.0, 40.0, 54.0, 300.0)
+    mark = Mark(name="value at risk 99.5 %", value=22_843_948.0, at=27.0)
+    (label,) = Flags([mark], scale, Amounts.of([mark.value], "EUR thousand"), Look(width=NARROW)).placed()
+    assert label.side == "end"
+    assert label.words.startswith("V")
