@@ -12,13 +12,9 @@ from starlette.routing import Match
 from service import errors
 from service.errors import Fault, TailraceError
 from service.middleware import PROBLEM, REQUEST_ID, App, Scope
-from service.pages.problems import PROBLEM_PAGES, refusal_page
-from service.representations.formats import HTML, best
-from service.representations.page import POLICY
+from service.pages.problems import PROBLEM_PAGES
 
 MEDIA_TYPE = "application/problem+json"
-READ_BY_PEOPLE = ("/v1/books/{name}/report", "/v1/books/{name}/report.html")
-"""Paths that answer a page, and problems as a page to a caller who weighs it higher."""
 
 PROBLEMS: dict[type[TailraceError], int] = {
     errors.Malformed: 400,
@@ -83,8 +79,6 @@ def answer(scope: Scope, error: Exception) -> Response:
     """Return the answer to whatever was raised while serving the request of `scope`."""
     known = error if isinstance(error, TailraceError) else _translated(scope, error)
     scope[PROBLEM] = known.code
-    if _wants_page(scope):
-        return _page(scope, known)
     # the ASCII form, since a text of the caller may hold half a surrogate pair that no UTF-8 has
     content = json.dumps(body(known, scope[REQUEST_ID]), allow_nan=False, separators=(",", ":")).encode()
     return Response(content, status_of(known), _headers(known), MEDIA_TYPE)
@@ -110,22 +104,6 @@ def _place(fault: Fault) -> dict[str, Any]:
     names = ("pointer", "parameter", "header", "part", "row", "column")
     where = {name: value for name in names if (value := getattr(fault, name)) is not None}
     return {"code": fault.code, "detail": fault.detail, **where}
-
-
-def _wants_page(scope: Scope) -> bool:
-    """Return whether a problem is for a person who asked for a page."""
-    accept = ", ".join(value.decode("latin-1") for name, value in scope["headers"] if name == b"accept")
-    path = getattr(scope.get("endpoint"), "path", None)
-    return path in READ_BY_PEOPLE and best(accept, (MEDIA_TYPE, HTML.media_type)) == HTML.media_type
-
-
-def _page(scope: Scope, error: TailraceError) -> Response:
-    """Return the problem as a page."""
-    faults = [f"{fault.parameter}: {fault.detail}" if fault.parameter else fault.detail for fault in error.faults]
-    others = [] if [fault.detail for fault in error.faults] == [error.detail] else faults
-    content = refusal_page(error.code, error.detail, others, scope[REQUEST_ID], root=scope.get("root_path", ""))
-    headers = {**_headers(error), "content-security-policy": POLICY, "vary": "Accept"}
-    return Response(content, status_of(error), headers, HTML.content_type)
 
 
 def _headers(error: TailraceError) -> dict[str, str]:

@@ -5,8 +5,8 @@ from typing import Any
 
 from service import pulls, query, values
 from service.openapi.calculations import CHART, WORDS_OF_FORMS
-from service.openapi.parts import BOM, COMPONENTS, REFRESH, REQUEST_ID, Json, parameter, reference, refusal, refusals
-from service.representations.formats import FORMS_OF_BOOKS, HTML, Form
+from service.openapi.parts import BOM, COMPONENTS, REFRESH, REQUEST_ID, Json, parameter, reference, refusals
+from service.representations.formats import FORMS_OF_BOOKS, Form
 from service.routes.books import PATHS
 from service.schemas.requests import AllocationsRequest, IncrementsRequest, ScaledCopy
 from service.schemas.results import (
@@ -75,8 +75,7 @@ SAID: Mapping[str, tuple[str, str, str]] = {
         "A printable page on a book",
         (
             "Writes the allocations of a book as a page that people read: with pictures, errors in words, method and "
-            "provenance. It is the only form that rounds. Problems are a page too where `Accept` weighs `text/html` "
-            "higher."
+            "provenance. It is the only form that rounds."
         ),
     ),
 }
@@ -129,16 +128,9 @@ def _operation(kind: str, path: str, schemas: Json) -> Json:
                 "description": "The caller has this answer already.",
                 "headers": {"X-Request-ID": REQUEST_ID, "ETag": _header("Its tag.")},
             },
-            **_refusals(kind),
+            **refusals(*(status for status in STATUSES if status != 404 or kind != "books")),  # noqa: PLR2004
         },
     }
-
-
-def _refusals(kind: str) -> Json:
-    """Return the problems of a question; those of a page are pages too."""
-    if kind == "report":
-        return {str(status): refusal(status, HTML.media_type) for status in STATUSES}
-    return refusals(*(status for status in STATUSES if status != 404 or kind != "books"))  # noqa: PLR2004
 
 
 def _content(kind: str, form: Form) -> Json:

@@ -31,8 +31,8 @@ def refusals(*statuses: int) -> Json:
     return {str(status): {"$ref": f"#/components/responses/Problem{status}"} for status in sorted(statuses)}
 
 
-def refusal(status: int, *others: str) -> Json:
-    """Return the response of one status: the problems that it stands for, as text of `others` too."""
+def refusal(status: int) -> Json:
+    """Return the response of one status: the problems that it stands for."""
     codes = [code for code, known in problems.STATUSES.items() if known == status]
     headers: Json = {"X-Request-ID": REQUEST_ID}
     if status == problems.STATUSES["busy"]:
@@ -43,10 +43,7 @@ def refusal(status: int, *others: str) -> Json:
     return {
         "description": " ".join(f"`{code}`: {PROBLEM_PAGES[code].title}." for code in codes),
         "headers": headers,
-        "content": {
-            problems.MEDIA_TYPE: {"schema": reference("Problem")},
-            **{media_type: {"schema": {"type": "string"}} for media_type in others},
-        },
+        "content": {problems.MEDIA_TYPE: {"schema": reference("Problem")}},
     }
 
 

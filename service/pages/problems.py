@@ -1,11 +1,10 @@
 """What the service says of each problem: the page behind the `type` of a problem."""
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import asdict, dataclass
 from html import escape
 
 from service.representations.page import page
-from service.representations.wording import sentence
 
 
 @dataclass(frozen=True, slots=True)
@@ -25,33 +24,6 @@ def problem_page(code: str, status: int, *, root: str = "") -> str:
         f"<p><code>{escape(code)}</code>, status {status}</p>\n"
         f"<h2>What it means</h2><p>{escape(said.meaning)}</p>\n"
         f"<h2>What to do</h2><p>{escape(said.remedy)}</p>\n",
-        root=root,
-    )
-
-
-def refusal_page(code: str, detail: str, faults: Sequence[str], instance: str, *, root: str = "") -> str:
-    """Return the page that a person sees instead of the one asked for.
-
-    Parameters
-    ----------
-    code, detail : str
-        Of the problem.
-    faults : sequence of str
-        What is wrong at single places.
-    instance : str
-        The request id.
-    root : str
-        As for every page.
-    """
-    said = PROBLEM_PAGES[code]
-    places = "".join(f"<li>{escape(sentence(words))}</li>" for words in faults)
-    return page(
-        said.title,
-        f"<p>{escape(sentence(detail))}</p>\n"
-        + (f"<ul>{places}</ul>\n" if places else "")
-        + f"<h2>What to do</h2><p>{escape(said.remedy)}</p>\n"
-        f'<p><a href="{escape(root)}/">The books on this server</a></p>\n'
-        f'<p class="soft">Request <code>{escape(instance)}</code></p>\n',
         root=root,
     )
 

@@ -1,7 +1,6 @@
 """The body of a problem, unit by unit; every way to get one over HTTP is in routes/."""
 
 import json
-from types import SimpleNamespace
 
 import pytest
 from starlette.exceptions import HTTPException
@@ -82,35 +81,6 @@ def test_whatever_is_raised_has_an_answer(error, status, code):
     assert given[PROBLEM] == code
     assert b"words" not in response.body
     assert response.headers.get("retry-after") == ("7" if code == "busy" else None)
-
-
-@pytest.mark.parametrize(
-    ("path", "accept", "page"),
-    [
-        ("/v1/books/{name}/report", b"text/html,application/xhtml+xml,*/*;q=0.8", True),
-        ("/v1/books/{name}/report.html", b"text/html", True),
-        ("/v1/books/{name}/report", b"*/*", False),
-        ("/v1/books/{name}/report", b"text/html;q=0.5, application/problem+json", False),
-        ("/v1/books/{name}/allocations", b"text/html,*/*;q=0.8", False),
-    ],
-)
-def test_a_person_who_asked_for_a_page_gets_a_page(path, accept, page):
-    error = errors.InvalidValue("<two> are wrong", faults=[
-        Fault(detail="no <number>", code="b", parameter="level"), Fault(detail="c", code="d", pointer="/a"),
-    ])  # fmt: skip
-    given = {**scope(), "headers": [(b"accept", accept)], "endpoint": SimpleNamespace(path=path)}
-    response = answer(given, error)
-    assert response.status_code == 422
-    assert (response.media_type == "text/html; charset=utf-8") == page
-    if page:
-        text = response.body.decode()
-        assert all(
-            words in text for words in ("&lt;two&gt; are wrong.", "Level: no &lt;number&gt;.", "id-1", 'href="/"')
-        )
-        assert response.headers["content-security-policy"]
-        assert response.headers["vary"] == "Accept"
-    else:
-        assert json.loads(response.body)["detail"] == "<two> are wrong"
 
 
 def test_allow_is_that_of_all_routes_of_a_path():

@@ -283,14 +283,6 @@ def test_a_sheet_of_a_hundred_cells_costs_one_computation(folder, counted):
         assert total in client.get("/metrics").text
 
 
-def test_a_misspelt_report_is_a_page_for_a_person_and_json_for_a_program(client):
-    path = "/v1/books/harbuor/report"
-    page = client.get(path, headers={"accept": "text/html,*/*;q=0.8"})
-    assert (page.status_code, page.headers["content-type"]) == (404, TYPES["html"])
-    assert page.headers["content-security-policy"] == POLICY
-    assert_problem(client.get(path), "not_found")
-
-
 def test_the_row_of_a_total_sums_what_parts_have(client):
     table = list(rows(client.get(f"{HOME}/allocations.csv?{ES}")))
     parts = [row for row in table if row["scope"] == "sub_portfolio"]
