@@ -139,6 +139,10 @@ class Notes:
             less = " less the mean" if measure.above == "mean" else ""
             counts += f"; the level is beyond the set: the figure is simply the worst loss{less}"
         return {
+            "infinite_variance": (
+                f"the law of a loss has too few moments for {measure.name} to have a standard error, however many "
+                "scenarios there are"
+            ),
             "thin_tail": f"the error rests on few scenarios: {counts}",
             "no_error": f"too few scenarios to say how sure a figure is: {counts}",
             "few_scenarios": f"a few scenarios carry the error, so intervals may be too narrow: {counts}",

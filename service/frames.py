@@ -7,6 +7,7 @@ from math import ceil
 from typing import Literal
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy import special
 
 from service.errors import Fault, Limit, LimitExceeded, NotDefined
@@ -123,12 +124,11 @@ class Framed:
         known = np.array([_has_error(measure, law) for law in laws])
         if of == "parts":
             known &= _has_error(measure, self.total)
-        if known.all():
-            return figures_
-        errors, lower, upper = (
-            np.where(known, part, np.nan) for part in (figures_.standard_errors, figures_.lower, figures_.upper)
-        )
-        return replace(figures_, standard_errors=errors, lower=lower, upper=upper).remarked("no_error")
+        return without_errors(figures_, ~known)
+
+    def law_of(self, column: int) -> Tails:
+        """Return what is known of the law of a sub-portfolio; thin tails where nothing is."""
+        return self.columns[column] if self.columns else Tails()
 
 
 def framed(source: Source, demand: Demand, stop: StopWhen | None, work: Work, settings: Settings) -> Framed:
@@ -229,6 +229,26 @@ def _relative_errors(made: Framed, demand: Demand) -> list[float]:
         ratio = float(total.standard_errors[0]) / abs(float(total.values[0])) if total.values[0] != 0.0 else np.inf
         ratios.append(ratio if np.isfinite(ratio) else np.inf)
     return ratios
+
+
+def sure(measure: RiskMeasure, figures_: Estimates, *laws: Tails) -> Estimates:
+    """Take the errors from figures where one of the laws that they rest on has none."""
+    return without_errors(figures_, np.full(figures_.values.shape, not has_error(measure, *laws)))
+
+
+def without_errors(figures_: Estimates, unknown: NDArray[np.bool_]) -> Estimates:
+    """Take the errors from the figures (c,) whose laws have none, by `unknown` (c,)."""
+    if not unknown.any():
+        return figures_
+    errors, lower, upper = (
+        np.where(unknown, np.nan, part) for part in (figures_.standard_errors, figures_.lower, figures_.upper)
+    )
+    return replace(figures_, standard_errors=errors, lower=lower, upper=upper).remarked("infinite_variance")
+
+
+def has_error(measure: RiskMeasure, *laws: Tails) -> bool:
+    """Return whether all laws have the moments that an error of the measure needs."""
+    return all(_has_error(measure, law) for law in laws)
 
 
 def _has_error(measure: RiskMeasure, law: Tails) -> bool:

@@ -14,6 +14,7 @@ from service.payloads import json_text, row_from_json
 from service.provenance import losses_digest, text_digest
 from service.risk.components import ObservedComponent
 from service.risk.components.portfolio import SubPortfolioTerms
+from service.risk.covers import Tails
 from service.risk.factors import FactorModel
 from service.risk.frame import Frame
 from service.risk.history import history_losses
@@ -43,6 +44,8 @@ class Read:
     candidate : Candidate or None
     loss : ndarray of shape (n,) or None
         In scenario order.
+    laws : tuple of two Tails
+        Of the candidate, and of the book with it, as far as they are known.
     error : CallerError or None
     """
 
@@ -50,6 +53,7 @@ class Read:
     name: str | None
     candidate: Candidate | None = None
     loss: Array | None = None
+    laws: tuple[Tails, Tails] = (Tails(), Tails())  # frozen: thin tails
     error: CallerError | None = None
 
 
@@ -128,11 +132,12 @@ class Reader:
                         candidate, loss = self._scaled(candidate, candidate.scaled)
                 else:
                     self._check(candidate, document)
+                laws = self._laws(candidate)
         except (TooLong, Malformed):  # the whole is late, or no JSON
             raise
         except CallerError as error:
             return Read(number, name, error=error)
-        return Read(number, candidate.id, candidate, loss)
+        return Read(number, candidate.id, candidate, loss, laws)
 
     def _candidate(self, number: int, document: Any) -> Candidate:
         """Return the model of a candidate; its values are looked at apart, many at a time."""
@@ -175,14 +180,11 @@ class Reader:
         return candidate, loss
 
     def _check(self, candidate: Candidate, document: Any) -> None:
-        """Refuse components that do not fit the base, or whose loss does not have the measures asked for."""
+        """Refuse components that do not fit the base."""
         terms = [_terms(candidate)]
         if self.source.plan is not None:
             with _here():
-                law = self._model(terms).existence()[1]
-            reason = missing(self.measures, law)
-            if reason is not None:
-                raise InvalidValue.at("/components", reason, code="infinite_figure")
+                self._model(terms)
         elif self.source.changes is not None:
             try:
                 OBSERVED.validate_json(json_text(document["components"]))
@@ -194,6 +196,37 @@ class Reader:
         else:
             detail = "the base is a table of scenarios: a candidate gives its values in each of them"
             raise InvalidValue.at("/components", detail, code="not_allowed")
+
+    def _laws(self, candidate: Candidate) -> tuple[Tails, Tails]:
+        """Return what is known of the laws of a candidate and of the book with it.
+
+        Raises
+        ------
+        InvalidValue
+            Where one of them does not have a measure that is asked for.
+        """
+        plan, tails = self.source.plan, self.source.tails
+        if plan is None or tails is None:
+            return Tails(), Tails()
+        *each, total = tails
+        book, own, place, gone = list(plan.model.portfolio.sub_portfolios), Tails(), "/values", False
+        if candidate.scaled is not None:
+            place, step = "/scaled", candidate.scaled.step
+            column = [one.id for one in book].index(candidate.scaled.sub_portfolio)
+            own = each[column].times(step)
+            book[column] = replace(book[column], scale=candidate.scaled.scale)
+            gone = candidate.scaled.scale == 0.0
+        elif candidate.components is not None:
+            place, terms = "/components", _terms(candidate)
+            own = self._model([terms]).existence()[1]
+            book.append(terms)
+        exact = gone or any(measure.needs.exponential > 0.0 for measure in self.measures)
+        enlarged = self._model(book).existence()[1] if exact else total.plus(own)
+        for law, words in ((own, ""), (enlarged, "of the book with it, ")):
+            reason = missing(self.measures, law)
+            if reason is not None:
+                raise InvalidValue.at(place, words + reason, code="infinite_figure")
+        return own, enlarged
 
     def _losses(self, terms: Sequence[SubPortfolioTerms]) -> Array:
         """Return the losses of candidates made of components, shape (n, c)."""

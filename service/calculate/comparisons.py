@@ -13,11 +13,12 @@ from service.calculate.calculation import Calculation
 from service.canonical import canonical_comparison
 from service.errors import CallerError, Fault, InvalidValue, pointing
 from service.executors import Work
-from service.frames import Demand
+from service.frames import Demand, has_error, without_errors
 from service.intake import Intake
 from service.provenance import document_digest
-from service.risk.comparisons import compared, parts_of
+from service.risk.comparisons import Change, compared, parts_of
 from service.risk.measures import RiskMeasure
+from service.risk.uncertainty import Estimates
 from service.schemas.losses import FactorLosses, HistoryLosses, Losses, ScenarioLosses
 from service.schemas.requests import ComparisonsRequest, MeasuresRequest
 from service.schemas.results import ComparedBook, ComparisonResult, ComparisonsAnswer, Labels, Provenance
@@ -103,9 +104,23 @@ class Comparisons:
                 for first, second in zip(*pooled, strict=True)
             ]
             change = replace(change, changes=self.after.calculation.made.combined(change.changes, parts))
+        change = replace(change, changes=self._surely(measure, change))
         self.notes.of_estimates(number, measure, change.changes)
         totals = [one.calculation.total(number, measure) for one in books]
         return change_result(measure.name, totals, change, coverage)
+
+    def _surely(self, measure: RiskMeasure, change: Change) -> Estimates:
+        """Return changes without the errors that the laws of the losses do not have."""
+        unknown = np.zeros(len(change.ids) + 1, dtype=bool)
+        for book in (self.before, self.after):
+            made = book.calculation.made
+            if not has_error(measure, made.total):
+                unknown[-1] = True
+            for row, name in enumerate(change.ids):
+                inside = name in book.ids
+                if inside and not has_error(measure, made.total, made.law_of(book.ids.index(name))):
+                    unknown[row] = True
+        return without_errors(change.changes, unknown)
 
     def _compare_labels(self) -> None:
         """Refuse two currencies, and note other labels that make a change hard to read."""

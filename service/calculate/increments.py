@@ -13,10 +13,12 @@ from service.calculate.candidates import Read, Reader
 from service.canonical import canonical_base
 from service.errors import CallerError, LossesChanged, TooLong, pointing
 from service.executors import Work
-from service.frames import Demand, Framed
+from service.frames import Demand, Framed, sure
 from service.intake import Intake
 from service.provenance import document_digest
+from service.risk.covers import Tails
 from service.risk.increments import Base, Increment, base_of, increments_of
+from service.risk.measures import RiskMeasure
 from service.risk.quantiles import Array
 from service.schemas.requests import Candidate, IncrementsRequest
 from service.schemas.results import BaseFigure, CandidateFigures, CandidateResult, IncrementsAnswer
@@ -113,7 +115,7 @@ class Increments(Calculation):
             return CandidateResult(read.name, "refused", None, [], self._problem(read.error)), notes
         try:
             with pointing(f"/candidates/{read.number}"):
-                parts = self._figures(read.candidate, bases, read.loss, notes)
+                parts = self._figures(read.candidate, read.laws, bases, read.loss, notes)
         except TooLong:
             raise
         except CallerError as error:
@@ -126,7 +128,7 @@ class Increments(Calculation):
         return None if error is None else self.describe(error)
 
     def _figures(
-        self, candidate: Candidate, bases: list[list[Base]], loss: Array, notes: Notes
+        self, candidate: Candidate, laws: tuple[Tails, Tails], bases: list[list[Base]], loss: Array, notes: Notes
     ) -> list[CandidateFigures]:
         """Return what a candidate changes in each measure; the first frame is that of all scenarios."""
         pooled, *others = bases
@@ -139,11 +141,22 @@ class Increments(Calculation):
             ]
             found = [self._combined(one, each) for one, *each in zip(found, *apart, strict=True)]
         figures = []
-        for number, (base, increment) in enumerate(zip(pooled, found, strict=True)):
+        for number, (base, seen) in enumerate(zip(pooled, found, strict=True)):
+            increment = self._surely(base.measure, seen, *laws)
             for estimates in increment.estimated:
                 notes.of_estimates(number, base.measure, estimates)
             figures.append(answers.candidate_figures(self.request, candidate, number, base, increment, self.ids, notes))
         return figures
+
+    def _surely(self, measure: RiskMeasure, seen: Increment, own: Tails, enlarged: Tails) -> Increment:
+        """Return an increment without the errors that the laws of the losses do not have."""
+        return replace(
+            seen,
+            total_with=sure(measure, seen.total_with, enlarged),
+            increment=sure(measure, seen.increment, self.made.total, enlarged),
+            contribution=sure(measure, seen.contribution, own, enlarged),
+            stand_alone=sure(measure, seen.stand_alone, own),
+        )
 
     def _combined(self, pooled: Increment, parts: Sequence[Increment]) -> Increment:
         """Return an increment with the errors that those of the scramblings show."""

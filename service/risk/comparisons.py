@@ -134,7 +134,8 @@ def compared(  # two of everything
             pairs[place] = first, second
             changes[place] = np.nan_to_num(second) - np.nan_to_num(first)
         errors[:, place] = _spread(then, then_parts, old, now, now_parts, new, paired=paired)
-    figures = _estimates(measure, now, changes, errors, coverage)
+    counts = [None if tail is None else float(tail[0]) for tail in (_tail_of(measure, then), _tail_of(measure, now))]
+    figures = _estimates(measure, now, changes, errors, _fewest(states, counts), coverage)
     return Change(then_parts.total, now_parts.total, ids, tuple(states), pairs, figures)
 
 
@@ -167,11 +168,25 @@ def _spread(  # two of everything
     return np.array([scale * np.sqrt(variance), skewness, 1.0 / fourth])
 
 
-def _estimates(measure: RiskMeasure, frame: Frame, changes: Array, errors: Array, coverage: float) -> Estimates:
+def _tail_of(measure: RiskMeasure, frame: Frame) -> Array | None:
+    return measure.tail_of(frame.ranking(measure).ordered)
+
+
+def _fewest(states: Sequence[State], counts: Sequence[float | None]) -> Array | None:
+    """Return the tail scenarios of the thinner book that each change, and at last the total, rests on."""
+    then, now = counts
+    if then is None or now is None:
+        return None
+    of = {"new": now, "gone": then, "changed": min(then, now)}
+    return np.array([*(of[state] for state in states), min(then, now)])
+
+
+def _estimates(  # what a change is judged by
+    measure: RiskMeasure, frame: Frame, changes: Array, errors: Array, tail: Array | None, coverage: float
+) -> Estimates:
     """Return changes with their intervals, judged as the measure asks."""
     if not frame.table.sampled:
         return Estimates.exact(changes)
     of = Spread(errors[0], errors[1], errors[2])
-    tail = measure.tail_of(frame.ranking(measure).ordered)
-    counts = of.effective if tail is None else np.broadcast_to(tail, changes.shape)
+    counts = of.effective if tail is None else tail
     return judged(measure, leaning_estimates(changes, of, usual_lean(of), coverage=coverage, tail_scenarios=counts))

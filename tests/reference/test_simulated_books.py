@@ -102,7 +102,7 @@ def test_a_standard_deviation_without_a_fourth_moment_has_no_error():
     assert result.total.standard_error is None
     assert result.total.interval is None
     assert all(row.contribution.standard_error is None for row in result.sub_portfolios)
-    assert "no_error" in {note.code for note in answer.notes}
+    assert "infinite_variance" in {note.code for note in answer.notes}
 
 
 def test_risk_modules_aggregated_by_correlation():

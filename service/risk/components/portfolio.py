@@ -29,12 +29,16 @@ FEW_FACTORS = 0.06  # filled part of the exposure matrix up to which factors are
 
 @dataclass(frozen=True, slots=True)
 class SubPortfolioTerms:
-    """A sub-portfolio as the arithmetic sees it: components are added, the sign applied, then each cover step."""
+    """A sub-portfolio as the arithmetic sees it: components are added, the sign applied, then each cover step.
+
+    With a `scale` it stands for so many times its loss in questions of existence; losses are those of one.
+    """
 
     id: str
     components: tuple[Component, ...]
     sign: Literal["loss", "profit"] = "loss"
     cover: tuple[CoverStep, ...] = ()
+    scale: float = 1.0
 
     @property
     def factor(self) -> float:
@@ -51,9 +55,9 @@ class SubPortfolioTerms:
         return f"sub_portfolio/{self.id}/{number}"
 
     def tails(self, factors: FactorSet) -> Tails:
-        """Return which moments of its loss exist, after sign and cover."""
+        """Return which moments of its loss exist, after sign, cover and scale."""
         groups = [(frozenset((*one.used, *one.used_scores)), one.tails(factors)) for one in self.components]
-        return tails_after(self.cover, together(groups, factors).times(self.factor))
+        return tails_after(self.cover, together(groups, factors).times(self.factor)).times(self.scale)
 
 
 def together(parts: Sequence[tuple[frozenset[str], Tails]], factors: FactorSet) -> Tails:
@@ -368,6 +372,9 @@ def _largest_eigenvalue(form: Array, correlation: Array) -> float:
 
 def _exponents(terms: SubPortfolioTerms, factors: FactorSet, sign: float) -> tuple[Exponents, float]:
     """Return the coefficients of a sub-portfolio's loss (times `sign`), and the least rate of its independent parts."""
+    if terms.scale == 0.0:
+        return {}, math.inf
+    sign *= terms.scale
     kept = tails_after(terms.cover, Tails(upper_exponential=1.0, lower_exponential=1.0))
     rate = kept.upper_exponential if sign > 0.0 else kept.lower_exponential
     sums: Exponents = {}

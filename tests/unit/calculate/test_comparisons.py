@@ -161,3 +161,35 @@ def test_labels_that_make_a_change_hard_to_read_are_noted():
         ("labels_differ", "/after/valuation_date"),
     ]
     assert "2026-09-30, later than" in notes[1].detail
+
+
+def test_no_errors_that_the_laws_do_not_have():
+    """A Pareto law of shape 1.5 has no variance, so neither its part nor the total has an error on either side."""
+    laws = {"x": law("normal", mean=0.0, standard_deviation=1.0), "y": law("pareto", scale=1.0, shape=1.5)}
+
+    def book(parts):
+        return factor_model(laws, parts, dependence=law("independent"), scenarios=20_000)
+
+    light, heavy = book({"a": linear(x=1.0)}), book({"a": linear(x=1.0), "b": linear(y=1.0)})
+    for before, after in ((light, heavy), (heavy, light)):
+        answer = compared(before, after, [es(0.99)])
+        [one] = answer.comparisons
+        assert one.change.standard_error is None
+        assert all(part.change.standard_error is None for part in one.sub_portfolios)
+        assert "infinite_variance" in {note.code for note in answer.notes}
+    assert compared(light, light, [es(0.99)]).comparisons[0].change.standard_error == 0.0
+
+
+def test_a_change_is_judged_by_the_thinner_book():
+    few, many = ({"kind": "scenarios", "sub_portfolios": [{"id": "a"}], "values": rows} for rows in tables(300, 20_000))
+    for before, after in ((few, many), (many, few)):
+        answer = compared(before, after, [es(0.99)])
+        [one] = answer.comparisons
+        assert one.change.standard_error is None
+        assert one.change.tail_scenarios == pytest.approx(3.0)
+        assert "3 tail scenarios" in " ".join(note.detail for note in answer.notes if note.code == "no_error")
+
+
+def tables(*sizes):
+    rng = np.random.default_rng(1)
+    return [rng.standard_normal((size, 1)).tolist() for size in sizes]

@@ -301,3 +301,40 @@ def test_time_that_is_over_refuses_the_whole():
             deals() + [{"id": f"c{n}", "components": [linear(x=1.0)]} for n in range(100)],
             work=Work(1, checkpoint),
         )
+
+
+ONE_EXPONENTIAL = factor_model({"x": law("exponential", mean=1.0)}, {"a": linear(x=1.0)}, scenarios=2000)
+ENTROPIC = {"kind": "entropic", "aversion": 0.6}
+
+
+@pytest.mark.parametrize(
+    ("deal", "pointer"),
+    [({"components": [linear(x=1.0)]}, "/components"), ({"scaled": {"sub_portfolio": "a", "scale": 2.0}}, "/scaled")],
+)
+def test_a_figure_that_the_enlarged_book_does_not_have(deal, pointer):
+    """E[exp(0.6 X)] is finite for X ~ Exp(1), E[exp(0.6 (X + X))] is not (the moment generating function of Exp(1))."""
+    answer = tried(ONE_EXPONENTIAL, [{"id": "more", **deal}, {"id": "half", "components": [linear(x=0.5)]}], [ENTROPIC])
+    assert [one.status for one in answer.candidates] == ["refused", "ok"]
+    fault = answer.candidates[0].problem["errors"][0]
+    assert (fault["code"], fault["pointer"]) == ("infinite_figure", f"/candidates/0{pointer}")
+    assert "of the book with it" in fault["detail"]
+    assert "below 0.5" in fault["detail"]
+
+
+def test_less_of_a_part_may_have_what_the_book_has():
+    none = {"id": "none", "scaled": {"sub_portfolio": "a", "scale": 0.0}}
+    assert tried(ONE_EXPONENTIAL, [none], [{**ENTROPIC, "aversion": 0.9}]).refused == 0
+
+
+def test_no_errors_that_the_laws_do_not_have():
+    """A Pareto law of shape 1.5 has a mean and no variance: an expected shortfall of it has no standard error."""
+    marginals = {"x": law("normal", mean=0.0, standard_deviation=1.0), "y": law("pareto", scale=1.0, shape=1.5)}
+    losses = factor_model(marginals, {"a": linear(x=1.0)}, dependence=law("independent"), scenarios=20_000)
+    heavy, light = {"id": "heavy", "components": [linear(y=1.0)]}, {"id": "light", "components": [linear(x=1.0)]}
+    answer = tried(losses, [heavy, light], [es(0.99), var(0.99)])
+    for one, known in zip(answer.candidates, (False, True), strict=True):
+        for number, figures in enumerate(one.figures):
+            found = [figures.total_with, figures.increment, figures.contribution, figures.stand_alone]
+            expected = known or number == 1  # a quantile always has one, but for its contributions
+            assert [part.standard_error is not None for part in found] == [expected] * 4
+    assert ("infinite_variance", "/measures/0") in {(note.code, note.pointer) for note in answer.notes}
