@@ -143,6 +143,10 @@ class Notes:
                 f"the law of a loss has too few moments for {measure.name} to have a standard error, however many "
                 "scenarios there are"
             ),
+            "tied_quantile": (
+                f"{measure.name} is one of many equal losses: what is built on it has the widest interval that both "
+                "figures allow, or no error"
+            ),
             "thin_tail": f"the error rests on few scenarios: {counts}",
             "no_error": f"too few scenarios to say how sure a figure is: {counts}",
             "few_scenarios": f"a few scenarios carry the error, so intervals may be too narrow: {counts}",

@@ -10,9 +10,9 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from service.errors import NotDefined
-from service.risk.figures import figure_of, judged, moved_total
+from service.risk.figures import figure_of, figure_tied, judged, moved_total, untied
 from service.risk.frame import Frame
-from service.risk.measures import RiskMeasure, Smoothing
+from service.risk.measures import Marks, RiskMeasure, Smoothing
 from service.risk.quantiles import Array
 from service.risk.ranking import tie_tolerance
 from service.risk.shapley import shapley_values
@@ -61,18 +61,29 @@ class Case:
         figures = leaning_estimates(values, of, leans, coverage=self.coverage, tail_scenarios=counts)
         return judged(self.measure, figures)
 
-    def in_scenario_order(self, values: Array, influence: Array, total: Array, extra: Array | None = None) -> Estimates:
+    def in_scenario_order(
+        self,
+        values: Array,
+        influence: Array,
+        total: Array,
+        *,
+        extra: Array | None = None,
+        tied: Marks | None = None,
+    ) -> Estimates:
         """Return contributions with their errors from influence values (c, n), those of the total (n,).
 
-        `extra` (c,) are variances that come on top, such as those of drawn orders.
+        `extra` (c,) are variances that come on top, such as those of drawn orders; `tied` (c,) marks those that
+        rest on a quantile amid equal losses, as all do where that of the total is one.
         """
         if not self.frame.table.sampled:
             return Estimates.exact(values)
+        on_atom = bool(self.measure.on_atom(self.frame.ranking(self.measure).ordered)[0])
         lean = float(moved_total(self.frame, self.measure).lean[0])
         of = spread(_free(influence), self.frame.sampling, beside=_free(total[None, :]))
         if extra is not None:
             of = replace(of, errors=np.sqrt(of.errors**2 + extra))
-        return self.estimates(values, of, lean)
+        marks = np.full(values.shape, on_atom) if tied is None else tied | on_atom
+        return untied(self.estimates(values, of, lean), marks)
 
     def with_groups(self, per_sub_portfolio: Array) -> Array:
         """Return values (d, ...) followed by their sums over each group, shape (d + G, ...)."""
@@ -206,15 +217,18 @@ def with_without(case: Case) -> Contributions:
         count = columns.shape[1]
         values = np.empty(count)
         influence = np.empty((count, frame.scenarios))
+        tied = np.zeros(count, dtype=bool)
 
-        def one(j: int, columns: Array = columns, values: Array = values, influence: Array = influence) -> None:
+        def one(
+            j: int, columns: Array = columns, values: Array = values, influence: Array = influence, tied: Marks = tied
+        ) -> None:
             frame.effort.checkpoint(j / columns.shape[1])
-            rest, moved_rest = figure_of(frame, case.measure, frame.totals - columns[:, j])
+            rest, moved_rest, tied[j] = figure_tied(frame, case.measure, frame.totals - columns[:, j])
             values[j] = total - rest
             np.subtract(moved, moved_rest, out=influence[j])
 
         frame.effort.map(one, range(count))
-        parts.append(case.in_scenario_order(values, influence, moved))
+        parts.append(case.in_scenario_order(values, influence, moved, tied=tied))
     return Contributions(Estimates.joined(parts).remarked("does_not_add_up"), additive=False)
 
 
@@ -228,7 +242,7 @@ def shapley(case: Case) -> Contributions:
         extra = drawn.var(axis=1, ddof=1) / drawn.shape[1]
     _, moved = figure_of(frame, case.measure, frame.totals)
     values, influence = case.with_groups(result.values), case.with_groups(result.influence)
-    figures = case.in_scenario_order(values, influence, moved, extra)
+    figures = case.in_scenario_order(values, influence, moved, extra=extra)
     return Contributions(figures.remarked("sampled_shapley") if result.orders is not None else figures)
 
 

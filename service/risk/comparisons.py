@@ -6,7 +6,7 @@ from typing import Literal
 
 import numpy as np
 
-from service.risk.figures import judged, total
+from service.risk.figures import judged, total, untied
 from service.risk.frame import Frame
 from service.risk.measures import RiskMeasure, full_influence
 from service.risk.quantiles import Array, Indices
@@ -136,6 +136,9 @@ def compared(  # two of everything
         errors[:, place] = _spread(then, then_parts, old, now, now_parts, new, paired=paired)
     counts = [None if tail is None else float(tail[0]) for tail in (_tail_of(measure, then), _tail_of(measure, now))]
     figures = _estimates(measure, now, changes, errors, _fewest(states, counts), coverage)
+    tied = np.zeros(changes.size, dtype=bool)
+    tied[-1] = now.table.sampled and any(measure.on_atom(one.ranking(measure).ordered)[0] for one in (then, now))
+    figures = untied(figures, tied)
     return Change(then_parts.total, now_parts.total, ids, tuple(states), pairs, figures)
 
 

@@ -4,10 +4,11 @@ from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
+from scipy import special
 
 from service.risk.frame import Frame
-from service.risk.measures import ExpectedShortfall, RiskMeasure, full_influence, full_values
-from service.risk.quantiles import Array, Indices, Ordered
+from service.risk.measures import ExpectedShortfall, Marks, RiskMeasure, full_influence, full_values
+from service.risk.quantiles import ERROR_COVERAGE, Array, Indices, Ordered
 from service.risk.uncertainty import (
     Estimates,
     Influence,
@@ -79,7 +80,53 @@ def estimates(
     made_of = Moved.by(measure, ordered) if moved is None else moved()
     of, lean, method = made_of.of, made_of.lean, made_of.method
     counts = of.effective if tail is None else tail
-    return judged(measure, leaning_estimates(values, of, lean, coverage=coverage, tail_scenarios=counts, method=method))
+    figures = leaning_estimates(values, of, lean, coverage=coverage, tail_scenarios=counts, method=method)
+    return judged(measure, untied(figures, measure.on_atom(ordered)))
+
+
+def untied(figures: Estimates, tied: Marks) -> Estimates:
+    """Take the errors from the figures (c,) that `tied` (c,) marks as built on a quantile amid equal losses."""
+    if not tied.any():
+        return figures
+    errors, lower, upper = (
+        np.where(tied, np.nan, part) for part in (figures.standard_errors, figures.lower, figures.upper)
+    )
+    return replace(figures, standard_errors=errors, lower=lower, upper=upper).remarked("tied_quantile")
+
+
+def difference(measure: RiskMeasure, figure: Estimates, first: Ordered, second: Ordered, coverage: float) -> Estimates:
+    """Return the figure of `second` less that of `first` with an error that also holds amid equal losses.
+
+    There it has the interval from the lower end of the one to the upper end of the other, each at half the chance
+    of missing (Bonferroni), and as error its width at `ERROR_COVERAGE` over that of a normal interval.
+
+    Parameters
+    ----------
+    measure : RiskMeasure
+    figure : Estimates
+        Shape (1,), with its error from influence values.
+    first, second : Ordered
+        A single distribution each.
+    coverage : float
+        Nominal coverage of the interval.
+    """
+    tied = measure.on_atom(first) | measure.on_atom(second)
+    if not tied.any():
+        return figure
+    ends = [
+        (measure.interval(first, (1.0 + share) / 2.0), measure.interval(second, (1.0 + share) / 2.0))
+        for share in (coverage, ERROR_COVERAGE)
+    ]
+    if measure.above == "mean" or any(one is None for pair in ends for one in pair):
+        return without_gaps(untied(figure, tied))
+    (lower, upper), (least, most) = (
+        (now.lower - then.upper, now.upper - then.lower) for then, now in ends if then is not None and now is not None
+    )
+    errors = (most - least) / (2.0 * float(special.ndtri((1.0 + ERROR_COVERAGE) / 2.0)))
+    bounded = replace(
+        figure, standard_errors=errors, lower=lower, upper=upper, method="order_statistics", remarks=frozenset()
+    )
+    return judged(measure, bounded).remarked("tied_quantile")
 
 
 def judged(measure: RiskMeasure, figures: Estimates) -> Estimates:
@@ -156,9 +203,15 @@ def tail_scenarios(frame: Frame, level: float) -> tuple[Indices, Array]:
 
 def figure_of(frame: Frame, measure: RiskMeasure, loss: Array) -> tuple[float, Array]:
     """Return the figure of any loss (n,) and its influence values in scenario order, shape (n,)."""
+    value, influence, _ = figure_tied(frame, measure, loss)
+    return value, influence
+
+
+def figure_tied(frame: Frame, measure: RiskMeasure, loss: Array) -> tuple[float, Array, bool]:
+    """Return the same, and whether the figure is one of many equal losses."""
     ordered, order = frame.one(loss, measure)
     value = float(full_values(measure, ordered)[0])
     influence = full_influence(measure, ordered)
     values = np.full(loss.size, influence.rest[0])
     values[order] = influence.values[0]
-    return value, values
+    return value, values, bool(measure.on_atom(ordered)[0])

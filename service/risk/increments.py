@@ -5,7 +5,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from service.risk.figures import Moved, estimates, judged
+from service.risk.figures import Moved, difference, estimates, judged
 from service.risk.frame import Frame
 from service.risk.measures import ContributionWeights, RiskMeasure, full_influence, full_values
 from service.risk.quantiles import Array, Indices, Ordered
@@ -39,6 +39,8 @@ class Base:
         Influence of the rest.
     contributions : ndarray of shape (d,)
         Euler contributions of the sub-portfolios.
+    ordered : Ordered
+        The total.
     """
 
     measure: RiskMeasure
@@ -47,6 +49,7 @@ class Base:
     order: Indices
     rest: float
     contributions: Array
+    ordered: Ordered
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,7 +90,7 @@ def base_of(frame: Frame, measure: RiskMeasure) -> Base:
     values = np.full(frame.scenarios, rest)
     values[order] = influence.values[0]
     contributions = _parts(measure, frame.ranking(measure), frame)
-    return Base(measure, float(full_values(measure, ordered)[0]), values, order, rest, contributions)
+    return Base(measure, float(full_values(measure, ordered)[0]), values, order, rest, contributions, ordered)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -141,20 +144,21 @@ def _increment(enlarged: _Enlarged, base: Base, coverage: float) -> Increment:
     parts = weights.values @ rows
     if measure.above == "mean":
         parts -= np.append(expected[: parts.size - 1], ranking.ties.p @ rows[:, -1])
-    difference = full_values(measure, ordered) - base.value
+    change = full_values(measure, ordered) - base.value
     alone = estimates(measure, enlarged.alone(measure), coverage)
     if not ordered.sampled:
         whole = full_values(measure, ordered)
-        total_with, increment, contribution = map(Estimates.exact, (whole, difference, parts[-1:]))
+        total_with, increment, contribution = map(Estimates.exact, (whole, change, parts[-1:]))
         return Increment(total_with, increment, _noted(contribution, weights), alone, parts[:-1])
     moved = Moved.by(measure, ordered)
     of = _spread_of_difference(enlarged.frame, base, ranking, moved.influence)
     counts = measure.tail_of(ordered)
     tail = of.effective if counts is None else counts
-    increment = leaning_estimates(difference, of, usual_lean(of), coverage=coverage, tail_scenarios=tail)
+    usual = leaning_estimates(change, of, usual_lean(of), coverage=coverage, tail_scenarios=tail)
+    increment = difference(measure, judged(measure, usual), base.ordered, ordered, coverage)
     return Increment(
         total_with=estimates(measure, ordered, coverage, lambda: moved),
-        increment=judged(measure, increment),
+        increment=increment,
         contribution=_contribution(measure, ranking, weights, parts[-1:], rows[:, -1:], moved, coverage),
         stand_alone=alone,
         moved=parts[:-1],

@@ -8,6 +8,7 @@ from typing_extensions import TypeAliasType
 from service.risk.measures.contract import (
     ContributionWeights,
     LocatedMeasure,
+    Marks,
     RiskMeasure,
     Smoothing,
     full_influence,
@@ -59,6 +60,7 @@ __all__ = [
     "Expectile",
     "ExponentialDistortion",
     "LocatedMeasure",
+    "Marks",
     "Measure",
     "ProportionalHazard",
     "RangeValueAtRisk",

@@ -9,6 +9,7 @@ from dataclasses import dataclass as plain
 from typing import Annotated, ClassVar, Literal
 
 import numpy as np
+from numpy.typing import NDArray
 from pydantic import Field
 from pydantic.dataclasses import dataclass
 
@@ -21,6 +22,7 @@ LABEL = "Name of this measure in the answer; by default the kind and its paramet
 ABOVE = "`zero`: the figure itself; `mean`: its excess over the expected loss."
 
 Smoothing = Literal["auto", "none"]
+Marks = NDArray[np.bool_]
 
 
 @plain(frozen=True, slots=True, kw_only=True)
@@ -143,6 +145,10 @@ class RiskMeasure:
     def errors(self, ordered: Ordered) -> Array | None:  # noqa: ARG002  # quantiles use it
         """Return standard errors that do not come from the influence values, shape (c,); None for the usual ones."""
         return None
+
+    def on_atom(self, ordered: Ordered) -> Marks:
+        """Return which figures are one of many equal losses, so that influence values tell nothing, shape (c,)."""
+        return np.zeros(ordered.values.shape[0], dtype=bool)
 
     def contribution_weights(self, ordered: Ordered, ties: Ties, smoothing: Smoothing) -> ContributionWeights:  # noqa: ARG002
         """Return the scenario weights of the single distribution in `ordered` for its contributions."""

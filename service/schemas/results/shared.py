@@ -14,6 +14,7 @@ NoteCode = Literal[
     "population",
     "no_error",
     "infinite_variance",
+    "tied_quantile",
     "thin_tail",
     "few_scenarios",
     "ratio_not_defined",
@@ -44,6 +45,8 @@ class Note:
             description="`population`: the scenarios are the whole distribution, so no figure has an error. "
             "`no_error`: too few scenarios carry the figure for an error to be given. "
             "`infinite_variance`: no error exists, since the law of a loss has too few moments for it. "
+            "`tied_quantile`: the quantile is one of many equal losses: what is built on it has a wide interval or no "
+            "error. "
             "`thin_tail`: the error is given but rests on few tail scenarios. "
             "`few_scenarios`: a few scenarios carry most of the error of a figure; its interval may be too narrow. "
             "`ratio_not_defined`: a ratio is null since its denominator is not positive. "
