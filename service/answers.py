@@ -41,6 +41,7 @@ from service.schemas.results import (
 from service.sources import FactorMean
 
 WORST_LISTED = 10
+BOUNDED = "order_statistics"  # the method of intervals that hold amid equal losses
 TOO_LARGE = "a figure or its error is too large for a binary64 number"
 MOST_NAMED = 1e15  # scenarios that a note proposes
 ROUNDING = 1e-13  # of the largest total: a figure below it is 0 but for rounding, and no denominator
@@ -195,13 +196,14 @@ def figure_list(estimates: Estimates, coverage: float) -> list[Figure]:
     values = (estimates.values + 0.0).tolist()
     if np.isnan(estimates.standard_errors).all() and np.isnan(estimates.tail_scenarios).all():
         return [Figure(value, None, None, None) for value in values]
-    method = estimates.method
+    methods = [BOUNDED if bounded else estimates.method for bounded in estimates.is_bounded.tolist()]
     rows = zip(
         values,
         (estimates.standard_errors + 0.0).tolist(),
         (estimates.lower + 0.0).tolist(),
         (estimates.upper + 0.0).tolist(),
         estimates.tail_scenarios.tolist(),
+        methods,
         strict=True,
     )
     return [
@@ -211,7 +213,7 @@ def figure_list(estimates: Estimates, coverage: float) -> list[Figure]:
             None if lower != lower else Interval(lower, upper, coverage, method),  # noqa: PLR0124
             None if tail != tail else tail,  # noqa: PLR0124
         )
-        for value, error, lower, upper, tail in rows
+        for value, error, lower, upper, tail, method in rows
     ]
 
 

@@ -10,13 +10,23 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from service.errors import NotDefined
-from service.risk.figures import figure_of, figure_tied, judged, moved_total, untied
+from service.risk.figures import bounds_of_difference, figure_in_order, figure_of, judged, moved_total
 from service.risk.frame import Frame
-from service.risk.measures import Marks, RiskMeasure, Smoothing
+from service.risk.measures import RiskMeasure, Smoothing
 from service.risk.quantiles import Array
 from service.risk.ranking import tie_tolerance
 from service.risk.shapley import shapley_values
-from service.risk.uncertainty import Estimates, Influence, Sampling, Spread, lean_of_parts, leaning_estimates, spread
+from service.risk.uncertainty import (
+    Bounds,
+    Estimates,
+    Influence,
+    Marks,
+    Sampling,
+    Spread,
+    lean_of_parts,
+    leaning_estimates,
+    spread,
+)
 
 ROUNDING = 1e-13  # of the largest total: a sum of figures below it is 0 but for rounding
 
@@ -44,7 +54,9 @@ class Case:
     smoothing: Smoothing = "auto"
     seed: int = 1
 
-    def estimates(self, values: Array, of: Spread, lean: float) -> Estimates:
+    def estimates(
+        self, values: Array, of: Spread, lean: float, bounds: Bounds | None = None, tied: Marks | None = None
+    ) -> Estimates:
         """Return contributions with their errors.
 
         Parameters
@@ -54,11 +66,15 @@ class Case:
             Of their influence values, with the correlation with those of the total.
         lean : float
             Of the total's interval.
+        bounds : Bounds, optional
+            Of those that `tied` (c,) marks.
         """
         tail = self.measure.tail_of(self.frame.ranking(self.measure).ordered)
         counts = of.effective if tail is None else np.broadcast_to(tail, values.shape)
         leans = lean_of_parts(of, lean)
         figures = leaning_estimates(values, of, leans, coverage=self.coverage, tail_scenarios=counts)
+        if bounds is not None and tied is not None:
+            figures = figures.within(bounds, tied)
         return judged(self.measure, figures)
 
     def in_scenario_order(
@@ -68,12 +84,12 @@ class Case:
         total: Array,
         *,
         extra: Array | None = None,
-        tied: Marks | None = None,
+        within: tuple[Bounds, Marks] | None = None,
     ) -> Estimates:
         """Return contributions with their errors from influence values (c, n), those of the total (n,).
 
-        `extra` (c,) are variances that come on top, such as those of drawn orders; `tied` (c,) marks those that
-        rest on a quantile amid equal losses, as all do where that of the total is one.
+        `extra` (c,) are variances that come on top, such as those of drawn orders; `within` bounds those that rest
+        on a quantile amid equal losses. Where that of the total is one, others have no error.
         """
         if not self.frame.table.sampled:
             return Estimates.exact(values)
@@ -82,8 +98,9 @@ class Case:
         of = spread(_free(influence), self.frame.sampling, beside=_free(total[None, :]))
         if extra is not None:
             of = replace(of, errors=np.sqrt(of.errors**2 + extra))
-        marks = np.full(values.shape, on_atom) if tied is None else tied | on_atom
-        return untied(self.estimates(values, of, lean), marks)
+        if within is not None:
+            return self.estimates(values, of, lean, *within)
+        return self.estimates(values, of, lean).within(nothing(values.shape), np.full(values.shape, on_atom))
 
     def with_groups(self, per_sub_portfolio: Array) -> Array:
         """Return values (d, ...) followed by their sums over each group, shape (d + G, ...)."""
@@ -210,25 +227,35 @@ def covariance(case: Case) -> Contributions:
 
 def with_without(case: Case) -> Contributions:
     """Return rho(L) - rho(L - L_i); a group is removed as one."""
-    frame = case.frame
-    total, moved = figure_of(frame, case.measure, frame.totals)
+    frame, measure = case.frame, case.measure
+    whole, order = frame.one(frame.totals, measure)
+    total, moved = figure_in_order(measure, whole, order)
     parts = []
     for columns in frame.chunks():
         count = columns.shape[1]
-        values = np.empty(count)
-        influence = np.empty((count, frame.scenarios))
-        tied = np.zeros(count, dtype=bool)
+        values, influence = np.empty(count), np.empty((count, frame.scenarios))
+        ends, tied = np.zeros((3, count)), np.zeros(count, dtype=bool)
 
-        def one(
-            j: int, columns: Array = columns, values: Array = values, influence: Array = influence, tied: Marks = tied
+        def one(  # its arrays are those of this chunk
+            j: int,
+            columns: Array = columns,
+            values: Array = values,
+            influence: Array = influence,
+            ends: Array = ends,
+            tied: Marks = tied,
         ) -> None:
             frame.effort.checkpoint(j / columns.shape[1])
-            rest, moved_rest, tied[j] = figure_tied(frame, case.measure, frame.totals - columns[:, j])
-            values[j] = total - rest
+            rest, order = frame.one(frame.totals - columns[:, j], measure)
+            worth, moved_rest = figure_in_order(measure, rest, order)
+            values[j] = total - worth
             np.subtract(moved, moved_rest, out=influence[j])
+            tied[j] = frame.table.sampled and (measure.on_atom(whole) | measure.on_atom(rest))[0]
+            if tied[j]:
+                of = bounds_of_difference(measure, rest, whole, case.coverage)
+                ends[:, j] = of.errors[0], of.lower[0], of.upper[0]
 
         frame.effort.map(one, range(count))
-        parts.append(case.in_scenario_order(values, influence, moved, tied=tied))
+        parts.append(case.in_scenario_order(values, influence, moved, within=(Bounds(*ends), tied)))
     return Contributions(Estimates.joined(parts).remarked("does_not_add_up"), additive=False)
 
 
@@ -244,6 +271,12 @@ def shapley(case: Case) -> Contributions:
     values, influence = case.with_groups(result.values), case.with_groups(result.influence)
     figures = case.in_scenario_order(values, influence, moved, extra=extra)
     return Contributions(figures.remarked("sampled_shapley") if result.orders is not None else figures)
+
+
+def nothing(shape: tuple[int, ...]) -> Bounds:
+    """Return the bounds of figures whose errors cannot be told."""
+    unknown = np.full(shape, np.nan)
+    return Bounds(unknown, unknown, unknown)
 
 
 def _free(influence: Array) -> Influence:

@@ -6,11 +6,11 @@ from typing import Literal
 
 import numpy as np
 
-from service.risk.figures import judged, total, untied
+from service.risk.figures import bounds_of_difference, judged, total
 from service.risk.frame import Frame
 from service.risk.measures import RiskMeasure, full_influence
 from service.risk.quantiles import Array, Indices
-from service.risk.uncertainty import Estimates, Influence, Spread, leaning_estimates, spread, usual_lean
+from service.risk.uncertainty import Bounds, Estimates, Influence, Spread, leaning_estimates, spread, usual_lean
 
 State = Literal["new", "gone", "changed"]
 
@@ -135,10 +135,8 @@ def compared(  # two of everything
             changes[place] = np.nan_to_num(second) - np.nan_to_num(first)
         errors[:, place] = _spread(then, then_parts, old, now, now_parts, new, paired=paired)
     counts = [None if tail is None else float(tail[0]) for tail in (_tail_of(measure, then), _tail_of(measure, now))]
-    figures = _estimates(measure, now, changes, errors, _fewest(states, counts), coverage)
-    tied = np.zeros(changes.size, dtype=bool)
-    tied[-1] = now.table.sampled and any(measure.on_atom(one.ranking(measure).ordered)[0] for one in (then, now))
-    figures = untied(figures, tied)
+    of_total = _amid_ties(measure, then, now, coverage)
+    figures = _estimates(measure, now, changes, errors, _fewest(states, counts), of_total, coverage)
     return Change(then_parts.total, now_parts.total, ids, tuple(states), pairs, figures)
 
 
@@ -185,11 +183,29 @@ def _fewest(states: Sequence[State], counts: Sequence[float | None]) -> Array | 
 
 
 def _estimates(  # what a change is judged by
-    measure: RiskMeasure, frame: Frame, changes: Array, errors: Array, tail: Array | None, coverage: float
+    measure: RiskMeasure,
+    frame: Frame,
+    changes: Array,
+    errors: Array,
+    tail: Array | None,
+    of_total: Bounds | None,
+    coverage: float,
 ) -> Estimates:
     """Return changes with their intervals, judged as the measure asks."""
     if not frame.table.sampled:
         return Estimates.exact(changes)
     of = Spread(errors[0], errors[1], errors[2])
     counts = of.effective if tail is None else tail
-    return judged(measure, leaning_estimates(changes, of, usual_lean(of), coverage=coverage, tail_scenarios=counts))
+    figures = leaning_estimates(changes, of, usual_lean(of), coverage=coverage, tail_scenarios=counts)
+    if of_total is not None:
+        last = np.arange(changes.size) == changes.size - 1
+        figures = figures.within(of_total, last)
+    return judged(measure, figures)
+
+
+def _amid_ties(measure: RiskMeasure, then: Frame, now: Frame, coverage: float) -> Bounds | None:
+    """Return what bounds the change of the total where a quantile is one of many equal losses."""
+    first, second = (frame.ranking(measure).ordered for frame in (then, now))
+    if not now.table.sampled or not (measure.on_atom(first) | measure.on_atom(second)).any():
+        return None
+    return bounds_of_difference(measure, first, second, coverage)

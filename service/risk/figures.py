@@ -7,9 +7,10 @@ import numpy as np
 from scipy import special
 
 from service.risk.frame import Frame
-from service.risk.measures import ExpectedShortfall, Marks, RiskMeasure, full_influence, full_values
+from service.risk.measures import ExpectedShortfall, RiskMeasure, full_influence, full_values, means
 from service.risk.quantiles import ERROR_COVERAGE, Array, Indices, Ordered
 from service.risk.uncertainty import (
+    Bounds,
     Estimates,
     Influence,
     Sampling,
@@ -81,52 +82,50 @@ def estimates(
     of, lean, method = made_of.of, made_of.lean, made_of.method
     counts = of.effective if tail is None else tail
     figures = leaning_estimates(values, of, lean, coverage=coverage, tail_scenarios=counts, method=method)
-    return judged(measure, untied(figures, measure.on_atom(ordered)))
+    tied = measure.on_atom(ordered)
+    if tied.any():
+        figures = figures.within(bounds(measure, ordered, coverage), tied)
+    return judged(measure, figures)
 
 
-def untied(figures: Estimates, tied: Marks) -> Estimates:
-    """Take the errors from the figures (c,) that `tied` (c,) marks as built on a quantile amid equal losses."""
-    if not tied.any():
-        return figures
-    errors, lower, upper = (
-        np.where(tied, np.nan, part) for part in (figures.standard_errors, figures.lower, figures.upper)
-    )
-    return replace(figures, standard_errors=errors, lower=lower, upper=upper).remarked("tied_quantile")
+def bounds(measure: RiskMeasure, ordered: Ordered, coverage: float) -> Bounds:
+    """Return errors and intervals of a quantile (or its excess over the mean) that hold amid equal losses.
 
-
-def difference(measure: RiskMeasure, figure: Estimates, first: Ordered, second: Ordered, coverage: float) -> Estimates:
-    """Return the figure of `second` less that of `first` with an error that also holds amid equal losses.
-
-    There it has the interval from the lower end of the one to the upper end of the other, each at half the chance
-    of missing (Bonferroni), and as error its width at `ERROR_COVERAGE` over that of a normal interval.
-
-    Parameters
-    ----------
-    measure : RiskMeasure
-    figure : Estimates
-        Shape (1,), with its error from influence values.
-    first, second : Ordered
-        A single distribution each.
-    coverage : float
-        Nominal coverage of the interval.
+    The interval is that of order statistics; the error is its width at `ERROR_COVERAGE` over that of a normal one.
     """
-    tied = measure.on_atom(first) | measure.on_atom(second)
-    if not tied.any():
-        return figure
-    ends = [
-        (measure.interval(first, (1.0 + share) / 2.0), measure.interval(second, (1.0 + share) / 2.0))
-        for share in (coverage, ERROR_COVERAGE)
-    ]
-    if measure.above == "mean" or any(one is None for pair in ends for one in pair):
-        return without_gaps(untied(figure, tied))
-    (lower, upper), (least, most) = (
-        (now.lower - then.upper, now.upper - then.lower) for then, now in ends if then is not None and now is not None
-    )
-    errors = (most - least) / (2.0 * float(special.ndtri((1.0 + ERROR_COVERAGE) / 2.0)))
-    bounded = replace(
-        figure, standard_errors=errors, lower=lower, upper=upper, method="order_statistics", remarks=frozenset()
-    )
-    return judged(measure, bounded).remarked("tied_quantile")
+    return _bounds(lambda share: _ends(measure, ordered, share), coverage)
+
+
+def bounds_of_difference(measure: RiskMeasure, first: Ordered, second: Ordered, coverage: float) -> Bounds:
+    """Return the same for the figures of `second` less those of `first`.
+
+    From the lower end of the one to the upper end of the other, each at half the chance of missing (Bonferroni).
+    """
+
+    def ends(share: float) -> tuple[Array, Array]:
+        (lower, upper), (least, most) = (_ends(measure, one, (1.0 + share) / 2.0) for one in (first, second))
+        return least - upper, most - lower
+
+    return _bounds(ends, coverage)
+
+
+def _bounds(ends: Callable[[float], tuple[Array, Array]], coverage: float) -> Bounds:
+    lower, upper = ends(coverage)
+    least, most = ends(ERROR_COVERAGE)
+    return Bounds((most - least) / (2.0 * float(special.ndtri((1.0 + ERROR_COVERAGE) / 2.0))), lower, upper)
+
+
+def _ends(measure: RiskMeasure, ordered: Ordered, coverage: float) -> tuple[Array, Array]:
+    """Return the ends of the interval of a quantile, or of its excess over the mean; NaN where there are none."""
+    each = (1.0 + coverage) / 2.0 if measure.above == "mean" else coverage
+    interval = measure.interval(ordered, each)
+    if interval is None:
+        raise ValueError("only quantiles have such intervals")
+    if measure.above == "zero":
+        return interval.lower, interval.upper
+    of_mean = spread(Influence(ordered.values, np.zeros(len(ordered.values))), Sampling.of(ordered)).errors
+    middle, half = means(ordered), float(special.ndtri((1.0 + each) / 2.0)) * of_mean
+    return interval.lower - middle - half, interval.upper - middle + half
 
 
 def judged(measure: RiskMeasure, figures: Estimates) -> Estimates:
@@ -203,15 +202,13 @@ def tail_scenarios(frame: Frame, level: float) -> tuple[Indices, Array]:
 
 def figure_of(frame: Frame, measure: RiskMeasure, loss: Array) -> tuple[float, Array]:
     """Return the figure of any loss (n,) and its influence values in scenario order, shape (n,)."""
-    value, influence, _ = figure_tied(frame, measure, loss)
-    return value, influence
+    return figure_in_order(measure, *frame.one(loss, measure))
 
 
-def figure_tied(frame: Frame, measure: RiskMeasure, loss: Array) -> tuple[float, Array, bool]:
-    """Return the same, and whether the figure is one of many equal losses."""
-    ordered, order = frame.one(loss, measure)
+def figure_in_order(measure: RiskMeasure, ordered: Ordered, order: Indices) -> tuple[float, Array]:
+    """Return the same of a single distribution whose positions hold the scenarios `order`."""
     value = float(full_values(measure, ordered)[0])
     influence = full_influence(measure, ordered)
-    values = np.full(loss.size, influence.rest[0])
+    values = np.full(ordered.scenarios, influence.rest[0])
     values[order] = influence.values[0]
-    return value, values, bool(measure.on_atom(ordered)[0])
+    return value, values

@@ -5,7 +5,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from service.risk.figures import Moved, difference, estimates, judged
+from service.risk.figures import Moved, bounds_of_difference, estimates, judged
 from service.risk.frame import Frame
 from service.risk.measures import ContributionWeights, RiskMeasure, full_influence, full_values
 from service.risk.quantiles import Array, Indices, Ordered
@@ -155,10 +155,12 @@ def _increment(enlarged: _Enlarged, base: Base, coverage: float) -> Increment:
     counts = measure.tail_of(ordered)
     tail = of.effective if counts is None else counts
     usual = leaning_estimates(change, of, usual_lean(of), coverage=coverage, tail_scenarios=tail)
-    increment = difference(measure, judged(measure, usual), base.ordered, ordered, coverage)
+    tied = measure.on_atom(base.ordered) | measure.on_atom(ordered)
+    if tied.any():
+        usual = usual.within(bounds_of_difference(measure, base.ordered, ordered, coverage), tied)
     return Increment(
         total_with=estimates(measure, ordered, coverage, lambda: moved),
-        increment=increment,
+        increment=judged(measure, usual),
         contribution=_contribution(measure, ranking, weights, parts[-1:], rows[:, -1:], moved, coverage),
         stand_alone=alone,
         moved=parts[:-1],

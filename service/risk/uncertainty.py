@@ -11,9 +11,12 @@ from dataclasses import dataclass, replace
 from typing import Self
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy import special
 
 from service.risk.quantiles import Array, Indices, Ordered, cluster_sums
+
+Marks = NDArray[np.bool_]
 
 LEAST_TAIL = 10.0  # effective tail scenarios below which no error is given
 FULL_TAIL = 100.0  # effective tail scenarios below which an error is given with a note
@@ -42,6 +45,20 @@ class Influence:
 
 
 @dataclass(frozen=True, slots=True)
+class Bounds:
+    """Errors and intervals of c figures that hold amid equal losses.
+
+    Attributes
+    ----------
+    errors, lower, upper : ndarray of shape (c,)
+    """
+
+    errors: Array
+    lower: Array
+    upper: Array
+
+
+@dataclass(frozen=True, slots=True)
 class Estimates:
     """Figures with their errors; NaN stands for what cannot be estimated.
 
@@ -54,6 +71,8 @@ class Estimates:
         How the intervals were made.
     remarks : frozenset of str
         Codes of what the caller ought to know.
+    bounded : ndarray of bool of shape (c,) or None
+        Which figures have the widest interval that order statistics allow instead; None for none.
     """
 
     values: Array
@@ -63,6 +82,7 @@ class Estimates:
     tail_scenarios: Array
     method: str
     remarks: frozenset[str] = frozenset()
+    bounded: Marks | None = None
 
     @classmethod
     def exact(cls, values: Array) -> Self:
@@ -83,7 +103,28 @@ class Estimates:
             np.concatenate([part.tail_scenarios for part in parts]),
             parts[0].method,
             frozenset().union(*(part.remarks for part in parts)),
+            np.concatenate([part.is_bounded for part in parts]),
         )
+
+    @property
+    def is_bounded(self) -> Marks:
+        """Which figures have the widest interval that order statistics allow, shape (c,)."""
+        return np.zeros(self.values.shape, dtype=bool) if self.bounded is None else self.bounded
+
+    def within(self, bounds: "Bounds", tied: Marks) -> Self:
+        """Return the same figures where those that `tied` (c,) marks have errors and intervals from `bounds`."""
+        if not tied.any():
+            return self
+        errors, lower, upper = (
+            np.where(tied, theirs, ours)
+            for theirs, ours in (
+                (bounds.errors, self.standard_errors),
+                (bounds.lower, self.lower),
+                (bounds.upper, self.upper),
+            )
+        )
+        changed = replace(self, standard_errors=errors, lower=lower, upper=upper, bounded=self.is_bounded | tied)
+        return changed.remarked("tied_quantile")
 
     def remarked(self, *codes: str) -> Self:
         """Return the same figures with further remarks."""

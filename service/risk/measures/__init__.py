@@ -8,11 +8,11 @@ from typing_extensions import TypeAliasType
 from service.risk.measures.contract import (
     ContributionWeights,
     LocatedMeasure,
-    Marks,
     RiskMeasure,
     Smoothing,
     full_influence,
     full_values,
+    means,
 )
 from service.risk.measures.distortions import DualPower, ExponentialDistortion, ProportionalHazard, Wang
 from service.risk.measures.moments import Entropic, Expectile, StandardDeviation
@@ -60,7 +60,6 @@ __all__ = [
     "Expectile",
     "ExponentialDistortion",
     "LocatedMeasure",
-    "Marks",
     "Measure",
     "ProportionalHazard",
     "RangeValueAtRisk",
@@ -72,4 +71,5 @@ __all__ = [
     "Wang",
     "full_influence",
     "full_values",
+    "means",
 ]

@@ -9,20 +9,18 @@ from dataclasses import dataclass as plain
 from typing import Annotated, ClassVar, Literal
 
 import numpy as np
-from numpy.typing import NDArray
 from pydantic import Field
 from pydantic.dataclasses import dataclass
 
 from service.risk.measures.local_line import LocalLine
 from service.risk.quantiles import Array, Ordered, QuantileInterval, Ties
-from service.risk.uncertainty import Influence, Spread
+from service.risk.uncertainty import Influence, Marks, Spread
 from service.risk.words import STRICT, Text
 
 LABEL = "Name of this measure in the answer; by default the kind and its parameters. Unique in a request."
 ABOVE = "`zero`: the figure itself; `mean`: its excess over the expected loss."
 
 Smoothing = Literal["auto", "none"]
-Marks = NDArray[np.bool_]
 
 
 @plain(frozen=True, slots=True, kw_only=True)

@@ -13,7 +13,6 @@ from pydantic_core import PydanticCustomError
 from service.risk.measures.contract import (
     ContributionWeights,
     LocatedMeasure,
-    Marks,
     Needs,
     Smoothing,
 )
@@ -28,7 +27,7 @@ from service.risk.quantiles import (
     quantile_error,
     quantile_interval,
 )
-from service.risk.uncertainty import Influence, Spread
+from service.risk.uncertainty import Influence, Marks, Spread
 from service.risk.words import STRICT, Level
 
 WINDOW = Fraction(9, 10)  # half width of the smoothing window as a part of the tail count

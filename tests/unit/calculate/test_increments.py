@@ -370,7 +370,8 @@ def test_increments_amid_equal_losses_are_covered():
         "another": quantile_on_halves((1.5, 1), (0.5, 3), (2.0, 1)) - base,
         "minus a": quantile_on_halves((0.5, 3)) - base,
     }
-    misses = dict.fromkeys(true, 0)
+    misses = dict.fromkeys([*true, "without b", "change", "above mean"], 0)
+    without_b = base - quantile_on_halves((1.5, 1))
     for seed in range(100):
         values = lattice(seed)
         more = np.random.default_rng([seed, 1]).poisson(2.0, len(values)).astype(float)
@@ -382,10 +383,25 @@ def test_increments_amid_equal_losses_are_covered():
         for one in answer.candidates:
             interval = one.figures[0].increment.interval
             misses[one.id] += not interval.lower <= true[one.id] <= interval.upper
+        measures = [var(0.95), var(0.95, above="mean")]
+        request = {"losses": losses, "measures": measures, "rules": ["with_without"], "include_stand_alone": False}
+        plain, above = answered("allocations", request).allocations
+        less = {**losses, "sub_portfolios": [{"id": "a"}], "values": values[:, :1].tolist()}
+        [change] = answered(
+            "comparisons", {"before": less, "after": losses, "measures": measures[:1], "same_scenarios": True}
+        ).comparisons
+        found = {
+            "without b": (without_b, plain.sub_portfolios[1].contribution),
+            "change": (without_b, change.change),
+            "above mean": (base - 3.0, above.total),
+        }
+        for name, (wanted, figure) in found.items():
+            misses[name] += not figure.interval.lower <= wanted <= figure.interval.upper
     assert max(misses.values()) <= 15
 
 
-def test_what_else_is_built_on_a_quantile_amid_equal_losses_has_no_error():
+def test_what_else_is_built_on_a_quantile_amid_equal_losses():
+    """Differences and excesses over the mean have intervals of order statistics; other rules have no error."""
     columns = [{"id": "a"}, {"id": "b"}]
     losses = {"kind": "scenarios", "sub_portfolios": columns, "values": lattice(1).tolist()}
     less = {"kind": "scenarios", "sub_portfolios": columns[:1], "values": lattice(1)[:, :1].tolist()}
@@ -393,11 +409,13 @@ def test_what_else_is_built_on_a_quantile_amid_equal_losses_has_no_error():
     measures = [var(0.95), var(0.95, above="mean"), es(0.95)]
     answer = answered("allocations", {"losses": losses, "measures": measures, "rules": rules})
     for one in answer.allocations:
-        known = one.measure.startswith("expected")
+        known = one.measure.startswith("expected") or one.rule == "with_without"
         assert [row.contribution.standard_error is not None for row in one.sub_portfolios] == [known] * 2
-        assert (one.total.standard_error is not None) == (not one.measure.endswith("above mean"))
+        if not one.measure.startswith("expected"):
+            assert one.total.interval.method == "order_statistics"
     compared = answered("comparisons", {"before": losses, "after": less, "measures": measures, "same_scenarios": True})
-    assert [one.change.standard_error is not None for one in compared.comparisons] == [False, False, True]
+    methods = [one.change.interval.method for one in compared.comparisons]
+    assert methods == ["order_statistics", "order_statistics", "skewness_adjusted"]
     for found in (answer, compared):
         pointers = {note.pointer for note in found.notes if note.code == "tied_quantile"}
         assert pointers == {"/measures/0", "/measures/1"}
