@@ -53,6 +53,13 @@ class Comparisons:
             self.notes.take(book.calculation.notes)
         self._compare_labels()
         self.paired = self._paired()
+        if not self.paired and _overlapping(request.before, request.after, *self._calculations):
+            detail = (
+                "the books share some scenarios but not all, and the error of a change counts them as independent: it "
+                "may be far off, mostly too large; with as many scenarios of the same seed, or with the same periods, "
+                "it is that of the differences"
+            )
+            self.notes.add("samples_overlap", detail)
 
     def answer(self) -> ComparisonsAnswer:
         """Return how each measure and each contribution changed."""
@@ -83,6 +90,10 @@ class Comparisons:
                 scenarios=after.frame.scenarios,
             ),
         )
+
+    @property
+    def _calculations(self) -> tuple[Calculation, Calculation]:
+        return self.before.calculation, self.after.calculation
 
     def _result(self, number: int, measure: RiskMeasure) -> ComparisonResult:
         coverage = self.request.interval_coverage
@@ -174,6 +185,16 @@ def _same(before: Losses, after: Losses, then: Calculation, now: Calculation) ->
         same = first is not None and second is not None and np.array_equal(first.values, second.values)
         return same and all(_plain(getattr(before, name)) == _plain(getattr(after, name)) for name in observed)
     return False
+
+
+def _overlapping(before: Losses, after: Losses, then: Calculation, now: Calculation) -> bool:
+    """Return whether two samples have scenarios in common: draws of one seed, or periods that both observed."""
+    if isinstance(before, FactorLosses) and isinstance(after, FactorLosses):
+        return before.simulation.seed == after.simulation.seed
+    first, second = then.source.changes, now.source.changes
+    if first is None or second is None or first.values.shape[1] != second.values.shape[1]:
+        return False
+    return not {row.tobytes() for row in first.values}.isdisjoint(row.tobytes() for row in second.values)
 
 
 def _plain(value: object) -> object:

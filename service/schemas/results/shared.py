@@ -32,6 +32,7 @@ NoteCode = Literal[
     "low_level",
     "high_rate",
     "labels_differ",
+    "samples_overlap",
 ]
 
 
@@ -63,7 +64,8 @@ class Note:
             "`column_taken`: a column with the name of a total, label or weight was taken as a sub-portfolio. "
             "`low_level`: a confidence level below 0.5, which may be meant as the probability of the tail. "
             "`high_rate`: a rate of 1 or more, which may be meant in percent. "
-            "`labels_differ`: two books that are compared differ in their horizon, or go back in time."
+            "`labels_differ`: two books that are compared differ in their horizon, or go back in time. "
+            "`samples_overlap`: two books that are compared share some scenarios, which their errors do not know of."
         ),
     ]
     detail: Annotated[str, Field(description="The same in a sentence.")]

@@ -193,3 +193,21 @@ def test_a_change_is_judged_by_the_thinner_book():
 def tables(*sizes):
     rng = np.random.default_rng(1)
     return [rng.standard_normal((size, 1)).tolist() for size in sizes]
+
+
+def test_samples_that_overlap_are_noted():
+    def codes(before, after):
+        answer = compared(before, after, [es(0.9)])
+        assert not answer.same_scenarios
+        return {note.code for note in answer.notes}
+
+    assert "samples_overlap" in codes(model(BEFORE, scenarios=8192), model(BEFORE, scenarios=16_384))
+    assert "samples_overlap" not in codes(model(BEFORE), model(BEFORE, seed=2))
+    changes = np.random.default_rng(1).standard_normal((501, 3))
+    parts = model(BEFORE)["sub_portfolios"]
+
+    def observed(rows):
+        return {"kind": "history", "factors": list("xyz"), "changes": rows.tolist(), "sub_portfolios": parts}
+
+    assert "samples_overlap" in codes(observed(changes[:500]), observed(changes[1:]))
+    assert "samples_overlap" not in codes(observed(changes[:250]), observed(changes[250:]))
