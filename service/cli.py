@@ -78,7 +78,7 @@ def _add_compute(commands: "argparse._SubParsersAction[argparse.ArgumentParser]"
     compute.add_argument(
         "--as",
         dest="form",
-        choices=("table", "json", "csv"),
+        choices=("table", "json", "csv", "xml", "arrow", "svg", "png"),
         default="table",
         help="form of the answer (default table)",
     )
@@ -126,35 +126,59 @@ def _compute(options: argparse.Namespace) -> int:
 
     if options.books is not None:
         os.environ[variable("books")] = options.books
-    return _answered(read, options.form)
+    return _answered(read, options.form, options.to)
 
 
-def _answered(read: "Callable[[Settings], Intake]", form: str) -> int:
+def _answered(read: "Callable[[Settings], Intake]", form: str, calculation: str = "allocations") -> int:
     """Compute in this process and print the answer; return the exit code."""
     from service import calculate, problems
     from service.books import Books
     from service.errors import TailraceError
     from service.executors import Work
     from service.representations import formats
+    from service.routes.forms import picture
     from service.terminal import ProgressBar, complaint, readable
 
     try:
-        settings = Settings.from_environment(os.environ)
+        settings = _checked(Settings.from_environment(os.environ))
     except ValueError as error:
         return _complain(str(error), BAD_USAGE)
+    chosen = next((known for known in formats.FORMS[calculation] if known.suffix == form), None)
+    if chosen is None and form != "table":
+        there = ", ".join(known.suffix for known in formats.FORMS[calculation])
+        return _complain(f"{calculation} have no form {form}: there are table, {there}", BAD_USAGE)
     bar = ProgressBar()
     try:
         work = Work(settings.threads, bar)
-        answer = calculate.answer(Books(settings).resolved(read(settings), work), work, settings, problems.describe)
+        written: str | bytes
+        taken = Books(settings).resolved(read(settings), work)
+        if chosen is not None and chosen.drawn:
+            written = formats.write(picture(calculate.drawing(taken, work, settings), None), chosen)
+        else:
+            answer = calculate.answer(taken, work, settings, problems.describe)
+            written = readable(answer) if chosen is None else formats.write(answer, chosen)
     except TailraceError as error:
         bar.end()
         return _complain(complaint(error), BAD_USAGE)
     bar.end()
-    if form == "table":
-        print(readable(answer), end="")
+    if isinstance(written, str):
+        print(written, end="")
     else:
-        sys.stdout.buffer.write(formats.write(answer, formats.FORMATS[form]))
+        sys.stdout.buffer.write(written)
     return 0
+
+
+def _checked(settings: Settings) -> Settings:
+    """Return settings whose folder of books is there.
+
+    Raises
+    ------
+    ValueError
+        There is no such folder.
+    """
+    if settings.books and not Path(settings.books).is_dir():
+        raise ValueError(f"there is no folder {settings.books!r} of books ({variable('books')})")
+    return settings
 
 
 def _add_serve(commands: "argparse._SubParsersAction[argparse.ArgumentParser]") -> None:
@@ -199,7 +223,7 @@ def _serve(options: argparse.Namespace) -> int:
     given = {variable(name): text for name, text in vars(options).items() if name != "run" and text is not None}
     environment = {**os.environ, **given}
     try:
-        settings = Settings.from_environment(environment)
+        settings = _checked(Settings.from_environment(environment))
         port = _whole(environment, "port", "8000", least=0, most=PORTS)
         workers = _whole(environment, "workers", "1", least=1, most=PORTS)
     except ValueError as error:

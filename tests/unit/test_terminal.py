@@ -138,6 +138,32 @@ def test_csv(capsys, small):
     assert len(lines) == 4
 
 
+@pytest.mark.parametrize(
+    ("form", "begins"), [("xml", b"<"), ("arrow", b"\xff\xff\xff\xff"), ("svg", b"<svg"), ("png", b"\x89PNG")]
+)
+def test_the_other_forms(capfdbinary, small, form, begins):
+    assert cli.main(["compute", small, "--as", form]) == 0
+    output, complaint = capfdbinary.readouterr()
+    assert output.startswith(begins)
+    assert complaint == b""
+
+
+def test_a_form_that_a_calculation_has_not(capsys, small):
+    code, output, complaint = run(capsys, "compute", small, "--to", "comparisons", "--as", "svg")
+    assert (code, output) == (2, "")
+    assert "comparisons have no form svg: there are table, json, csv" in complaint
+
+
+@pytest.mark.parametrize("arguments", [("serve", "--books"), ("compute", "request.json", "--books")])
+def test_a_folder_of_books_that_is_not_there(capsys, tmp_path, arguments, monkeypatch):
+    monkeypatch.setenv("TAILRACE_BOOKS", "")
+    (tmp_path / "request.json").write_text("{}")
+    monkeypatch.chdir(tmp_path)
+    code, output, complaint = run(capsys, *arguments, str(tmp_path / "none"))
+    assert (code, output) == (2, "")
+    assert "there is no folder" in complaint
+
+
 def test_standard_input(small):
     process = command("compute", "-", "--as", "json", stdin=subprocess.PIPE)
     output, complaint = process.communicate(json.dumps(SMALL).encode(), timeout=60)
