@@ -192,24 +192,26 @@ def _until(source: Source, plan: Plan, demand: Demand, stop: StopWhen, work: Wor
     light = replace(demand, stand_alone=False, groups=())
     shares = [share for one in demand.measures if (share := one.tail_share) is not None]
     first = max(FIRST_LOOK, ceil(TAIL_OF_FIRST_LOOK / min(shares))) if shares else FIRST_LOOK
-    scenarios = min(-(-first // BLOCK) * BLOCK, stop.max_scenarios)
+    most = plan.most(stop.max_scenarios)
+    scenarios = min(-(-first // BLOCK) * BLOCK, most)
     met, done, before = 0, 0, None
     while True:
         longer = plan.of_size(scenarios)
-        looking = work.part(done / stop.max_scenarios, scenarios / stop.max_scenarios)
+        looking = work.part(done / most, longer.scenarios / most)
         made = _carried_out(source, longer, light, looking, settings, before=before)
         worst = max(_relative_errors(made, demand))
         met = met + 1 if worst <= stop.relative_standard_error else 0
         done, before = longer.scenarios, _first_of_more(made)
-        if met == LOOKS_IN_A_ROW or scenarios >= stop.max_scenarios:
+        if met == LOOKS_IN_A_ROW or done >= most:
             break
-        scenarios = min(2 * scenarios, stop.max_scenarios)
+        scenarios = min(2 * done, most)
     reached = f"the largest relative standard error of a total is {worst:.3g}"
     if met < LOOKS_IN_A_ROW:
-        note = f"stopped at the most scenarios allowed, {longer.scenarios:,}: {reached}"
+        points = f" in Sobol points, within {stop.max_scenarios:,}" if most < stop.max_scenarios else ""
+        note = f"stopped at the most scenarios allowed{points}, {longer.scenarios:,}: {reached}"
     else:
         note = f"stopped after {longer.scenarios:,} scenarios: {reached}; intervals are not corrected for stopping"
-    looking = work.part(min(done / stop.max_scenarios, 1.0), 1.0)
+    looking = work.part(done / most, 1.0)
     made = _carried_out(source, longer, demand, looking, settings, before=before)
     return replace(made, notes=(*made.notes, ("stopped", note, "/losses/simulation/stop_when")))
 

@@ -21,7 +21,7 @@ from service.risk.history import HistoryLosses as Changes
 from service.risk.history import HorizonScaling, history_losses
 from service.risk.loss_table import LossTable, SubPortfolio
 from service.risk.quantiles import Array, Indices
-from service.risk.simulation import Plan
+from service.risk.simulation import LEAST_POINTS, Plan, most_points, sobol_points
 from service.schemas.losses import (
     BookLosses,
     FactorLosses,
@@ -30,6 +30,7 @@ from service.schemas.losses import (
     HistorySubPortfolio,
     Losses,
     ScenarioLosses,
+    SimulationPlan,
 )
 from service.settings import Settings
 
@@ -201,14 +202,10 @@ def _simulated(losses: FactorLosses, settings: Settings) -> Source:
     model = FactorModel.of(
         [(one.id, one.marginal) for one in losses.factors], losses.dependence, _terms(losses.sub_portfolios)
     )
-    asked = losses.simulation
-    most = asked.scenarios if asked.stop_when is None else asked.stop_when.max_scenarios
-    limits.check("max_scenarios", max(most, asked.scenarios), settings, "/simulation/scenarios")
-    with pointing("/simulation"):
-        make = Plan.quasi_random if asked.method == "sobol" else Plan.random
-        plan = make(model, seed=asked.seed, scenarios=asked.scenarios)
+    plan = _plan(model, losses.simulation, settings)
     notes = [(code, detail, f"/losses{pointer}") for code, detail, pointer in model.notes]
-    if asked.method == "sobol" and plan.scenarios != asked.scenarios:
+    asked = losses.simulation
+    if asked.stop_when is None and plan.scenarios != asked.scenarios:
         detail = f"{plan.scenarios:,} points were taken, eight times a power of two"
         notes.append(("sobol_points", detail, "/losses/simulation/scenarios"))
     each, total = model.existence()
@@ -220,6 +217,23 @@ def _simulated(losses: FactorLosses, settings: Settings) -> Source:
         tails=(*each, total),
         notes=tuple(notes),
     )
+
+
+def _plan(model: FactorModel, asked: SimulationPlan, settings: Settings) -> Plan:
+    """Return the plan of the scenarios asked for; under `stop_when` of the most, of which fewer may be simulated."""
+    stop, sobol = asked.stop_when, asked.method == "sobol"
+    scenarios = asked.scenarios if stop is None else stop.max_scenarios
+    taken = sobol_points(scenarios) if sobol and stop is None else scenarios
+    limits.check("max_scenarios", taken, settings, "/simulation/scenarios")
+    with pointing("/simulation"):
+        if not sobol:
+            return Plan.random(model, seed=asked.seed, scenarios=scenarios)
+        if stop is not None and scenarios < LEAST_POINTS:
+            detail = f"there are at least {LEAST_POINTS} Sobol points, so no fewer can be the most"
+            raise InvalidValue.at("/stop_when/max_scenarios", detail, code="out_of_range")
+        if stop is not None:
+            scenarios = most_points(scenarios)
+        return Plan.quasi_random(model, seed=asked.seed, scenarios=scenarios)
 
 
 def _observed(losses: HistoryLosses, sent: Sent, work: Work, settings: Settings) -> Source:

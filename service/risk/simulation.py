@@ -2,7 +2,6 @@
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from math import ceil, log2
 from threading import local
 
 import numpy as np
@@ -12,6 +11,9 @@ from service.risk.effort import Effort
 from service.risk.factors import FACTORS, FactorDraws, FactorModel, ModelScratch
 from service.risk.quantiles import Array, Indices
 from service.risk.streams import BLOCK, SCRAMBLINGS, Draw, SobolSequence
+
+LEAST_POINTS = 2 * SCRAMBLINGS
+"""Least number of Sobol points."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -47,13 +49,17 @@ class Plan:
         InvalidValue
             For more dimensions or points than the sequence has.
         """
-        exponent = max(1, ceil(log2(max(scenarios, 2) / SCRAMBLINGS)))
+        exponent = _exponent(scenarios)
         dimensions = max(1, model.sampler.dimensions)
         sequences = tuple(
             SobolSequence.of(seed, FACTORS, number, dimensions=dimensions, exponent=exponent)
             for number in range(SCRAMBLINGS)
         )
         return cls(model, seed, SCRAMBLINGS << exponent, sequences)
+
+    def most(self, scenarios: int) -> int:
+        """Return the largest number of scenarios, at most so many, that such a plan can have."""
+        return most_points(scenarios) if self.sobol else scenarios
 
     def of_size(self, scenarios: int) -> "Plan":
         """Return the same plan with another number of scenarios."""
@@ -112,6 +118,22 @@ class Plan:
         return FactorDraws(
             np.concatenate([part.values for part in parts]), np.concatenate([part.normal_scores for part in parts])
         )
+
+
+def sobol_points(scenarios: int) -> int:
+    """Return how many Sobol points are taken for `scenarios`: the next eight times a power of two."""
+    return SCRAMBLINGS << _exponent(scenarios)
+
+
+def most_points(scenarios: int) -> int:
+    """Return the largest number of Sobol points that is at most `scenarios`, which are `LEAST_POINTS` or more."""
+    size = sobol_points(scenarios)
+    return size if size <= scenarios else size // 2
+
+
+def _exponent(scenarios: int) -> int:
+    """Return the least exponent, at least 1, with which all scramblings have `scenarios` points together."""
+    return max(1, (-(-scenarios // SCRAMBLINGS) - 1).bit_length())
 
 
 class Workbench:

@@ -204,7 +204,7 @@ class StopWhen:
     relative_standard_error: Annotated[Number, Field(gt=0.0, lt=1.0)]
     """Largest standard error of any measure of the total, as a part of its figure, that is good enough."""
     max_scenarios: Count
-    """Scenarios after which it stops in any case."""
+    """Scenarios after which it stops in any case; with `sobol` the last eight times a power of two within it."""
 
 
 @dataclass(frozen=True, kw_only=True, config=STRICT)

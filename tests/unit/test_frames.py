@@ -121,6 +121,26 @@ def test_stopping_works_with_streams_and_sobol_points(method):
     assert answer.scenarios == 2 * 65_536
 
 
+@pytest.mark.parametrize(("most", "taken"), [(70_001, 65_536), (131_072, 131_072), (262_143, 131_072), (16, 16)])
+def test_sobol_points_never_go_beyond_the_most_scenarios(most, taken):
+    """Points come as eight times a power of two (`Plan.quasi_random`): the largest of them that is allowed."""
+    hard = {"relative_standard_error": 1e-9, "max_scenarios": most}
+    answer = measured(one_loss(EXPONENTIAL, stop_when=hard, method="sobol"), es(0.985), max_scenarios=most)
+    assert answer.scenarios == answer.provenance.scenarios == taken
+    assert "sobol_points" not in {note.code for note in answer.notes}
+    [note] = [note for note in answer.notes if note.code == "stopped"]
+    within = "" if taken == most else f" in Sobol points, within {most}"
+    assert note.detail.startswith(f"stopped at the most scenarios allowed{within}, {taken}: ")
+
+
+def test_the_last_look_at_sobol_points_is_not_taken_twice():
+    """The first look, at 1,000 tail scenarios, is at all points that are allowed: its error is small enough once."""
+    easy = {"relative_standard_error": 0.5, "max_scenarios": 131_072}
+    answer = measured(one_loss(EXPONENTIAL, stop_when=easy, method="sobol"), es(0.99))
+    assert answer.scenarios == 131_072
+    assert "most scenarios allowed" in next(note.detail for note in answer.notes if note.code == "stopped")
+
+
 LARGE = one_loss(EXPONENTIAL, scenarios=100_000)
 
 

@@ -62,6 +62,27 @@ def test_too_many_scenarios_are_refused_before_work(plan):
     assert caught.value.faults[0].pointer == "/losses/simulation/scenarios"
 
 
+def test_the_points_that_are_taken_are_held_against_the_limit():
+    """5,000 Sobol scenarios are 8,192 points, the next eight times a power of two."""
+    with pytest.raises(LimitExceeded, match="8192 scenarios are more than the 8191") as caught:
+        measured(model(method="sobol", scenarios=5000), max_scenarios=8191)
+    assert (caught.value.limit.allowed, caught.value.limit.asked) == (8191, 8192)
+    assert measured(model(method="sobol", scenarios=5000), max_scenarios=8192).scenarios == 8192
+
+
+def test_scenarios_that_stop_when_leaves_unused_are_not_counted():
+    stop = {"relative_standard_error": 0.01, "max_scenarios": 5000}
+    assert measured(model(scenarios=100_000, stop_when=stop), max_scenarios=5000).scenarios == 5000
+
+
+def test_fewer_points_than_there_can_be_are_no_most():
+    """Eight scramblings of two points are the fewest."""
+    stop = {"relative_standard_error": 0.01, "max_scenarios": 15}
+    with pytest.raises(InvalidValue, match="at least 16 Sobol points") as caught:
+        measured(model(method="sobol", stop_when=stop))
+    assert caught.value.faults[0].pointer == "/losses/simulation/stop_when/max_scenarios"
+
+
 def test_faults_point_into_the_losses():
     for losses, pointer in (
         (factor_model(MARGINALS, {"a": linear(z=1.0)}), "/losses/sub_portfolios/0/components/0/exposures/0/factor"),
