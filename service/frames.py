@@ -2,7 +2,6 @@
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
-from functools import reduce
 from math import ceil
 from typing import Literal
 
@@ -147,13 +146,23 @@ def framed(source: Source, demand: Demand, stop: StopWhen | None, work: Work, se
     if source.plan is None or source.tails is None:
         raise ValueError("a source has a table or a plan")
     *each, total = source.tails
-    columns = each + [reduce(Tails.plus, [each[member] for member in group.members]) for group in demand.groups]
+    columns = each + _of_groups(source.plan, each, demand, work)
     _refuse_missing(source, demand, columns, total)
     if stop is None:
         made = _carried_out(source, source.plan, demand, work, settings)
     else:
         made = _until(source, source.plan, demand, stop, work, settings)
     return replace(made, columns=columns, total=total, notes=source.notes + made.notes)
+
+
+def _of_groups(plan: Plan, each: Sequence[Tails], demand: Demand, work: Work) -> list[Tails]:
+    """Return the tails of each group, judged as the total is."""
+    exponential = any(measure.needs.exponential > 0.0 for measure in demand.measures)
+    laws = []
+    for group in demand.groups:
+        work.checkpoint()
+        laws.append(plan.model.portfolio.of_sum(group.members.tolist(), each, exponential=exponential))
+    return laws
 
 
 def _carried_out(

@@ -213,3 +213,19 @@ def test_exact_dependence_is_judged_by_its_worst_case():
     assert measured(losses, {"kind": "entropic", "aversion": 0.6}).measures[0].total.value > 2.0
     with pytest.raises(NotDefined, match=r"below 0\.666667"):
         measured(losses, {"kind": "entropic", "aversion": 0.7})
+
+
+@pytest.mark.parametrize(("correlation", "aversion", "too_averse"), [(0.0, 0.8, 1.0), (0.5, 0.6, 0.7)])
+def test_a_group_of_all_exists_where_the_total_does(correlation, aversion, too_averse):
+    """Two exponential losses of mean 1: E exp(tL) of their sum exists below 1/(1 + ρ), so that of their group does."""
+    book = {one: {"components": [linear(**{one: 1.0})], "attributes": {"g": "all"}} for one in "xy"}
+    losses = factor_model(
+        {"x": EXPONENTIAL, "y": EXPONENTIAL},
+        book,
+        dependence=law("gaussian", correlation=equal(correlation)) if correlation else None,
+        scenarios=4096,
+    )
+    answer = measured(losses, {"kind": "entropic", "aversion": aversion}, group_by=["g"]).measures[0]
+    assert [one.figure.value for one in answer.groups] == [answer.total.value]
+    with pytest.raises(NotDefined, match=r"of the total does not exist"):
+        measured(losses, {"kind": "entropic", "aversion": too_averse}, group_by=["g"])

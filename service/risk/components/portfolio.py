@@ -308,11 +308,25 @@ class Portfolio:
 
     def existence(self) -> tuple[list[Tails], Tails]:
         """Return which moments exist of each sub-portfolio's loss and of the total."""
-        each = [terms.tails(self.factors) for terms in self.sub_portfolios]
-        parts = [(terms.used, tails) for terms, tails in zip(self.sub_portfolios, each, strict=True)]
-        total = self._judged(self.sub_portfolios, together(parts, self.factors), MOST_OF_ALL)
-        pairs = zip(self.sub_portfolios, each, strict=True)
-        return [self._judged([terms], tails, MOST_OF_ONE) for terms, tails in pairs], total
+        each = [self._judged([terms], terms.tails(self.factors), MOST_OF_ONE) for terms in self.sub_portfolios]
+        return each, self.of_sum(range(len(each)), each)
+
+    def of_sum(self, members: Sequence[int], each: Sequence[Tails], *, exponential: bool = True) -> Tails:
+        """Return which moments exist of the summed loss of some sub-portfolios.
+
+        Parameters
+        ----------
+        members : sequence of int
+            Their numbers.
+        each : sequence of Tails
+            Of every sub-portfolio.
+        exponential : bool
+            Whether exponential moments are worth the work; if not, they may be said to be missing where they exist.
+        """
+        terms = [self.sub_portfolios[member] for member in members]
+        parts = [(one.used, each[member]) for one, member in zip(terms, members, strict=True)]
+        tails = together(parts, self.factors)
+        return self._judged(terms, tails, MOST_OF_ALL) if exponential else tails
 
     def _judged(self, terms: Sequence[SubPortfolioTerms], tails: Tails, most: int) -> Tails:
         """Return the tails with the exponential moment that a normal dependence allows, where that is known."""
