@@ -143,10 +143,9 @@ def framed(source: Source, demand: Demand, stop: StopWhen | None, work: Work, se
     if source.table is not None:
         frame = Frame.of(source.table, demand.groups, demand.measures, work, stand_alone=demand.stand_alone)
         return Framed(frame, demand.coverage, notes=source.notes)
-    if source.plan is None or source.tails is None:
+    if source.plan is None:
         raise ValueError("a source has a table or a plan")
-    *each, total = source.tails
-    columns = each + _of_groups(source.plan, each, demand, work)
+    columns, total = _laws(source.plan, demand, work)
     _refuse_missing(source, demand, columns, total)
     if stop is None:
         made = _carried_out(source, source.plan, demand, work, settings)
@@ -155,14 +154,15 @@ def framed(source: Source, demand: Demand, stop: StopWhen | None, work: Work, se
     return replace(made, columns=columns, total=total, notes=source.notes + made.notes)
 
 
-def _of_groups(plan: Plan, each: Sequence[Tails], demand: Demand, work: Work) -> list[Tails]:
-    """Return the tails of each group, judged as the total is."""
+def _laws(plan: Plan, demand: Demand, work: Work) -> tuple[list[Tails], Tails]:
+    """Return the tails of each sub-portfolio and group, and of the total: a group is judged as the total is."""
     exponential = any(measure.needs.exponential > 0.0 for measure in demand.measures)
-    laws = []
+    each, total = plan.model.existence(exponential=exponential, pause=work.checkpoint)
+    groups = []
     for group in demand.groups:
         work.checkpoint()
-        laws.append(plan.model.portfolio.of_sum(group.members.tolist(), each, exponential=exponential))
-    return laws
+        groups.append(plan.model.portfolio.of_sum(group.members.tolist(), each, exponential=exponential))
+    return each + groups, total
 
 
 def _carried_out(
@@ -269,15 +269,22 @@ def _has_error(measure: RiskMeasure, law: Tails) -> bool:
 
 
 def _missing(measure: RiskMeasure, law: Tails) -> str | None:
-    """Return why a figure does not exist; None if it does."""
+    """Return that a figure does not exist, or may not, and why; None if it does."""
     needs = measure.needs
     if law.upper_index <= needs.upper_index:
-        return f"its upper tail index is {law.upper_index:.6g} and must be above {needs.upper_index:.6g}"
+        index = f"its upper tail index is {law.upper_index:.6g} and must be above {needs.upper_index:.6g}"
+        return f"does not exist: {index}"
     if law.lower_index <= needs.lower_index:
-        return f"its lower tail index is {law.lower_index:.6g} and must be above {needs.lower_index:.6g}"
-    if needs.exponential > 0.0 and law.upper_exponential <= needs.exponential:
-        return f"E[exp(t L)] is finite for t below {law.upper_exponential:.6g} only"
-    return None
+        index = f"its lower tail index is {law.lower_index:.6g} and must be above {needs.lower_index:.6g}"
+        return f"does not exist: {index}"
+    rate = law.upper_exponential
+    if needs.exponential <= 0.0 or rate > needs.exponential:
+        return None
+    if law.upper_sharp:
+        below = f"is finite for t below {rate:.6g} only" if rate > 0.0 else "is infinite for every t above 0"
+        return f"does not exist: E[exp(t L)] {below}"
+    below = f"surely finite only for t below {rate:.6g}" if rate > 0.0 else "not surely finite for any t above 0"
+    return f"may not exist: E[exp(t L)] is {below}"
 
 
 def missing(measures: Sequence[RiskMeasure], law: Tails) -> str | None:
@@ -285,7 +292,7 @@ def missing(measures: Sequence[RiskMeasure], law: Tails) -> str | None:
     if min(law.upper_index, law.lower_index) <= 1.0:
         return f"the loss has no mean: a tail index is {min(law.upper_index, law.lower_index):.6g}"
     reasons = ((measure, _missing(measure, law)) for measure in measures)
-    return next((f"{measure.name} does not exist: {reason}" for measure, reason in reasons if reason), None)
+    return next((f"{measure.name} {reason}" for measure, reason in reasons if reason), None)
 
 
 def _refuse_missing(source: Source, demand: Demand, columns: Sequence[Tails], total: Tails) -> None:
@@ -302,7 +309,7 @@ def _refuse_missing(source: Source, demand: Demand, columns: Sequence[Tails], to
         for name, law in laws:
             reason = _missing(measure, law)
             if reason is not None:
-                detail = f"{measure.name} of {name} does not exist: {reason}"
+                detail = f"{measure.name} of {name} {reason}"
                 raise NotDefined.at(f"/measures/{number}", detail, code="infinite_figure")
 
 

@@ -15,7 +15,6 @@ from service.payloads import Sheet
 from service.provenance import document_digest, losses_digest
 from service.resolve import loss_table
 from service.risk.components.portfolio import SubPortfolioTerms
-from service.risk.covers import Tails
 from service.risk.factors import FactorModel
 from service.risk.history import HistoryLosses as Changes
 from service.risk.history import HorizonScaling, history_losses
@@ -93,8 +92,6 @@ class Source:
         The observed changes that they were made of.
     factor_ids : tuple of str
         Of these changes.
-    tails : sequence of Tails, or None
-        Of each sub-portfolio and then of the total, where the law is known.
     notes : tuple of (str, str, str or None)
         Code, detail and pointer into the request.
     held : Store
@@ -108,7 +105,6 @@ class Source:
     plan: Plan | None = None
     changes: Changes | None = None
     factor_ids: tuple[str, ...] = ()
-    tails: Sequence[Tails] | None = None
     notes: tuple[Note, ...] = ()
     held: Store[Any] = Store(0)  # noqa: RUF009  # one that keeps nothing
 
@@ -208,13 +204,11 @@ def _simulated(losses: FactorLosses, settings: Settings) -> Source:
     if asked.stop_when is None and plan.scenarios != asked.scenarios:
         detail = f"{plan.scenarios:,} points were taken, eight times a power of two"
         notes.append(("sobol_points", detail, "/losses/simulation/scenarios"))
-    each, total = model.existence()
     return Source(
         _spec_digest(losses),
         SOBOL if plan.sobol else RANDOM,
         _described(losses.sub_portfolios),
         plan=plan,
-        tails=(*each, total),
         notes=tuple(notes),
     )
 

@@ -7,6 +7,7 @@ compound they map each claim, and a layer there may also have terms on the year'
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass as plain
+from dataclasses import field, replace
 from typing import Annotated, Literal
 
 import numpy as np
@@ -39,6 +40,9 @@ class Tails:
     upper_exponential, lower_exponential : float
         E[exp(t X)], or E[exp(-t X)], is finite for every t in (0, this), in 1/currency.
 
+    upper_sharp, lower_sharp : bool
+        Whether that expectation is known to be infinite for every t beyond; else it is finite so far at least.
+
     Notes
     -----
     Sums and products of dependent amounts are judged by Hölder's inequality, which no dependence
@@ -49,6 +53,8 @@ class Tails:
     lower_index: float = math.inf
     upper_exponential: float = math.inf
     lower_exponential: float = math.inf
+    upper_sharp: bool = field(default=True, compare=False)
+    lower_sharp: bool = field(default=True, compare=False)
 
     def times(self, factor: float) -> "Tails":
         """Return the tails of `factor` times the amount; a negative factor turns them round."""
@@ -57,26 +63,53 @@ class Tails:
         size = abs(factor)
         upper, lower = self.upper_exponential / size, self.lower_exponential / size
         if factor > 0.0:
-            return Tails(self.upper_index, self.lower_index, upper, lower)
-        return Tails(self.lower_index, self.upper_index, lower, upper)
+            return Tails(self.upper_index, self.lower_index, upper, lower, self.upper_sharp, self.lower_sharp)
+        return Tails(self.lower_index, self.upper_index, lower, upper, self.lower_sharp, self.upper_sharp)
 
     def plus(self, other: "Tails", *, independent: bool = False) -> "Tails":
         """Return the tails of the sum: the heavier index; the harmonic sum of rates, or the least if independent."""
-        together = min if independent else harmonic
+        upper, lower = (
+            _rate_of_sum(rates, sharp, thin=(self.thin, other.thin), independent=independent)
+            for rates, sharp in (
+                ((self.upper_exponential, other.upper_exponential), (self.upper_sharp, other.upper_sharp)),
+                ((self.lower_exponential, other.lower_exponential), (self.lower_sharp, other.lower_sharp)),
+            )
+        )
         return Tails(
             min(self.upper_index, other.upper_index),
             min(self.lower_index, other.lower_index),
-            together(self.upper_exponential, other.upper_exponential),
-            together(self.lower_exponential, other.lower_exponential),
+            upper[0],
+            lower[0],
+            upper[1],
+            lower[1],
         )
+
+    @property
+    def thin(self) -> bool:
+        """Whether all exponential moments exist."""
+        return math.isinf(min(self.upper_exponential, self.lower_exponential))
 
     def bounded_above(self) -> "Tails":
         """Return the tails once nothing goes beyond some amount."""
-        return Tails(math.inf, self.lower_index, math.inf, self.lower_exponential)
+        return replace(self, upper_index=math.inf, upper_exponential=math.inf, upper_sharp=True)
 
     def bounded_below(self) -> "Tails":
         """Return the tails once nothing falls below some amount."""
-        return Tails(self.upper_index, math.inf, self.upper_exponential, math.inf)
+        return replace(self, lower_index=math.inf, lower_exponential=math.inf, lower_sharp=True)
+
+
+def _rate_of_sum(
+    rates: tuple[float, float], sharp: tuple[bool, bool], *, thin: tuple[bool, bool], independent: bool
+) -> tuple[float, bool]:
+    """Return the rate of a sum, and whether it is sharp: not where dependent amounts may make up for each other.
+
+    A thin amount takes nothing from the other, by Hölder's inequality.
+    """
+    if independent:
+        least = min(rates)
+        return least, any(known for rate, known in zip(rates, sharp, strict=True) if rate == least)
+    rate = harmonic(*rates)
+    return rate, math.isinf(rate) or (thin[0] and sharp[1]) or (thin[1] and sharp[0])
 
 
 def harmonic(first: float, second: float) -> float:
@@ -200,8 +233,7 @@ class CedeLayerCover(_LayerTerms):
             return tails
         if self.share == 1.0:
             return tails.bounded_above()
-        kept = tails.times(1.0 - self.share)
-        return Tails(tails.upper_index, tails.lower_index, kept.upper_exponential, tails.lower_exponential)
+        return replace(tails.times(1.0 - self.share), lower_exponential=tails.lower_exponential)
 
     def reach(self, reach: tuple[float, float]) -> tuple[float, float]:
         if math.isinf(reach[1]):  # infinity less infinity

@@ -234,9 +234,9 @@ class FactorModel:
                     notes.append(("driven_sum", detail, pointer))
         return tuple(notes)
 
-    def existence(self) -> tuple[list[Tails], Tails]:
-        """Return which moments exist of each sub-portfolio's loss and of the total."""
-        return self.portfolio.existence()
+    def existence(self, *, exponential: bool = True, pause: Callable[[], None] = go_on) -> tuple[list[Tails], Tails]:
+        """Return which moments exist of each sub-portfolio's loss and of the total; parameters as of the portfolio."""
+        return self.portfolio.existence(exponential=exponential, pause=pause)
 
 
 def _table(factors: FactorSet, column: int, law: Law) -> ScoreTable:

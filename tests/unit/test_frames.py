@@ -229,3 +229,33 @@ def test_a_group_of_all_exists_where_the_total_does(correlation, aversion, too_a
     assert [one.figure.value for one in answer.groups] == [answer.total.value]
     with pytest.raises(NotDefined, match=r"of the total does not exist"):
         measured(losses, {"kind": "entropic", "aversion": too_averse}, group_by=["g"])
+
+
+EXPONENTIALS = {"x": EXPONENTIAL, "y": EXPONENTIAL}
+
+
+@pytest.mark.parametrize(
+    ("book", "dependence"),
+    [
+        ({"a": linear(x=1.0), "b": linear(y=1.0)}, law("gaussian", correlation=equal(-0.5))),
+        ({"a": linear(x=1.0, y=1.0)}, law("gaussian", correlation=equal(-0.5))),
+        ({"a": linear(x=0.9, y=-0.4), "b": linear(y=-0.4, x=0.9)}, law("comonotonic")),
+    ],
+)
+def test_losses_that_do_not_grow_together_have_the_moment_of_one(book, dependence):
+    """E exp(tL) exists below 1: of X + Y at ρ = -1/2 by quadrature (test_factors), of 1.8X - 0.8X since it is X."""
+    losses = factor_model(EXPONENTIALS, book, dependence=dependence, scenarios=4096)
+    assert measured(losses, {"kind": "entropic", "aversion": 0.8}).measures[0].total.value > 0.0
+    with pytest.raises(NotDefined, match=r"does not exist: E\[exp\(t L\)\] is finite for t below 1 only"):
+        measured(losses, {"kind": "entropic", "aversion": 1.0})
+
+
+def test_a_bound_that_may_be_too_strict_is_not_said_to_be_the_last_word():
+    """Under other copulas the bound is Hölder's inequality, which only perfect dependence needs."""
+    dependence = law("student_t", correlation=equal(0.5), df=4.0)
+    losses = factor_model(EXPONENTIALS, {"a": linear(x=1.0, y=1.0)}, dependence=dependence, scenarios=4096)
+    words = r"entropic 0\.5 of the total may not exist: E\[exp\(t L\)\] is surely finite only for t below 0\.5"
+    with pytest.raises(NotDefined, match=words):
+        measured(losses, {"kind": "entropic", "aversion": 0.5})
+    with pytest.raises(NotDefined, match=r"does not exist: E\[exp\(t L\)\] is infinite for every t above 0"):
+        measured(one_loss(LOGNORMAL), {"kind": "entropic", "aversion": 0.1})

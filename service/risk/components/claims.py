@@ -17,10 +17,10 @@ from service.risk.components.contract import (
     Array,
     Block,
     Component,
-    Exponents,
     FactorSet,
+    Growth,
     PreparedComponent,
-    exponent_of,
+    growth_along,
     refuse,
     tails_of,
     unknown_factors,
@@ -170,10 +170,10 @@ class CompoundComponent(Component):
             upper, lower = _rate(amounts, upper, growth), _rate(-amounts, lower, growth)
         return terms.year_tails(Tails(claim.upper_index, claim.lower_index, upper, lower))
 
-    def exponents(self, factors: FactorSet, factor: float) -> Exponents:
+    def growth(self, factors: FactorSet, factor: float) -> Growth:
         if self.driver is None:
-            return {}
-        return {(self.driver, self.driver): exponent_of(self.tails(factors).times(factor))}
+            return Growth()
+        return growth_along(self.driver, self.tails(factors).bounded_below(), factor, factor)  # no claim is negative
 
     @property
     def _typical_claims(self) -> Array:

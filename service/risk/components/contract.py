@@ -7,8 +7,9 @@ all that does not change from block to block and writes the losses of a block of
 import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass as plain
+from dataclasses import field
 from functools import cached_property
-from typing import Protocol
+from typing import Protocol, TypeVar
 
 import numpy as np
 from numpy.random import Generator
@@ -25,7 +26,80 @@ from service.suggestions import suggestion
 
 Array = NDArray[np.float64]
 Indices = NDArray[np.intp]
-Exponents = dict[tuple[str, str], float]
+_Key = TypeVar("_Key")
+
+
+@plain(frozen=True, slots=True)
+class Growth:
+    """How fast a loss grows far out with the normal scores z of the factors: at most as a sum of squares and products.
+
+    Attributes
+    ----------
+    rising, falling : dict of str to float
+        Coefficients of z²/2 where z is above, or below, 0; negative where the loss falls; infinity where an
+        exponential does not keep up.
+    products : dict of (str, str) to float
+        Coefficients of z_a z_b, ids in order.
+    sharp : bool
+        Whether the loss grows as fast as that, not more slowly.
+    """
+
+    rising: dict[str, float] = field(default_factory=dict)
+    falling: dict[str, float] = field(default_factory=dict)
+    products: dict[tuple[str, str], float] = field(default_factory=dict)
+    sharp: bool = True
+
+    def plus(self, other: "Growth") -> "Growth":
+        """Return the growth of the sum."""
+        return Growth(
+            _added(self.rising, other.rising),
+            _added(self.falling, other.falling),
+            _added(self.products, other.products),
+            self.sharp and other.sharp,
+        )
+
+    def covered(self, rate: float) -> "Growth":
+        """Return the growth once a cover leaves exponential moments up to `rate` of what had them up to 1.
+
+        No gain may come through to make up for another loss: each part counts where it is a loss.
+        """
+        rising, falling = ({name: max(one, 0.0) / rate for name, one in part.items()} for part in self._squares)
+        for pair, coefficient in self.products.items():  # 2 |z_a z_b| is at most z_a² + z_b²
+            for name in pair:
+                rising[name] = rising.get(name, 0.0) + abs(coefficient) / rate
+                falling[name] = falling.get(name, 0.0) + abs(coefficient) / rate
+        gains = any(one < 0.0 for part in self._squares for one in part.values())
+        return Growth(rising, falling, {}, self.sharp and not gains and not self.products)
+
+    @property
+    def _squares(self) -> tuple[dict[str, float], dict[str, float]]:
+        return self.rising, self.falling
+
+
+def _added(first: dict[_Key, float], second: dict[_Key, float]) -> dict[_Key, float]:
+    sums = dict(first)
+    for key, coefficient in second.items():
+        sums[key] = sums.get(key, 0.0) + coefficient
+    return sums
+
+
+def growth_along(name: str, tails: Tails, rising: float, falling: float) -> Growth:
+    """Return the growth of a loss that changes by `rising` per unit of a factor far up, by `falling` far down.
+
+    A factor with exponential moments up to a rate is about z²/(2 rate) far out: -ln P(Z > z) is about z²/2.
+    """
+    above, below = _square(rising, tails.upper_exponential), _square(-falling, tails.lower_exponential)
+    return Growth({name: above[0]}, {name: below[0]}, {}, above[1] and below[1])
+
+
+def _square(slope: float, rate: float) -> tuple[float, bool]:
+    """Return the coefficient of z²/2, and whether it is sharp: a gain without bound counts as none."""
+    if slope == 0.0 or math.isinf(rate):
+        return 0.0, True
+    coefficient = math.inf if rate == 0.0 else abs(slope) / rate
+    if slope > 0.0:
+        return coefficient, True
+    return (-coefficient, True) if math.isfinite(coefficient) else (0.0, False)
 
 
 @plain(frozen=True)
@@ -177,13 +251,12 @@ class Component:
         """Return which moments of the loss exist; factors have marginals here."""
         return Tails()
 
-    def exponents(self, factors: FactorSet, factor: float) -> Exponents:  # noqa: ARG002  # members use them
-        """Return how fast `factor` times the loss grows with products of the factors' normal scores far out.
+    def growth(self, factors: FactorSet, factor: float) -> Growth:  # noqa: ARG002  # members use them
+        """Return how fast `factor` times the loss grows with the factors' normal scores far out.
 
-        The coefficients of z_a z_b / 2, ids in order, (a, a) for a square; infinity where an exponential
-        does not keep up. What has draws of its own, or grows more slowly, is left out.
+        What has draws of its own is left out.
         """
-        return {}
+        return Growth()
 
     @property
     def independent(self) -> bool:
@@ -193,11 +266,6 @@ class Component:
     def mean(self, factors: FactorSet) -> float | None:  # noqa: ARG002  # members use them
         """Return the expected loss in currency where it has a closed form, else None."""
         return None
-
-
-def exponent_of(tails: Tails) -> float:
-    """Return the coefficient of z²/2 in an amount that is exponential far out: -ln P(Z > z) is about z²/2."""
-    return math.inf if tails.upper_exponential == 0.0 else 1.0 / tails.upper_exponential
 
 
 def unknown_factors(named: Sequence[tuple[str, str]], factors: FactorSet) -> list[Fault]:
@@ -236,13 +304,13 @@ __all__ = [
     "Array",
     "Block",
     "Component",
-    "Exponents",
     "FactorSet",
+    "Growth",
     "Indices",
     "PreparedComponent",
     "Text",
-    "exponent_of",
     "finite_sum",
+    "growth_along",
     "once",
     "refuse",
     "tails_of",

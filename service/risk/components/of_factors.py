@@ -15,12 +15,12 @@ from service.risk.components.contract import (
     Array,
     Block,
     Component,
-    Exponents,
     FactorSet,
+    Growth,
     Indices,
     PreparedComponent,
-    exponent_of,
     finite_sum,
+    growth_along,
     once,
     refuse,
     unknown_factors,
@@ -95,8 +95,8 @@ class LinearComponent(Component):
     def tails(self, factors: FactorSet) -> Tails:
         return _linear_tails(self.amounts, factors)
 
-    def exponents(self, factors: FactorSet, factor: float) -> Exponents:
-        return _linear_exponents(self.amounts, factors, factor)
+    def growth(self, factors: FactorSet, factor: float) -> Growth:
+        return _linear_growth(self.amounts, factors, factor)
 
     def mean(self, factors: FactorSet) -> float | None:
         return finite_sum(amount * factors.marginal(name).mean for name, amount in self.amounts.items())
@@ -120,8 +120,11 @@ def _linear_tails(amounts: dict[str, float], factors: FactorSet) -> Tails:
     return tails
 
 
-def _linear_exponents(amounts: dict[str, float], factors: FactorSet, factor: float) -> Exponents:
-    return {(name, name): exponent_of(factors.tails(name).times(factor * amount)) for name, amount in amounts.items()}
+def _linear_growth(amounts: dict[str, float], factors: FactorSet, factor: float) -> Growth:
+    growth = Growth()
+    for name, amount in amounts.items():
+        growth = growth.plus(growth_along(name, factors.tails(name), factor * amount, factor * amount))
+    return growth
 
 
 @plain(frozen=True, slots=True)
@@ -212,12 +215,11 @@ class DeltaGammaComponent(Component):
             tails = tails.plus(_product_tails(first, second, factors).times(half))
         return tails
 
-    def exponents(self, factors: FactorSet, factor: float) -> Exponents:
-        sums = _linear_exponents(self.amounts, factors, factor)
+    def growth(self, factors: FactorSet, factor: float) -> Growth:
+        growth = _linear_growth(self.amounts, factors, factor)
         for (first, second), half in self.halves.items():
-            for pair, coefficient in _product_exponents(first, second, factors, factor * half).items():
-                sums[pair] = sums.get(pair, 0.0) + coefficient
-        return sums
+            growth = growth.plus(_product_growth(first, second, factors, factor * half))
+        return growth
 
     def mean(self, factors: FactorSet) -> float | None:
         """Return δ′μ + ½Σγ(σ² + μ²); None with a product of two factors, which the copula would decide."""
@@ -248,7 +250,8 @@ def _product_tails(first: str, second: str, factors: FactorSet) -> Tails:
     rate = _product_rate(first, second, factors)
     if first == second:  # a square is not negative
         return Tails(upper_index=upper, upper_exponential=rate)
-    return Tails(upper, lower, rate, rate)
+    sharp = math.isinf(rate)
+    return Tails(upper, lower, rate, rate, sharp, sharp)
 
 
 def _product_rate(first: str, second: str, factors: FactorSet) -> float:
@@ -270,16 +273,23 @@ def _product_rate(first: str, second: str, factors: FactorSet) -> float:
     return min(other.upper_exponential, other.lower_exponential) / max(reaches[bounded], TINY)
 
 
-def _product_exponents(first: str, second: str, factors: FactorSet, half: float) -> Exponents:
-    """Return the coefficients of half × X_a X_b: half σ_a σ_b (twice that for a square) of two normals."""
+def _product_growth(first: str, second: str, factors: FactorSet, half: float) -> Growth:
+    """Return the growth of half × X_a X_b: half σ_a σ_b z_a z_b of two normals, a sure bound of others."""
+    if half == 0.0:
+        return Growth()
     laws = [factors.marginal(name) for name in (first, second)]
     if all(isinstance(law, NormalMarginal) for law in laws):
         coefficient = half * math.prod(law.variance for law in laws) ** 0.5
-        return {(first, second): 2.0 * coefficient if first == second else coefficient}
-    rate = Tails(upper_exponential=_product_rate(first, second, factors)).times(abs(half))
+        if first != second:
+            return Growth(products={(first, second): coefficient})
+        return Growth({first: 2.0 * coefficient}, {first: 2.0 * coefficient})
+    rate = _product_rate(first, second, factors)
+    if math.isinf(rate):
+        return Growth()
+    size = math.inf if rate == 0.0 else abs(half) / rate
     bounded = max(abs(end) for end in laws[0].support) < math.inf
     name = second if bounded else first
-    return {(name, name): exponent_of(rate)}
+    return Growth({name: size}, {name: size}, sharp=False)
 
 
 @plain(frozen=True, slots=True)
@@ -374,8 +384,11 @@ class RevaluationGridComponent(Component):
         below = factor.bounded_above().times(left)
         return above.plus(below, independent=True)  # never both at once
 
-    def exponents(self, factors: FactorSet, factor: float) -> Exponents:
-        return {(self.factor, self.factor): exponent_of(self.tails(factors).times(factor))}
+    def growth(self, factors: FactorSet, factor: float) -> Growth:
+        if self.beyond != "linear":
+            return Growth()
+        left, right = self.slopes
+        return growth_along(self.factor, factors.tails(self.factor), factor * right, factor * left)
 
 
 @plain(frozen=True, slots=True)

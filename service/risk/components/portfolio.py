@@ -3,27 +3,38 @@
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from itertools import product
 from typing import Literal
 
 import numpy as np
 from numpy.random import Generator
+from numpy.typing import NDArray
 
 from service.errors import CallerError, Fault, pointing
 from service.risk.components.contract import (
     Array,
     Component,
-    Exponents,
     FactorSet,
+    Growth,
     Indices,
     PreparedComponent,
     refuse,
 )
 from service.risk.components.of_factors import ConstantComponent, LinearComponent
+from service.risk.copulas import ComonotonicCopula
 from service.risk.covers import CoverStep, Tails, check_cover, covered, tails_after
 
 PADDING = 8  # doubles between rows of scratch: rows a power of two apart would share their place in the cache
 MOST_OF_ONE = 64  # factors of a sub-portfolio up to which the exponential moment of a normal dependence is exact
 MOST_OF_ALL = 400  # likewise of the total
+MOST_SPLIT = 8  # factors up to which each pattern of their signs is looked at
+MOST_BESIDE = 32  # factors in all up to which they are
+NEGLIGIBLE = 1e-10  # difference of eigenvalues, in parts of the largest
+TIE = 1e-8  # by which ties of eigenvalues are broken, in parts of the coefficients
+TIE_LEFT = 1e-2  # part of it below which a tie is not broken
+ROUNDING = 1e-6  # error, in parts of a growth, up to which it is known
+SLACK = 1e-5  # of a score that is taken for 0, in a direction of length 1: its square is about a broken tie
+GOLDEN = 0.5 * (math.sqrt(5.0) - 1.0)
 FEW_FACTORS = 0.06  # filled part of the exposure matrix up to which factors are added one by one
 
 
@@ -306,23 +317,25 @@ class Portfolio:
             if self.amounts[row] != 0.0:
                 work[row] += self.amounts[row]
 
-    def existence(self) -> tuple[list[Tails], Tails]:
-        """Return which moments exist of each sub-portfolio's loss and of the total."""
-        each = [self._judged([terms], terms.tails(self.factors), MOST_OF_ONE) for terms in self.sub_portfolios]
-        return each, self.of_sum(range(len(each)), each)
-
-    def of_sum(self, members: Sequence[int], each: Sequence[Tails], *, exponential: bool = True) -> Tails:
-        """Return which moments exist of the summed loss of some sub-portfolios.
+    def existence(self, *, exponential: bool = True, pause: Callable[[], None] = go_on) -> tuple[list[Tails], Tails]:
+        """Return which moments exist of each sub-portfolio's loss and of the total.
 
         Parameters
         ----------
-        members : sequence of int
-            Their numbers.
-        each : sequence of Tails
-            Of every sub-portfolio.
         exponential : bool
             Whether exponential moments are worth the work; if not, they may be said to be missing where they exist.
+        pause : callable
+            Called before each; may raise to stop.
         """
+        each = []
+        for terms in self.sub_portfolios:
+            pause()
+            tails = terms.tails(self.factors)
+            each.append(self._judged([terms], tails, MOST_OF_ONE) if exponential else tails)
+        return each, self.of_sum(range(len(each)), each, exponential=exponential)
+
+    def of_sum(self, members: Sequence[int], each: Sequence[Tails], *, exponential: bool = True) -> Tails:
+        """Return which moments exist of the summed loss of some sub-portfolios, given those of every one."""
         terms = [self.sub_portfolios[member] for member in members]
         parts = [(one.used, each[member]) for one, member in zip(terms, members, strict=True)]
         tails = together(parts, self.factors)
@@ -333,81 +346,156 @@ class Portfolio:
         upper, lower = (exponential_rate(terms, self.factors, sign, most=most) for sign in (1.0, -1.0))
         if upper is None or lower is None:
             return tails
+        above = _better(upper, (tails.upper_exponential, tails.upper_sharp))
+        below = _better(lower, (tails.lower_exponential, tails.lower_sharp))
         return replace(
             tails,
-            upper_exponential=max(upper, tails.upper_exponential),
-            lower_exponential=max(lower, tails.lower_exponential),
+            upper_exponential=above[0],
+            lower_exponential=below[0],
+            upper_sharp=above[1],
+            lower_sharp=below[1],
         )
+
+
+def _better(first: tuple[float, bool], second: tuple[float, bool]) -> tuple[float, bool]:
+    """Return the higher of two sure rates, sharp if one that is as high is."""
+    rate = max(first[0], second[0])
+    return rate, any(sharp and one >= rate * (1.0 - NEGLIGIBLE) for one, sharp in (first, second))
 
 
 def exponential_rate(
     sub_portfolios: Sequence[SubPortfolioTerms], factors: FactorSet, sign: float, *, most: int = MOST_OF_ALL
-) -> float | None:
-    """Return up to which t the summed loss (times `sign`) surely has E[exp(tL)] under normal dependence.
+) -> tuple[float, bool] | None:
+    """Return up to which t the summed loss (times `sign`) surely has E[exp(tL)] under normal dependence, if sharp.
 
-    Far out the loss is at most z'Mz/2 in the factors' normal scores z, and E[exp(t z'Mz/2)] is finite if and only
-    if t times the largest eigenvalue of MR is below 1. Independent parts are judged one by one. None under any
-    other dependence, and with more than `most` factors.
+    Far out the loss is at most Q(z)/2 in the factors' normal scores z = Cu, Q a quadratic form in each orthant, and
+    E[exp(t Q(Cu)/2)] is finite if and only if t Q(Cu) is below |u|² for all u. Independent parts are judged one by
+    one. None under any dependence but the independent, the normal and the comonotonic, and with more than `most`
+    factors.
     """
-    sums: Exponents = {}
-    least = math.inf
+    growth = Growth()
+    least = (math.inf, True)
     for terms in sub_portfolios:
-        exponents, own = _exponents(terms, factors, sign)
-        least = min(least, own)
-        for pair, coefficient in exponents.items():
-            sums[pair] = sums.get(pair, 0.0) + coefficient
-    if not all(math.isfinite(coefficient) for coefficient in sums.values()):
-        return 0.0
-    names = sorted({name for pair, coefficient in sums.items() if coefficient != 0.0 for name in pair})
+        part, own = _growth(terms, factors, sign)
+        growth = growth.plus(part)
+        least = min(least, own, key=lambda one: one[0])
+    coefficients = [one for part in (growth.rising, growth.falling, growth.products) for one in part.values()]
+    if not all(map(math.isfinite, coefficients)):
+        return 0.0, growth.sharp
+    names = sorted(
+        {name for part in (growth.rising, growth.falling) for name, one in part.items() if one != 0.0}
+        | {name for pair, one in growth.products.items() if one != 0.0 for name in pair}
+    )
     if not names:
         return least
     if len(names) > most:
         return None
-    correlation = np.eye(1) if len(names) == 1 else factors.correlation(factors.columns(names))
+    correlation = _correlation(factors, names)
     if correlation is None:
         return None
-    form = np.zeros((len(names), len(names)))
-    place = {name: number for number, name in enumerate(names)}
-    for (first, second), coefficient in sums.items():
-        if coefficient != 0.0:
-            form[place[first], place[second]] = form[place[second], place[first]] = coefficient
-    largest = _largest_eigenvalue(form, correlation)
-    return min(least, 1.0 / largest) if largest > 0.0 else least
+    largest, sharp = _largest(_form(growth, names), correlation)
+    rate = 1.0 / largest if largest > 0.0 else math.inf
+    return least if least[0] <= rate else (rate, sharp and growth.sharp)
 
 
-def _largest_eigenvalue(form: Array, correlation: Array) -> float:
-    """Return that of the product of two symmetric matrices, the second positive semi-definite."""
-    sizes = np.diag(form)
-    if np.count_nonzero(form) == np.count_nonzero(sizes) and np.all(sizes >= 0.0):
-        roots = np.sqrt(sizes)
-        return float(np.linalg.eigvalsh(roots[:, None] * correlation * roots)[-1])
-    return float(np.max(np.linalg.eigvals(form @ correlation).real))
+def _correlation(factors: FactorSet, names: Sequence[str]) -> Array | None:
+    """Return the correlation of the normal scores, where it says all; None where it does not."""
+    if len(names) == 1 or isinstance(factors.dependence, ComonotonicCopula):
+        return np.ones((len(names), len(names)))
+    return factors.correlation(factors.columns(names))
 
 
-def _exponents(terms: SubPortfolioTerms, factors: FactorSet, sign: float) -> tuple[Exponents, float]:
-    """Return the coefficients of a sub-portfolio's loss (times `sign`), and the least rate of its independent parts."""
+def _growth(terms: SubPortfolioTerms, factors: FactorSet, sign: float) -> tuple[Growth, tuple[float, bool]]:
+    """Return the growth of a sub-portfolio's loss (times `sign`), and the least rate of its independent parts."""
     if terms.scale == 0.0:
-        return {}, math.inf
+        return Growth(), (math.inf, True)
     sign *= terms.scale
     kept = tails_after(terms.cover, Tails(upper_exponential=1.0, lower_exponential=1.0))
     rate = kept.upper_exponential if sign > 0.0 else kept.lower_exponential
-    sums: Exponents = {}
-    least = math.inf
+    growth, least = Growth(), (math.inf, True)
     if math.isinf(rate):
-        return sums, least
+        return growth, least
     for one in terms.components:
         if one.independent:
             own = one.tails(factors).times(sign * terms.factor)
-            least = min(least, own.upper_exponential * rate)
-        for (first, second), coefficient in one.exponents(factors, sign * terms.factor).items():
-            if terms.cover and (first != second or coefficient < 0.0):  # a gain may not come through the cover
-                parts = [(name, name) for name in (first, second) if first != second]
-                size = abs(coefficient)
-            else:
-                parts, size = [(first, second)], coefficient
-            for pair in parts:
-                sums[pair] = sums.get(pair, 0.0) + size / rate
-    return sums, least
+            least = min(least, (own.upper_exponential * rate, own.upper_sharp), key=lambda own: own[0])
+        else:
+            growth = growth.plus(one.growth(factors, sign * terms.factor))
+    return growth.covered(rate) if terms.cover else growth, least
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Form:
+    """A function Q of z that is a quadratic form in each orthant: z'Mz, where only the diagonal depends on signs.
+
+    Attributes
+    ----------
+    rising, falling : ndarray of shape (k,)
+        Diagonal where z is above, or below, 0.
+    products : ndarray of shape (k, k)
+        The rest.
+    """
+
+    rising: Array
+    falling: Array
+    products: Array
+
+
+def _form(growth: Growth, names: Sequence[str]) -> _Form:
+    place = {name: number for number, name in enumerate(names)}
+    rising, falling = (np.array([part.get(name, 0.0) for name in names]) for part in (growth.rising, growth.falling))
+    products = np.zeros((len(names), len(names)))
+    for (first, second), coefficient in growth.products.items():
+        if coefficient != 0.0:
+            products[place[first], place[second]] = products[place[second], place[first]] = coefficient
+    return _Form(rising, falling, products)
+
+
+def _largest(form: _Form, correlation: Array) -> tuple[float, bool]:
+    """Return the largest Q(Cu)/|u|², or 0, CC' the correlation, and whether it is that or only not below it.
+
+    Q is differentiable, so a largest one is at an eigenvector of C'MC with M of an orthant that holds Cu; with the
+    smaller diagonal where Cu is 0 it belongs to the largest eigenvalue, since there is none above it nearby.
+    So the answer is the largest of those of all orthants whose eigenvector lies in them.
+    """
+    scale = max(float(np.max(np.abs(part))) for part in (form.rising, form.falling, form.products))
+    rising, falling, products = (part / scale for part in (form.rising, form.falling, form.products))
+    root = _root(correlation)
+    higher = np.maximum(rising, falling)
+    split = np.flatnonzero(rising != falling)
+    upward = np.where(rising >= falling, 1.0, -1.0)[split]
+    values, vectors = np.linalg.eigh(root.T @ (products + np.diag(higher)) @ root)
+    top = values >= values[-1] - NEGLIGIBLE * abs(values[-1])
+    if values[-1] <= 0.0:
+        return 0.0, True
+    if np.any(_inside(root[split] @ vectors[:, top], upward[:, None])):
+        return scale * float(values[-1]), True
+    if split.size > MOST_SPLIT or higher.size > MOST_BESIDE:
+        return scale * float(values[-1]), False
+    signs = np.array(list(product((1.0, -1.0), repeat=split.size)))
+    sizes = np.tile(higher, (signs.shape[0], 1))
+    sizes[:, split] = np.where(signs > 0.0, rising[split], falling[split])
+    sizes += TIE * (1.0 + np.modf(GOLDEN * np.arange(higher.size))[0])  # eigenvalues become simple
+    matrices = (root.T * sizes[:, None, :]) @ root + root.T @ products @ root
+    values, vectors = np.linalg.eigh(matrices)
+    inside = _inside((root[split] @ vectors[:, :, -1:])[:, :, 0].T, signs.T)
+    tied = values[:, -1] - values[:, -2] <= TIE * TIE_LEFT if values.shape[1] > 1 else np.zeros(1, dtype=bool)
+    largest = float(np.max(values[:, -1], where=inside | tied, initial=0.0))
+    found = np.max(values[:, -1], where=inside, initial=0.0)
+    return scale * largest, bool(found == largest > TIE / ROUNDING)
+
+
+def _root(correlation: Array) -> Array:
+    """Return C (k, r) of full rank with CC' the correlation."""
+    values, vectors = np.linalg.eigh(correlation)
+    there = values > NEGLIGIBLE
+    return np.asarray(vectors[:, there] * np.sqrt(values[there]))
+
+
+def _inside(z: Array, signs: Array) -> NDArray[np.bool_]:
+    """Return which columns z (k, n), or their negatives, have these signs, nearly."""
+    signed = z * signs
+    return np.asarray(np.all(signed >= -SLACK, axis=0) | np.all(signed <= SLACK, axis=0))
 
 
 def _faults(sub_portfolios: Sequence[SubPortfolioTerms], factors: FactorSet) -> list[Fault]:

@@ -1,9 +1,11 @@
 """FactorModel: from a checked spec to the losses of a block."""
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
+from scipy import special
 
 from service.errors import InvalidValue
 from service.risk.components import TYPICAL as TYPICAL_COMPONENTS
@@ -21,7 +23,7 @@ from service.risk.components import (
     PoissonFrequency,
 )
 from service.risk.components.portfolio import SubPortfolioTerms
-from service.risk.copulas import GaussianCopula, IndependentCopula, StudentTCopula
+from service.risk.copulas import ComonotonicCopula, GaussianCopula, IndependentCopula, StudentTCopula
 from service.risk.correlation import EqualCorrelation
 from service.risk.covers import CapCover, CedeLayerCover, FloorCover, LayerCover, QuotaShareCover, Tails
 from service.risk.factors import FactorModel, ModelScratch
@@ -278,6 +280,72 @@ def test_exponential_moments_of_totals():
     assert rate(half) == pytest.approx(2.0 / 3.0)
     assert rate(SubPortfolioTerms("b", B.components, cover=(CapCover(kind="cap", amount=9.0),))) == math.inf
     assert rate(A, law=LOGNORMAL) == 0.0
+
+
+def moment_of_the_sum(t, farthest, correlation=-0.5, points=400):
+    """Return E exp(t(X + Y)) of exponentials of mean 1 over normal scores up to `farthest`, by Gauss-Legendre."""
+    nodes, weights = np.polynomial.legendre.leggauss(points)
+    z, w = farthest * nodes, farthest * weights
+    x = -special.log_ndtr(-z)  # -ln P(Z > z), exponential
+    rest = 1.0 - correlation**2
+    form = z[:, None] ** 2 + z**2 - 2.0 * correlation * z[:, None] * z
+    density = np.exp(t * (x[:, None] + x) - form / (2.0 * rest)) / (2.0 * math.pi * math.sqrt(rest))
+    return float(w @ density @ w)
+
+
+def test_exponential_moments_under_negative_dependence():
+    """Of losses that do not grow together the heavier decides; 1/(1 + ρ) would be a direction in which one is a gain.
+
+    E exp(0.8(X + Y)) of exponentials of mean 1 and ρ = -1/2 is 11.133937 by quadrature, not infinite beyond 2/3.
+    """
+    assert moment_of_the_sum(0.8, 18.0) == pytest.approx(moment_of_the_sum(0.8, 25.0), rel=1e-6)
+    assert moment_of_the_sum(0.8, 25.0) == pytest.approx(11.133937, rel=1e-6)
+    assert moment_of_the_sum(1.05, 25.0) > 1e3 * moment_of_the_sum(1.05, 12.0)
+    negative = GaussianCopula(family="gaussian", correlation=EqualCorrelation(kind="equal", value=-0.5))
+    assert rate(A, B, dependence=negative) == pytest.approx(1.0 / 3.0)
+
+
+TWICE_A_LESS_B = (
+    SubPortfolioTerms("a", (linear(a=2.0),)),
+    SubPortfolioTerms("b", B.components, "profit"),
+)
+
+
+def test_gains_count_where_they_are_sure():
+    """2X - Y is X where the factors are the same (rate 1/3), 2X at worst where Y is independent (1/6).
+
+    With ρ = 0.4 it is 3z₁² - 1.5z₂² (halves of squares, means of 3) at most in z₁, z₂ > 0, and z'R⁻¹z is
+    (z₁² + z₂² - 0.8z₁z₂)/0.84: their ratio is searched on a grid of angles.
+    """
+    same = ComonotonicCopula(family="comonotonic")
+    assert rate(*TWICE_A_LESS_B, dependence=same) == pytest.approx(1.0 / 3.0)
+    assert rate(*TWICE_A_LESS_B) == pytest.approx(1.0 / 6.0)
+    angles = np.linspace(0.0, 2.0 * np.pi, 1_000_001)
+    z = np.stack([np.cos(angles), np.sin(angles)])
+    growth = 6.0 * np.maximum(z[0], 0.0) ** 2 - 3.0 * np.maximum(z[1], 0.0) ** 2
+    ratios = growth * 0.84 / (z[0] ** 2 + z[1] ** 2 - 0.8 * z[0] * z[1])
+    assert rate(*TWICE_A_LESS_B, dependence=GAUSSIAN) == pytest.approx(1.0 / ratios.max())
+    # what is hedged altogether is no loss, and a gain does not come through a cover
+    assert rate(A, SubPortfolioTerms("short", A.components, "profit"), dependence=GAUSSIAN) == math.inf
+    floored = replace(TWICE_A_LESS_B[1], cover=(FloorCover(kind="floor", amount=-9.0),))
+    assert rate(TWICE_A_LESS_B[0], floored, dependence=same) == pytest.approx(1.0 / 6.0)
+
+
+def test_where_moments_beyond_the_bound_are_known_to_be_missing():
+    def sharp(*terms, **more):
+        law = more.pop("law", LIGHT)
+        made = FactorModel.of((("a", law), ("b", law)), more.get("dependence", INDEPENDENT), terms)
+        return made.existence()[1].upper_sharp
+
+    assert sharp(A)
+    assert sharp(A, B)
+    assert sharp(A, B, dependence=GAUSSIAN)
+    assert sharp(*TWICE_A_LESS_B, dependence=GAUSSIAN)
+    assert not sharp(A, B, dependence=STUDENT)
+    constant = SubPortfolioTerms("c", (ConstantComponent(kind="constant", amount=7.0),))
+    assert sharp(A, constant, dependence=STUDENT)
+    assert sharp(A, law=LOGNORMAL)
+    assert not sharp(A, SubPortfolioTerms("short", B.components, "profit"), law=LOGNORMAL, dependence=GAUSSIAN)
 
 
 def test_exponential_moments_of_quadratic_forms():

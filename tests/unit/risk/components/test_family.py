@@ -73,4 +73,4 @@ def test_components_without_factors_are_independent_and_have_tails(component):
     tails = component.tails(FACTORS)
     assert min(tails.upper_index, tails.lower_index) > 2.0
     for sign in (1.0, -1.0):
-        assert all(first <= second for first, second in component.exponents(FACTORS, sign))
+        assert all(first <= second for first, second in component.growth(FACTORS, sign).products)
