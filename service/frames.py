@@ -216,8 +216,10 @@ def _until(source: Source, plan: Plan, demand: Demand, stop: StopWhen, work: Wor
         scenarios = min(2 * done, most)
     reached = f"the largest relative standard error of a total is {worst:.3g}"
     if met < LOOKS_IN_A_ROW:
-        points = f" in Sobol points, within {stop.max_scenarios:,}" if most < stop.max_scenarios else ""
-        note = f"stopped at the most scenarios allowed{points}, {longer.scenarios:,}: {reached}"
+        where = f"the most scenarios allowed, {most:,}"
+        if most < stop.max_scenarios:
+            where = f"{most:,} Sobol points, as many as fit into the {stop.max_scenarios:,} scenarios allowed"
+        note = f"stopped at {where}: {reached}"
     else:
         note = f"stopped after {longer.scenarios:,} scenarios: {reached}; intervals are not corrected for stopping"
     looking = work.part(done / most, 1.0)

@@ -9,7 +9,7 @@ import numpy as np
 from pydantic import TypeAdapter, ValidationError
 
 from service.errors import CallerError, InvalidValue, Malformed, TooLong, pointing
-from service.frames import missing
+from service.frames import Framed, missing
 from service.payloads import json_text, row_from_json
 from service.provenance import losses_digest, text_digest
 from service.risk.components import ObservedComponent
@@ -65,7 +65,7 @@ class Reader:
     ----------
     source : Source
         Of the base, its plan as carried out.
-    frame : Frame
+    made : Framed
         Of the base.
     measures : sequence of RiskMeasure
         That are asked of each candidate.
@@ -78,11 +78,16 @@ class Reader:
     """
 
     source: Source
-    frame: Frame
+    made: Framed
     measures: Sequence[RiskMeasure]
     documents: Sequence[Any]
     texts: Mapping[int, memoryview]
     digests: dict[int, str] = field(default_factory=dict)
+
+    @property
+    def frame(self) -> Frame:
+        """Of all scenarios of the base."""
+        return self.made.frame
 
     def read(self, numbers: Sequence[int]) -> list[Read]:
         """Return some candidates, those made of components simulated together."""
@@ -205,23 +210,24 @@ class Reader:
         InvalidValue
             Where one of them does not have a measure that is asked for.
         """
-        plan, tails = self.source.plan, self.source.tails
-        if plan is None or tails is None:
+        plan = self.source.plan
+        if plan is None:
             return Tails(), Tails()
-        *each, total = tails
+        exact = any(measure.needs.exponential > 0.0 for measure in self.measures)
         book, own, place, gone = list(plan.model.portfolio.sub_portfolios), Tails(), "/values", False
         if candidate.scaled is not None:
             place, step = "/scaled", candidate.scaled.step
             column = [one.id for one in book].index(candidate.scaled.sub_portfolio)
-            own = each[column].times(step)
+            own = self.made.law_of(column).times(step)
             book[column] = replace(book[column], scale=candidate.scaled.scale)
             gone = candidate.scaled.scale == 0.0
         elif candidate.components is not None:
             place, terms = "/components", _terms(candidate)
-            own = self._model([terms]).existence()[1]
+            own = self._model([terms]).existence(exponential=exact)[1]
             book.append(terms)
-        exact = gone or any(measure.needs.exponential > 0.0 for measure in self.measures)
-        enlarged = self._model(book).existence()[1] if exact else total.plus(own)
+        enlarged = self.made.total.plus(own)
+        if exact or gone:
+            enlarged = self._model(book).existence(exponential=exact)[1]
         for law, words in ((own, ""), (enlarged, "of the book with it, ")):
             reason = missing(self.measures, law)
             if reason is not None:

@@ -83,7 +83,7 @@ class Increments(Calculation):
         bases = self._ready.bases
         candidates = self.request.candidates
         plan = replace(self.source, plan=self.made.plan)
-        reader = Reader(plan, self.frame, self.request.measures, candidates, self.intake.candidates, self._digests)
+        reader = Reader(plan, self.made, self.request.measures, candidates, self.intake.candidates, self._digests)
         batch = max(1, BATCH_BYTES // (8 * self.frame.scenarios))
         results: list[CandidateResult] = []
         starts = range(0, len(candidates), batch)
