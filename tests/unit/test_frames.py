@@ -129,8 +129,8 @@ def test_sobol_points_never_go_beyond_the_most_scenarios(most, taken):
     assert answer.scenarios == answer.provenance.scenarios == taken
     assert "sobol_points" not in {note.code for note in answer.notes}
     [note] = [note for note in answer.notes if note.code == "stopped"]
-    fitted = f"{taken} Sobol points, as many as fit into the {most} scenarios allowed"
-    where = f"the most scenarios allowed, {most}" if taken == most else fitted
+    fitted = f"{taken:,} Sobol points, as many as fit into the {most:,} scenarios allowed"
+    where = f"the most scenarios allowed, {most:,}" if taken == most else fitted
     assert note.detail.startswith(f"stopped at {where}: ")
 
 
