@@ -150,10 +150,13 @@ def _checkpoint(deadline: float, allowed: float, gone: asyncio.Event, told: Call
         if gone.is_set():
             raise Cancelled("The caller left while the calculation ran.")
         if perf_counter() > deadline:
-            limit = Limit(name="max_seconds", allowed=allowed, asked=None, setting=variable("max_seconds"))
-            words = (
-                f"The calculation needs more than the {allowed:g} seconds that this server or `Prefer: wait` allows."
-            )
-            raise TooLong(words, limit=limit)
+            raise too_long(allowed)
 
     return checkpoint
+
+
+def too_long(allowed: float) -> TooLong:
+    """Return the error of a calculation that takes longer than the seconds allowed."""
+    limit = Limit(name="max_seconds", allowed=allowed, asked=None, setting=variable("max_seconds"))
+    words = f"The calculation needs more than the {allowed:g} seconds that this server or `Prefer: wait` allows."
+    return TooLong(words, limit=limit)

@@ -14,7 +14,8 @@ from starlette.routing import Route
 from service import __version__, demo, problems, pulls, query, values
 from service.books import Book, Books
 from service.calculate import Answer, Drawing
-from service.desk import Desk
+from service.desk import Desk, too_long
+from service.errors import TooLong
 from service.executors import Work
 from service.kept import Kept
 from service.metrics import Metrics
@@ -26,7 +27,7 @@ from service.representations.index import index_page
 from service.representations.page import POLICY, BookHead
 from service.representations.report import report_page
 from service.representations.spreadsheet import spreadsheet_page
-from service.routes.callers import watched
+from service.routes.callers import applied, preferred_seconds, watched
 from service.routes.conditional import conditional, tag_of, unchanged
 from service.routes.doors import door
 from service.routes.forms import chart_asked, headers_of, picture, wants_mark
@@ -96,8 +97,14 @@ class Reading:
             self.metrics.computed(answer_in(answered).provenance.scenarios)
             return answered
 
-        async with watched(request) as gone:
-            return await self.kept.shared(key if drawn else asked.digest, compute, gone)
+        seconds = preferred_seconds(request)
+        try:
+            async with asyncio.timeout(seconds), watched(request) as gone:
+                return await self.kept.shared(key if drawn else asked.digest, compute, gone)
+        except TimeoutError as error:
+            if isinstance(error, TooLong) or seconds is None:
+                raise
+            raise too_long(seconds) from None
 
 
 def routes(*, settings: Settings, books: Books, desk: Desk, metrics: Metrics) -> list[Route]:
@@ -158,7 +165,8 @@ class Pull:
                 return await asyncio.to_thread(self._drawn, answered, book, form, chart, pairs, request)
             return await asyncio.to_thread(formats.write, answer, form, mark=mark)
 
-        return await conditional(request, tag, write, headers_of(form))
+        headers = {**headers_of(form), **applied(preferred_seconds(request), self.reading.settings)}
+        return await conditional(request, tag, write, headers)
 
     def _by_query(self, form: Form) -> bool:
         """Return whether an answer depends on more than the canonical request."""

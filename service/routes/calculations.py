@@ -1,7 +1,6 @@
 """The doors of the calculations: read, calculate, represent."""
 
 import asyncio
-import re
 from dataclasses import dataclass, replace
 from functools import partial
 from time import perf_counter
@@ -21,7 +20,7 @@ from service.payloads import TABLE_READERS
 from service.representations import formats
 from service.representations.formats import FORMS, Form
 from service.routes.bodies import check_coding, check_digest, read_body
-from service.routes.callers import watched
+from service.routes.callers import applied, preferred_seconds, watched
 from service.routes.doors import Handler, door
 from service.routes.events import EVENTS, EventStream, Progress
 from service.routes.forms import POLICIES, chart_asked, picture, wants_mark
@@ -37,7 +36,6 @@ SHORT_CELLS = 16 * 1024
 """Cells of a table on which figures take less time than that, also where the body was packed more densely."""
 SHORT_WORK = 6
 """Most measures times rules of such a request."""
-WAIT = re.compile(r'(?:^|[,;\s])wait\s*=\s*"?(\d{1,9})"?\s*(?:$|[,;])', re.IGNORECASE)  # RFC 7240, 4.3
 BODY_TYPES = ", ".join(("application/json", "multipart/form-data", *TABLE_READERS))
 
 
@@ -73,7 +71,7 @@ class Calculation:
         form = formats.choose(self.suffix, accept, offered)
         check_coding(request)
         self.desk.check()
-        seconds = _preferred_seconds(request)
+        seconds = preferred_seconds(request)
         clock = _Clock()
         body = await read_body(request, self.settings.max_body_bytes)
         clock.mark("read")
@@ -81,8 +79,7 @@ class Calculation:
         headers = {"vary": "Accept"}
         if form.suffix in POLICIES:
             headers["content-security-policy"] = POLICIES[form.suffix]
-        if seconds is not None:
-            headers["preference-applied"] = f"wait={min(seconds, self.settings.max_seconds):.0f}"
+        headers |= applied(seconds, self.settings)
         if form is EVENTS:
             return EventStream(request, partial(self._told, task, seconds), lambda: task.expected, headers)
         data = await self._compute(task, seconds)
@@ -204,9 +201,3 @@ class _Task:
 
     def _parameters(self) -> list[tuple[str, str]]:
         return self.request.query_params.multi_items() if self.request.scope["query_string"] else []
-
-
-def _preferred_seconds(request: Request) -> float | None:
-    """Return the seconds of ``Prefer: wait=…``; a preference that cannot be read is none (RFC 7240, 2)."""
-    found = WAIT.search(", ".join(request.headers.getlist("prefer")))
-    return float(found[1]) if found else None

@@ -686,3 +686,26 @@ def test_what_is_known_of_books_takes_no_place(folder, monkeypatch):
         assert_problem(client.get(f"{HOME}/allocations?{ES}"), "busy")
         finish.set()
         sender.join(20)
+
+
+def test_prefer_lowers_the_time_allowed(folder, monkeypatch):
+    """One who waits no longer gets a problem; another who asked the same gets the answer."""
+    finish, answer = Event(), calculate.answer
+
+    def wait(*arguments):
+        finish.wait(20)
+        return answer(*arguments)
+
+    monkeypatch.setattr(calculate, "answer", wait)
+    path, answers = f"{HOME}/measures?{ES}", []
+    with running(books=str(folder)) as client:
+        patient = Thread(target=lambda: answers.append(client.get(path, headers={"prefer": "wait=30"})))
+        patient.start()
+        until(lambda: metric(client, "tailrace_calculations_in_flight") == 1)
+        limit = assert_problem(client.get(path, headers={"prefer": "wait=0"}), "too_long")["limit"]
+        assert (limit["name"], limit["allowed"]) == ("max_seconds", 0.0)
+        finish.set()
+        patient.join(20)
+        assert answers[0].status_code == 200
+        assert answers[0].headers["preference-applied"] == "wait=30"
+        assert client.get(path, headers={"prefer": "wait=0"}).status_code == 200  # it is there already

@@ -193,8 +193,10 @@ def test_work_that_tells_nothing_begins_after_a_while(client, monkeypatch):
     monkeypatch.setattr(calculate, "answer", wait)
     with client.stream("POST", "/v1/measures", content=BODY, headers=ASK) as response:
         assert response.status_code == 200
+        lines = response.iter_lines()
+        first = next(lines)  # the work ends after it only
         finish.set()
-        found = read(response.iter_lines())
+        found = read(chain([first], lines))
     assert_ends_once(found, "result")
     assert named(found, "progress")[0] == {
         "fraction": 0.0,
