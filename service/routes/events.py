@@ -54,9 +54,10 @@ class Progress:
     def __call__(self, fraction: float, /) -> None:
         """Say that `fraction` of the work is done."""
         if fraction > self._fraction:
-            if not self._fraction:
+            first = not self._fraction
+            self._fraction = fraction  # before anybody is told to look at it
+            if first:
                 self._loop.call_soon_threadsafe(self.begun.set)
-            self._fraction = fraction
 
     def after(self, fraction: float) -> float:
         """Return the fraction done now, but no less than the one told before: threads may overtake each other."""
