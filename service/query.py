@@ -183,8 +183,8 @@ def book_request(pairs: Pairs, asked: str, name: str, defaults: Mapping[str, Any
         fields.add("capital_measure")
     document = {key: value for key, value in defaults.items() if key in fields}
     given = _members(pairs, BOOKS[asked])
-    if "group_by" in given:
-        given["group_by"] = [attribute for attribute in given["group_by"] if attribute]
+    if given.get("group_by") == [""]:
+        given["group_by"] = []  # no groups, though the book has some
     if "capital" in given:
         document.pop("capital_measure", None)
     document |= given

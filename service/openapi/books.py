@@ -86,6 +86,7 @@ FORMS = (
 )
 STATUSES = (404, 406, 422, 500, 503)
 PATTERN = "^[A-Za-z0-9][A-Za-z0-9_-]{0,63}$"
+NO_TEXT: Json = {"type": "string", "const": ""}
 WORDS: Mapping[str, tuple[str, Json]] = {
     "of": ("What the number is of.", {"type": "string", "enum": list(values.OF)}),
     "field": (
@@ -187,6 +188,9 @@ def _described(name: str, kind: str, schemas: Json) -> tuple[str, Json]:
         field = fields[query.BOOKS[kind][name].field]
         if kind == "value" and name == "rule":
             field = {"description": "Allocation rule of a contribution or a share.", **field["items"]}
+        if name == "group_by":
+            words = f"{field['description']} Empty for none; those of the book if absent."
+            field = {**field, "description": words, "items": {"anyOf": [field["items"], NO_TEXT]}}
     schema = {key: value for key, value in field.items() if key not in ("description", "default")}
     return field.get("description", name), schema
 

@@ -117,6 +117,7 @@ def test_get_is_what_post_answers(client):
     assert [one["measure"] for one in measured["measures"]] == ["expected_shortfall 0.9", "value_at_risk 0.9"]
     assert [one["group"] for one in measured["measures"][0]["groups"]] == ["sea", "land"]
     assert client.get(f"{HOME}/measures?group_by=").json()["measures"][0]["groups"] == []
+    assert_problem(client.get(f"{HOME}/measures?group_by=&group_by=line"), "invalid_value", parameter="group_by")
 
 
 def test_measures_and_levels_make_their_product(client):
