@@ -48,7 +48,8 @@ class Comparisons:
         self.intake, self.request = intake, request
         self.before = _book(intake, request, "before", work.part(0.0, 0.5), settings)
         self.after = _book(intake, request, "after", work.part(0.5, 1.0), settings)
-        self.notes = Notes(self.after.calculation.frame.scenarios, pointed=True)
+        fewest = min(one.frame.scenarios for one in self._calculations)
+        self.notes = Notes(fewest, pointed=True)
         for book in (self.before, self.after):
             self.notes.take(book.calculation.notes)
         self._compare_labels()

@@ -187,7 +187,10 @@ def test_a_change_is_judged_by_the_thinner_book():
         [one] = answer.comparisons
         assert one.change.standard_error is None
         assert one.change.tail_scenarios == pytest.approx(3.0)
-        assert "3 tail scenarios" in " ".join(note.detail for note in answer.notes if note.code == "no_error")
+        details = " ".join(note.detail for note in answer.notes if note.code == "no_error")
+        assert "3 tail scenarios" in details
+        assert "10,000 scenarios in all would do" in details
+        assert "666,667" not in details
 
 
 def tables(*sizes):
