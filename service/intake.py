@@ -80,6 +80,13 @@ class Intake:
         return (self.request.losses,)
 
     @property
+    def columns(self) -> int:
+        """Columns of the widest table of scenarios that was sent; 0 without any."""
+        named = [len(one.sub_portfolios or ()) for one in self.losses if isinstance(one, ScenarioLosses)]
+        sheet = self.table.values.shape[1] if isinstance(self.table, Sheet) else 0
+        return max([sheet, *named])
+
+    @property
     def scenarios(self) -> int | None:
         """Scenarios to go through, at most; of two sources, those of the one after. None for a book not looked up."""
         which = "after" if isinstance(self.request, ComparisonsRequest) else "losses"

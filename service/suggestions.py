@@ -55,12 +55,17 @@ TRADE_WORDS: Mapping[str, str] = {
 """What the trade calls things, and what they are called here; it counts where that is known."""
 
 
+MOST_COMPARED = 200  # names: to look for likeness takes as long as they are many
+LONGEST_COMPARED = 80  # characters
+
+
 def suggestion(name: str, known: Iterable[str]) -> str:
     """Return ``; did you mean 'level'?`` or nothing."""
     names = list(known)
     plain = name.strip().lower().replace("-", "_").replace(" ", "_")
     meant = [word for word in (plain, TRADE_WORDS.get(plain)) if word in names]
-    close = meant or get_close_matches(name, names, n=1)
+    few = len(names) <= MOST_COMPARED and len(name) <= LONGEST_COMPARED
+    close = meant or (get_close_matches(name, names, n=1) if few else [])
     return f"; did you mean '{close[0]}'?" if close else ""
 
 

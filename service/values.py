@@ -42,6 +42,23 @@ class Selection:
     """None for those without the attribute."""
 
 
+def single(pairs: Sequence[tuple[str, str]], names: Sequence[str]) -> dict[str, str]:
+    """Return the values of some query parameters.
+
+    Raises
+    ------
+    InvalidValue
+        For one that stands twice.
+    """
+    given: dict[str, str] = {}
+    for name, value in pairs:
+        if name in names:
+            if name in given:
+                raise _refused(name, f"{name} stands here twice", "repeated")
+            given[name] = value
+    return given
+
+
 def selection(pairs: Sequence[tuple[str, str]]) -> Selection:
     """Return the selection that query parameters make.
 
@@ -49,12 +66,7 @@ def selection(pairs: Sequence[tuple[str, str]]) -> Selection:
     ------
     InvalidValue
     """
-    given: dict[str, str] = {}
-    for name, value in pairs:
-        if name in PARAMETERS:
-            if name in given:
-                raise _refused(name, f"{name} stands here twice", "repeated")
-            given[name] = value
+    given = single(pairs, PARAMETERS)
     of = chosen(given, "of", OF)
     field = chosen(given, "field", FIELDS, "value")
     sub_portfolio, attribute, group = (given.get(name) for name in PARAMETERS[2:])

@@ -91,7 +91,10 @@ class Reader:
 
     def read(self, numbers: Sequence[int]) -> list[Read]:
         """Return some candidates, those made of components simulated together."""
-        read = [self._one(number) for number in numbers]
+        read = []
+        for number in numbers:
+            self.frame.effort.checkpoint()
+            read.append(self._one(number))
         made = [one for one in read if one.error is None and one.loss is None and one.candidate is not None]
         if not made:
             return read

@@ -3,9 +3,10 @@
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass, is_dataclass, replace
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
+from numpy.typing import NDArray
 
 from service import __version__
 from service.answers import Notes, change_result
@@ -56,9 +57,9 @@ class Comparisons:
         self.paired = self._paired()
         if not self.paired and _overlapping(request.before, request.after, *self._calculations):
             detail = (
-                "the books share some scenarios but not all, and the error of a change counts them as independent: it "
-                "may be far off, mostly too large; with as many scenarios of the same seed, or with the same periods, "
-                "it is that of the differences"
+                "the books share scenarios but do not have the same ones in the same order, and the error of a change "
+                "counts them as independent: it may be far off, mostly too large; with as many scenarios of the same "
+                "seed, the same periods, or the same labels in order, it is that of the differences"
             )
             self.notes.add("samples_overlap", detail)
 
@@ -159,16 +160,22 @@ class Comparisons:
             detail = "one book is a sample and the other a population: their errors do not compare"
             raise InvalidValue.at("/after", detail, code="not_allowed")
         if given and not _same_weights(then, now):
-            detail = "the books do not have the same number of scenarios with the same probabilities"
+            detail = "the books do not have the same number of scenarios, as probable and as dependent on each other"
             raise InvalidValue.at("/same_scenarios", detail, code="not_allowed")
         return (found if given is None else given) and _same_weights(then, now)
 
 
 def _same_weights(then: Calculation, now: Calculation) -> bool:
-    first, second = then.frame.table.probabilities, now.frame.table.probabilities
-    if then.frame.scenarios != now.frame.scenarios or (first is None) != (second is None):
-        return False
-    return first is None or second is None or bool(np.array_equal(first, second))
+    """Return whether two samples are as long, as probable and as dependent, scenario by scenario."""
+    first, second = then.frame.table, now.frame.table
+    alike = _alike(first.probabilities, second.probabilities) and _alike(first.clusters, second.clusters)
+    return first.scenarios == second.scenarios and alike
+
+
+def _alike(first: NDArray[Any] | None, second: NDArray[Any] | None) -> bool:
+    if first is None or second is None:
+        return first is second
+    return bool(np.array_equal(first, second))
 
 
 def _same(before: Losses, after: Losses, then: Calculation, now: Calculation) -> bool:
@@ -192,6 +199,9 @@ def _overlapping(before: Losses, after: Losses, then: Calculation, now: Calculat
     """Return whether two samples have scenarios in common: draws of one seed, or periods that both observed."""
     if isinstance(before, FactorLosses) and isinstance(after, FactorLosses):
         return before.simulation.seed == after.simulation.seed
+    if isinstance(before, ScenarioLosses) and isinstance(after, ScenarioLosses):
+        labels = (one.frame.table.scenario_ids or () for one in (then, now))
+        return not set(next(labels)).isdisjoint(next(labels))
     first, second = then.source.changes, now.source.changes
     if first is None or second is None or first.values.shape[1] != second.values.shape[1]:
         return False

@@ -44,7 +44,7 @@ class _Ready:
     @property
     def size(self) -> int:
         """Bytes that it takes, about."""
-        return self.made.size + sum(base.influence.nbytes + base.order.nbytes for of in self.bases for base in of)
+        return self.made.size + sum(base.size for of in self.bases for base in of)
 
 
 class Increments(Calculation):

@@ -25,6 +25,7 @@ USUAL_MAX_BYTES = 1 << 25
 HEAD = 1 << 20
 """Bytes in which a guess looks for the name of the next huge value."""
 MOST_GUESSES = 1024
+"""Huge values of a body: no request may hold more candidates."""
 
 _FILLERS = {ord("["): b"[]", ord('"'): b'""'}
 """What stands in the place of a value that was taken out, by the first byte of the value."""
@@ -145,14 +146,35 @@ def _spans_of(body: bytes | bytearray) -> Sequence[_Span]:
 def _guesses(body: bytes | bytearray) -> list[_Span]:
     """Return where huge values probably stand, in order."""
     spans: list[_Span] = []
-    while len(spans) < MOST_GUESSES and (span := _guess(body, spans[-1].stop if spans else 0)) is not None:
+    names = [_Name(*known) for known in (_VALUES, _DATA)]
+    while (span := _guess(body, spans[-1].stop if spans else 0, names)) is not None:
         spans.append(span)
+        if len(spans) > MOST_GUESSES:  # more than a request may hold
+            return []
     return spans
 
 
-def _guess(body: bytes | bytearray, start: int) -> _Span | None:
+@dataclass(slots=True)
+class _Name:
+    """A member's name, and where it stands next."""
+
+    name: bytes
+    member: re.Pattern[bytes]
+    place: int = -1
+    until: int = 0
+    """Bytes that were looked at: no such name stands between `place` and here."""
+
+    def after(self, body: bytes | bytearray, start: int) -> int:
+        """Return where it stands next within `HEAD` bytes; -1 for nowhere."""
+        if self.place < start:
+            self.place = body.find(self.name, max(start, self.until - len(self.name)), start + HEAD)
+            self.until = start + HEAD
+        return self.place
+
+
+def _guess(body: bytes | bytearray, start: int, names: Sequence[_Name]) -> _Span | None:
     """Return where the next huge value probably stands: from its name to the next quotation mark or closing brace."""
-    places = [(body.find(name, start, start + HEAD), member) for name, member in (_VALUES, _DATA)]
+    places = [(name.after(body, start), name.member) for name in names]
     for found, member in sorted(places, key=lambda place: place[0]):
         place = member.match(body, found) if found >= 0 else None
         if place is None:
@@ -200,7 +222,8 @@ def _huge(members: Mapping[str, msgspec.Raw]) -> Iterator[tuple[str, msgspec.Raw
         yield f"/{name}/packed/data", _members(losses.get("packed")).get("data"), b'"'
     candidates = members.get("candidates")
     if candidates is not None and bytes(memoryview(candidates)[:1]) == b"[":
-        for number, candidate in enumerate(_LIST.decode(candidates)):
+        found = _LIST.decode(candidates)
+        for number, candidate in enumerate(found if len(found) <= MOST_GUESSES else ()):
             yield f"/candidates/{number}/values", _members(candidate).get("values"), b"["
 
 

@@ -51,6 +51,12 @@ class Base:
     contributions: Array
     ordered: Ordered
 
+    @property
+    def size(self) -> int:
+        """Bytes that it takes, about."""
+        held = (self.influence, self.order, self.contributions, self.ordered.values, self.ordered.upper)
+        return sum(one.nbytes for one in held)
+
 
 @dataclass(frozen=True, slots=True)
 class Increment:

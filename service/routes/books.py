@@ -203,7 +203,7 @@ class Pull:
 
 def _number_of(pairs: query.Pairs) -> tuple[values.OfIncrement, values.Part]:
     """Return which number of an increment is asked for as text."""
-    given = dict(pairs)
+    given = values.single(pairs, ("of", "field"))
     return (
         values.chosen(given, "of", values.OF_INCREMENT, "increment"),
         values.chosen(given, "field", values.FIELDS, "value"),

@@ -34,8 +34,10 @@ SHORT_BODY = 128 * 1024
 """Bytes of a body that takes less time (about 2 ms) to read than a thread is worth."""
 SHORT_CELLS = 16 * 1024
 """Cells of a table on which figures take less time than that, also where the body was packed more densely."""
+SHORT_COLUMNS = 64
+"""Sub-portfolios of such a table, since some rules look at each by itself."""
 SHORT_WORK = 6
-"""Most measures times rules of such a request."""
+"""Most measures times rules, candidates and groupings of such a request."""
 BODY_TYPES = ", ".join(("application/json", "multipart/form-data", *TABLE_READERS))
 
 
@@ -181,8 +183,12 @@ class _Task:
         request = self._taken.request
         if self._form.drawn or not all(isinstance(losses, ScenarioLosses) for losses in self._taken.losses):
             return False
+        if self._taken.columns > SHORT_COLUMNS:
+            return False
         rules = getattr(request, "rules", ("none",))
-        times = len(rules) * len(getattr(request, "candidates", ("none",)))
+        times = (
+            len(rules) * len(getattr(request, "candidates", ("none",))) * (1 + len(getattr(request, "group_by", ())))
+        )
         return len(request.measures) * times <= SHORT_WORK and "shapley" not in rules
 
     def run(self, work: Work) -> bytes:

@@ -33,7 +33,7 @@ from service.risk.words import STRICT, Level
 WINDOW = Fraction(9, 10)  # half width of the smoothing window as a part of the tail count
 LEAST_RANKS = 10  # of the smoothing window on each side
 ATOM_OF_ITS_OWN = 10  # scenarios at the quantile from which their own mean needs no smoothing
-SAME = 1e-12  # of the largest loss: sums that differ by less are equal but for rounding
+SAME = 1e-12  # of the quantile: sums that differ from it by less are equal to it but for rounding
 RANK_SPREADS = 7.0  # how many binomial standard deviations below the quantile its interval may reach
 
 
@@ -126,8 +126,7 @@ class _Quantile(LocatedMeasure):
         """Return where at least `ATOM_OF_ITS_OWN` losses equal the quantile but for the rounding of sums."""
         values = ordered.values
         q = ordered.at(ordered.position(self.share))[:, None]
-        slack = SAME * np.maximum(np.abs(values[:, :1]), np.abs(values[:, -1:]))
-        return np.count_nonzero(np.abs(values - q) <= slack, axis=-1) >= ATOM_OF_ITS_OWN
+        return np.count_nonzero(np.abs(values - q) <= SAME * np.abs(q), axis=-1) >= ATOM_OF_ITS_OWN
 
     def contribution_weights(self, ordered: Ordered, ties: Ties, smoothing: Smoothing) -> ContributionWeights:
         """Return weights that estimate E[L_i given L = q].

@@ -214,3 +214,35 @@ def test_samples_that_overlap_are_noted():
 
     assert "samples_overlap" in codes(observed(changes[:500]), observed(changes[1:]))
     assert "samples_overlap" not in codes(observed(changes[:250]), observed(changes[250:]))
+
+
+def test_tables_that_share_scenarios_are_noted():
+    """Also the same scenarios in another order, which count as others."""
+    [rows] = tables(500)
+
+    def table(order):
+        return {
+            "kind": "scenarios",
+            "sub_portfolios": [{"id": "a"}],
+            "values": [rows[k] for k in order],
+            "scenario_ids": [f"s{k}" for k in order],
+        }
+
+    def codes(before, after):
+        return {note.code for note in compared(table(before), table(after), [es(0.9)]).notes}
+
+    assert "samples_overlap" in codes(range(400), range(1, 401))
+    assert "samples_overlap" in codes(range(400), range(399, -1, -1))
+    assert "samples_overlap" not in codes(range(400), range(400))
+    assert "samples_overlap" not in codes(range(250), range(250, 500))
+
+
+def test_dependent_scenarios_do_not_pair_with_independent_ones():
+    changes = np.random.default_rng(1).standard_normal((100, 3))
+    parts = model(BEFORE)["sub_portfolios"]
+    scaling = {"periods": 5, "method": "overlapping"}
+    observed = {"kind": "history", "factors": list("xyz"), "changes": changes.tolist(), "sub_portfolios": parts}
+    losses = {"kind": "scenarios", "sub_portfolios": [{"id": "a"}], "values": tables(96)[0]}
+    with pytest.raises(CallerError, match="as dependent on each other") as caught:
+        compared({**observed, "horizon_scaling": scaling}, losses, [es(0.5)], same_scenarios=True)
+    assert caught.value.faults[0].pointer == "/same_scenarios"

@@ -400,6 +400,30 @@ def test_increments_amid_equal_losses_are_covered():
     assert max(misses.values()) <= 15
 
 
+def test_a_huge_loss_ties_no_others():
+    values = np.random.default_rng(1).normal(200.0, 10.0, (2000, 2))
+    values[0, 0] = 1e16
+    losses = {"kind": "scenarios", "sub_portfolios": [{"id": "a"}, {"id": "b"}], "values": values.tolist()}
+    deal = {"id": "a deal", "values": np.random.default_rng(2).normal(size=2000).tolist()}
+    answer = tried(losses, [deal], [var(0.9)])
+    assert "tied_quantile" not in {note.code for note in answer.notes}
+
+
+def test_time_that_is_over_while_candidates_are_read():
+    asked = 0
+
+    def checkpoint(_fraction=0.0, /):
+        nonlocal asked
+        asked += 1
+        if asked > 40:
+            limit = Limit(name="max_seconds", allowed=1.0, asked=None, setting="TAILRACE_MAX_SECONDS")
+            raise TooLong("over", limit=limit)
+
+    wrong = [{"id": f"d{k}", "scaled": {"sub_portfolio": "none", "scale": 2.0}} for k in range(100)]
+    with pytest.raises(TooLong):
+        tried(TABLE, wrong, [es(0.5)], work=Work(1, checkpoint))
+
+
 def test_what_else_is_built_on_a_quantile_amid_equal_losses():
     """Differences and excesses over the mean have intervals of order statistics; other rules have no error."""
     columns = [{"id": "a"}, {"id": "b"}]

@@ -293,3 +293,11 @@ def test_three_megabytes_of_nonsense_are_refused_in_time(body):
     with pytest.raises(CallerError):
         split_envelope(body)
     assert time.perf_counter() - start < 5
+
+
+def test_more_candidates_than_any_request_may_hold_stay_in_the_document():
+    many = [{"id": f"d{k}", "values": [k]} for k in range(1100)]
+    body = json.dumps({"losses": {"kind": "book", "name": "x"}, "candidates": many}).encode()
+    envelope = split(body)
+    assert envelope.apart == {}
+    assert envelope.document == json.loads(body)

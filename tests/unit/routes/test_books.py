@@ -710,3 +710,9 @@ def test_prefer_lowers_the_time_allowed(folder, monkeypatch):
         assert answers[0].status_code == 200
         assert answers[0].headers["preference-applied"] == "wait=30"
         assert client.get(path, headers={"prefer": "wait=0"}).status_code == 200  # it is there already
+
+
+def test_a_number_of_an_increment_is_one(client):
+    path = f"{HOME}/increments.txt?sub_portfolio=hull&scale=1.1&{ES}"
+    assert client.get(f"{path}&of=contribution").status_code == 200
+    assert_problem(client.get(f"{path}&of=increment&of=contribution"), "invalid_value", parameter="of")

@@ -379,6 +379,11 @@ def test_columns_that_are_hardly_sub_portfolios_are_noted(client):
     assert "'Scenario', 'Total'" in note["detail"]
 
 
+def wide_table():
+    """Return few rows of many columns, each of which is looked at alone."""
+    return b"\n".join(b",".join(b"%s%d" % (name, k) for k in range(500)) for name in (b"s", b"", b"1")) + b"\n"
+
+
 def packed_densely():
     """Return a Parquet file of few bytes and many equal losses."""
     made = io.BytesIO()
@@ -408,8 +413,9 @@ BY_QUERY = "/v1/measures?measure=expected_shortfall&level=0.5"
         ("/v1/measures", json.dumps({**SMALL, "losses": MODEL}).encode(), JSON, True),
         ("/v1/measures", json.dumps({**SMALL, "losses": OBSERVED}).encode(), JSON, True),
         (BY_QUERY, packed_densely(), PARQUET, True),
+        (BY_QUERY, wide_table(), {"content-type": "text/csv"}, True),
     ],
-    ids=["small", "small table", "large", "model", "history", "packed densely"],
+    ids=["small", "small table", "large", "model", "history", "packed densely", "wide"],
 )
 def test_the_event_loop_does_small_work_alone(client, monkeypatch, path, body, headers, in_thread):
     """A small body may ask for much: a simulation, or a table that unpacks to many losses."""
