@@ -145,8 +145,8 @@ class Notes:
                 "scenarios there are"
             ),
             "tied_quantile": (
-                f"{measure.name} is one of many equal losses: what is built on it has the widest interval that both "
-                "figures allow, or no error"
+                f"a figure of {measure.name} is one of many equal losses: what is built on it has the widest interval "
+                "that order statistics allow, or no error"
             ),
             "thin_tail": f"the error rests on few scenarios: {counts}",
             "no_error": f"too few scenarios to say how sure a figure is: {counts}",

@@ -1,7 +1,9 @@
 """A real server in a thread, what to wait for, and what answers and problems must look like."""
 
+import json
 import math
 import socket
+import subprocess
 from contextlib import contextmanager
 from threading import Thread
 from time import monotonic, sleep
@@ -98,3 +100,10 @@ def assert_problem(response, code, **place):
     if place:
         assert {name: problem["errors"][0].get(name) for name in place} == place
     return problem
+
+
+def told_by(command, given=None):
+    """Run a program that drives another one, and return the JSON that it prints."""
+    done = subprocess.run(command, input=given, capture_output=True, text=True, timeout=240, check=False)
+    assert done.returncode == 0, done.stderr[-2000:]
+    return json.loads(done.stdout)

@@ -1,14 +1,12 @@
 """A real browser: what the pages of a running service fetch, show and do on a telephone and on paper."""
 
-import json
 import os
 import shutil
-import subprocess
 from pathlib import Path
 
 import pytest
 
-from tests.serving import running
+from tests.serving import running, told_by
 
 HERE = Path(__file__).parent
 BROWSER = os.environ.get("CHROMIUM") or shutil.which("chromium")
@@ -33,15 +31,7 @@ def client():
 @pytest.fixture(scope="module")
 def seen(client):
     base = str(client.base_url).rstrip("/")
-    done = subprocess.run(
-        ["node", str(HERE / "browse.mjs"), BROWSER, base, *PAGES],
-        capture_output=True,
-        text=True,
-        timeout=240,
-        check=False,
-    )
-    assert done.returncode == 0, done.stderr[-2000:]
-    return json.loads(done.stdout)
+    return told_by(["node", str(HERE / "browse.mjs"), BROWSER, base, *PAGES])
 
 
 @pytest.fixture(scope="module")

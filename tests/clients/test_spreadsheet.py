@@ -14,7 +14,7 @@ import pytest
 from openapi_examples import workbook
 from service.representations.page import BookHead
 from service.representations.spreadsheet import CALC_OPTIONS, cell_formulas, power_query, xml_formulas
-from tests.serving import running
+from tests.serving import running, told_by
 
 HERE = Path(__file__).parent
 PYTHON = os.environ.get("UNO_PYTHON", "/usr/bin/python3")
@@ -37,16 +37,7 @@ needs_calc = pytest.mark.skipif(
 
 def pull(**job):
     """Let Calc do a job and return what it found."""
-    done = subprocess.run(
-        [PYTHON, str(HERE / "calc_pull.py")],
-        input=json.dumps(job),
-        capture_output=True,
-        text=True,
-        timeout=240,
-        check=False,
-    )
-    assert done.returncode == 0, done.stderr[-2000:]
-    return json.loads(done.stdout)
+    return told_by([PYTHON, str(HERE / "calc_pull.py")], given=json.dumps(job))
 
 
 @pytest.fixture(scope="module")

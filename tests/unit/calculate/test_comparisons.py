@@ -187,6 +187,7 @@ def test_a_change_is_judged_by_the_thinner_book():
         [one] = answer.comparisons
         assert one.change.standard_error is None
         assert one.change.tail_scenarios == pytest.approx(3.0)
+        assert [part.change.tail_scenarios for part in one.sub_portfolios] == pytest.approx([3.0])
         details = " ".join(note.detail for note in answer.notes if note.code == "no_error")
         assert "3 tail scenarios" in details
         assert "10,000 scenarios in all would do" in details

@@ -7,8 +7,11 @@ import numpy as np
 import pytest
 from scipy import special
 
+from service import calculate, intake, problems
+from service.books import Books
 from service.errors import Limit, LossesChanged, Malformed, TooLong
-from service.executors import Work
+from service.executors import Work, keep_going
+from service.settings import Settings
 from tests.asking import answered, answered_text, compound, equal, es, factor_model, law, linear, matrix, step, var
 from tests.unit.risk.blocks import FALSE_ALARM
 
@@ -285,21 +288,26 @@ def test_rates_in_percent_are_noted():
     assert "hurdle_rate 8 is 800 %" in next(note.detail for note in notes if note.code == "high_rate")
 
 
-def test_time_that_is_over_refuses_the_whole():
+def over_after(times):
+    """Return work whose time is over after so many checkpoints."""
     asked = 0
 
     def checkpoint(_fraction=0.0, /):
         nonlocal asked
         asked += 1
-        if asked > 60:
+        if asked > times:
             limit = Limit(name="max_seconds", allowed=1.0, asked=None, setting="TAILRACE_MAX_SECONDS")
             raise TooLong("over", limit=limit)
 
+    return Work(1, checkpoint)
+
+
+def test_time_that_is_over_refuses_the_whole():
     with pytest.raises(TooLong):
         tried(
             model(),
             deals() + [{"id": f"c{n}", "components": [linear(x=1.0)]} for n in range(100)],
-            work=Work(1, checkpoint),
+            work=over_after(60),
         )
 
 
@@ -410,18 +418,9 @@ def test_a_huge_loss_ties_no_others():
 
 
 def test_time_that_is_over_while_candidates_are_read():
-    asked = 0
-
-    def checkpoint(_fraction=0.0, /):
-        nonlocal asked
-        asked += 1
-        if asked > 40:
-            limit = Limit(name="max_seconds", allowed=1.0, asked=None, setting="TAILRACE_MAX_SECONDS")
-            raise TooLong("over", limit=limit)
-
     wrong = [{"id": f"d{k}", "scaled": {"sub_portfolio": "none", "scale": 2.0}} for k in range(100)]
     with pytest.raises(TooLong):
-        tried(TABLE, wrong, [es(0.5)], work=Work(1, checkpoint))
+        tried(TABLE, wrong, [es(0.5)], work=over_after(40))
 
 
 def test_what_else_is_built_on_a_quantile_amid_equal_losses():
@@ -443,3 +442,30 @@ def test_what_else_is_built_on_a_quantile_amid_equal_losses():
     for found in (answer, compared):
         pointers = {note.pointer for note in found.notes if note.code == "tied_quantile"}
         assert pointers == {"/measures/0", "/measures/1"}
+
+
+def test_requests_on_one_base_do_not_meet():
+    """While one is at work another asks the same book: each is asked for its own time to the end."""
+    settings = Settings(demo=True)
+    books = Books(settings)
+    deals_ = [{"id": f"d{k}", "scaled": {"sub_portfolio": "storm", "scale": 1.1}} for k in range(3)]
+    document = {"losses": {"kind": "book", "name": "ternholm"}, "measures": [es(0.99)], "candidates": deals_}
+    body = json.dumps(document).encode()
+
+    def ask(checkpoint=keep_going):
+        work = Work(1, checkpoint)
+        taken = intake.read("increments", body, content_type=intake.JSON, parameters=(), settings=settings)
+        return calculate.answer(books.resolved(taken, work), work, settings, problems.describe)
+
+    first = ask()
+    outer, inner, between = [], [], []
+
+    def checkpoint(_fraction=0.0, /):
+        outer.append(1)
+        if len(outer) == 6:
+            between.append(ask(lambda _fraction=0.0, /: inner.append(1)))
+            between.append(len(inner))
+
+    assert ask(checkpoint) == first == between[0]
+    assert len(outer) > 6
+    assert len(inner) == between[1] > 0

@@ -93,3 +93,24 @@ def test_errors_of_tied_totals_do_not_see_their_rounding(one):
     assert rounded.values == pytest.approx(exact.values / 10.0, rel=1e-12)
     assert rounded.standard_errors == pytest.approx(exact.standard_errors / 10.0, rel=1e-9)
     assert rounded.upper == pytest.approx(exact.upper / 10.0, rel=1e-9)
+
+
+DRAWS = np.random.default_rng(1).standard_normal(100_000)
+MANY = {
+    "draws": DRAWS,
+    "integers": np.round(DRAWS),
+    "mostly zeros": np.maximum(0.0, DRAWS - 1.5),
+    "rising": np.arange(100_000.0),
+    "falling": -np.arange(100_000.0),
+    "large between those looked at": np.where(np.arange(100_000) % 16 == 7, 1e6 + DRAWS, DRAWS),
+}
+
+
+@pytest.mark.parametrize("depth", [0.0001, 0.019, 0.1, 0.4])
+@pytest.mark.parametrize("values", MANY.values(), ids=MANY)
+def test_a_look_at_a_part_finds_the_worst_of_all(values, depth):
+    """The worst are those of a whole sort, every tie with the last of them included."""
+    order = np.argsort(-values, kind="stable")
+    count = int(np.ceil(depth * values.size)) + 1
+    expected = order[values[order] >= values[order[count - 1]]]
+    assert np.array_equal(worst(values, depth), expected)
